@@ -1,0 +1,27 @@
+"""Every tolerance the project compares with, named once, with its unit and the reason for its size."""
+
+from __future__ import annotations
+
+from typing import Final
+
+# What counts as one and the same point in part space. A tenth of the last digit that is posted (1e-4 mm).
+SAME_POINT_MM: Final = 1e-5
+
+# Uncertainty claimed for a height measured by the virtual cut. The checks allow this much over a limit, no more.
+MEASURE_MM: Final = 2e-4
+
+# Share of the scallop limit that path chords may add to the scallop. Costs 1 % of cut length (length goes with 1/sqrt(h)).
+CHORD_SHARE_OF_SCALLOP: Final = 0.02
+
+# A rotary axis whose axis direction is this near to the cutter axis (radians) cannot turn it: the pole.
+POLE_RAD: Final = 1e-7
+
+# Two unit vectors are the same direction below this angle (radians); round-off of float64 cross products is 1e-16.
+SAME_DIRECTION_RAD: Final = 1e-9
+
+# A posted end point counts as inside an axis limit when it is over by no more than half the last posted digit.
+LIMIT_MM: Final = 5e-5
+LIMIT_DEG: Final = 5e-5
+
+# Slack on a clearance measured between sampled bodies: half the spacing of the samples, squared over the radius.
+CLEARANCE_MM: Final = 0.02
