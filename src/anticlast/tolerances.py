@@ -25,3 +25,21 @@ LIMIT_DEG: Final = 5e-5
 
 # Slack on a clearance measured between sampled bodies: half the spacing of the samples, squared over the radius.
 CLEARANCE_MM: Final = 0.02
+
+# Share of the whole by which an integral over the outline (area, length floor) may be off. Far below any printed digit.
+QUADRATURE: Final = 1e-11
+
+# Furthest that a curved outline may lie from the polygon that stands for it. Half the finest path tolerance in use, and a few
+# hundred edges for an outline as big as a bench-top mill takes.
+OUTLINE_CHORD_MM: Final = 0.001
+
+# A scallop height found by iteration is settled to this much (mm): far below a millionth of any limit that is asked for in practice.
+RESIDUAL_MM: Final = 1e-11
+
+# Largest turn of the cutter axis from one row of a cutter path to the next (radians, 2.5 degrees). Chords of the ball's centre
+# do not feel the axis, but rotary axes move evenly between rows and the holder must stay where it was checked.
+AXIS_TURN_RAD: Final = 0.0436
+
+# Ends of lines in a drawing that meet within this are joined. Ten times the last digit that drawings usually carry (0.001 mm),
+# and well below anything that could be meant.
+OUTLINE_GAP_MM: Final = 0.01

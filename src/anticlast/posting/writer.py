@@ -16,6 +16,7 @@ from anticlast.records import AxisPath, Job, Purpose
 MM_PER_INCH = 25.4
 CHUNK = 4096  # blocks formatted at a time; bounds the memory
 LONGEST_COMMENT = 110  # characters; far below the 256 that NISTIR 6556 section 3.3 allows a line
+OPERATION_MARK = "(OPERATION "
 LAST_N = 99999  # largest legal line number, NISTIR 6556 section 3.3.1
 
 
@@ -193,7 +194,7 @@ def _operation(job: Job, path: AxisPath, dialect: _Dialect, loaded: int, standin
     operation = path.operation
     cutter = operation.cutter
     yield comment(
-        f"OPERATION {operation.index}: {operation.does.upper()} {operation.pattern.upper()}, T{cutter.number},"
+        f"{OPERATION_MARK[1:]}{operation.index}: {operation.does.upper()} {operation.pattern.upper()}, T{cutter.number},"
         f" DIRECTION {plain(math.degrees(operation.direction_rad), 3)} DEGREES FROM PART X"
     )
     if cutter.number != loaded:
@@ -259,12 +260,22 @@ def _body(job: Job, paths: tuple[AxisPath, ...], dialect: _Dialect) -> Iterator[
     yield dialect.program_end
 
 
-def write_program(job: Job, paths: Iterable[AxisPath], stream: IO[str]) -> None:
-    """Write the program to an open text stream, a chunk at a time."""
+def write_program(job: Job, paths: Iterable[AxisPath], stream: IO[str]) -> tuple[int, ...]:
+    """Write the program to an open text stream, a chunk at a time.
+
+    Returns
+    -------
+    tuple of int
+        Line, counted from 1, on which each operation starts.
+    """
     held: list[str] = []
-    for line in program_lines(job, paths):
+    starts: list[int] = []
+    for number, line in enumerate(program_lines(job, paths), start=1):
+        if line.startswith(OPERATION_MARK):
+            starts.append(number)
         held.append(line)
         if len(held) >= CHUNK:
             stream.write("\n".join(held) + "\n")
             held.clear()
     stream.write("\n".join(held) + "\n")
+    return tuple(starts)
