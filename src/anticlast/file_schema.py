@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import difflib
 import json
-import math
 import types
 import typing
 from collections.abc import Mapping
@@ -21,6 +20,9 @@ Units = Literal["mm", "inch"]
 
 MM_PER_INCH: Final = 25.4  # exact: international yard and pound agreement, 1959
 
+# Names and titles go into headings and program comments, whose lines must stay well under 256 characters.
+LONGEST_LINE: Final = 120
+
 # Limits of an inch file are printed to 6 digits; a value typed as printed must be taken (relative slack).
 _PRINTED_SLACK: Final = 1e-5
 
@@ -36,13 +38,13 @@ _UNITS: Final[dict[str, tuple[float, str, str]]] = {
 
 @dataclass(frozen=True, slots=True)
 class Quantity:
-    """Annotation of a number in a file: its unit and range; converts an inch file's value to mm on the way in.
+    """Annotation of a number in a file: its unit and range; brings an inch file's value to mm on the way in.
 
     Attributes
     ----------
     unit : str
-        "length", "feed", "acceleration", "jerk" or "curvature" follow the file's units; any other text is the unit itself,
-        and empty is a plain number.
+        "length", "feed", "acceleration", "jerk" or "curvature" follow the file's units; any other text is the
+        unit itself, and empty is a plain number.
     low, high : float
         Range in mm units, both ends allowed unless ``above``.
     above : bool
@@ -63,7 +65,8 @@ class Quantity:
 
     def unit_name(self, units: Units) -> str:
         """Unit as a user writes it."""
-        return _UNITS[self.unit][2 if units == "inch" else 1] if self.unit in _UNITS else self.unit
+        _, metric, imperial = _UNITS.get(self.unit, (1.0, self.unit, self.unit))
+        return imperial if units == "inch" else metric
 
     def range_text(self, units: Units) -> str:
         """Say the range in the file's units, as in ``above 0 and at most 100 mm``."""
@@ -103,7 +106,7 @@ class Says:
 
 
 class FileTable(BaseModel):
-    """Base of all tables: strict types (a whole number may stand for a decimal one), no unknown keys, frozen."""
+    """Base of all tables: strict types (a whole number may stand for a decimal one), no unknown keys."""
 
     model_config = ConfigDict(strict=True, extra="forbid", frozen=True, allow_inf_nan=False)
 
@@ -113,7 +116,7 @@ T = TypeVar("T", bound=FileTable)
 
 @dataclass(slots=True)
 class Checked(Generic[T]):
-    """A table after the model's check: every value that was good on its own, whether or not the whole table was.
+    """A table after the model's check: every value that was good on its own, even if the whole table was not.
 
     Attributes
     ----------
@@ -143,8 +146,13 @@ class Checked(Generic[T]):
         self.source.add((*self.at, key) if key else self.at, message)
 
     @property
+    def complete(self) -> bool:
+        """Whether every key is there and good on its own."""
+        return self._table is not None
+
+    @property
     def table(self) -> T:
-        """The validated table; only to be asked for when no fault was found."""
+        """The validated table; only to be asked for when it is complete."""
         assert self._table is not None, "asked for a table that has faults"
         return self._table
 
@@ -164,6 +172,11 @@ def found_text(value: Any) -> str:
     if isinstance(value, Mapping):
         return "a table"
     return "a date or time" if type(value).__module__ == "datetime" else shown(repr(value))
+
+
+def is_line(text: str) -> bool:
+    """Whether a text can stand in a heading: one line, printable, not too long."""
+    return len(text) <= LONGEST_LINE and text.isprintable()
 
 
 def options_text(options: typing.Iterable[str]) -> str:
@@ -206,7 +219,7 @@ def describe(annotation: Any, units: Units) -> str:
         if arguments[-1] is Ellipsis:
             return f"a list, each item {describe(arguments[0], units)}"
         return f"a list of {len(arguments)}, each {describe(arguments[0], units)}"
-    return {str: "text in quotes", bool: "true or false", float: "a number", int: "a whole number"}.get(annotation, "a table")
+    return {str: "text in quotes", bool: "true or false"}[annotation]
 
 
 def _step_into(annotation: Any, position: str | int) -> Any:
@@ -222,16 +235,16 @@ def _step_into(annotation: Any, position: str | int) -> Any:
 
 
 @cache
-def _annotations(model: type[FileTable]) -> dict[str, Any]:
+def key_types(model: type[FileTable]) -> dict[str, Any]:
+    """Annotated types of a model's keys."""
     return typing.get_type_hints(model, include_extras=True)
 
 
 @cache
 def _partial(model: type[FileTable]) -> type[FileTable]:
     """Make the same model with no key required: it keeps what is good of a table with faults."""
-    fields: dict[str, Any] = {
-        name: (_annotations(model)[name] | None, None) for name, item in model.model_fields.items() if item.is_required()
-    }
+    required = [name for name, item in model.model_fields.items() if item.is_required()]
+    fields: dict[str, Any] = {name: (key_types(model)[name] | None, None) for name in required}
     return create_model(f"Partial{model.__name__}", __base__=model, **fields)
 
 
@@ -252,7 +265,8 @@ def check_table(source: Source, at: Location, raw: Any, model: type[T], units: U
         Units of the file; values come back in mm.
     """
     if not isinstance(raw, Mapping):
-        source.add(at, f"found {found_text(raw)}; needs a table with the keys {', '.join(model.model_fields)}")
+        keys = ", ".join(model.model_fields)
+        source.add(at, f"found {found_text(raw)}; needs a table with the keys {keys}")
         return Checked(source, at, {}, frozenset(), model)
     frozen: dict[str, Any] = freeze(raw)
     context = {"units": units}
@@ -278,7 +292,7 @@ def _note(
     if kind == "extra_forbidden":
         source.add((*at, *place), unknown_key(str(place[0]), model.model_fields))
         return
-    annotation = _annotations(model)[str(place[0])]
+    annotation = key_types(model)[str(place[0])]
     if kind == "missing" and len(place) == 1:
         source.add((*at, *place), f"missing; needs {describe(annotation, units)}")
         return
@@ -295,10 +309,6 @@ def _note(
 
 def unknown_key(key: str, options: typing.Iterable[str]) -> str:
     """Say what could have been meant by a key that means nothing."""
-    near = nearest(key, options)
-    return f'unknown key; nearest valid key is "{near}"' if near else f"unknown key; valid keys are {', '.join(options)}"
-
-
-def is_finite(values: typing.Iterable[float]) -> bool:
-    """Whether all numbers are finite."""
-    return all(math.isfinite(value) for value in values)
+    if near := nearest(key, options):
+        return f'unknown key; nearest valid key is "{near}"'
+    return f"unknown key; valid keys are {', '.join(options)}"

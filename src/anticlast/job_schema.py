@@ -1,6 +1,7 @@
-"""The tables of a job file: every key with its type, unit, range and default (``docs/job-file.md`` lists the same).
+"""The tables of a job file: every key with its type, unit, range and default.
 
-Ranges are sanity limits of bench-top work, generous on purpose: what is outside is a slip of the pen (common practice).
+``docs/job-file.md`` lists the same. Ranges are sanity limits of bench-top work, generous on purpose: what is outside
+is a slip of the pen (common practice).
 """
 
 from __future__ import annotations
@@ -59,7 +60,9 @@ class OutlineTable(FileTable):
     size: Annotated[tuple[Size, Size], Says("[width, height], two numbers above 0")] | None = None
     corner_radius: Annotated[float, Quantity("length", 0, 500)] | None = None
     diameter: Size | None = None
-    points: Annotated[tuple[Point, ...], Says("[[x, y], [x, y], [x, y], ...], at least three points")] | None = None
+    points: (
+        Annotated[tuple[Point, ...], Says("[[x, y], [x, y], [x, y], ...], at least three points")] | None
+    ) = None
     holes: Annotated[tuple[tuple[Point, ...], ...], Says("a list of holes, each [[x, y], ...]")] | None = None
     path: Annotated[str, Says("the path of a .dxf or .svg file, in quotes")] | None = None
     center: Point = (0.0, 0.0)

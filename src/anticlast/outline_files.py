@@ -1,12 +1,13 @@
 """Closed loops out of DXF and SVG drawings, in mm, Y up.
 
 Curves are cut into chords with their ends on the curve, none further from it than a given chord error. DXF
-arcs, circles, ellipses and polylines with bulges are taken in closed form; splines through ezdxf. Text,
+arcs, circles, ellipses and polylines with bulges are taken in closed form; splines evaluated by ezdxf. Text,
 dimensions, hatches and whatever lies on a layer that is off or frozen is passed over.
 """
 
 from __future__ import annotations
 
+import itertools
 import math
 import re
 from collections.abc import Iterable, Iterator, Sequence
@@ -173,7 +174,7 @@ def _dxf_curve(entity: Any, chord: float) -> Any | None:
             tuple(point) for point in entity.vertices(start + sweep * np.linspace(0, 1, 4 * quarters + 1))
         ]
     if kind == "SPLINE":
-        return [tuple(point) for point in entity.flattening(chord, segments=16)]
+        return _spline_points(entity.construction_tool(), chord)
     if kind == "LWPOLYLINE":
         rows = np.array(entity.get_points("xyb"), dtype=np.float64).reshape(-1, 3)
         flat = (
@@ -192,8 +193,28 @@ def _dxf_curve(entity: Any, chord: float) -> Any | None:
     return None
 
 
+def _spline_points(spline: Any, chord: float) -> Floats:
+    """Return points (n, 3) along a B-spline over its domain, which for a periodic one ends short of the knots.
+
+    Each knot span is halved evenly until its halfway points keep to their chords; the error falls fourfold with each
+    halving, so what lies between is no further away than they are.
+    """
+    knots, degree = np.array(spline.knots()), int(spline.degree)
+    inner = np.unique(knots[degree : len(knots) - degree])
+    pieces = []
+    for start, end in itertools.pairwise(inner):
+        for halvings in range(3, 16):
+            t = np.linspace(start, end, 2 * 2**halvings + 1)
+            points = np.array([tuple(point) for point in spline.points(t)])
+            off = points[1::2] - (points[:-1:2] + points[2::2]) / 2.0
+            if np.linalg.norm(off, axis=1).max() <= chord:
+                break
+        pieces.append(points[:-1])
+    return np.concatenate((*pieces, points[-1:]))
+
+
 def _in_world(entity: Any, flat: Floats, height: float) -> list[tuple[float, ...]]:
-    """Turn points of an entity's own plane into drawing coordinates (a mirrored part has its plane facing down)."""
+    """Turn points of an entity's own plane into drawing coordinates (a mirrored part lies face down)."""
     return [
         tuple(point) for point in entity.ocs().points_to_wcs((float(x), float(y), height) for x, y in flat)
     ]
@@ -243,8 +264,8 @@ def _svg_subpath(segments: Iterable[Any], chord: float) -> Floats:
             t = np.linspace(0.0, 1.0, steps + 1)[1:]
             points.append(np.array([(at.x, at.y) for at in (segment.point(float(share)) for share in t)]))
         elif kind in {"CubicBezier", "QuadraticBezier"}:
-            given = [segment.start, segment.control1, segment.control2, segment.end] if kind == "CubicBezier" else [
-                segment.start, segment.control, segment.end]  # fmt: skip
+            controls = ("control1", "control2") if kind == "CubicBezier" else ("control",)
+            given = [segment.start, *(getattr(segment, each) for each in controls), segment.end]
             points.append(bezier_points(np.array([(at.x, at.y) for at in given]), chord)[1:])
         elif segment.end is not None:
             points.append(np.array([[segment.end.x, segment.end.y]]))
@@ -313,8 +334,9 @@ def _open_ends(ends: Floats, name: str) -> str:
     nearest = int(np.argmin(distances))
     first, second = ends[pairs[0][nearest]], ends[pairs[1][nearest]]
     return (
-        f"{name} holds lines that do not close: {len(ends)} free ends, the nearest two {distances[nearest]:.4g} mm apart at "
-        f"{place(first)} and {place(second)} mm; ends have to meet within {OUTLINE_GAP_MM:g} mm"
+        f"{name} holds lines that do not close: {len(ends)} free ends, the nearest two "
+        f"{distances[nearest]:.4g} mm apart at {place(first)} and {place(second)} mm; ends have to meet "
+        f"within {OUTLINE_GAP_MM:g} mm"
     )
 
 

@@ -33,9 +33,6 @@ QUADRATURE: Final = 1e-11
 # hundred edges for an outline as big as a bench-top mill takes.
 OUTLINE_CHORD_MM: Final = 0.001
 
-# A scallop height found by iteration is settled to this much (mm): far below a millionth of any limit that is asked for in practice.
-RESIDUAL_MM: Final = 1e-11
-
 # Largest turn of the cutter axis from one row of a cutter path to the next (radians, 2.5 degrees). Chords of the ball's centre
 # do not feel the axis, but rotary axes move evenly between rows and the holder must stay where it was checked.
 AXIS_TURN_RAD: Final = 0.0436
@@ -43,3 +40,21 @@ AXIS_TURN_RAD: Final = 0.0436
 # Ends of lines in a drawing that meet within this are joined. Ten times the last digit that drawings usually carry (0.001 mm),
 # and well below anything that could be meant.
 OUTLINE_GAP_MM: Final = 0.01
+
+# Residual of the exact cusp equations, as a share of the lengths in them (1e-12 of 100 mm: far below a millionth of a
+# scallop). Above it the iteration has not settled.
+CUSP_RESIDUAL: Final = 1e-12
+
+# A cutter axis counts as reached when the machine's own is this near (radians): 1e-4 mm at 100 mm, the last posted digit.
+REACH_RAD: Final = 1e-6
+
+# Share of the stepover by which chords may shift a pass sideways. The cusp then changes by at most four times this share.
+SIDEWAYS_SHARE_OF_STEP: Final = 5e-4
+
+# How far a bound may stand above the highest residual that was measured before the search between nodes stops there. A quarter
+# of the uncertainty claimed for a height.
+BOUND_SLACK_MM: Final = 5e-5
+
+# The virtual cut looks no higher than this over the wanted surface: what stands higher was not finished. A hundred times a
+# usual scallop limit; more only lengthens the lists of moves that come near.
+UNCUT_MM: Final = 0.5

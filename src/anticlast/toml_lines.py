@@ -1,6 +1,6 @@
 """Read a TOML file and remember on which line every key stands.
 
-``tomllib`` decides what the text means; the scanner here only walks a text that ``tomllib`` has accepted and notes lines.
+``tomllib`` decides what the text means; the scanner here only walks a text that ``tomllib`` has accepted.
 """
 
 from __future__ import annotations
@@ -20,14 +20,21 @@ _BLANK: Final = re.compile(r"(?:[ \t]|#[^\n]*)*")
 _BLANK_LINES: Final = re.compile(r"(?:[ \t\n]|#[^\n]*)*")
 _KEY_PART: Final = re.compile(r'"(?:[^"\\\n]|\\.)*"|\'[^\'\n]*\'|[A-Za-z0-9_-]+')
 _STRING: Final = re.compile(
-    r'"""(?:[^"\\]|\\.|"(?!""))*"{3,5}|\'\'\'(?:[^\']|\'(?!\'\'))*\'{3,5}|"(?:[^"\\\n]|\\.)*"|\'[^\'\n]*\'', re.DOTALL
+    r'"""(?:[^"\\]|\\.|"(?!""))*"{3,5}'
+    r"|'''(?:[^']|'(?!''))*'{3,5}"
+    r'|"(?:[^"\\\n]|\\.)*"'
+    r"|'[^'\n]*'",
+    re.DOTALL,
 )
 _BARE: Final = re.compile(r"[^,\]}#\n]*")
-_PLACE: Final = re.compile(r"^(?P<what>.*?)\s*\(at (?:line (?P<line>\d+), column (?P<column>\d+)|end of document)\)$", re.DOTALL)
+_PLACE: Final = re.compile(
+    r"^(?P<what>.*?)\s*\(at (?:line (?P<line>\d+), column (?P<column>\d+)|end of document)\)$", re.DOTALL
+)
+_DEEPEST: Final = 40  # lists and tables inside each other; a job file needs 6
 
 
 class _Scanner:
-    """Recursive descent over a valid TOML text, filling ``lines``: path of keys and list positions -> line."""
+    """Recursive descent over a valid TOML text, filling ``lines``: path of keys and positions -> line."""
 
     def __init__(self, text: str) -> None:
         self.text = text
@@ -101,6 +108,8 @@ class _Scanner:
         self._value(path)
 
     def _value(self, path: Location) -> None:
+        if len(path) > _DEEPEST:
+            raise RecursionError
         first = self.text[self.at]
         if first == "[":
             self._array(path)
@@ -148,9 +157,14 @@ def line_map(text: str) -> dict[Location, int]:
     Returns
     -------
     dict
-        Path of keys and list positions (counted from 0) -> line, counted from 1. The empty path is line 1. A table that is
-        only implied (``[part.outline]`` alone implies ``part``) stands where it is first named; an array of tables stands
-        at its first entry.
+        Path of keys and list positions (counted from 0) -> line, counted from 1. The empty path is line 1. A table
+        that is only implied (``[part.outline]`` alone implies ``part``) stands where it is first named; an array of
+        tables stands at its first entry.
+
+    Raises
+    ------
+    RecursionError
+        Lists or tables stand more than 40 deep inside each other.
     """
     return _Scanner(text).scan()
 
@@ -169,7 +183,7 @@ def dotted(location: Location) -> str:
 
 def shown(text: str) -> str:
     """Text made fit to print inside a message: one line, no control characters, at most 60 characters."""
-    clean = "".join(letter if letter.isprintable() else f"\\x{ord(letter):02x}" for letter in text)
+    clean = "".join(letter if letter.isprintable() else f"\\u{ord(letter):04x}" for letter in text)
     return clean if len(clean) <= 60 else clean[:57] + "..."
 
 
@@ -205,11 +219,13 @@ def parse_source(text: str, file: str) -> Source:
     text = text.replace("\r\n", "\n")
     try:
         data = tomllib.loads(text)
+        lines = line_map(text)
     except RecursionError:
-        raise BadInput(Fault(file, 0, "", "lists or tables stand too deep inside each other to be read")) from None
+        message = f"lists or tables stand inside each other more than {_DEEPEST} deep; needs fewer"
+        raise BadInput(Fault(file, 0, "", message)) from None
     except ValueError as error:
         raise BadInput(_syntax_fault(text, file, str(error))) from None
-    return Source(file, data, line_map(text))
+    return Source(file, data, lines)
 
 
 def _syntax_fault(text: str, file: str, reason: str) -> Fault:
@@ -221,9 +237,10 @@ def _syntax_fault(text: str, file: str, reason: str) -> Fault:
     line = int(match["line"]) if match["line"] else last
     where = f"at column {match['column']}" if match["column"] else "at the end of the file"
     found = shown(rows[line - 1].strip())
-    return Fault(
-        file, line, "", f"not valid TOML: {shown(match['what'])} {where}, found: {found}; needs: key = value, text in quotes"
+    message = (
+        f"not valid TOML: {shown(match['what'])} {where}, found: {found}; needs: key = value, text in quotes"
     )
+    return Fault(file, line, "", message)
 
 
 def read_source(path: Path, file: str) -> Source:
@@ -243,7 +260,7 @@ def read_source(path: Path, file: str) -> Source:
     """
     try:
         raw = path.read_bytes()
-    except (OSError, ValueError) as error:  # ValueError: a name no file system takes, such as one with a null character
+    except (OSError, ValueError) as error:  # ValueError: a name with a null character
         raise BadInput(Fault(file, 0, "", why_unreadable(path, error))) from None
     try:
         text = raw.decode("utf-8-sig")

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import re
 from functools import cache
 from pathlib import Path
@@ -22,7 +21,8 @@ _NAME: Final = re.compile(r"[A-Za-z0-9_-]+")
 def post_folder() -> Path:
     """Folder with the machine files that come with the package.
 
-    In a wheel it is ``_post`` inside the package; in a checkout or an editable install ``post`` at the top of the project.
+    In a wheel it is ``_post`` inside the package; in a checkout or an editable install ``post`` at the top of the
+    project.
 
     Raises
     ------
@@ -47,8 +47,8 @@ def load_machine(name_or_path: str, relative_to: Path | None = None) -> Machine:
     Parameters
     ----------
     name_or_path : str
-        A name in the post folder or of an installed post (letters, digits, hyphen, underscore), or else the path of a
-        machine file: ``.toml``, or ``.py`` for a Python post.
+        A name in the post folder or of an installed post (letters, digits, hyphen, underscore), or else the path
+        of a machine file: ``.toml``, or ``.py`` for a Python post.
     relative_to : Path, optional
         Folder that a relative path starts from; the current one if not given.
 
@@ -70,7 +70,12 @@ def load_machine(name_or_path: str, relative_to: Path | None = None) -> Machine:
         return python_post.load(path, str(path))
     if path.suffix.lower() != ".toml":
         raise BadInput(
-            Fault(shown(name_or_path), 0, "", f"needs a machine name ({_names()}) or the path of a .toml or .py file")
+            Fault(
+                shown(name_or_path),
+                0,
+                "",
+                f"needs a machine name ({_names()}) or the path of a .toml or .py file",
+            )
         )
     return machine_from(read_source(path, str(path)), path.stem, path)
 
@@ -85,7 +90,12 @@ def _load_named(name: str) -> Machine:
     near = nearest(name, (*shipped_names(), *installed))
     hint = f'; nearest is "{near}"' if near else ""
     raise BadInput(
-        Fault(name, 0, "", f"no machine of that name; needs one of {_names()}, or the path of a machine file{hint}")
+        Fault(
+            name,
+            0,
+            "",
+            f"no machine of that name; needs one of {_names()}, or the path of a machine file{hint}",
+        )
     )
 
 
@@ -158,5 +168,6 @@ def machine_lines(machine: Machine) -> list[str]:
         f"  linear axes (gauge point): {linear}",
         f"  rotary axes: {rotary}",
         f"  spindle: {spindle.min_rpm:g} to {spindle.max_rpm:g} rev/min, {spindle.power_kw:g} kW",
-        f"  control: {machine.control.feed_mode} feed, {machine.control.path_mode}, file {json.dumps(str(machine.source))}",
+        f"  control: {machine.control.feed_mode} feed, {machine.control.path_mode}",
+        f"  file: {machine.source}",
     ]

@@ -1,4 +1,7 @@
-"""The tables of a machine file, their checks, and the record made of them (``docs/machine-file.md`` lists the same)."""
+"""The tables of a machine file, their checks, and the record made of them.
+
+``docs/machine-file.md`` lists the same keys with their units, ranges and defaults.
+"""
 
 from __future__ import annotations
 
@@ -9,6 +12,7 @@ from typing import Annotated, Any, Final, Literal
 
 from anticlast.errors import BadInput
 from anticlast.file_schema import (
+    LONGEST_LINE,
     Checked,
     FileTable,
     Quantity,
@@ -16,6 +20,7 @@ from anticlast.file_schema import (
     Units,
     check_table,
     found_text,
+    is_line,
     nearest,
     options_text,
     unknown_key,
@@ -60,7 +65,11 @@ class RotaryAxis(FileTable):
     kind: Literal["rotary"]
     carries: Literal["work", "cutter"]
     direction: Annotated[tuple[UnitPart, UnitPart, UnitPart], Says("[i, j, k], three numbers")]
-    through: Annotated[tuple[Coordinate, Coordinate, Coordinate], Says("[x, y, z], three numbers")] = (0.0, 0.0, 0.0)
+    through: Annotated[tuple[Coordinate, Coordinate, Coordinate], Says("[x, y, z], three numbers")] = (
+        0.0,
+        0.0,
+        0.0,
+    )
     turns: Annotated[Literal[-1, 1], Says("1 or -1")] | None = None
     limits: Annotated[tuple[Angle, Angle], Says("[low, high], two numbers in degrees")] | None = None
     rapid: Annotated[float, Quantity("degrees/min", 0, 1000000, above=True)]
@@ -120,7 +129,12 @@ def machine_from(source: Source, name: str, path: Path) -> Machine:
     units: Units = "inch" if isinstance(raw_head, Mapping) and raw_head.get("units") == "inch" else "mm"
     if "machine" not in source.data:
         source.add(("machine",), "missing; needs a table [machine] with the key title")
-    head = check_table(source, ("machine",), raw_head, MachineHead, units) if "machine" in source.data else None
+    head = (
+        check_table(source, ("machine",), raw_head, MachineHead, units) if "machine" in source.data else None
+    )
+    title = head.get("title") if head is not None else None
+    if head is not None and title is not None and not (title.strip() and is_line(title)):
+        head.fault("title", f"found {found_text(title)}; needs one line of 1 to {LONGEST_LINE} characters")
     axes = _axes(source, units)
     spindle = _spindle(source, units)
     control, decimals = _control(source, units)
@@ -156,7 +170,9 @@ def _axes(source: Source, units: Units) -> list[Checked[Any]]:
         source.add(("axis",), "missing; needs an [[axis]] for each of X, Y, Z and every rotary axis")
         return []
     if not isinstance(raw, (list, tuple)):
-        source.add(("axis",), f"found {found_text(raw)}; needs one [[axis]] for each axis, in double brackets")
+        source.add(
+            ("axis",), f"found {found_text(raw)}; needs one [[axis]] for each axis, in double brackets"
+        )
         return []
     checked: list[Checked[Any]] = []
     first_with: dict[str, int] = {}
@@ -167,7 +183,9 @@ def _axes(source: Source, units: Units) -> list[Checked[Any]]:
         checked.append(axis)
         letter = axis.get("letter")
         if letter in first_with:
-            axis.fault("letter", f'found "{letter}" again; axis[{first_with[letter]}] has that letter already')
+            axis.fault(
+                "letter", f'found "{letter}" again; axis[{first_with[letter]}] has that letter already'
+            )
         elif letter is not None:
             first_with[letter] = position + 1
     known = all(axis.get("letter") for axis in checked) and len(checked) == len(raw)
@@ -177,7 +195,9 @@ def _axes(source: Source, units: Units) -> list[Checked[Any]]:
     rotary = [axis for axis in checked if axis.model is RotaryAxis]
     if len(rotary) > 2:
         rotary[2].fault("", f"found {len(rotary)} rotary axes; needs at most 2")
-    return sorted(checked, key=lambda axis: LINEAR.index(axis.get("letter")) if axis.get("letter") in LINEAR else 3)
+    return sorted(
+        checked, key=lambda axis: LINEAR.index(axis.get("letter")) if axis.get("letter") in LINEAR else 3
+    )
 
 
 def _one_axis(source: Source, position: int, raw: Any, units: Units) -> Checked[Any] | None:
@@ -196,10 +216,16 @@ def _one_axis(source: Source, position: int, raw: Any, units: Units) -> Checked[
     if limits is not None and not limits[0] < limits[1]:
         axis.fault("limits", "the low limit is not below the high limit; needs [low, high]")
     elif limits is not None and model is RotaryAxis and not limits[0] <= 0.0 <= limits[1]:
-        axis.fault("limits", f"0 is outside {limits[0]:g} to {limits[1]:g}; needs limits that take in 0, where programs start")
+        axis.fault(
+            "limits",
+            f"0 is outside {limits[0]:g} to {limits[1]:g}; needs limits that take in 0, where programs start",
+        )
     direction = axis.get("direction")
     if direction is not None and math.hypot(*direction) == 0.0:
-        axis.fault("direction", "found a direction of no length; needs one that points somewhere, such as [1.0, 0.0, 0.0]")
+        axis.fault(
+            "direction",
+            "found a direction of no length; needs one that points somewhere, such as [1.0, 0.0, 0.0]",
+        )
     return axis
 
 
@@ -211,7 +237,10 @@ def _spindle(source: Source, units: Units) -> Checked[SpindleTable]:
         return Checked(source, ("spindle",), {}, frozenset(), SpindleTable)
     spindle = check_table(source, ("spindle",), raw, SpindleTable, units)
     if spindle.all_of("min", "max") and spindle.get("min") >= spindle.get("max"):
-        spindle.fault("min", f"found {spindle.get('min'):g}; needs less than max, which is {spindle.get('max'):g} rev/min")
+        spindle.fault(
+            "min",
+            f"found {spindle.get('min'):g}; needs less than max, which is {spindle.get('max'):g} rev/min",
+        )
     return spindle
 
 
@@ -227,7 +256,14 @@ def _axis_record(table: LinearAxis | RotaryAxis) -> Axis:
         column = LINEAR.index(table.letter)
         unit = (float(column == 0), float(column == 1), float(column == 2))
         return Axis(
-            table.letter, "linear", table.limits, table.rapid, table.feed, table.acceleration, table.jerk, direction=unit
+            table.letter,
+            "linear",
+            table.limits,
+            table.rapid,
+            table.feed,
+            table.acceleration,
+            table.jerk,
+            direction=unit,
         )
     size = math.hypot(*table.direction)
     i, j, k = (part / size for part in table.direction)

@@ -1,7 +1,7 @@
 """Python posts: machines that a table cannot express, as a module with a function ``machine()``.
 
-``machine()`` returns the same nested tables as a machine file, or a finished ``records.Machine``. The module may also define
-``write``; the writer finds it through ``Machine.source``. The code runs with the user's rights: it is theirs.
+``machine()`` returns the same nested tables as a machine file, or a finished ``records.Machine``. The module may also
+define ``write``; the writer finds it through ``Machine.source``. The code runs with the user's rights: it is theirs.
 """
 
 from __future__ import annotations
@@ -88,13 +88,17 @@ def load(path: Path, file: str) -> Machine:
 def _machine_of(module: ModuleType, file: str, name: str, path: Path) -> Machine:
     function = getattr(module, "machine", None)
     if not callable(function):
-        raise BadInput(Fault(file, 1, "machine", "missing; needs a function machine() that returns the machine's tables"))
+        raise BadInput(
+            Fault(file, 1, "machine", "missing; needs a function machine() that returns the machine's tables")
+        )
     line = function.__code__.co_firstlineno if inspect.isfunction(function) else 1
     made = _guarded(function, file, path)
     if isinstance(made, Machine):
         return replace(made, source=path)
     if not isinstance(made, Mapping):
-        message = f"found {found_text(made)}; machine() needs to return the machine's tables or a records.Machine"
+        message = (
+            f"found {found_text(made)}; machine() needs to return the machine's tables or a records.Machine"
+        )
         raise BadInput(Fault(file, line, "machine", message))
     return machine_from(Source(file, made, {(): line}), name, path)
 
@@ -106,7 +110,9 @@ def _guarded(function: Callable[[], Any], file: str, path: Path) -> Any:
     except (KeyboardInterrupt, GeneratorExit):
         raise
     except SyntaxError as error:
-        raise BadInput(Fault(file, error.lineno or 0, "", f"not valid Python: {shown(error.msg or '')}")) from None
+        raise BadInput(
+            Fault(file, error.lineno or 0, "", f"not valid Python: {shown(error.msg or '')}")
+        ) from None
     except BaseException as error:  # user code may raise anything at all, SystemExit included
         frames = traceback.extract_tb(sys.exc_info()[2])
         lines = [frame.lineno for frame in frames if frame.lineno and Path(frame.filename).name == path.name]

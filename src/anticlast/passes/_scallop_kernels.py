@@ -1,11 +1,10 @@
 """Exact cusp between neighbouring passes of a ball, row by row. Arrays and floats only.
 
-Plan coordinates u along the feed, v to its left; the surface is z = (A u^2 + 2 B u v + C v^2) / 2, ``form`` =
-(A, B, C) [1/mm].
-The ball centre over (u, v) is the surface point moved along the upward unit normal by ``reach`` = ball radius + allowance.
-A cusp point is T = surface point + h * normal over plan (u, v*), at distance ``radius`` from the centre curve of a pass
-line; the nearest centre is where the curve's tangent is square to the line from T. Newton on exactly these equations;
-docs/theory-surface.md#exact-cusp.
+Plan coordinates u along the feed, v to its left; the surface is z = (A u^2 + 2 B u v + C v^2) / 2 and
+``form`` is (A, B, C) [1/mm]. The ball centre over (u, v) is the surface point moved along the upward unit
+normal by ``reach``, ball radius + allowance. A cusp point is T = surface point + h * normal over plan (u,
+v*), at distance ``radius`` from the centre curve of a pass line; the nearest centre is where that curve's
+tangent is square to the line from T. Newton on exactly these equations; docs/theory-surface.md#exact-cusp.
 """
 
 import math
@@ -75,7 +74,7 @@ def _dot(x, i, y, j):
 
 @numba.njit(cache=True, nogil=True)
 def _gap_form(form, reach, radius, u, v):
-    """Return the plan form (uu, uv, vv) of the gap under the ball, to second order: (I - reach II) / radius."""
+    """Return the plan form (uu, uv, vv) of the gap under the ball, second order: (I - reach II) / radius."""
     _, zu, zv, w = _surface(form, u, v)
     return (
         (1.0 + zu * zu - reach * form[0] / w) / radius,
@@ -86,7 +85,7 @@ def _gap_form(form, reach, radius, u, v):
 
 @numba.njit(cache=True, nogil=True)
 def _cusp_from_line(form, reach, radius, u, line, h, side, t, c):
-    """Return (v*, residual): where a pass line's groove reaches height h over abscissa u, on the given side."""
+    """Return (v*, residual): where a pass line's groove has height h over abscissa u, on the given side."""
     guu, guv, gvv = _gap_form(form, reach, radius, u, line)
     over = h - (reach - radius)
     half = math.sqrt(2.0 * over / (gvv - guv * guv / guu))
@@ -201,7 +200,7 @@ def _cusp_between(form, reach, radius, u, line1, line2, t, c1, c2):
 
 @numba.njit(cache=True, nogil=True)
 def next_lines(form, radius, allowance, u, v, scallop, step, residual):
-    """Fill step (n,) [mm]: plan distance from pass line v to the next one, cusp ``scallop`` high over abscissa u."""
+    """Fill step (n,) [mm]: plan distance from pass line v to the next, cusp ``scallop`` high over u."""
     t, c = np.empty((3, 3)), np.empty((5, 3))
     reach = radius + allowance
     for k in range(len(u)):
@@ -213,7 +212,7 @@ def next_lines(form, radius, allowance, u, v, scallop, step, residual):
 
 @numba.njit(cache=True, nogil=True)
 def lines_beside(form, radius, allowance, u, v, scallop, right, left, residual):
-    """Fill right and left (n,) [mm]: the two pass lines whose cusp stands ``scallop`` high over plan (u, v)."""
+    """Fill right and left (n,) [mm]: the pass lines whose cusp stands ``scallop`` high over plan (u, v)."""
     t, c = np.empty((3, 3)), np.empty((5, 3))
     reach = radius + allowance
     for k in range(len(u)):

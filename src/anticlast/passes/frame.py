@@ -13,9 +13,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from anticlast.errors import NotConverged
+from anticlast.passes.cusp import plan_of, turned_form
 from anticlast.records import Floats
 from anticlast.saddle import Saddle
-from anticlast.tolerances import RESIDUAL_MM, SAME_POINT_MM
+from anticlast.tolerances import SAME_POINT_MM
 
 _ROUNDS = 40
 
@@ -45,9 +46,7 @@ class PassFrame:
 
     def xy(self, u_mm: Floats, v_mm: Floats) -> Floats:
         """Return part (x, y) (n, 2) of plan points (u, v) (n,), all mm."""
-        c, s = math.cos(self.direction_rad), math.sin(self.direction_rad)
-        u, v = np.broadcast_arrays(u_mm, v_mm)
-        return np.column_stack((u * c - v * s, u * s + v * c))
+        return plan_of(u_mm, v_mm, self.direction_rad)
 
     def uv(self, xy_mm: Floats) -> tuple[Floats, Floats]:
         """Return (u, v) (n,) of part (x, y) (n, 2), all mm."""
@@ -56,10 +55,8 @@ class PassFrame:
 
     def hessian_uv(self) -> tuple[float, float, float]:
         """Return z_uu, z_uv, z_vv [1/mm], the same everywhere."""
-        c, s = math.cos(self.direction_rad), math.sin(self.direction_rad)
-        turn = np.array([[c, -s], [s, c]])
-        form = turn.T @ self.saddle.hessian() @ turn
-        return float(form[0, 0]), float(form[0, 1]), float(form[1, 1])
+        uu, uv, vv = turned_form(self.saddle, self.direction_rad).tolist()
+        return uu, uv, vv
 
     # -------------------------------------------------------------------------------------- leading order
 
@@ -170,35 +167,6 @@ class PassFrame:
             if not np.any(np.abs(step[np.isfinite(height)]) > SAME_POINT_MM):
                 return height
         raise NotConverged("height left by one pass", float(np.nanmax(np.abs(step))), SAME_POINT_MM)
-
-    def edge_reach(self, u_mm: Floats, v_mm: float, side: int, height_mm: float) -> Floats:
-        """Return how far (n,) [mm] a pass may stand off in v so that it leaves ``height_mm`` over (u, v).
-
-        Parameters
-        ----------
-        u_mm : (n,)
-        v_mm : float
-            The edge to be reached.
-        side : {1, -1}
-            +1 if the pass lies on the +v side of the points.
-        height_mm : float
-
-        Raises
-        ------
-        NotConverged
-        """
-        u = np.asarray(u_mm, dtype=np.float64)
-        v = np.full_like(u, v_mm)
-        reach = 0.5 * np.sqrt(8.0 * height_mm / self.crowding(u, v))
-        miss = np.inf
-        for _ in range(_ROUNDS):
-            left = self.left_over(u, v, v + side * reach)
-            miss = float(np.max(np.abs(left - height_mm), initial=0.0))
-            if miss <= RESIDUAL_MM:
-                return reach
-            # The height grows with the square of the distance, to leading order.
-            reach = reach * np.where(np.isfinite(left), np.sqrt(height_mm / np.maximum(left, 0.01 * height_mm)), 0.5)
-        raise NotConverged("distance of the outermost pass", miss, RESIDUAL_MM)
 
 
 def _deepest_step(d: Floats, d1: Floats, d2: Floats, n: Floats, radius_mm: float) -> tuple[Floats, Floats]:

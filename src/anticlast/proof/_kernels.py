@@ -175,20 +175,21 @@ def chunk_box(a: float, b: float, ends: tuple, size: tuple, high: float, slope: 
     reach = radius
     drop = 0.0
     state = 1
-    bend = 2.0 * a * (radius + high + length)
-    if bend < 0.9 and low > -0.4 / b:
+    bend = 2.0 * a * (1.1 * radius + high + 2.0 * length)
+    rise = 2.0 * max(a, b) * radius
+    if bend < 0.9 and rise < 0.9 and low > -0.1 / b:
         bend = 2.0 * a / (1.0 - bend)
         low = min(d0, d1) - bend * length * length / 8.0
         if low - corner - disc * sine - bend * radius * radius / 2.0 > high:
             return 0
-        if low <= high + max(a, b) * radius * radius / (1.0 - 2.0 * max(a, b) * radius):
+        if low <= high + rise * radius / (1.0 - rise) / 2.0:
             state = 2
         elif disc == 0.0:
             drop = max(0.0, low - high - bend * radius * radius / 2.0)
-            reach = math.sqrt(max(0.0, radius * radius - drop * drop)) + drop * bend * length / 2.0
+            reach = math.sqrt(max(0.0, radius * radius - drop * drop)) + drop * max(bend, 2.0 * b) * length / 2.0
     else:
         state = 2
-    reach += slope * (high if state == 1 else high + 2.0 * radius)
+    reach += slope * (max(high, radius - low) + (2.0 * radius if state == 2 else 0.0))
     box[0], box[1], box[2], box[3] = math.inf, -math.inf, math.inf, -math.inf
     for x, y, fx, fy in ((x0, y0, fx0, fy0), (x1, y1, fx1, fy1)):
         w = math.sqrt(1.0 + 4.0 * (a * a * fx * fx + b * b * fy * fy))
@@ -255,3 +256,317 @@ def bin_pieces(
                     else:
                         pieces[filled[t]] = k
                         filled[t] += 1
+
+
+# ---------------------------------------------------------------------------------------- residual at nodes
+
+
+@njit(cache=True, nogil=True)
+def entry(q: tuple, n: tuple, c0: np.ndarray, c1: np.ndarray, size: np.ndarray) -> tuple[float, float, float]:
+    """Return height, share and cosine where a line enters the swept volume of one piece; see `ball_entry`."""
+    return ball_entry(q, n, c0, c1, size[1])
+
+
+@njit(cache=True, nogil=True)
+def surface_at(a: float, b: float, x: float, y: float) -> tuple[tuple, tuple]:
+    """Return the surface point [mm] over (x, y) [mm] and the unit normal there."""
+    gx, gy = 2.0 * a * x, -2.0 * b * y
+    w = math.sqrt(1.0 + gx * gx + gy * gy)
+    return (x, y, a * x * x - b * y * y), (-gx / w, -gy / w, 1.0 / w)
+
+
+@njit(cache=True, nogil=True)
+def cut_node(
+    q: tuple, n: tuple, height: float, owner: int, listed: np.ndarray, c0: np.ndarray, c1: np.ndarray,
+    size: np.ndarray, state: np.ndarray, floor: float,
+) -> tuple[float, int]:  # fmt: skip
+    """Return the residual height [mm] and the piece that left it, after the listed pieces cut one normal line.
+
+    A piece in state 1 lowers the residual if and only if the point at the present residual lies inside its swept ball:
+    its upper half is higher than any residual of interest. A piece in state 2 may lie below altogether; it counts
+    as far as it meets the line above ``floor``, where the line leaves the part.
+    """
+    px, py, pz = q[0] + height * n[0], q[1] + height * n[1], q[2] + height * n[2]
+    for e in range(listed.size):
+        k = listed[e]
+        if state[k] == 1 and size[k, 0] == 0.0 and not in_ball(px, py, pz, c0[k], c1[k], size[k, 1]):
+            continue
+        h, _, _ = entry(q, n, c0[k], c1[k], size[k])
+        if h >= height:
+            continue
+        if h < floor:
+            if state[k] == 2:
+                # The same line downwards: where it enters from above is where it leaves.
+                up, _, _ = entry(q, (-n[0], -n[1], -n[2]), c0[k], c1[k], size[k])
+                if -up <= floor:
+                    continue
+            h = floor
+            if h >= height:
+                continue
+        height, owner = h, k
+        px, py, pz = q[0] + h * n[0], q[1] + h * n[1], q[2] + h * n[2]
+    return height, owner
+
+
+@njit(cache=True, nogil=True)
+def sweep(
+    surface: tuple, nodes: tuple, tiles: tuple, lists: tuple, pieces: tuple, above: float,
+    height: np.ndarray, owner: np.ndarray,
+) -> None:  # fmt: skip
+    """Lower the residual heights of the nodes of a run of tiles.
+
+    Parameters
+    ----------
+    surface : (a, b, slope)
+    nodes : (x, y, floor, node_start)
+        Plan of the nodes (n,) [mm], where their normal lines leave the part (n,) [mm], first node of each tile.
+    tiles : (first, after last)
+    lists : (start, pieces)
+        From `bin_pieces`.
+    pieces : (c0, c1, size, state)
+    above : float [mm]
+        Only nodes that stand at least this high are worked on.
+    height : (n,) [mm]
+        Changed in place.
+    owner : (n,) int32
+        Changed in place.
+    """
+    a, b, _ = surface
+    x, y, floor, node_start = nodes
+    start, listing = lists
+    c0, c1, size, state = pieces
+    for t in range(tiles[0], tiles[1]):
+        listed = listing[start[t] : start[t + 1]]
+        if listed.size == 0:
+            continue
+        for i in range(node_start[t], node_start[t + 1]):
+            if height[i] < above:
+                continue
+            q, n = surface_at(a, b, x[i], y[i])
+            height[i], owner[i] = cut_node(
+                q, n, height[i], owner[i], listed, c0, c1, size, state, floor[i]
+            )  # fmt: skip
+
+
+# ---------------------------------------------------------------------------------------- upper bound between nodes
+
+_OWNERS = 8
+_DEEPEST = 12
+_STEEP = 0.84
+
+
+@njit(cache=True, nogil=True)
+def sag_ball(surface: tuple, edge2: float, heights: tuple, cosine: float, corner: float, w: float) -> float:
+    """Return how far one piece's residual can stand above its chord plane over a triangle [mm]; inf if too steep.
+
+    h'' >= -(2a + 4A sin(T) |h'| + 12 A^2 |h|) / cos(T), T the angle between normal line and swept volume, and the
+    chord plane is off by at most edge^2 / 6 times that; docs/theory-proof.md#bound.
+
+    Parameters
+    ----------
+    surface : (a, b, slope)
+    edge2 : float [mm^2]
+        Longest edge of the triangle in plan, squared.
+    heights : (h0, h1, h2) [mm]
+    cosine : float
+        Smallest cosine of T at the corners.
+    corner : float [mm]
+        Smallest radius of curvature of the swept volume.
+    w : float
+        Largest 1 / cos(slope) over the nodes.
+    """
+    a, b, _ = surface
+    k = 2.0 * max(a, b)
+    theta = math.acos(min(1.0, cosine)) + (1.5 * w / corner + k) * math.sqrt(edge2 / 3.0)
+    if theta > _STEEP:
+        return math.inf
+    sine, cosine = math.sin(theta), math.cos(theta)
+    high = max(abs(heights[0]), abs(heights[1]), abs(heights[2]))
+    slope = (w * sine + k * high) / cosine
+    return (2.0 * a + 2.0 * k * sine * slope + 3.0 * k * k * high) / cosine * edge2 / 6.0
+
+
+@njit(cache=True, nogil=True)
+def lower_of_two(first: np.ndarray, second: np.ndarray, weights: np.ndarray) -> float:
+    """Return the maximum over a triangle of the lower of two linear functions given at its corners.
+
+    The lower of two linear functions is concave and made of two planes: its maximum is at a corner, or where the two
+    cross on an edge. ``weights`` (3,) gets the barycentric place of it.
+    """
+    best = -math.inf
+    for i in range(3):
+        low = min(first[i], second[i])
+        if low > best:
+            best = low
+            weights[:] = 0.0
+            weights[i] = 1.0
+    for i in range(3):
+        j = (i + 1) % 3
+        gap_i, gap_j = first[i] - second[i], first[j] - second[j]
+        if gap_i * gap_j < 0.0:
+            s = gap_i / (gap_i - gap_j)
+            low = first[i] + s * (first[j] - first[i])
+            if low > best:
+                best = low
+                weights[:] = 0.0
+                weights[i], weights[j] = 1.0 - s, s
+    return best
+
+
+@njit(cache=True, nogil=True)
+def triangle_bound(
+    surface: tuple, corners: np.ndarray, owners: np.ndarray, count: int, pieces: tuple, cap: float, w: float,
+    value: np.ndarray, weights: np.ndarray,
+) -> float:  # fmt: skip
+    """Return an upper bound [mm] of the residual over one triangle from a few pieces.
+
+    Parameters
+    ----------
+    corners : (3, 2) [mm]
+    owners : (>= count,) int32
+        Pieces to use; any choice gives a bound, good ones a tight one.
+    cap : float [mm]
+        No residual is higher: the stock that was there before.
+    value : (>= count, 3)
+        Scratch: each piece's linear majorant at the corners.
+    weights : (3,)
+        Gets the barycentric place where the bound is reached.
+    """
+    a, b, _ = surface
+    c0, c1, size, _ = pieces
+    edge2 = 0.0
+    for i in range(3):
+        j = (i + 1) % 3
+        edge2 = max(edge2, (corners[i, 0] - corners[j, 0]) ** 2 + (corners[i, 1] - corners[j, 1]) ** 2)
+    usable = 0
+    cosines = np.ones(_OWNERS)
+    for o in range(count):
+        value[o, :] = math.inf
+        cosines[o] = 1.0
+    for i in range(3):
+        q, n = surface_at(a, b, corners[i, 0], corners[i, 1])
+        for o in range(count):
+            k = owners[o]
+            h, _, cosine = entry(q, n, c0[k], c1[k], size[k])
+            value[o, i] = h
+            cosines[o] = min(cosines[o], cosine)
+    bound = cap
+    weights[:] = 1.0 / 3.0
+    place = np.empty(3)
+    for o in range(count):
+        if math.isinf(value[o, 0]) or math.isinf(value[o, 1]) or math.isinf(value[o, 2]):
+            continue
+        sag = sag_ball(
+            surface, edge2, (value[o, 0], value[o, 1], value[o, 2]), cosines[o], size[owners[o], 1], w
+        )  # fmt: skip
+        if math.isinf(sag):
+            continue
+        value[usable] = value[o] + sag
+        for p in range(usable + 1):
+            found = lower_of_two(value[p], value[usable], place)
+            if found < bound:
+                bound = found
+                weights[:] = place
+        usable += 1
+    return bound
+
+
+@njit(cache=True, nogil=True)
+def add_owner(owners: np.ndarray, count: int, new: int) -> int:
+    """Put a piece into a short list unless it is there; the oldest but three goes when the list is full."""
+    for o in range(count):
+        if owners[o] == new:
+            return count
+    if count < _OWNERS:
+        owners[count] = new
+        return count + 1
+    for o in range(3, _OWNERS - 1):
+        owners[o] = owners[o + 1]
+    owners[_OWNERS - 1] = new
+    return count
+
+
+@njit(cache=True, nogil=True)
+def refine(
+    surface: tuple, nodes: tuple, triangles: np.ndarray, grid: tuple, lists: tuple, pieces: tuple,
+    cap: float, w: float, slack: float, owner: np.ndarray, best: np.ndarray, budget: int,
+) -> float:  # fmt: skip
+    """Search a run of triangles for the highest residual, and return a bound that none of them exceeds [mm].
+
+    A triangle whose bound is no more than ``slack`` above the highest residual seen is done; else the residual is
+    measured where the bound is reached, the piece found there joins the list, and the triangle is quartered.
+
+    Parameters
+    ----------
+    surface : (a, b, slope)
+    nodes : (x, y, floor)
+    triangles : (m, 3) int32
+        Nodes at the corners.
+    grid : (x low, y low, tile [mm], tiles in x, tiles in y)
+    lists : (start, pieces)
+    pieces : (c0, c1, size, state)
+    cap, w, slack : float
+    owner : (n,) int32
+    best : (4,)
+        Highest residual so far [mm], its x, y [mm] and its piece; changed in place.
+    budget : int
+        Most quarterings; once spent, bounds stand as they are.
+    """
+    a, b, _ = surface
+    x, y, floor = nodes
+    start, listing = lists
+    c0, c1, size, state = pieces
+    x_low, y_low, tile, nx, ny = grid
+    stack = np.empty((3 * _DEEPEST + 4, 3, 2))
+    depth = np.empty(3 * _DEEPEST + 4, np.int32)
+    known = np.empty((3 * _DEEPEST + 4, _OWNERS), np.int32)
+    counts = np.empty(3 * _DEEPEST + 4, np.int32)
+    value, weights, middle = np.empty((_OWNERS, 3)), np.empty(3), np.empty((3, 2))
+    corners, owners = np.empty((3, 2)), np.empty(_OWNERS, np.int32)
+    bound = -math.inf
+    for m in range(triangles.shape[0]):
+        counts[0] = 0
+        for i in range(3):
+            v = triangles[m, i]
+            stack[0, i, 0], stack[0, i, 1] = x[v], y[v]
+            if owner[v] >= 0:
+                counts[0] = add_owner(known[0], counts[0], owner[v])
+        depth[0] = 0
+        top = 0
+        while top >= 0:
+            corners[:] = stack[top]
+            owners[:] = known[top]
+            count, level = counts[top], depth[top]
+            top -= 1
+            found = triangle_bound(surface, corners, owners, count, pieces, cap, w, value, weights)
+            if found <= best[0] + slack or level >= _DEEPEST or budget <= 0:
+                bound = max(bound, found)
+                continue
+            budget -= 1
+            px = weights[0] * corners[0, 0] + weights[1] * corners[1, 0] + weights[2] * corners[2, 0]
+            py = weights[0] * corners[0, 1] + weights[1] * corners[1, 1] + weights[2] * corners[2, 1]
+            u = min(max(int(math.floor((px - x_low) / tile)), 0), nx - 1)
+            v = min(max(int(math.floor((py - y_low) / tile)), 0), ny - 1)
+            t = v * nx + u
+            q, n = surface_at(a, b, px, py)
+            h, k = cut_node(q, n, cap, -1, listing[start[t] : start[t + 1]], c0, c1, size, state, -math.inf)
+            if h > best[0]:
+                best[0], best[1], best[2], best[3] = h, px, py, k
+            if k >= 0:
+                count = add_owner(owners, count, k)
+            for i in range(3):
+                j = (i + 1) % 3
+                middle[i, 0] = 0.5 * (corners[i, 0] + corners[j, 0])
+                middle[i, 1] = 0.5 * (corners[i, 1] + corners[j, 1])
+            for child in range(4):
+                top += 1
+                if child < 3:
+                    stack[top, 0] = corners[child]
+                    stack[top, 1] = middle[child]
+                    stack[top, 2] = middle[(child + 2) % 3]
+                else:
+                    stack[top] = middle
+                depth[top] = level + 1
+                known[top] = owners
+                counts[top] = count
+    return bound

@@ -18,16 +18,19 @@ from anticlast.records import Finding, Floats, Ints, Job, Made, Purpose
 from anticlast.report.along import UNKNOWN, Along, along
 from anticlast.report.numbers import Units
 from anticlast.report.spacing import coded, highest_near, local_stepover, pooled
-from anticlast.report.thinning import thin_to
+from anticlast.report.thinning import GROWTH, thin, thin_to
 from anticlast.tolerances import MEASURE_MM
 
+FEW_ROWS = 12000  # up to here every row is kept
 MOST_KNOTS = 36000  # kept rows; about 100 bytes each in the page
 MOST_MAP_CELLS = 460  # along the longer side of the scallop map
 PATH_MM = 0.01  # the drawn path may leave the true one by this much before the number of knots forces more
 AXIS_UNIT = 0.004  # change of the unit axis that counts like PATH_MM (0.23 degrees)
-SHARE = 0.01  # share of a quantity's range that counts like PATH_MM
+SHARE = 0.02  # share of a quantity's range that counts like PATH_MM, before the number of knots forces more
+MOST_SHARE = 0.16  # beyond this the path gives way as well
 HEIGHT_STEP_MM = 1e-5  # one step of the map's int16 heights
 MESH_PARTS = 64  # edges of the drawn surface along its longer side
+SHAPED_BY = ("reached", "tilt", "rotary")  # quantities whose course along the program the kept rows follow
 PURPOSES = {
     Purpose.CUT: "cutting",
     Purpose.OVERRUN: "overrun past the outline",
@@ -97,6 +100,8 @@ def kept_rows(rows: Along, quantities: list[Floats], findings: tuple[Finding, ..
     tolerance : float
         Furthest the drawn path leaves the true one, mm.
     """
+    if len(rows.line) <= FEW_ROWS:
+        return np.arange(len(rows.line)), 0.0
     changes = [rows.purpose, rows.operation, rows.pass_index, rows.tool]
     kind = np.stack([np.asarray(change, dtype=np.int64) for change in changes], axis=1)
     differs = np.any(kind[1:] != kind[:-1], axis=1)
@@ -105,12 +110,21 @@ def kept_rows(rows: Along, quantities: list[Floats], findings: tuple[Finding, ..
     keep[1:] |= differs
     named = [finding.line for finding in findings if finding.line > 0]
     keep |= np.isin(rows.line, named)
-    columns = [rows.tip_mm / PATH_MM, rows.axis / AXIS_UNIT]
-    columns += [_even(values)[:, None] / SHARE for values in quantities]
+    pose = np.concatenate((rows.tip_mm / PATH_MM, rows.axis / AXIS_UNIT), axis=1)
     steps = np.linalg.norm(np.diff(rows.tip_mm, axis=0), axis=1)
     steps += np.linalg.norm(np.diff(rows.axis, axis=0), axis=1)  # a turn on the spot still takes its share
     path = np.concatenate(([0.0], np.cumsum(steps)))
-    chosen, tolerance = thin_to(np.concatenate(columns, axis=1), path, keep, 1.0, MOST_KNOTS)
+    even = np.stack([_even(values) for values in quantities], axis=1)
+    share = SHARE
+    while True:
+        values = np.concatenate((pose, even / share), axis=1)
+        chosen = thin(values, path, keep, 1.0)
+        if len(chosen) <= MOST_KNOTS:
+            return chosen, PATH_MM
+        if share >= MOST_SHARE:
+            break
+        share *= 2.0
+    chosen, tolerance = thin_to(values, path, keep, GROWTH, MOST_KNOTS)
     return chosen, tolerance * PATH_MM
 
 
@@ -170,7 +184,7 @@ def quantities(made: Made, rows: Along, units: Units) -> list[dict[str, Any]]:
 def path_data(made: Made, rows: Along, units: Units) -> dict[str, Any]:
     """Kept rows of the program with pose, words, line, purpose and quantities."""
     shown = quantities(made, rows, units)
-    chosen, tolerance = kept_rows(rows, [entry["values"] for entry in shown if entry["key"] != "pass"], made.findings)
+    chosen, tolerance = kept_rows(rows, [entry["values"] for entry in shown if entry["key"] in SHAPED_BY], made.findings)
     decimals = [_decimals(made.job, letter) for letter in rows.letters]
     scales = [units.scale if letter in "XYZ" else 1.0 for letter in rows.letters]
     words = np.rint(rows.words[chosen] * np.array(scales) * 10.0 ** np.array(decimals, dtype=float))

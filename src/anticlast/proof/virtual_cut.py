@@ -1,0 +1,276 @@
+"""The virtual cut: how high material is left over the finished surface, and how deep the cutter went below it.
+
+Heights are measured along the surface normal, at nodes on the finished surface and, where it matters, between them:
+`measure` returns the highest residual it found *and* a bound that no place inside the outline exceeds. Derivations:
+docs/theory-proof.md.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Iterable
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, TypeVar
+
+import numpy as np
+import numpy.typing as npt
+
+from anticlast.proof import _kernels
+from anticlast.proof.gouge import Gouge, deepest_gouge
+from anticlast.proof.nodes import Nodes, lay_nodes, part_depths_mm
+from anticlast.proof.pieces import Pieces, take_pieces
+from anticlast.saddle import Saddle
+from anticlast.tolerances import BOUND_SLACK_MM, MEASURE_MM, UNCUT_MM
+
+if TYPE_CHECKING:
+    from anticlast.records import Floats, Job, PartMotion, ScallopMap
+
+Answer = TypeVar("Answer")
+
+# Finest and coarsest grid chosen without being asked, and most nodes along the longer side.
+_FINEST_MM, _COARSEST_MM, _MOST_STEPS = 0.05, 0.5, 1000
+# Most quarterings of triangles in one run of the search for the peak: about a minute's work; the bound stays honest.
+_QUARTERINGS = 20_000_000
+_MAP_SIDE = 400
+_RUNS_PER_WORKER = 8
+
+
+@dataclass(frozen=True, slots=True)
+class Cut:
+    """What the virtual cut found.
+
+    Attributes
+    ----------
+    grid_mm : float
+    nodes : Nodes
+    height_mm : (n,)
+        Residual along the normal at each node; negative = gouge. Where no cutter came below the start, the start.
+    owner : (n,) int32
+        Row of the part motion whose piece left the residual, -1 where none did.
+    highest_mm, bound_mm : float
+        Highest residual found over the outline, and what no residual exceeds.
+    highest_at_mm : (float, float)
+        Where, part coordinates.
+    highest_piece : int
+        Row of the part motion, -1 if no cutter came there.
+    gouge : Gouge
+    uncut_area_mm2 : float
+        Plan area that no cutter reached below the starting stock, or below ``UNCUT_MM`` over the wanted surface.
+    """
+
+    grid_mm: float
+    nodes: Nodes
+    height_mm: Floats
+    owner: npt.NDArray[np.int32]
+    highest_mm: float
+    bound_mm: float
+    highest_at_mm: tuple[float, float]
+    highest_piece: int
+    gouge: Gouge
+    uncut_area_mm2: float
+
+
+def choose_grid_mm(job: Job) -> float:
+    """Return the grid spacing [mm] for a job: at most 1000 steps along the longer side, 0.05 to 0.5 mm.
+
+    The spacing does not limit the accuracy of the highest residual, which is searched for between nodes; it sets how
+    much of that search there is.
+    """
+    x0, y0, x1, y1 = job.part.outline.bounds
+    side = max(x1 - x0, y1 - y0)
+    return float(min(max(np.ceil(side / _MOST_STEPS * 100.0) / 100.0, _FINEST_MM), _COARSEST_MM))
+
+
+def measure(job: Job, motion: PartMotion, grid_mm: float | None = None, *, wanted_mm: float = 0.0) -> Cut:
+    """Cut the stock with read-back motion and measure what stands over the finished surface.
+
+    Parameters
+    ----------
+    job : Job
+        Part, stock and cutters are used; operations are not.
+    motion : PartMotion
+        Part coordinates. Rapids cut like feed moves.
+    grid_mm : float, optional
+        Spacing of the nodes [mm]; `choose_grid_mm` if not given.
+    wanted_mm : float
+        Height over the finished surface that the last operation is to leave [mm], >= 0.
+
+    Returns
+    -------
+    Cut
+
+    Raises
+    ------
+    NotConverged
+        From the geometry, if an iteration stalls.
+    """
+    grid = choose_grid_mm(job) if grid_mm is None else grid_mm
+    saddle = Saddle.of(job.part)
+    nodes = lay_nodes(job.part.outline, saddle, grid)
+    pieces = take_pieces(motion, job.cutters, saddle)
+    field = _Field(job, saddle, nodes, pieces, wanted_mm)
+    field.cut()
+    gouge = deepest_gouge(saddle, job.part.outline, pieces)
+    highest, bound = field.search()
+    untouched = np.mean(field.owner[nodes.triangles] < 0, axis=1)
+    x, y = saddle.plan(highest[1], highest[2])
+    return Cut(
+        grid_mm=grid,
+        nodes=nodes,
+        height_mm=field.height,
+        owner=field.owner,
+        highest_mm=float(highest[0]),
+        bound_mm=bound,
+        highest_at_mm=(float(x), float(y)),
+        highest_piece=int(highest[3]),
+        gouge=gouge,
+        uncut_area_mm2=float(np.sum(untouched * nodes.triangle_areas_mm2())),
+    )
+
+
+class _Field:
+    """Residual heights at the nodes while the pieces cut them."""
+
+    def __init__(self, job: Job, saddle: Saddle, nodes: Nodes, pieces: Pieces, wanted_mm: float) -> None:
+        self.job, self.saddle, self.nodes, self.pieces = job, saddle, nodes, pieces
+        gradient = np.hypot(*saddle.gradient(nodes.xy[:, 0], nodes.xy[:, 1]))
+        steepest = float(gradient.max())
+        self.stretch = float(np.hypot(1.0, steepest))
+        self.slope = steepest / self.stretch
+        self.surface = (saddle.a_per_mm, saddle.b_per_mm, self.slope)
+        self.start = _starting_stock_mm(job, saddle, nodes, wanted_mm + UNCUT_MM)
+        self.cap = float(self.start.max())
+        self.low = min(self.cap, wanted_mm + _first_reach_mm(job))
+        self.height = np.minimum(self.start, self.low)
+        self.owner = np.full(len(nodes.x), -1, np.int32)
+        self.floor = np.full(len(nodes.x), -np.inf)
+        self.state = np.zeros(len(pieces.c0), np.uint8)
+        self.lists: tuple[npt.NDArray[np.int64], npt.NDArray[np.int32]] | None = None
+
+    def _bin(self, high_mm: float) -> None:
+        """List the pieces that can cut each tile below a height."""
+        pieces, tiles = self.pieces, len(self.nodes.tile_start) - 1
+        start, none = np.zeros(tiles + 1, np.int64), np.empty(0, np.int32)
+        self.state[:] = 0
+        arguments = (self.surface, pieces.c0, pieces.c1, pieces.size, pieces.active, high_mm, self.nodes.tiling)
+        _kernels.bin_pieces(*arguments, start, none, self.state)
+        start = np.cumsum(start)
+        listing = np.empty(int(start[-1]), np.int32)
+        if listing.size:
+            _kernels.bin_pieces(*arguments, start, listing, self.state)
+        self.lists = (start, listing)
+        if np.any(self.state == 2) and np.isinf(self.floor[0]):
+            self.floor = part_depths_mm(self.nodes, self.job.part.outline, self.saddle, self.job.stock.bottom_mm)
+
+    def _kernel_pieces(self) -> tuple[Floats, Floats, Floats, npt.NDArray[np.uint8]]:
+        return self.pieces.c0, self.pieces.c1, self.pieces.size, self.state
+
+    def _sweep(self, above_mm: float) -> None:
+        nodes = self.nodes
+        lists = self.lists
+        arrays = (nodes.x, nodes.y, self.floor, nodes.tile_start)
+
+        def run(span: tuple[int, int]) -> None:
+            _kernels.sweep(
+                self.surface, arrays, span, lists, self._kernel_pieces(), above_mm, self.height, self.owner
+            )  # fmt: skip
+
+        _in_threads(run, _spans(len(nodes.tile_start) - 1))
+
+    def cut(self) -> None:
+        """Cut all nodes: first with the pieces that come near the surface, then what stands higher with all."""
+        self._bin(self.low)
+        self._sweep(-np.inf)
+        missed = self.owner < 0
+        self.height[missed] = self.start[missed]
+        if np.any(missed) and self.low < self.cap:
+            self._bin(self.cap)
+            self._sweep(self.low)
+        if np.isinf(self.floor[0]) and np.any(self.height < -MEASURE_MM):
+            self.floor = part_depths_mm(self.nodes, self.job.part.outline, self.saddle, self.job.stock.bottom_mm)
+            self.height = np.maximum(self.height, np.minimum(self.floor, 0.0))
+
+    def search(self) -> tuple[Floats, float]:
+        """Return the highest residual with its place and piece, (4,), and a bound over the whole outline."""
+        nodes = self.nodes
+        top = int(np.argmax(self.height))
+        best = np.array([self.height[top], nodes.x[top], nodes.y[top], self.owner[top]])
+        highest = float(best[0])
+        if highest >= self.cap:
+            return best, self.cap
+        # What is looked at stands no higher than the highest node and what a coarse cell may hide above it.
+        reach = min(self.cap, 2.0 * highest + nodes.tiling[2] ** 2 / 100.0)
+        self._bin(reach)
+        lists, arrays = self.lists, (nodes.x, nodes.y, self.floor)
+
+        def run(span: tuple[int, int]) -> tuple[Floats, float]:
+            own = best.copy()
+            bound = _kernels.refine(
+                self.surface, arrays, nodes.triangles[span[0] : span[1]], nodes.tiling, lists, self._kernel_pieces(),
+                self.cap, self.stretch, BOUND_SLACK_MM, self.owner, own, _QUARTERINGS,
+            )  # fmt: skip
+            return own, bound
+
+        found = _in_threads(run, _spans(len(nodes.triangles)))
+        best = max((own for own, _ in found), key=lambda own: own[0])
+        return best, max(float(best[0]), *(bound for _, bound in found))
+
+
+def _first_reach_mm(job: Job) -> float:
+    """Return a height [mm] that finishing passes are likely to come below everywhere: short lists for the first cut."""
+    limits = [operation.scallop_mm for operation in job.operations if operation.scallop_mm]
+    return 3.0 * max(limits) if limits else UNCUT_MM / 10.0
+
+
+def _starting_stock_mm(job: Job, saddle: Saddle, nodes: Nodes, cap_mm: float) -> Floats:
+    """Return how high the blank stands over each node along the normal, (n,) [mm], no more than a cap."""
+    if job.stock.allowance_mm is not None:
+        return np.full(len(nodes.x), min(cap_mm, job.stock.allowance_mm))
+    z = saddle.height(nodes.xy[:, 0], nodes.xy[:, 1])
+    return np.minimum(cap_mm, (job.stock.top_mm - z) / saddle.normal(nodes.xy)[:, 2])
+
+
+def _spans(count: int) -> list[tuple[int, int]]:
+    """Return runs of rows that share out work over the workers, several each to even it out."""
+    runs = max(1, min(count, _RUNS_PER_WORKER * _workers()))
+    edges = np.linspace(0, count, runs + 1).astype(int)
+    return list(zip(edges[:-1].tolist(), edges[1:].tolist(), strict=True))
+
+
+def _workers() -> int:
+    return max(1, min(8, os.cpu_count() or 1))
+
+
+def _in_threads(work: Callable[[tuple[int, int]], Answer], runs: Iterable[tuple[int, int]]) -> list[Answer]:
+    """Do the runs in threads (the kernels release the interpreter), answers in order."""
+    with ThreadPoolExecutor(_workers()) as pool:
+        return list(pool.map(work, runs))
+
+
+def scallop_map(cut: Cut) -> ScallopMap:
+    """Return the measured heights in plan, thinned to at most 400 by 400 points.
+
+    Each point stands for a block of grid points: their highest residual, or the deepest gouge if there is one beyond
+    the measuring uncertainty.
+    """
+    from anticlast.records import ScallopMap
+
+    at = cut.nodes.at_grid
+    height = np.where(at >= 0, cut.height_mm[np.maximum(at, 0)], np.nan)
+    step = max(1, -(-max(height.shape) // _MAP_SIDE))
+    rows, columns = (-(-size // step) for size in height.shape)
+    padded = np.full((rows * step, columns * step), np.nan)
+    padded[: height.shape[0], : height.shape[1]] = height
+    blocks = padded.reshape(rows, step, columns, step).transpose(0, 2, 1, 3).reshape(rows, columns, -1)
+    empty = np.all(np.isnan(blocks), axis=2)
+    blocks[empty] = 0.0
+    high, low = np.nanmax(blocks, axis=2), np.nanmin(blocks, axis=2)
+    picked = np.where(low < -MEASURE_MM, low, high)
+    picked[empty] = np.nan
+    middle = step // 2
+    return ScallopMap(
+        x_mm=cut.nodes.grid_x_mm[np.minimum(np.arange(columns) * step + middle, height.shape[1] - 1)],
+        y_mm=cut.nodes.grid_y_mm[np.minimum(np.arange(rows) * step + middle, height.shape[0] - 1)],
+        height_mm=picked.astype(np.float32),
+    )
