@@ -44,17 +44,45 @@ SIZE_MM = (60.0, 40.0)
 def machine() -> Machine:
     linear = [Axis(letter, "linear", (-75.0, 75.0), 3000.0, 2000.0, 400.0, 8000.0) for letter in "XYZ"]
     turn = [
-        Axis("A", "rotary", (-120.0, 30.0), 3600.0, 3600.0, 1500.0, 3e4, "work", (1.0, 0.0, 0.0), (0.0, 0.0, 0.0), -1),
+        Axis(
+            "A",
+            "rotary",
+            (-120.0, 30.0),
+            3600.0,
+            3600.0,
+            1500.0,
+            3e4,
+            "work",
+            (1.0, 0.0, 0.0),
+            (0.0, 0.0, 0.0),
+            -1,
+        ),
         Axis("C", "rotary", None, 7200.0, 7200.0, 3000.0, 6e4, "work", (0.0, 0.0, 1.0), (0.0, 0.0, 0.0), -1),
     ]
     control = Control("inverse", "G64", 4, 4, 3, 500.0, False, "M2")
     title = "Small trunnion mill: A tilts, C turns the table"
-    return Machine("trunnion-ac", title, "mm", 0.0, (*linear, *turn), Spindle(2000, 24000, 0.35), control, Path("t.toml"))
+    return Machine(
+        "trunnion-ac", title, "mm", 0.0, (*linear, *turn), Spindle(2000, 24000, 0.35), control, Path("t.toml")
+    )
 
 
 def job(name: str = "press mould", units: str = "mm") -> Job:
     finish = Operation(
-        1, "finish", BALL, "raster", 0.0, 0.012, None, 0.0, 18000.0, 1500.0, math.radians(15), 0.0, None, 0.002, "both"
+        1,
+        "finish",
+        BALL,
+        "raster",
+        0.0,
+        0.012,
+        None,
+        0.0,
+        18000.0,
+        1500.0,
+        math.radians(15),
+        0.0,
+        None,
+        0.002,
+        "both",
     )
     return Job(
         name=name,
@@ -93,7 +121,13 @@ def stretch(job: Job, across: float, turned: bool, number: int, points: int) -> 
     purpose = np.concatenate(([Purpose.ENTRY], purpose, [Purpose.EXIT])).astype(np.uint8)
     purpose[1] = Purpose.ENTRY
     return Stretch(
-        tip, axis[rows], touch[rows], normal[rows], purpose, np.full(points + 2, number), np.full(points + 2, 1500.0)
+        tip,
+        axis[rows],
+        touch[rows],
+        normal[rows],
+        purpose,
+        np.full(points + 2, number),
+        np.full(points + 2, 1500.0),
     )
 
 
@@ -108,14 +142,23 @@ def axis_words(tip: np.ndarray, axis: np.ndarray, origin: np.ndarray) -> np.ndar
     return np.round(np.column_stack((turned - origin, np.degrees(a), np.degrees(c))), 4)
 
 
-def made(points: int = 60, passes: int = 81, name: str = "press mould", units: str = "mm", folder: Path | None = None) -> Made:
+def made(
+    points: int = 60,
+    passes: int = 81,
+    name: str = "press mould",
+    units: str = "mm",
+    folder: Path | None = None,
+) -> Made:
     """A released job: ``passes`` passes of ``points`` points, proven on a grid, timed."""
     the_job = job(name, units)
     across = (np.arange(passes) - (passes - 1) / 2) * min(STEPOVER_MM, SIZE_MM[1] / max(passes - 1, 1))
     stretches = tuple(stretch(the_job, y, bool(i % 2), i, points) for i, y in enumerate(across))
     operation = the_job.operations[0]
     predicted = 0.0115
-    cut = sum(float(np.linalg.norm(np.diff(s.contact_mm, axis=0), axis=1)[s.purpose[1:] == 0].sum()) for s in stretches)
+    cut = sum(
+        float(np.linalg.norm(np.diff(s.contact_mm, axis=0), axis=1)[s.purpose[1:] == 0].sum())
+        for s in stretches
+    )
     plan = CutterPath(operation, stretches, passes, cut, (0.49, 0.51), predicted, 0.0004)
 
     tip = np.concatenate([s.tip_mm for s in stretches])
@@ -180,7 +223,9 @@ def scallop_map(the_job: Job, across: np.ndarray) -> ScallopMap:
     field = np.repeat(height[:, None], len(x), axis=1) * (1 - 0.3 * np.abs(x) / 30)
     grid_x, grid_y = np.meshgrid(x, y)
     field[np.hypot(grid_x + 20, grid_y + 12) < 1.5] = -0.004
-    inside = the_job.part.outline.contains(np.column_stack((grid_x.ravel(), grid_y.ravel()))).reshape(field.shape)
+    inside = the_job.part.outline.contains(np.column_stack((grid_x.ravel(), grid_y.ravel()))).reshape(
+        field.shape
+    )
     field[~inside] = np.nan
     return ScallopMap(x, y, field.astype(np.float32))
 
@@ -188,12 +233,29 @@ def scallop_map(the_job: Job, across: np.ndarray) -> ScallopMap:
 def checks(line: np.ndarray) -> tuple[Finding, ...]:
     at = int(line[len(line) // 3])
     return (
-        Finding("scallop", True, 0.0113, 0.012, "mm", at, "The highest scallop left is 11.3 µm; the job allows 12 µm."),
-        Finding("gouge", True, 0.0003, 0.002, "mm", at + 20, "Nothing is cut more than 0.3 µm below the surface."),
+        Finding(
+            "scallop",
+            True,
+            0.0113,
+            0.012,
+            "mm",
+            at,
+            "The highest scallop left is 11.3 µm; the job allows 12 µm.",
+        ),
+        Finding(
+            "gouge", True, 0.0003, 0.002, "mm", at + 20, "Nothing is cut more than 0.3 µm below the surface."
+        ),
         Finding("holder", True, 4.2, 0.5, "mm", at + 90, "The holder stays 4.2 mm clear of the stock."),
         Finding("travel X", True, 44.0, 75.0, "mm", at + 7, "X reaches 44 mm of 75 mm."),
         Finding(
-            "cutting speed", False, 62.0, 90.0, "m/min", 0, "The ball cuts at 62 m/min, slower than usual.", warning=True
+            "cutting speed",
+            False,
+            62.0,
+            90.0,
+            "m/min",
+            0,
+            "The ball cuts at 62 m/min, slower than usual.",
+            warning=True,
         ),
     )
 
@@ -201,7 +263,13 @@ def checks(line: np.ndarray) -> tuple[Finding, ...]:
 def withheld(base: Made) -> Made:
     """The same job with a failed check: no file stands under the program's name."""
     bad = Finding(
-        "scallop", False, 0.0148, 0.012, "mm", int(base.program.motions.line[300]), "A scallop of 14.8 µm is left; 12 allowed."
+        "scallop",
+        False,
+        0.0148,
+        0.012,
+        "mm",
+        int(base.program.motions.line[300]),
+        "A scallop of 14.8 µm is left; 12 allowed.",
     )
     findings = (base.findings[1], bad, *base.findings[2:])
     proof = replace(base.proof, findings=findings, scallop_max_mm=0.0148)
@@ -213,7 +281,9 @@ def withheld(base: Made) -> Made:
 
 def not_planned(base: Made) -> Made:
     """A job for which no path could be planned: nothing but findings and advice."""
-    bad = Finding("cutter 1 fits the surface", False, 40.0, 31.25, "mm", 0, "T1: ball radius 40 mm against 31.25 mm.")
+    bad = Finding(
+        "cutter 1 fits the surface", False, 40.0, 31.25, "mm", 0, "T1: ball radius 40 mm against 31.25 mm."
+    )
     return Made(
         job=base.job, released=False, cutter_paths=(), axis_paths=(), program=None, program_text=None, program_sha256="",
         part_motion=None, proof=None, times=None, operations=(), findings=(bad,),

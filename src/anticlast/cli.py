@@ -186,7 +186,9 @@ def scallop(
         operation = _ball_operation(loaded.operations, job)
         answer = pipeline.scallop(loaded, operation, stepover=stepover, scallop=height, direction_deg=direction)
         if picture is not None:
-            pipeline.scallop_picture(loaded, answer, picture)
+            from anticlast.report.pictures import scallop_picture
+
+            scallop_picture(loaded, answer, picture)
     if as_json:
         _print_json(answer.as_json())
         return

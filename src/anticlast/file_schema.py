@@ -8,6 +8,7 @@ import types
 import typing
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from decimal import Decimal
 from functools import cache
 from typing import Annotated, Any, Final, Generic, Literal, TypeVar
 
@@ -34,6 +35,11 @@ _UNITS: Final[dict[str, tuple[float, str, str]]] = {
     "jerk": (MM_PER_INCH, "mm/s^3", "inch/s^3"),
     "curvature": (1.0 / MM_PER_INCH, "1/mm", "1/inch"),
 }
+
+
+def plain_number(value: float) -> str:
+    """Write a number to 6 digits without an exponent."""
+    return format(Decimal(f"{value:.6g}"), "f")
 
 
 @dataclass(frozen=True, slots=True)
@@ -71,9 +77,9 @@ class Quantity:
     def range_text(self, units: Units) -> str:
         """Say the range in the file's units, as in ``above 0 and at most 100 mm``."""
         factor, unit = self.factor(units), self.unit_name(units)
-        low, high = f"{self.low / factor:.6g}", f"{self.high / factor:.6g}"
+        low, high = plain_number(self.low / factor), plain_number(self.high / factor)
         span = f"above {low} and at most {high}" if self.above else f"from {low} to {high}"
-        return f"{span} {unit}".rstrip()
+        return f"{span}, in {unit}" if unit.startswith("1/") else f"{span} {unit}".rstrip()
 
     def describe(self, units: Units) -> str:
         """Say what is needed, as in ``a number above 0 and at most 100 mm``."""
@@ -185,9 +191,14 @@ def options_text(options: typing.Iterable[str]) -> str:
     return quoted[0] if len(quoted) == 1 else ", ".join(quoted[:-1]) + " or " + quoted[-1]
 
 
+def needed_option(options: typing.Sequence[str]) -> str:
+    """Say which text is needed: ``one of "ball", "bull" or "flat"``, or the only one."""
+    return f"one of {options_text(options)}" if len(options) > 1 else options_text(options)
+
+
 def nearest(word: str, options: typing.Iterable[str]) -> str | None:
     """Return the option most like a word, or None if none is much like it."""
-    close = difflib.get_close_matches(word.lower()[:80], list(options), n=1, cutoff=0.6)
+    close = difflib.get_close_matches(word.lower()[:80], list(options), n=1, cutoff=0.65)
     return close[0] if close else None
 
 
@@ -214,7 +225,7 @@ def describe(annotation: Any, units: Units) -> str:
     if origin in (types.UnionType, typing.Union):
         return describe(next(option for option in arguments if option is not types.NoneType), units)
     if origin is Literal:
-        return f"one of {options_text(arguments)}" if len(arguments) > 1 else options_text(arguments)
+        return needed_option(arguments)
     if origin is tuple:
         if arguments[-1] is Ellipsis:
             return f"a list, each item {describe(arguments[0], units)}"

@@ -127,7 +127,8 @@ def _read_tables(source: Source, folder: Path) -> _Draft:
     def table(key: str, model: type[Any]) -> Checked[Any]:
         if key not in data:
             required = [name for name, field in model.model_fields.items() if field.is_required()]
-            source.add((key,), f"missing; needs a table [{key}] with the keys {', '.join(required)}")
+            keys = f"the key{'s' if len(required) > 1 else ''} {', '.join(required)}"
+            source.add((key,), f"missing; needs a table [{key}] with {keys}")
             return Checked(source, (key,), {}, frozenset(), model)
         return check_table(source, (key,), data[key], model, units)
 
@@ -157,7 +158,7 @@ def _read_tables(source: Source, folder: Path) -> _Draft:
 
 
 def _machine(draft: _Draft) -> tuple[Machine | None, list[Fault]]:
-    """Load the machine; a missing file is a fault of the job file, what is wrong inside one of the machine file."""
+    """Load the machine; a missing file is a fault of the job file, what is wrong inside it its own."""
     name = draft.machine.get("file")
     if name is None:
         return None, []

@@ -18,6 +18,7 @@ from anticlast.file_schema import (
     is_line,
     key_types,
     nearest,
+    needed_option,
 )
 from anticlast.job_schema import (
     FINISH_PATTERNS,
@@ -82,12 +83,11 @@ def check_outline_keys(outline: Checked[OutlineTable], units: Units) -> bool:
     if shape is None:
         return False
     needed, optional = OUTLINE_KEYS[shape]
-    good = True
+    good = all(outline.get(key) is not None for key in (*needed, *outline.given))
     for key in needed:
         if key not in outline.given:
             what = describe(key_types(OutlineTable)[key], units)
             outline.fault(key, f'missing; the shape "{shape}" needs {what}')
-        good = good and outline.get(key) is not None
     for key in sorted(outline.given & set(OutlineTable.model_fields) - {"shape", *needed, *optional}):
         keys = ", ".join((*needed, *optional))
         outline.fault(key, f'has no place in the shape "{shape}", whose keys are {keys}')
@@ -203,10 +203,8 @@ def _check_pattern(operation: Checked[OperationTable], cutter: Checked[CutterTab
         return
     allowed = ROUGH_PATTERNS if does == "rough" else FINISH_PATTERNS
     if pattern not in allowed:
-        options = ", ".join(f'"{each}"' for each in allowed)
-        operation.fault(
-            "pattern", f'found "{pattern}"; an operation that does "{does}" needs one of {options}'
-        )
+        needed = needed_option(allowed)
+        operation.fault("pattern", f'found "{pattern}"; an operation that does "{does}" needs {needed}')
     elif pattern == "matched" and cutter is not None and cutter.get("shape") == "ball":
         operation.fault(
             "pattern", 'found "matched" with a ball cutter; needs a bull or flat cutter, or another pattern'
@@ -258,14 +256,24 @@ def _check_axis(operation: Checked[OperationTable], units: Units) -> None:
 def _check_direction(
     operation: Checked[OperationTable], key: str, value: tuple[Any, ...], units: Units
 ) -> None:
-    numbers = all(isinstance(part, (int, float)) and not isinstance(part, bool) for part in value)
-    if len(value) != 3 or not numbers or not all(abs(part) <= 1e6 for part in value):
+    if len(value) != 3:
         operation.fault(key, f"found {found_text(value)}; needs {describe(Direction, units)}")
-    elif not value[2] > 0:
+        return
+    bad = [position for position, part in enumerate(value) if not _is_number(part)]
+    for position in bad:
+        place = (*operation.at, key, position)
+        operation.source.add(place, f"found {found_text(value[position])}; needs a number")
+    if bad:
+        return
+    if not value[2] > 0:
         operation.fault(
             key,
             f"found k = {value[2]:g}; needs k above 0: the direction points from the tip up to the spindle",
         )
+
+
+def _is_number(value: Any) -> bool:
+    return isinstance(value, (int, float)) and not isinstance(value, bool) and abs(value) <= 1e6
 
 
 def axis_of(table: OperationTable) -> tuple[float, float, float] | None:
@@ -286,9 +294,9 @@ def surface_range(
 ) -> tuple[Floats, Floats]:
     """Return the lowest and the highest point of the finished surface inside an outline.
 
-    A saddle has no lowest or highest point of its own, so both lie on the boundary. Along an edge p + t d the height
-    is q2 t^2 + q1 t + q0 with q2 = a dx'^2 - b dy'^2, q1 = 2 (a x' dx' - b y' dy'): its ends and t = -q1 / (2 q2) are
-    all the candidates, exact for the polygon (derived here).
+    A saddle has no lowest or highest point of its own, so both lie on the boundary. Along an edge p + t d the
+    height is q2 t^2 + q1 t + q0 with q2 = a dx'^2 - b dy'^2, q1 = 2 (a x' dx' - b y' dy'): its ends and
+    t = -q1 / (2 q2) are all the candidates, exact for the polygon (derived here).
 
     Returns
     -------
@@ -332,12 +340,12 @@ def check_stock(stock: Checked[StockTable], surface: tuple[Floats, Floats] | Non
     if top is not None and high[2] > top:
         stock.fault(
             "top",
-            f"found {length_text(top, units)}; needs at least the highest of the surface, {_height(high, units)}",
+            f"found {length_text(top, units)}; needs at least the highest surface, {_height(high, units)}",
         )
     if bottom is not None and low[2] <= bottom:
         stock.fault(
             "bottom",
-            f"found {length_text(bottom, units)}; needs less than the lowest of the surface, {_height(low, units)}",
+            f"found {length_text(bottom, units)}; needs less than the lowest surface, {_height(low, units)}",
         )
 
 

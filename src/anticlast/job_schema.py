@@ -1,7 +1,7 @@
 """The tables of a job file: every key with its type, unit, range and default.
 
-``docs/job-file.md`` lists the same. Ranges are sanity limits of bench-top work, generous on purpose: what is outside
-is a slip of the pen (common practice).
+``docs/job-file.md`` lists the same. Ranges are sanity limits of bench-top work, generous on purpose: what is
+outside is a slip of the pen (common practice).
 """
 
 from __future__ import annotations

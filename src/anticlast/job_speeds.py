@@ -90,15 +90,16 @@ def _check_speed(
     slowest, fastest = (math.pi * diameter_mm * limit / 1000.0 for limit in (low, high))
     operation.fault(
         "cutting_speed",
-        f"found {table.cutting_speed:g}; on the effective diameter of {diameter_mm:.4g} mm that is {rpm:.0f} rev/min, "
-        f"but {machine.name} turns from {low:g} to {high:g}; needs from {slowest:.4g} to {fastest:.4g} m/min, or spindle",
+        f"found {table.cutting_speed:g}; on the effective diameter of {diameter_mm:.4g} mm that is {rpm:.0f} "
+        f"rev/min, but {machine.name} turns from {low:g} to {high:g}; "
+        f"needs from {slowest:.4g} to {fastest:.4g} m/min, or spindle",
     )
 
 
 def _cutting_diameter_mm(
     table: OperationTable, cutter: Cutter, machine: Machine, left_before_mm: float | None
 ) -> float:
-    """Effective diameter at the depth the operation takes off; if that is unknown, at the depth of its scallop."""
+    """Effective diameter at the depth the operation takes off; if unknown, at the depth of its scallop."""
     if left_before_mm is not None and left_before_mm > table.allowance:
         depth_mm = left_before_mm - table.allowance
     elif table.scallop is not None:
@@ -111,7 +112,7 @@ def _cutting_diameter_mm(
 
 
 def _tilt_rad(table: OperationTable, machine: Machine) -> float:
-    """Angle between cutter axis and surface normal that is asked for; at the saddle point for a fixed axis."""
+    """Angle asked for between cutter axis and surface normal; at the saddle point for a fixed axis."""
     fixed = axis_of(table)
     if fixed is not None:
         return math.acos(min(1.0, fixed[2]))

@@ -25,9 +25,9 @@ class CuttingForce:
     Attributes
     ----------
     kc11_n_mm2, mc : float
-        Kienzle's law; ``kc11`` is the force at h = 1 mm on 1 mm of width. Zero if the source uses the other form.
+        Kienzle's law; ``kc11`` is the force at h = 1 mm on 1 mm of width. Zero if the other form is used.
     ktc_n_mm2, kte_n_mm : float
-        Shearing and edge terms of the mechanistic law. Zero where the source uses Kienzle's.
+        Shearing and edge terms of the mechanistic law. Zero if Kienzle's is used.
     source : str
     """
 
@@ -73,7 +73,7 @@ class Material:
     cautions: tuple[str, ...]
 
     def specific_force_n_mm2(self, thickness_mm: float) -> tuple[float, float] | None:
-        """Lowest and highest specific cutting force by all sources at a chip thickness; None without a source.
+        """Lowest and highest specific cutting force that the sources give; None without a source.
 
         Parameters
         ----------

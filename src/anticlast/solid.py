@@ -1,25 +1,22 @@
 """The finished part as a closed triangle mesh: saddle on top, upright walls along the outline, flat bottom.
 
-The top is the outline cut into triangles, lifted onto the saddle. Over a plan triangle a quadratic height leaves
-the flat facet by at most k L^2 / 8, with L its longest edge and k the greatest second derivative of the height in
-any direction, here 2 max(a, b) (standard bound of linear interpolation, for a right or obtuse triangle or a surface
-with no extremum inside). The distance to the surface is no more than that vertical one.
+The top is the outline cut into triangles, lifted onto the saddle. Over a plan triangle a quadratic height
+leaves the flat facet by at most k L^2 / 8, with L its longest edge and k the greatest second derivative of
+the height in any direction, here 2 max(a, b) (standard bound of linear interpolation, for a right or obtuse
+triangle or a surface with no extremum inside). The distance to the surface is no more than that vertical
+one.
 """
 
 from __future__ import annotations
 
 import math
-import os
-import tempfile
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
-import shapely
-from shapely.geometry import MultiPolygon, Polygon
 
-from anticlast.errors import CannotPlan, CannotWrite, OutlineError
-from anticlast.outline_checks import place
+from anticlast.errors import CannotPlan
+from anticlast.files import beside
 from anticlast.saddle import Saddle
 from anticlast.tolerances import WELD_MM
 
@@ -63,9 +60,7 @@ def finished_part(part: Part, bottom_mm: float, chord_mm: float) -> trimesh.Trim
     Raises
     ------
     CannotPlan
-        The bottom is not below the surface, or the mesh did not close.
-    OutlineError
-        Two rings of the outline touch, so that the walls would meet in a line.
+        The bottom is not below the surface, or two rings of the outline touch, so that walls meet in a line.
     """
     import trimesh
 
@@ -78,19 +73,17 @@ def finished_part(part: Part, bottom_mm: float, chord_mm: float) -> trimesh.Trim
             worst=bottom_mm,
             limit=lowest,
         )
-    edges = _rim(faces)
-    rim = edges[:, 0]
-    foot = np.full(len(top), -1, dtype=np.int64)
-    foot[rim] = len(top) + np.arange(len(rim))
-    vertices = np.concatenate((top, np.column_stack((top[rim, :2], np.full(len(rim), bottom_mm)))))
-    start, end = edges.T
+    # The bottom is the top seen from below, so that walls need nothing but the boundary edges.
+    under = len(top)
+    vertices = np.concatenate((top, np.column_stack((top[:, :2], np.full(under, bottom_mm)))))
+    start, end = _rim(faces).T
     walls = np.concatenate(
-        (np.column_stack((end, start, foot[start])), np.column_stack((end, foot[start], foot[end])))
+        (np.column_stack((end, start, start + under)), np.column_stack((end, start + under, end + under)))
     )
-    bottom = foot[_filled(edges, top[:, :2])][:, ::-1]
+    bottom = faces[:, ::-1] + under
     solid = trimesh.Trimesh(vertices, np.concatenate((faces, walls, bottom)), process=False, validate=False)
     if not solid.is_watertight:
-        raise CannotPlan("solid", "the mesh of the finished part did not close", worst=1.0, limit=0.0, unit="mesh")
+        raise CannotPlan("solid", "the mesh of the part does not close; holes have to keep clear of the edge")
     return solid
 
 
@@ -105,16 +98,8 @@ def write_stl(part: Part, bottom_mm: float, chord_mm: float, path: Path) -> None
         The file cannot be written; what stood under its name stays.
     """
     data = finished_part(part, bottom_mm, chord_mm).export(file_type="stl")
-    held: Path | None = None
-    try:
-        with tempfile.NamedTemporaryFile(dir=path.parent, prefix=f".{path.name}.", delete=False) as beside:
-            held = Path(beside.name)
-            beside.write(data)
-        os.replace(held, path)
-    except OSError as error:
-        if held is not None:
-            held.unlink(missing_ok=True)
-        raise CannotWrite(path, error.strerror or str(error)) from None
+    with beside(path, text=False) as (stream, _):
+        stream.write(data)
 
 
 def _cell_mm(part: Part, chord_mm: float) -> float:
@@ -124,7 +109,7 @@ def _cell_mm(part: Part, chord_mm: float) -> float:
 
 
 def _welded(triangles: Floats) -> tuple[Floats, Ints]:
-    """Return shared corners (n, 2) and faces (m, 3) of triangles (m, 3, 2); those that shrink to a line go."""
+    """Return shared corners (n, 2) and faces (m, 3) of triangles (m, 3, 2); any that shrink to a line go."""
     corners = triangles.reshape(-1, 2)
     # The odd shift keeps round numbers, which drawings are full of, away from where rounding turns over.
     keys = np.floor(corners / WELD_MM + 0.2718).astype(np.int64)
@@ -139,33 +124,8 @@ def _welded(triangles: Floats) -> tuple[Floats, Ints]:
 
 
 def _rim(faces: Ints) -> Ints:
-    """Return the directed edges (k, 2) that no neighbour runs back along: the boundary, region on the left."""
+    """Return the directed edges (k, 2) that no neighbour runs back along: the boundary, region left."""
     edges = np.concatenate((faces[:, [0, 1]], faces[:, [1, 2]], faces[:, [2, 0]]))
     count = int(faces.max()) + 1
     forth, back = edges[:, 0] * count + edges[:, 1], edges[:, 1] * count + edges[:, 0]
     return edges[~np.isin(forth, back)]
-
-
-def _filled(edges: Ints, xy: Floats) -> Ints:
-    """Return triangles (m, 3), counter-clockwise, that fill what directed boundary edges enclose, adding no points."""
-    follows = dict(edges.tolist())
-    if len(follows) < len(edges):
-        twice = np.flatnonzero(np.bincount(edges[:, 0]) > 1)[0]
-        raise OutlineError(f"two rings of the outline touch at {place(xy[twice])} mm; keep holes clear of the edge")
-    rings = []
-    while follows:
-        start, after = follows.popitem()
-        ring = [start]
-        while after != start:
-            ring.append(after)
-            after = follows.pop(after)
-        rings.append(ring)
-    shells = [Polygon(xy[ring]) for ring in rings]
-    outer = [shell for shell in shells if shell.exterior.is_ccw]
-    holes = shapely.union_all([shell for shell in shells if not shell.exterior.is_ccw])
-    del outer, holes
-    return _triangles_of(rings, xy)
-
-
-def _triangles_of(rings: list[list[int]], xy: Floats) -> Ints:
-    raise NotImplementedError

@@ -45,6 +45,9 @@ OUTLINE_GAP_MM: Final = 0.01
 # scallop). Above it the iteration has not settled.
 CUSP_RESIDUAL: Final = 1e-12
 
+# Share by which a stepover may miss the one asked for while the scallop that goes with it is iterated; one more step follows.
+SAME_STEPOVER: Final = 1e-10
+
 # A cutter axis counts as reached when the machine's own is this near (radians): 1e-4 mm at 100 mm, the last posted digit.
 REACH_RAD: Final = 1e-6
 
@@ -58,3 +61,20 @@ BOUND_SLACK_MM: Final = 5e-5
 # The virtual cut looks no higher than this over the wanted surface: what stands higher was not finished. A hundred times a
 # usual scallop limit; more only lengthens the lists of moves that come near.
 UNCUT_MM: Final = 0.5
+
+# Corners of neighbouring triangles within this are one vertex of a mesh. Round-off of clipping at 100 mm is 1e-13.
+WELD_MM: Final = 1e-7
+
+# Read-back motion is split into pieces until the tip is nearer than this to a straight line within each. A tenth of the
+# uncertainty claimed for a measured height, so that the pieces do not show in it.
+PIECE_MM: Final = 2e-5
+
+# Largest turn of all rotary axes together within one piece of read-back motion (radians, 0.5 degrees): between rows a holder is
+# taken to go straight, and 0.5 degrees bend the path of a point 100 mm away by 1 micrometre.
+PIECE_TURN_RAD: Final = 0.00872664625997
+
+# Arcs that were read are walked in chords that stay this near to them: half of what a measured height may be off.
+ARC_CHORD_MM: Final = 1e-4
+
+# How far an axis may be asked beyond its fastest feed: rounding of the end points of short moves.
+FEED_SHARE: Final = 1e-3

@@ -109,7 +109,7 @@ class _Scanner:
 
     def _value(self, path: Location) -> None:
         if len(path) > _DEEPEST:
-            raise RecursionError
+            raise RecursionError(self._line())
         first = self.text[self.at]
         if first == "[":
             self._array(path)
@@ -157,9 +157,9 @@ def line_map(text: str) -> dict[Location, int]:
     Returns
     -------
     dict
-        Path of keys and list positions (counted from 0) -> line, counted from 1. The empty path is line 1. A table
-        that is only implied (``[part.outline]`` alone implies ``part``) stands where it is first named; an array of
-        tables stands at its first entry.
+        Path of keys and list positions (counted from 0) -> line, counted from 1. The empty path is line 1. A
+        table that is only implied (``[part.outline]`` alone implies ``part``) stands where it is first named;
+        an array of tables stands at its first entry.
 
     Raises
     ------
@@ -220,9 +220,10 @@ def parse_source(text: str, file: str) -> Source:
     try:
         data = tomllib.loads(text)
         lines = line_map(text)
-    except RecursionError:
+    except RecursionError as error:
+        line = error.args[0] if isinstance(error.args[0], int) else 0  # a text, if tomllib itself gave up
         message = f"lists or tables stand inside each other more than {_DEEPEST} deep; needs fewer"
-        raise BadInput(Fault(file, 0, "", message)) from None
+        raise BadInput(Fault(file, line, "", message)) from None
     except ValueError as error:
         raise BadInput(_syntax_fault(text, file, str(error))) from None
     return Source(file, data, lines)

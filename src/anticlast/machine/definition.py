@@ -21,8 +21,8 @@ _NAME: Final = re.compile(r"[A-Za-z0-9_-]+")
 def post_folder() -> Path:
     """Folder with the machine files that come with the package.
 
-    In a wheel it is ``_post`` inside the package; in a checkout or an editable install ``post`` at the top of the
-    project.
+    In a wheel it is ``_post`` inside the package; in a checkout or an editable install ``post`` at the top of
+    the project.
 
     Raises
     ------
@@ -47,8 +47,8 @@ def load_machine(name_or_path: str, relative_to: Path | None = None) -> Machine:
     Parameters
     ----------
     name_or_path : str
-        A name in the post folder or of an installed post (letters, digits, hyphen, underscore), or else the path
-        of a machine file: ``.toml``, or ``.py`` for a Python post.
+        A name in the post folder or of an installed post (letters, digits, hyphen, underscore), or else the
+        path of a machine file: ``.toml``, or ``.py`` for a Python post.
     relative_to : Path, optional
         Folder that a relative path starts from; the current one if not given.
 

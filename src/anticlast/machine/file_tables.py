@@ -22,14 +22,14 @@ from anticlast.file_schema import (
     found_text,
     is_line,
     nearest,
-    options_text,
+    needed_option,
     unknown_key,
 )
 from anticlast.records import Axis, Control, Machine, Spindle
 from anticlast.toml_lines import Source
 
 LINEAR: Final = ("X", "Y", "Z")
-ROTARY: Final = ("A", "B", "C")
+_KINDS: Final = ("linear", "rotary")
 MACHINE_TABLES: Final = ("machine", "axis", "spindle", "control")
 
 Coordinate = Annotated[float, Quantity("length", -5000, 5000)]
@@ -70,7 +70,7 @@ class RotaryAxis(FileTable):
         0.0,
         0.0,
     )
-    turns: Annotated[Literal[-1, 1], Says("1 or -1")] | None = None
+    turns: Annotated[int, Says("1 or -1")] | None = None
     limits: Annotated[tuple[Angle, Angle], Says("[low, high], two numbers in degrees")] | None = None
     rapid: Annotated[float, Quantity("degrees/min", 0, 1000000, above=True)]
     feed: Annotated[float, Quantity("degrees/min", 0, 1000000, above=True)]
@@ -203,12 +203,11 @@ def _axes(source: Source, units: Units) -> list[Checked[Any]]:
 def _one_axis(source: Source, position: int, raw: Any, units: Units) -> Checked[Any] | None:
     at = ("axis", position)
     kind = raw.get("kind") if isinstance(raw, Mapping) else None
-    if isinstance(raw, Mapping) and kind not in ("linear", "rotary"):
-        options = options_text(("linear", "rotary"))
-        near = nearest(kind, ("linear", "rotary")) if isinstance(kind, str) else None
+    if isinstance(raw, Mapping) and kind not in _KINDS:
+        near = nearest(kind, _KINDS) if isinstance(kind, str) else None
         hint = f'; nearest is "{near}"' if near else ""
         found = f"found {found_text(kind)}" if "kind" in raw else "missing"
-        source.add((*at, "kind"), f"{found}; needs one of {options}{hint}")
+        source.add((*at, "kind"), f"{found}; needs {needed_option(_KINDS)}{hint}")
         return None
     model: type[FileTable] = RotaryAxis if kind == "rotary" else LinearAxis
     axis: Checked[Any] = check_table(source, at, raw, model, units)
@@ -220,6 +219,9 @@ def _one_axis(source: Source, position: int, raw: Any, units: Units) -> Checked[
             "limits",
             f"0 is outside {limits[0]:g} to {limits[1]:g}; needs limits that take in 0, where programs start",
         )
+    turns = axis.get("turns")
+    if turns is not None and turns not in (-1, 1):
+        axis.fault("turns", f"found {turns}; needs 1 or -1")
     direction = axis.get("direction")
     if direction is not None and math.hypot(*direction) == 0.0:
         axis.fault(

@@ -1,7 +1,7 @@
 """Python posts: machines that a table cannot express, as a module with a function ``machine()``.
 
-``machine()`` returns the same nested tables as a machine file, or a finished ``records.Machine``. The module may also
-define ``write``; the writer finds it through ``Machine.source``. The code runs with the user's rights: it is theirs.
+``machine()`` returns the same nested tables as a machine file, or a finished ``records.Machine``. The module
+may also define ``write``; the writer finds it through ``Machine.source``.
 """
 
 from __future__ import annotations

@@ -15,9 +15,9 @@ from anticlast.passes.frame import PassFrame
 from anticlast.records import Floats, Ints
 from anticlast.tolerances import SAME_POINT_MM
 
-# Levels per narrowest leading-order step, and samples along a level: curvature changes little over a millimetre of a surface
-# that a ball of some millimetres fits.
-_LEVELS_PER_STEP = 2.0
+# Levels per narrowest leading-order step, and samples along a level: curvature changes little over a
+# millimetre of a surface that a ball of some millimetres fits.
+_LEVELS_PER_STEP = 4.0
 _SAMPLE_MM = 1.5
 
 
@@ -25,8 +25,9 @@ _SAMPLE_MM = 1.5
 class Samples:
     """Points of the outline on plan lines of constant v, interval ends always among them, sorted by v.
 
-    ``crowding`` is the cusp metric there (`PassFrame.crowding`), the larger the narrower a pass may be. ``v_low_mm``,
-    ``v_high_mm`` bound the outline; ``gap_mm`` is the largest distance between neighbouring lines.
+    ``crowding`` is the cusp metric there (`PassFrame.crowding`), the larger the narrower a pass may be.
+    ``v_low_mm``, ``v_high_mm`` bound the outline; ``gap_mm`` is the largest distance between neighbouring
+    lines.
     """
 
     u_mm: Floats
@@ -96,8 +97,9 @@ def _on_lines(frame: PassFrame, outline: Outline, levels: Floats) -> tuple[Float
 def strip_extents(frame: PassFrame, outline: Outline, bounds: Floats) -> tuple[Ints, Floats, Floats]:
     """Return the intervals of u over which the outline occupies each strip of v: its exact shadow along v.
 
-    The shadow of a connected part is that of its rim, and the rim of what lies in a strip is made of edge pieces and of
-    intervals on the strip's two sides; so the union of their shadows is the answer, holes and all.
+    The shadow of a connected part is that of its rim, and the rim of what lies in a strip is made of edge
+    pieces and of intervals on the strip's two sides; so the union of their shadows is the answer, holes and
+    all.
 
     Parameters
     ----------
@@ -126,7 +128,9 @@ def strip_extents(frame: PassFrame, outline: Outline, bounds: Floats) -> tuple[I
     rise = v[:, 1] - v[:, 0]
     level = np.abs(rise) < SAME_POINT_MM
     safe = np.where(level, 1.0, rise)
-    share = np.stack([(np.clip(bounds[strip, side], bottom[edge], top[edge]) - v[:, 0]) / safe for side in (0, 1)])
+    share = np.stack(
+        [(np.clip(bounds[strip, side], bottom[edge], top[edge]) - v[:, 0]) / safe for side in (0, 1)]
+    )
     share = np.where(level, np.array([[0.0], [1.0]]), share)
     cut = u[:, 0] * (1.0 - share) + u[:, 1] * share
     return (
@@ -158,10 +162,13 @@ def merged(group: Ints, first: Floats, last: Floats, bridge_mm: float) -> tuple[
     return group[head], first[head], end[tail] - shift[tail]
 
 
-def pieces_of(frame: PassFrame, outline: Outline, lines_mm: Floats, overrun_mm: float, bridge_mm: float) -> Pieces:
+def pieces_of(
+    frame: PassFrame, outline: Outline, lines_mm: Floats, overrun_mm: float, bridge_mm: float
+) -> Pieces:
     """Return the pieces of every pass: its strip's shadow, an overrun longer at each end.
 
-    A strip reaches a little over half-way to the neighbouring lines, and to the outline's rim beyond the outermost.
+    A strip reaches a little over half-way to the neighbouring lines, and to the outline's rim beyond the
+    outermost.
 
     Parameters
     ----------

@@ -1,8 +1,8 @@
 """The saddle seen along straight plan-view passes: (u, v) coordinates, leading-order steps, the ball's centre path.
 
-u runs along the feed, v to its left: u = x cos d + y sin d, v = -x sin d + y cos d. z is a quadratic form in (u, v) as it
-is in (x, y), so everything here is closed form. Curvature is positive where the surface is concave seen from above.
-Derivations: docs/theory-passes.md.
+u runs along the feed, v to its left: u = x cos d + y sin d, v = -x sin d + y cos d. z is a quadratic form in
+(u, v) as it is in (x, y), so everything here is closed form. Curvature is positive where the surface is
+concave seen from above. Derivations: docs/theory-passes.md.
 """
 
 from __future__ import annotations
@@ -31,7 +31,8 @@ class PassFrame:
     direction_rad : float
         Of +u, from part X, counter-clockwise seen from above.
     radius_mm, allowance_mm : float
-        Ball radius, and stock left along the normal. The ball's centre runs at ``reach_mm``, their sum, over the surface.
+        Ball radius, and stock left along the normal. The ball's centre runs at ``reach_mm``, their sum, over
+        the surface.
     """
 
     saddle: Saddle
@@ -63,9 +64,10 @@ class PassFrame:
     def cusp_form(self, u_mm: Floats, v_mm: Floats) -> tuple[Floats, Floats, Floats]:
         """Return the cusp metric times 8h: q_uu, q_uv, q_vv (n,) [1/mm], so that a step d leaves h = q(d, d) / 8.
 
-        On the finished surface q = I/R - II (J. S. Kim 2007, Constant cusp height tool paths as geodesic parallels, CAD
-        39:477-489, from memory). On the surface moved out by the allowance m, with I, II and S = II/I of the finished one,
-        q = I (1 - m S) (1 - (R + m) S) / R = (I - (R + 2m) II + m (R + m) II I^-1 II) / R.
+        On the finished surface q = I/R - II (J. S. Kim 2007, Constant cusp height tool paths as geodesic
+        parallels, CAD 39:477-489, from memory). On the surface moved out by the allowance m, with I, II and S
+        = II/I of the finished one, q = I (1 - m S) (1 - (R + m) S) / R = (I - (R + 2m) II + m (R + m) II I^-1
+        II) / R.
         """
         uu, uv, vv = self.hessian_uv()
         zu, zv = uu * u_mm + uv * v_mm, uv * u_mm + vv * v_mm
@@ -127,6 +129,24 @@ class PassFrame:
         reach = self.reach_mm
         return at + reach * unit, rate + reach * unit_rate, bend + reach * unit_bend
 
+    def heading(self, xy_mm: Floats, along: Floats) -> Floats:
+        """Return the unit direction (n, 3), part coordinates, of the ball's centre.
+
+        Where the surface twists it is not that of the contact: C' = r' + (R + m) n', and n' has a part across the feed.
+
+        Parameters
+        ----------
+        xy_mm : (n, 2)
+            Plan of the contact.
+        along : (n, 2) or (n, 3)
+            Feed direction of the contact; only its plan part is read.
+        """
+        u, v = self.uv(xy_mm)
+        du, dv = self.uv(along)
+        _, rate, _ = self.centre(u, v, du, dv)
+        turned = np.column_stack((self.xy(rate[:, 0], rate[:, 1]), rate[:, 2]))
+        return turned / np.linalg.norm(turned, axis=1, keepdims=True)
+
     def normal_uv(self, u_mm: Floats, v_mm: Floats) -> Floats:
         """Return the upward unit normal (n, 3) in (u, v, z)."""
         uu, uv, vv = self.hessian_uv()
@@ -136,9 +156,10 @@ class PassFrame:
     def left_over(self, u_mm: Floats, v_mm: Floats, pass_v_mm: Floats) -> Floats:
         """Return the height (n,) [mm] that one endless pass leaves over plan points: exact.
 
-        Measured along the normal from the finished surface moved out by the allowance. The line P + t n enters the ball
-        with centre C at t = d.n - sqrt(R^2 - |d|^2 + (d.n)^2), d = C - P; the smallest over the pass is sought by Newton
-        from the leading-order contact. inf where the pass does not reach the line.
+        Measured along the normal from the finished surface moved out by the allowance. The line P + t n
+        enters the ball with centre C at t = d.n - sqrt(R^2 - |d|^2 + (d.n)^2), d = C - P; the smallest over
+        the pass is sought by Newton from the leading-order contact. inf where the pass does not reach the
+        line.
 
         Parameters
         ----------
@@ -177,9 +198,7 @@ def _deepest_step(d: Floats, d1: Floats, d2: Floats, n: Floats, radius_mm: float
     met = inside > 0.0
     root = np.sqrt(np.where(met, inside, 1.0))
     r1 = 2.0 * (a * a1 - np.einsum("...i,...i->...", d, d1))
-    r2 = 2.0 * (
-        a1 * a1 + a * a2 - np.einsum("...i,...i->...", d1, d1) - np.einsum("...i,...i->...", d, d2)
-    )
+    r2 = 2.0 * (a1 * a1 + a * a2 - np.einsum("...i,...i->...", d1, d1) - np.einsum("...i,...i->...", d, d2))
     slope = a1 - r1 / (2.0 * root)
     bend = a2 - r2 / (2.0 * root) + r1 * r1 / (4.0 * root**3)
     step = np.where(met & (bend > 0.0), slope / np.where(bend > 0.0, bend, 1.0), 0.0)

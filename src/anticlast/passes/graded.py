@@ -20,8 +20,9 @@ _ROUNDS = 20
 def lines_for_scallop(frame: PassFrame, outline: Outline, samples: Samples, height_mm: float) -> Floats:
     """Return v of the passes (n,), ascending [mm], that leave at most ``height_mm`` and come out even at both edges.
 
-    The first pass lies as far inside as the edge allows, each next one as far as the tightest point between allows. That
-    ends at a fraction of a pass; the height is lowered, steps going with its square root, until it ends at a whole one.
+    The first pass lies as far inside as the edge allows, each next one as far as the tightest point between
+    allows. That ends at a fraction of a pass; the height is lowered, steps going with its square root, until
+    it ends at a whole one.
 
     Raises
     ------
@@ -40,7 +41,8 @@ def lines_for_scallop(frame: PassFrame, outline: Outline, samples: Samples, heig
         over = (count - wanted) if lines.size == count else np.inf
         if lines.size == count and 0.0 <= over <= _EVEN_SHARE:
             return lines[0] + (lines - lines[0]) * ((end - lines[0]) / (lines[-1] - lines[0]))
-        # A hair below what leading order says, so that the end is met from the side where no limit is exceeded.
+        # A hair below what leading order says, so that the end is met from the side where no limit is
+        # exceeded.
         height = min(height_mm, height * (wanted / (count - 0.3 * _EVEN_SHARE)) ** 2)
         lines, wanted = _march(frame, samples, height)
     raise NotConverged("even graded passes", float(over), _EVEN_SHARE)

@@ -39,11 +39,13 @@ class Legs:
     stretch: Ints
 
 
-def linked(frame: PassFrame, pieces: Pieces, order: list[Cut], ground: Outline, longest_mm: float, one_way: bool) -> Bools:
+def linked(
+    frame: PassFrame, pieces: Pieces, order: list[Cut], ground: Outline, longest_mm: float, one_way: bool
+) -> Bools:
     """Tell after which piece in cutting order the cutter stays down on its way to the next, (n - 1,).
 
-    It does where the straight plan path between them is short and stays on ground that the passes may cover anyway. Cutting
-    one way it never does: it would drag back over the surface.
+    It does where the straight plan path between them is short and stays on ground that the passes may cover
+    anyway. Cutting one way it never does: it would drag back over the surface.
 
     Parameters
     ----------

@@ -1,8 +1,9 @@
 """The order in which the pieces of straight passes are cut: cells, zigzag inside a cell, then the nearest cell.
 
-Boustrophedon decomposition (H. Choset, Coverage of known spaces: the boustrophedon cellular decomposition, Autonomous Robots 9
-(2000) 247-253, from memory): sweeping the passes, a cell goes on while each piece has exactly one neighbour on the next line and
-is that one's only neighbour; where the outline splits or joins, cells end. docs/theory-passes.md#order.
+Boustrophedon decomposition (H. Choset, Coverage of known spaces: the boustrophedon cellular decomposition,
+Autonomous Robots 9 (2000) 247-253, from memory): sweeping the passes, a cell goes on while each piece has
+exactly one neighbour on the next line and is that one's only neighbour; where the outline splits or joins,
+cells end. docs/theory-passes.md#order.
 """
 
 from __future__ import annotations
@@ -33,7 +34,9 @@ def cells_of(pieces: Pieces) -> list[list[int]]:
     for lower in range(lines - 1):
         here = np.arange(bounds[lower], bounds[lower + 1])
         there = np.arange(bounds[lower + 1], bounds[lower + 2])
-        meets = (pieces.u0_mm[here, None] < pieces.u1_mm[there]) & (pieces.u0_mm[there] < pieces.u1_mm[here, None])
+        meets = (pieces.u0_mm[here, None] < pieces.u1_mm[there]) & (
+            pieces.u0_mm[there] < pieces.u1_mm[here, None]
+        )
         alone = meets & (meets.sum(axis=0) == 1) & (meets.sum(axis=1) == 1)[:, None]
         for row, column in zip(*np.nonzero(alone), strict=True):
             after[int(here[row])] = int(there[column])
@@ -52,9 +55,9 @@ def cells_of(pieces: Pieces) -> list[list[int]]:
 def cutting_order(pieces: Pieces, way: Literal["both", "one-way"]) -> list[Cut]:
     """Return every piece once, in the order and the direction it is cut.
 
-    Both ways: zigzag within a cell, started at whichever of its four corners is nearest to where the cutter stands; the first
-    cell at its lower line, towards +u. One way: every piece towards +u, lines ascending in v, cell by cell, so that the
-    uncut stock always lies on the same side.
+    Both ways: zigzag within a cell, started at whichever of its four corners is nearest to where the cutter
+    stands; the first cell at its lower line, towards +u. One way: every piece towards +u, lines ascending in
+    v, cell by cell, so that the uncut stock always lies on the same side.
     """
     remaining = cells_of(pieces)
     order: list[Cut] = []

@@ -13,6 +13,7 @@ import numpy as np
 from anticlast.errors import CannotPlan, NotConverged
 from anticlast.passes import entry, graded, raster
 from anticlast.passes.cover import Samples, pieces_of, sample
+from anticlast.passes.cusp import require_fit
 from anticlast.passes.frame import PassFrame
 from anticlast.passes.legs import Legs, legs_of, linked
 from anticlast.passes.order import cutting_order
@@ -27,13 +28,19 @@ from anticlast.tolerances import CHORD_SHARE_OF_SCALLOP, SIDEWAYS_SHARE_OF_STEP
 LinesForScallop = Callable[[PassFrame, Outline, Samples, float], Floats]
 
 # Pattern name, as in the job file, to the lines it lays for a scallop limit.
-PATTERNS: dict[str, LinesForScallop] = {"graded": graded.lines_for_scallop, "raster": raster.lines_for_scallop}
+PATTERNS: dict[str, LinesForScallop] = {
+    "graded": graded.lines_for_scallop,
+    "raster": raster.lines_for_scallop,
+}
 
-# Cusps are asked at places; where one between them comes out higher than designed, the design is lowered. Once is the rule.
+# Cusps are asked at places; where one between them comes out higher than designed, the design is lowered.
+# Once is the rule.
 _ROUNDS = 8
-# Ground within this many overruns of the outline is passes' own: a strip's pass may end half a step and an overrun outside.
+# Ground within this many overruns of the outline is passes' own: a strip's pass may end half a step and an
+# overrun outside.
 _GROUND_OVERRUNS = 2.0
-# The cutter stays down on a link that takes no longer than this (seconds at feed): a lift, a rapid and an entry take more.
+# The cutter stays down on a link that takes no longer than this (seconds at feed): a lift, a rapid and an
+# entry take more.
 _LINK_SECONDS = 1.0
 
 
@@ -60,18 +67,20 @@ def plan_operation(job: Job, operation: Operation, nearest_axis: Nearest) -> Cut
     Returns
     -------
     CutterPath
-        ``chord_mm`` is how far off the part a straight move between rows may take the ball's centre; into the part, at most
-        twice as far. The same amount again is left to the machine stage.
+        ``chord_mm`` is how far off the part a straight move between rows may take the ball's centre; into the
+        part, at most twice as far. The same amount again is left to the machine stage.
 
     Raises
     ------
     CannotPlan
-        If the pattern is not available, the cutter is not one it can use, or the cutter does not fit the surface.
+        If the pattern is not available, the cutter is not one it can use, or the cutter does not fit the
+        surface.
     NotConverged
         If no spacing of the passes settles.
     """
     require_pattern(operation)
     saddle, outline = Saddle.of(job.part), job.part.outline
+    _require_fit(saddle, outline, operation)
     frame = PassFrame(saddle, operation.direction_rad, operation.cutter.radius_mm, operation.allowance_mm)
     laid = _lay(frame, outline, operation)
     overrun = _overrun(frame, outline, laid.lines_mm)
@@ -119,11 +128,21 @@ def require_pattern(operation: Operation) -> None:
         )
 
 
+def _require_fit(saddle: Saddle, outline: Outline, operation: Operation) -> None:
+    """Raise `CannotPlan` unless the ball fits all over the outline. k_max falls away from the origin, so rim and origin decide."""
+    rim = outline.boundary_points(1.0)
+    origin = np.zeros((1, 2))
+    places = np.vstack((rim, origin)) if outline.contains(origin)[0] else rim
+    require_fit(saddle, operation.cutter.radius_mm, places, operation.allowance_mm)
+
+
 def _lay(frame: PassFrame, outline: Outline, operation: Operation) -> _Laid:
     """Return the pass lines: by the scallop limit less what chords may add, or by the stepover."""
     if operation.scallop_mm is None:
         if operation.stepover_mm is None or operation.pattern != "raster":
-            raise CannotPlan("stepover", f"operation {operation.index}: a stepover can be given for pattern 'raster' only")
+            raise CannotPlan(
+                "stepover", f"operation {operation.index}: a stepover can be given for pattern 'raster' only"
+            )
         height = operation.stepover_mm**2 / (8.0 * frame.radius_mm)
         samples = sample(frame, outline, height)
         lines = raster.lines_for_stepover(frame, outline, samples, operation.stepover_mm)
@@ -150,7 +169,9 @@ def _chords(operation: Operation, height_mm: float, left: Left) -> Chords:
     """Return the planner's half of the budget. Inward, a chord takes stock off, so it may be twice as long a sag."""
     outward = 0.5 * _budget(operation, height_mm)
     sideways = SIDEWAYS_SHARE_OF_STEP * (left.stepover_mm[0] or operation.cutter.radius_mm)
-    return Chords(outward, min(2.0 * outward, 0.5 * operation.tolerance_mm), min(sideways, operation.tolerance_mm))
+    return Chords(
+        outward, min(2.0 * outward, 0.5 * operation.tolerance_mm), min(sideways, operation.tolerance_mm)
+    )
 
 
 def _overrun(frame: PassFrame, outline: Outline, lines_mm: Floats) -> float:
@@ -163,15 +184,21 @@ def _overrun(frame: PassFrame, outline: Outline, lines_mm: Floats) -> float:
 
 
 def _predicted(frame: PassFrame, laid: _Laid) -> float:
-    """Return the highest scallop expected: the exact cusp, and the chord's sag where the feed is concave."""
+    """Return the highest scallop to expect: the exact cusp, and what chords make of it.
+
+    A chord's sag runs from 0 at its ends to the full sag in its middle, two thirds of it on average, and the
+    two passes beside a cusp have their chord ends at different places. Along a concave feed chords lie off
+    the part and raise the cusp; the highest of many stands at two thirds of the sag or more. Along a convex
+    feed they lower it; the highest is lowered by a third or less. docs/theory-passes.md#budget.
+    """
     left = laid.left
     xy = frame.xy(left.u_mm, left.v_mm)
     along = np.broadcast_to(frame.xy(np.ones(1), np.zeros(1)), xy.shape)
     density = sag_density(frame, xy, along, laid.chords)
     _, _, bend = frame.centre(left.u_mm, left.v_mm, np.ones(1), np.zeros(1))
     up = np.einsum("ni,ni->n", bend, frame.normal_uv(left.u_mm, left.v_mm))
-    sag = np.maximum(up, 0.0) / (8.0 * np.maximum(density, np.finfo(float).tiny) ** 2)
-    return float((left.height_mm + np.where(up > 0.0, sag, 0.0)).max())
+    sag = up / (8.0 * np.maximum(density, np.finfo(float).tiny) ** 2)
+    return float((left.height_mm + np.where(up > 0.0, 2.0 / 3.0, 1.0 / 3.0) * sag).max())
 
 
 def _cut_length(saddle: Saddle, legs: Legs) -> float:
@@ -202,8 +229,8 @@ def _stretch(frame: PassFrame, operation: Operation, rows: Rows, run: slice, ris
     tip = tip_from_contact(contact, normal, axis, cutter, operation.allowance_mm)
     ways = []
     for end, sign in ((0, -1.0), (-1, 1.0)):
-        along = tangent[end]
-        bend = frame.saddle.normal_curvature(contact[[end], :2], along[None, :])
+        bend = frame.saddle.normal_curvature(contact[[end], :2], tangent[[end]])
+        along = frame.heading(contact[[end], :2], tangent[[end]])[0]
         ways.append(
             entry.way_off(
                 frame.saddle,
@@ -219,7 +246,9 @@ def _stretch(frame: PassFrame, operation: Operation, rows: Rows, run: slice, ris
         )
     into, off = ways[0][::-1], ways[1]
     # The row on which an entry ends is the first of the pass.
-    purpose = np.concatenate((np.full(len(into) + 1, Purpose.ENTRY), purpose[1:], np.full(len(off), Purpose.EXIT)))
+    purpose = np.concatenate(
+        (np.full(len(into) + 1, Purpose.ENTRY), purpose[1:], np.full(len(off), Purpose.EXIT))
+    )
     share = np.where(purpose == Purpose.ENTRY, entry.ENTRY_FEED_SHARE, 1.0)
 
     def held(values: Floats) -> Floats:

@@ -10,7 +10,6 @@ from anticlast.errors import NotConverged
 from anticlast.outline import Outline
 from anticlast.passes.cover import Samples
 from anticlast.passes.frame import PassFrame
-from anticlast.passes.cusp import surface_step
 from anticlast.passes.spacing import edge_distances, left_behind, widest_constant_step
 from anticlast.records import Floats
 from anticlast.tolerances import SAME_POINT_MM
@@ -38,7 +37,8 @@ def lines_for_scallop(frame: PassFrame, outline: Outline, samples: Samples, heig
 def lines_for_stepover(frame: PassFrame, outline: Outline, samples: Samples, stepover_mm: float) -> Floats:
     """Return v of the passes (n,), ascending [mm], whose largest distance on the surface inside the outline is as given.
 
-    The step is not shrunk to come out even: what is over is shared by the two edges, neither farther than half a step.
+    The step is not shrunk to come out even: what is over is shared by the two edges, neither farther than
+    half a step.
 
     Raises
     ------
@@ -50,17 +50,34 @@ def lines_for_stepover(frame: PassFrame, outline: Outline, samples: Samples, ste
     along = 1.0 + (uu * samples.u_mm + uv * samples.v_mm) ** 2
     across = (uv * samples.u_mm + vv * samples.v_mm) ** 2
     step = stepover_mm * float(np.sqrt(along / (along + across)).min())
-    largest = 0.0
+    # Samples lie all over the outline, strips between passes do not quite: the step may still grow a little,
+    # and a step for one count is all but the step for the next. Counting up ends it, should the two disagree.
+    count = math.ceil((high - low) / step - 1e-9)
+    if count > 1:
+        step = _settled_step(frame, outline, 0.5 * (low + high), count, step, stepover_mm)
+        count = math.ceil((high - low) / step - 1e-9)
+    for number in range(count, count + _ROUNDS):
+        if number == 1:
+            return np.array([0.5 * (low + high)])
+        step = _settled_step(frame, outline, 0.5 * (low + high), number, step, stepover_mm)
+        if number * step >= high - low - SAME_POINT_MM:
+            return _about(0.5 * (low + high), number, step)
+    raise NotConverged("number of passes", high - low - (count + _ROUNDS) * step, step)
+
+
+def _about(middle_mm: float, count: int, step_mm: float) -> Floats:
+    return middle_mm + step_mm * (np.arange(count) - 0.5 * (count - 1))
+
+
+def _settled_step(
+    frame: PassFrame, outline: Outline, middle_mm: float, count: int, step_mm: float, stepover_mm: float
+) -> float:
+    """Return the plan step at which ``count`` lines about a middle lie at most the stepover apart on the surface."""
+    miss = 0.0
     for _ in range(_ROUNDS):
-        count = max(1, math.ceil((high - low) / step - 1e-9))
-        lines = 0.5 * (low + high) + step * (np.arange(count) - 0.5 * (count - 1))
-        if count == 1:
-            return lines
-        largest = left_behind(frame, outline, lines).stepover_mm[1]
-        if abs(largest - stepover_mm) <= SAME_POINT_MM:
-            return lines
-        step *= stepover_mm / largest
-    raise NotConverged("plan step of the stepover", abs(largest - stepover_mm), SAME_POINT_MM)
-
-
-__all__ = ["evenly", "lines_for_scallop", "lines_for_stepover", "surface_step"]
+        largest = left_behind(frame, outline, _about(middle_mm, count, step_mm)).stepover_mm[1]
+        miss = abs(largest - stepover_mm)
+        if miss <= SAME_POINT_MM:
+            return step_mm
+        step_mm *= stepover_mm / largest
+    raise NotConverged("plan step of the stepover", miss, SAME_POINT_MM)

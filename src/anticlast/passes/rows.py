@@ -1,8 +1,8 @@
 """From legs to rows: points along each leg so close that the ball's centre, going straight between them, stays true.
 
-Between rows the reference point goes straight. How far that strays from the centre path is settled by the path's own
-curvature, in closed form: toward the normal it changes the scallop or gouges, sideways it only moves the pass.
-docs/theory-passes.md#chords.
+Between rows the reference point goes straight. How far that strays from the centre path is settled by the
+path's own curvature, in closed form: toward the normal it changes the scallop or gouges, sideways it only
+moves the pass. docs/theory-passes.md#chords.
 """
 
 from __future__ import annotations
@@ -21,8 +21,8 @@ from anticlast.tolerances import AXIS_TURN_RAD
 
 Nearest = Callable[[Floats], Floats]
 
-# Places along a leg where its curvature and its axis are asked before rows are laid: on a millimetre neither changes by more
-# than a few percent, and a link turns evenly.
+# Places along a leg where its curvature and its axis are asked before rows are laid: on a millimetre neither
+# changes by more than a few percent, and a link turns evenly.
 _PROBE_MM = 1.0
 _PROBES_ON_LINK = 9
 
@@ -62,8 +62,8 @@ class Rows:
 def sag_density(frame: PassFrame, xy: Floats, along: Floats, chords: Chords) -> Floats:
     """Return how many rows per plan millimetre (n,) [1/mm] a move along unit plan directions needs at xy (n, 2).
 
-    A chord of length l under curvature k sags l^2 k / 8. C'' splits into its part along the normal, outward where positive
-    (concave feed), and the part along the surface square to C'.
+    A chord of length l under curvature k sags l^2 k / 8. C'' splits into its part along the normal, outward
+    where positive (concave feed), and the part along the surface square to C'.
     """
     u, v = frame.uv(xy)
     du, dv = frame.uv(along)
@@ -115,7 +115,8 @@ def _probes(legs: Legs, length: Floats) -> tuple[Ints, Floats]:
 def _even_shares(leg: Ints, share: Floats, need: Floats, legs: Legs) -> tuple[Ints, Floats]:
     """Return leg and share of every row: each leg divided evenly by ``need``, which is summed along it.
 
-    The first row of a stretch is the start of its first leg; every other leg starts at the last row of the one before.
+    The first row of a stretch is the start of its first leg; every other leg starts at the last row of the
+    one before.
     """
     heads = np.searchsorted(leg, np.arange(legs.stretch.size))
     total = np.bincount(leg[1:], weights=need, minlength=legs.stretch.size)

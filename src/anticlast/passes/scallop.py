@@ -7,13 +7,11 @@ here too. Derivations: docs/theory-surface.md.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any, NamedTuple
-
-import numpy as np
+from typing import TYPE_CHECKING, Any
 
 from anticlast.errors import BadInput, Fault
+from anticlast.extremes import extremes
 from anticlast.passes.cusp import (
     cusp_height,
     lines_beside,
@@ -40,11 +38,7 @@ from anticlast.saddle import Saddle
 if TYPE_CHECKING:
     from anticlast.cutter import Cutter
     from anticlast.outline import Outline
-    from anticlast.records import Floats
 
-# The outline is sampled this many times across before extremes are narrowed down.
-_SAMPLES = 40
-_ZOOMS = 30
 _MM_PER_INCH = 25.4
 
 __all__ = [
@@ -66,35 +60,6 @@ __all__ = [
     "second_order_step",
     "surface_step",
 ]
-
-
-class _Place(NamedTuple):
-    """An extreme of a function over the outline, and where."""
-
-    value: float
-    at_mm: tuple[float, float]
-
-
-def _narrowed(
-    outline: Outline, function: Callable[[Floats], Floats], xy: Floats, span_mm: float, sign: float
-) -> _Place:
-    """Return the largest sign * function near xy (2,) inside the outline, by a grid search that zooms in."""
-    import shapely
-
-    offsets = np.stack(np.meshgrid(*[np.linspace(-1.0, 1.0, 5)] * 2), axis=-1).reshape(-1, 2)
-    best, at = -np.inf, xy
-    for _ in range(_ZOOMS):
-        tried = np.concatenate((at[None], at + span_mm * offsets))
-        outside = ~shapely.intersects_xy(outline.polygon, tried[:, 0], tried[:, 1])
-        if outside.any():  # the nearest place of the outline instead, so that edges and corners are found
-            lines = shapely.shortest_line(outline.polygon, shapely.points(tried[outside]))
-            tried[outside] = shapely.get_coordinates(lines)[::2]
-        values = sign * function(tried)
-        k = int(values.argmax())
-        if values[k] > best:
-            best, at = float(values[k]), tried[k]
-        span_mm *= 0.6
-    return _Place(sign * best, (float(at[0]), float(at[1])))
 
 
 @dataclass(frozen=True, slots=True)
@@ -163,17 +128,18 @@ class ScallopAnswer:
         height = height[::-1]  # the tightest place has the largest scallop
 
         def row(name: str, s: float, h: float, at: tuple[float, float] | None) -> str:
-            place = (
-                "" if at is None else f"   at X{at[0] * scale:.{digits - 2}f} Y{at[1] * scale:.{digits - 2}f}"
-            )
+            d = digits - 2
+            x, y = (round(c * scale, d) + 0.0 for c in at or (0.0, 0.0))  # + 0.0: no negative zero
+            place = "" if at is None else f"   at X{x:.{d}f} Y{y:.{d}f}"
             return f"  {name:<16}{s * scale:>12.{digits}f}{h * scale:>12.{digits + 1}f}{place}"
 
         promised, worst = self.flat_scallop_mm, self.flat_leaves_mm[1]
         share = 100.0 * (worst / promised - 1.0)
         verdict = f"{abs(share):.1f} % {'over' if share > 0 else 'under'} what it says"
         return [
-            f"T{self.cutter}, ball diameter {2 * self.radius_mm * scale:.{digits - 1}f} {units}, feed at "
-            f"{math.degrees(self.direction_rad):.4g} deg from X, allowance {self.allowance_mm * scale:.{digits - 1}f}",
+            f"T{self.cutter}, ball diameter {2 * self.radius_mm * scale:.{digits - 1}f} {units}, "
+            f"feed at {math.degrees(self.direction_rad):.4g} deg from X, "
+            f"allowance {self.allowance_mm * scale:.{digits - 1}f}",
             f"  {units:<16}{'stepover':>12}{'scallop':>12}",
             row("tightest place", step[0], height[0], self.tightest_at_mm),
             row("mean over area", step[1], height[1], None),
@@ -181,20 +147,8 @@ class ScallopAnswer:
             row("flat rule", self.flat_stepover_mm, self.flat_scallop_mm, None),
             f"  The flat rule's stepover leaves {self.flat_leaves_mm[0] * scale:.{digits + 1}f} to "
             f"{worst * scale:.{digits + 1}f} {units} here: at most {verdict}.",
-            f"  Roughness across the feed, from the largest scallop: Ra {self.ra_um:.2f} um, Rz {self.rz_um:.2f} um",
+            f"  Across the feed where the scallop is largest: Ra {self.ra_um:.2f} um, Rz {self.rz_um:.2f} um",
         ]
-
-
-def _extremes(
-    outline: Outline, function: Callable[[Floats], Floats], extent_mm: float
-) -> tuple[_Place, _Place]:
-    """Return the smallest and the largest value of the function over the outline."""
-    spacing = extent_mm / _SAMPLES
-    xy = np.concatenate((outline.boundary_points(spacing), outline.grid(spacing)))
-    values = function(xy)
-    least = _narrowed(outline, function, xy[values.argmin()], spacing, -1.0)
-    most = _narrowed(outline, function, xy[values.argmax()], spacing, 1.0)
-    return least, most
 
 
 def scallop_answer(
@@ -235,14 +189,14 @@ def scallop_answer(
     function = varying(saddle, radius, direction_rad, stepover_mm, scallop_mm, allowance_mm)
     x0, y0, x1, y1 = outline.bounds
     extent = max(x1 - x0, y1 - y0)
-    least, most = _extremes(outline, function, extent)
+    least, most = extremes(outline, function)
     nodes, weights = nodes_and_weights(outline.triangles(extent / 6.0))
     weights = weights * saddle.stretch(nodes)
     varies = (least.value, float(function(nodes) @ weights / weights.sum()), most.value)
     if scallop_mm is not None:
         flat = (flat_step(radius, scallop_mm), scallop_mm)
         left = varying(saddle, radius, direction_rad, flat[0], None, allowance_mm)
-        flat_leaves = tuple(place.value for place in _extremes(outline, left, extent))
+        flat_leaves = tuple(place.value for place in extremes(outline, left))
         steps, heights, tightest, widest = varies, (scallop_mm,) * 3, least, most
     else:
         assert stepover_mm is not None  # `varying` has seen to it

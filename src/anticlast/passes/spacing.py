@@ -17,8 +17,8 @@ from anticlast.passes.frame import PassFrame
 from anticlast.passes.cusp import cusp_height, lines_beside, plan_step, surface_step
 from anticlast.records import Floats
 
-# The exact cusp leaves the leading order by a share of about h/R and of the curvature's change over half a step; places
-# whose metric is within this share of the worst are asked exactly.
+# The exact cusp leaves the leading order by a share of about h/R and of the curvature's change over half a
+# step; places whose metric is within this share of the worst are asked exactly.
 _TIGHT_SHARE = 0.06
 # Never ask more places than this at once: they are the worst ones.
 _MOST_PLACES = 600
@@ -55,7 +55,8 @@ def next_step(frame: PassFrame, samples: Samples, v_mm: float, height_mm: float)
     while True:
         window = samples.window(v_mm, v_mm + reach)
         crowding = samples.crowding[window]
-        # Neighbouring lines of samples hold the same u nearly; the metric's change between them is inside the share.
+        # Neighbouring lines of samples hold the same u nearly; the metric's change between them is inside the
+        # share.
         at = tight(crowding)
         u = samples.u_mm[window][at]
         step = float(
@@ -76,7 +77,10 @@ def edge_distances(frame: PassFrame, samples: Samples, height_mm: float) -> tupl
     half = 0.5 * math.sqrt(8.0 * height_mm / float(samples.crowding.min()))
     low, high = samples.v_low_mm, samples.v_high_mm
     found = []
-    for edge, window, side in ((low, samples.window(low, low + half), 1), (high, samples.window(high - half, high), 0)):
+    for edge, window, side in (
+        (low, samples.window(low, low + half), 1),
+        (high, samples.window(high - half, high), 0),
+    ):
         at = tight(samples.crowding[window])
         u = samples.u_mm[window][at]
         beside = lines_beside(

@@ -18,7 +18,7 @@ from anticlast.errors import BadInput, CannotPlan, Fault, NotConverged
 from anticlast.passes.cusp import lines_beside, require_fit, require_scallop, surface_step
 from anticlast.quadrature import integrate
 from anticlast.saddle import Saddle
-from anticlast.tolerances import CUSP_RESIDUAL
+from anticlast.tolerances import SAME_STEPOVER
 
 if TYPE_CHECKING:
     from anticlast.outline import Outline
@@ -114,7 +114,7 @@ def length_floor_mm(
 
 
 def roughness_um(height_mm: npt.ArrayLike) -> tuple[Floats, Floats]:
-    """Return (Ra, Rz) [um] of parabolic cusps of a height [mm], across the feed: Ra = 4/(9 sqrt 3) h, Rz = h."""
+    """Return (Ra, Rz) [um] across the feed of parabolic cusps of a height [mm]: 4/(9 sqrt 3) h and h."""
     height = np.asarray(height_mm, dtype=np.float64)
     return _RA_SHARE * 1e3 * height, 1e3 * height
 
@@ -143,9 +143,9 @@ def local_scallop(
         ratio = stepover_mm / surface_step(saddle, u, right, left, direction_rad)
         height = np.minimum(height * ratio * ratio, 0.999 * radius_mm)
         off = float(np.abs(ratio - 1.0).max()) if len(ratio) else 0.0
-        if off <= CUSP_RESIDUAL:
+        if off <= SAME_STEPOVER:
             return height
-    raise NotConverged("scallop at a stepover", off, CUSP_RESIDUAL)
+    raise NotConverged("scallop at a stepover", off, SAME_STEPOVER)
 
 
 def local_step(
@@ -168,7 +168,7 @@ def local_step(
 class ScallopField:
     """Stepover and scallop over the outline, for pictures.
 
-    ``stepover_mm[j, i]`` and ``scallop_mm[j, i]`` belong to ``x_mm[i]``, ``y_mm[j]``; nan outside the outline.
+    ``stepover_mm[j, i]`` and ``scallop_mm[j, i]`` belong to ``x_mm[i]``, ``y_mm[j]``; nan outside.
     """
 
     x_mm: Floats

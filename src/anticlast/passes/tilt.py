@@ -1,7 +1,8 @@
 """The cutter axis that lead and lean ask for, and the tip that belongs to a contact.
 
-Part coordinates. At a contact, ``normal`` n points up out of the part, ``tangent`` t along the feed, and the side vector
-b = n x t to the left of the feed as seen from above. All three are unit vectors, square to each other.
+Part coordinates. At a contact, ``normal`` n points up out of the part, ``tangent`` t along the feed, and the
+side vector b = n x t to the left of the feed as seen from above. All three are unit vectors, square to each
+other.
 """
 
 from __future__ import annotations
@@ -19,10 +20,10 @@ from anticlast.tolerances import SAME_DIRECTION_RAD
 def wished_axis(normal: Floats, tangent: Floats, lead_rad: npt.ArrayLike, lean_rad: npt.ArrayLike) -> Floats:
     """Return the cutter axis leaned from the normal by lead toward the feed and by lean to its left.
 
-    axis = (n + tan(lead) t + tan(lean) b) / |...|, b = n x t. Seen from the side (along b) the axis stands at ``lead`` to
-    the normal, seen along the feed (along t) at ``lean``. Two turns one after the other would depend on their order; this
-    form does not, gives each angle alone exactly, and keeps 1/cos^2 of the whole tilt = 1 + tan^2(lead) + tan^2(lean).
-    Derivation: docs/theory-passes.md#tilt.
+    axis = (n + tan(lead) t + tan(lean) b) / |...|, b = n x t. Seen from the side (along b) the axis stands at
+    ``lead`` to the normal, seen along the feed (along t) at ``lean``. Two turns one after the other would
+    depend on their order; this form does not, gives each angle alone exactly, and keeps 1/cos^2 of the whole
+    tilt = 1 + tan^2(lead) + tan^2(lean). Derivation: docs/theory-passes.md#tilt.
 
     Parameters
     ----------
@@ -68,8 +69,8 @@ def lead_and_lean(axis: Floats, normal: Floats, tangent: Floats) -> tuple[Floats
 def turned_between(start: Floats, end: Floats, fraction: npt.ArrayLike) -> Floats:
     """Return the axis part-way on the even turn from ``start`` to ``end`` in their common plane.
 
-    Spherical interpolation: sin((1-f) w) start + sin(f w) end over sin w, w the angle between them (K. Shoemake, Animating
-    rotation with quaternion curves, SIGGRAPH 1985, from memory).
+    Spherical interpolation: sin((1-f) w) start + sin(f w) end over sin w, w the angle between them (K.
+    Shoemake, Animating rotation with quaternion curves, SIGGRAPH 1985, from memory).
 
     Parameters
     ----------
@@ -102,12 +103,12 @@ def reference_from_contact(
 ) -> Floats:
     """Return the reference point (n, 3) [mm]: on the axis, at the height of the corner arc's centre.
 
-    The corner arc's centre circle has radius D/2 - r about the reference point, square to the axis. The cutter touches the
-    surface moved out by the allowance where the corner arc's normal is the surface normal: the circle's point lies at
-    contact + (allowance + r) n, on the side of the axis that faces the surface, so the reference point lies from there by
-    D/2 - r along the part of n that is square to the axis. A ball (D/2 = r) has it at contact + (allowance + R) n whatever
-    the axis. A flat or bull end mill standing along n touches with its whole bottom: its centre is put over the contact.
-    docs/theory-passes.md#tip.
+    The corner arc's centre circle has radius D/2 - r about the reference point, square to the axis. The
+    cutter touches the surface moved out by the allowance where the corner arc's normal is the surface normal:
+    the circle's point lies at contact + (allowance + r) n, on the side of the axis that faces the surface, so
+    the reference point lies from there by D/2 - r along the part of n that is square to the axis. A ball (D/2
+    = r) has it at contact + (allowance + R) n whatever the axis. A flat or bull end mill standing along n
+    touches with its whole bottom: its centre is put over the contact. docs/theory-passes.md#tip.
     """
     point = contact_mm + (cutter.corner_radius_mm + allowance_mm) * normal
     out_mm = cutter.radius_mm - cutter.corner_radius_mm
@@ -130,7 +131,8 @@ def tip_from_contact(
     contact_mm : (n, 3)
         Points on the finished surface, part coordinates.
     normal, axis : (n, 3)
-        Unit surface normal there (up), and unit cutter axis from tip to spindle, less than 90 degrees from it.
+        Unit surface normal there (up), and unit cutter axis from tip to spindle, less than 90 degrees from
+        it.
     cutter : Cutter
         Ball, bull or flat.
     allowance_mm : float

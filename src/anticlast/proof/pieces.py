@@ -45,7 +45,9 @@ def _own_frame(saddle: Saddle, vectors: Floats) -> Floats:
     return np.ascontiguousarray(np.column_stack((x, y, vectors[:, 2])))
 
 
-def take_pieces(motion: PartMotion, cutters: Sequence[Cutter], saddle: Saddle) -> Pieces:
+def take_pieces(
+    motion: PartMotion, cutters: Sequence[Cutter], saddle: Saddle, moving: Bools | None = None
+) -> Pieces:
     """Turn part motion into the kernels' arrays.
 
     Parameters
@@ -55,6 +57,8 @@ def take_pieces(motion: PartMotion, cutters: Sequence[Cutter], saddle: Saddle) -
     cutters : sequence of Cutter
         Pieces made with any other tool stay inactive.
     saddle : Saddle
+    moving : (m,) bool, optional
+        Rows to use; all that move if not given.
     """
     count = len(motion.tip_mm)
     height = np.zeros(count)
@@ -67,7 +71,11 @@ def take_pieces(motion: PartMotion, cutters: Sequence[Cutter], saddle: Saddle) -
         disc = 0.0 if cutter.shape == "ball" else cutter.radius_mm - cutter.corner_radius_mm
         flutes = max(0.0, cutter.flute_length_mm - cutter.corner_radius_mm)
         size[rows] = disc, cutter.corner_radius_mm, 1.0, flutes
+    # Rows of fraction 0 put the tip elsewhere without motion.
+    active &= motion.fraction > 0.0
     active[:1] = False
+    if moving is not None:
+        active &= moving
     tip, axis = _own_frame(saddle, motion.tip_mm), _own_frame(saddle, motion.axis)
     before = np.maximum(np.arange(count) - 1, 0)
     return Pieces(

@@ -7,11 +7,8 @@ docs/theory-proof.md.
 
 from __future__ import annotations
 
-import os
-from collections.abc import Callable, Iterable
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, TypeVar
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
@@ -20,20 +17,18 @@ from anticlast.proof import _kernels
 from anticlast.proof.gouge import Gouge, deepest_gouge
 from anticlast.proof.nodes import Nodes, lay_nodes, part_depths_mm
 from anticlast.proof.pieces import Pieces, take_pieces
+from anticlast.proof.threads import in_threads, spans
 from anticlast.saddle import Saddle
 from anticlast.tolerances import BOUND_SLACK_MM, MEASURE_MM, UNCUT_MM
 
 if TYPE_CHECKING:
-    from anticlast.records import Floats, Job, PartMotion, ScallopMap
-
-Answer = TypeVar("Answer")
+    from anticlast.records import Bools, Floats, Job, PartMotion, ScallopMap
 
 # Finest and coarsest grid chosen without being asked, and most nodes along the longer side.
 _FINEST_MM, _COARSEST_MM, _MOST_STEPS = 0.05, 0.5, 1000
 # Most quarterings of triangles in one run of the search for the peak: about a minute's work; the bound stays honest.
 _QUARTERINGS = 20_000_000
 _MAP_SIDE = 400
-_RUNS_PER_WORKER = 8
 
 
 @dataclass(frozen=True, slots=True)
@@ -82,7 +77,9 @@ def choose_grid_mm(job: Job) -> float:
     return float(min(max(np.ceil(side / _MOST_STEPS * 100.0) / 100.0, _FINEST_MM), _COARSEST_MM))
 
 
-def measure(job: Job, motion: PartMotion, grid_mm: float | None = None, *, wanted_mm: float = 0.0) -> Cut:
+def measure(
+    job: Job, motion: PartMotion, grid_mm: float | None = None, *, wanted_mm: float = 0.0, moving: Bools | None = None
+) -> Cut:
     """Cut the stock with read-back motion and measure what stands over the finished surface.
 
     Parameters
@@ -95,6 +92,8 @@ def measure(job: Job, motion: PartMotion, grid_mm: float | None = None, *, wante
         Spacing of the nodes [mm]; `choose_grid_mm` if not given.
     wanted_mm : float
         Height over the finished surface that the last operation is to leave [mm], >= 0.
+    moving : (m,) bool, optional
+        Rows of the part motion to cut with; all that move if not given.
 
     Returns
     -------
@@ -108,7 +107,7 @@ def measure(job: Job, motion: PartMotion, grid_mm: float | None = None, *, wante
     grid = choose_grid_mm(job) if grid_mm is None else grid_mm
     saddle = Saddle.of(job.part)
     nodes = lay_nodes(job.part.outline, saddle, grid)
-    pieces = take_pieces(motion, job.cutters, saddle)
+    pieces = take_pieces(motion, job.cutters, saddle, moving)
     field = _Field(job, saddle, nodes, pieces, wanted_mm)
     field.cut()
     gouge = deepest_gouge(saddle, job.part.outline, pieces)
@@ -176,7 +175,7 @@ class _Field:
                 self.surface, arrays, span, lists, self._kernel_pieces(), above_mm, self.height, self.owner
             )  # fmt: skip
 
-        _in_threads(run, _spans(len(nodes.tile_start) - 1))
+        in_threads(run, spans(len(nodes.tile_start) - 1))
 
     def cut(self) -> None:
         """Cut all nodes: first with the pieces that come near the surface, then what stands higher with all."""
@@ -212,7 +211,7 @@ class _Field:
             )  # fmt: skip
             return own, bound
 
-        found = _in_threads(run, _spans(len(nodes.triangles)))
+        found = in_threads(run, spans(len(nodes.triangles)))
         best = max((own for own, _ in found), key=lambda own: own[0])
         return best, max(float(best[0]), *(bound for _, bound in found))
 
@@ -229,23 +228,6 @@ def _starting_stock_mm(job: Job, saddle: Saddle, nodes: Nodes, cap_mm: float) ->
         return np.full(len(nodes.x), min(cap_mm, job.stock.allowance_mm))
     z = saddle.height(nodes.xy[:, 0], nodes.xy[:, 1])
     return np.minimum(cap_mm, (job.stock.top_mm - z) / saddle.normal(nodes.xy)[:, 2])
-
-
-def _spans(count: int) -> list[tuple[int, int]]:
-    """Return runs of rows that share out work over the workers, several each to even it out."""
-    runs = max(1, min(count, _RUNS_PER_WORKER * _workers()))
-    edges = np.linspace(0, count, runs + 1).astype(int)
-    return list(zip(edges[:-1].tolist(), edges[1:].tolist(), strict=True))
-
-
-def _workers() -> int:
-    return max(1, min(8, os.cpu_count() or 1))
-
-
-def _in_threads(work: Callable[[tuple[int, int]], Answer], runs: Iterable[tuple[int, int]]) -> list[Answer]:
-    """Do the runs in threads (the kernels release the interpreter), answers in order."""
-    with ThreadPoolExecutor(_workers()) as pool:
-        return list(pool.map(work, runs))
 
 
 def scallop_map(cut: Cut) -> ScallopMap:

@@ -1,7 +1,7 @@
 """Arcs of G2 and G3 in their two forms (NISTIR 6556 section 3.5.3), in the two coordinates of the plane.
 
-The first and second coordinate are X Y under G17, Z X under G18 and Y Z under G19, so that a counterclockwise arc seen from
-the positive end of the third axis always turns the first towards the second.
+The first and second coordinate are X Y under G17, Z X under G18 and Y Z under G19, so that a counterclockwise
+arc seen from the positive end of the third axis always turns the first towards the second.
 """
 
 from __future__ import annotations

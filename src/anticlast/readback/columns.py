@@ -81,9 +81,13 @@ class Columns:
         held["coolant"][low:high] = state.coolant
 
     def motions(self, rows: int) -> Motions:
-        """Return the first ``rows`` motions as a record, times worked out."""
-        take = {name: values[:rows].copy() for name, values in self.held.items()}
-        start, end, centre = self.start[:rows].copy(), self.end[:rows].copy(), self.centre[:rows].copy()
+        """Return the first ``rows`` motions as a record, times worked out; the columns must not grow any more."""
+
+        def cut(values: np.ndarray) -> np.ndarray:
+            return values[:rows] if 2 * rows >= len(values) else values[:rows].copy()
+
+        take = {name: cut(values) for name, values in self.held.items()}
+        start, end, centre = cut(self.start), cut(self.end), cut(self.centre)
         seconds = seconds_asked(
             start, end, centre, take["shape"], take["plane"], take["turns"],
             take["feed_word"], take["inverse"] != 0, take["inch"] != 0,
@@ -120,9 +124,10 @@ def seconds_asked(
 ) -> np.ndarray:
     """Return the time that F asks for on each motion, seconds; nan on rapids and where no F is in force.
 
-    Under G94 F is length per minute along the XYZ path when X, Y or Z moves, whatever the rotary axes do; else degrees per
-    minute over the root of the summed squares of the turns (NISTIR 6556 sections 2.1.2.5 A, B, C and 3.5.19). An arc's path
-    is the arc or helix itself (2.1.2.6). Under G93 the motion takes 1/F minutes (3.5.19).
+    Under G94 F is length per minute along the XYZ path when X, Y or Z moves, whatever the rotary axes do;
+    else degrees per minute over the root of the summed squares of the turns (NISTIR 6556 sections 2.1.2.5 A,
+    B, C and 3.5.19). An arc's path is the arc or helix itself (2.1.2.6). Under G93 the motion takes 1/F
+    minutes (3.5.19).
 
     Parameters
     ----------

@@ -1,7 +1,7 @@
 """Canned cycles that drill and bore in one stroke: G81, G82, G85, G89 (NISTIR 6556 section 3.5.16).
 
-G83 backs off "a bit" without saying how much, G84 and G86 to G88 act on the spindle or wait for a person in mid-cycle:
-those are refused, since their motion cannot be known from the text alone.
+G83 backs off "a bit" without saying how much, G84 and G86 to G88 act on the spindle or wait for a person in
+mid-cycle: those are refused, since their motion cannot be known from the text alone.
 """
 
 from __future__ import annotations
@@ -31,8 +31,8 @@ Step = tuple[Literal["traverse", "feed", "dwell"], Three, float]
 class Hole:
     """What a line asks of a canned cycle, in work coordinates and mm.
 
-    ``target`` and ``stride`` are coordinates of the plane's first and second axis: with absolute words every repeat is made
-    at ``target``; with incremental words each is ``stride`` further on.
+    ``target`` and ``stride`` are coordinates of the plane's first and second axis: with absolute words every
+    repeat is made at ``target``; with incremental words each is ``stride`` further on.
     """
 
     code: int
@@ -66,9 +66,9 @@ def needs_dwell(code: int) -> bool:
 def steps_of(hole: Hole) -> list[Step]:
     """Return the moves of a canned cycle in order; moves of no length are left out.
 
-    The order is that of 3.5.16 (preliminary motion) and 3.5.16.1 onwards: up to the R level first if below it; then for each
-    repeat across, to the R level, down at feed, wait, out to the level before the cycle or to R, whichever G98 or G99 and
-    the higher of the two ask for (3.5.20).
+    The order is that of 3.5.16 (preliminary motion) and 3.5.16.1 onwards: up to the R level first if below
+    it; then for each repeat across, to the R level, down at feed, wait, out to the level before the cycle or
+    to R, whichever G98 or G99 and the higher of the two ask for (3.5.20).
 
     Parameters
     ----------

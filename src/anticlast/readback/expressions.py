@@ -8,6 +8,7 @@ from __future__ import annotations
 import math
 import re
 from collections.abc import Callable, Mapping
+from functools import partial
 from typing import Final
 
 from anticlast.readback.language import INTEGER_SLACK, LAST_PARAMETER, LanguageError
@@ -16,6 +17,7 @@ NUMBER: Final = re.compile(r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)")
 _DEEPEST: Final = 128  # a line of 256 characters cannot close more brackets than this
 
 _FUNCTION: Final = re.compile(r"(abs|acos|asin|atan|cos|exp|fix|fup|ln|round|sin|sqrt|tan)\[")
+_NAME: Final = re.compile(r"[a-z]+")
 _OPERATOR: Final = re.compile(r"\*\*|\*|/|mod|\+|-|or|xor|and")
 _LEVELS: Final = (frozenset(("**",)), frozenset(("*", "/", "mod")), frozenset(("+", "-", "or", "xor", "and")))
 
@@ -106,7 +108,8 @@ def real_value(text: str, at: int, parameters: Mapping[int, float], depth: int =
     named = _FUNCTION.match(text, at)
     if named:
         return _function(named.group(1), text, named.end() - 1, parameters, depth)
-    shown = text[at : at + 8].split("\x01")[0] or "end of line"
+    unknown = _NAME.match(text, at)
+    shown = (unknown.group() if unknown else text[at : at + 8].split("\x01")[0]).upper() or "end of line"
     raise LanguageError(shown, "a number, parameter, function or [expression] is missing here", "3.3.2")
 
 
@@ -163,9 +166,8 @@ def _expression(text: str, at: int, parameters: Mapping[int, float], depth: int)
         for operator, right in zip(operators, values[1:], strict=True):
             if operator in level:
                 left = kept_values[-1]
-                step = _COMBINE[operator]
                 shown = f"[{left:g} {operator.upper()} {right:g}]"
-                kept_values[-1] = _checked(shown, "3.3.2.3", lambda s=step, x=left, y=right: s(x, y))
+                kept_values[-1] = _checked(shown, "3.3.2.3", partial(_COMBINE[operator], left, right))
             else:
                 kept_values.append(right)
                 kept_operators.append(operator)

@@ -93,7 +93,10 @@ class Interpreter:
         state = self.state
         missing = [group for group in groups if group not in state.stated and group not in state.told]
         for group in missing:
-            self.note("modes stated", f"the {group} is relied on here but never stated; no default can be counted on")
+            self.note(
+                "modes stated",
+                f"the {group} is relied on here but never stated; no default can be counted on",
+            )
         if missing:
             state.told = state.told.union(missing)
 
@@ -221,7 +224,9 @@ class Interpreter:
             raise LanguageError(f"F{feed:g}", "a feed is not negative", "3.7.1")
         if state.inverse and motion in _TIMED:
             if feed is None:
-                raise LanguageError(label(motion or 0), "under G93 every feed motion needs its own F", "3.5.19")
+                raise LanguageError(
+                    label(motion or 0), "under G93 every feed motion needs its own F", "3.5.19"
+                )
             state.feed = feed
         elif feed is not None and not state.inverse:
             state.feed = feed
@@ -279,7 +284,9 @@ class Interpreter:
         compensation = g.get("cutter compensation")
         if compensation in (410, 420):
             raise LanguageError(
-                label(compensation), "refused in a proof: cutter radius compensation is not followed", "3.5.10"
+                label(compensation),
+                "refused in a proof: cutter radius compensation is not followed",
+                "3.5.10",
             )
         if compensation == 400:
             self._state_mode("cutter compensation", "G40")

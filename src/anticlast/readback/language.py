@@ -1,7 +1,8 @@
 """The words of RS-274 as NISTIR 6556 lists them: letters, codes, modal groups and the section that rules each.
 
-Source: T. Kramer, F. Proctor, E. Messina, "The NIST RS274NGC Interpreter - Version 3", NISTIR 6556, 17 August 2000. All
-section numbers in this folder are that report's. G codes are held times ten, so that 54 is 540 and 59.1 is 591.
+Source: T. Kramer, F. Proctor, E. Messina, "The NIST RS274NGC Interpreter - Version 3", NISTIR 6556, 17 August
+2000. All section numbers in this folder are that report's. G codes are held times ten, so that 54 is 540 and
+59.1 is 591.
 """
 
 from __future__ import annotations
@@ -11,7 +12,9 @@ from typing import Final
 LETTERS: Final = frozenset("abcdfghijklmnpqrstxyz")  # 3.3.2, Table 3
 AXES: Final = "xyzabc"
 MAX_LINE: Final = 256  # characters, 3.3
-MAX_NUMBER: Final = 1e9  # ours: no machine has a travel, feed or speed beyond it, and squares of it stay finite
+MAX_NUMBER: Final = (
+    1e9  # ours: no machine has a travel, feed or speed beyond it, and squares of it stay finite
+)
 LAST_PARAMETER: Final = 5399  # 3.2.1
 FIRST_RESERVED: Final = 5061  # from here on the control keeps probed points, homes and work offsets, 3.2.1
 INTEGER_SLACK: Final = 1e-4  # 3.3.2.1
@@ -72,8 +75,8 @@ _SECTIONS: Final = {
 }
 G_SECTION: Final = {code: section for section, codes in _SECTIONS.items() for code in codes}
 
-# Which codes take a word that is not an axis, F, S or T word. A word that nothing on its line takes is an error (3.3:
-# whatever is not allowed is an error; the single messages for it are from memory).
+# Which codes take a word that is not an axis, F, S or T word. A word that nothing on its line takes is an
+# error (3.3: whatever is not allowed is an error; the single messages for it are from memory).
 TAKEN_BY: Final = {
     "p": frozenset((40, 100, 820, 860, 880, 890)),
     "r": ARCS | CYCLES,

@@ -6,7 +6,13 @@ import math
 from typing import TYPE_CHECKING
 
 from anticlast.readback import cycles, offsets
-from anticlast.readback.arcs import PLANE_AXES, RADIUS_SLACK_INCH_MM, RADIUS_SLACK_MM, centre_form, radius_form
+from anticlast.readback.arcs import (
+    PLANE_AXES,
+    RADIUS_SLACK_INCH_MM,
+    RADIUS_SLACK_MM,
+    centre_form,
+    radius_form,
+)
 from anticlast.readback.language import ARCS, AXES, CYCLES, ONE_SHOT, LanguageError, label
 from anticlast.readback.modes import Six
 from anticlast.readback.words import Block
@@ -75,7 +81,9 @@ def _arc(control: Interpreter, code: int, block: Block) -> None:
     control.rely_on_axes(block, "feed mode", "plane")
     bits = control.name_axes(block)
     if AXES[first] not in words and AXES[second] not in words:
-        raise LanguageError(name, f"needs {AXES[first].upper()} or {AXES[second].upper()} under G{state.plane}", "3.5.3")
+        raise LanguageError(
+            name, f"needs {AXES[first].upper()} or {AXES[second].upper()} under G{state.plane}", "3.5.3"
+        )
     centre_letters = ("ijk"[first], "ijk"[second])
     given = [letter for letter in "ijk" if letter in words]
     strangers = [letter for letter in given if letter not in centre_letters]
@@ -151,7 +159,9 @@ def _cycle(control: Interpreter, code: int, block: Block) -> None:
         axes=(first, second, normal),
         at=state.at[:3],
         target=(end[first], end[second]),
-        stride=(0.0, 0.0) if state.absolute else (end[first] - state.at[first], end[second] - state.at[second]),
+        stride=(0.0, 0.0)
+        if state.absolute
+        else (end[first] - state.at[first], end[second] - state.at[second]),
         clear_mm=clear_mm,
         depth_mm=depth * state.factor + (state.shift[normal] if state.absolute else clear_mm),
         dwell_s=dwell or 0.0,

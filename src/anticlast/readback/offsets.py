@@ -121,13 +121,18 @@ def one_shot(control: Interpreter, code: int, block: Block) -> None:
         control.event("axis offset", "none")
     elif code == 923:
         if state.stored_shift is None:
-            raise LanguageError("G92.3", "refused: the offsets it restores are known to the control only", "3.5.18")
+            raise LanguageError(
+                "G92.3", "refused: the offsets it restores are known to the control only", "3.5.18"
+            )
         state.shift = state.stored_shift
         control.event("axis offset", _shift_text(state.shift))
 
 
 def _shift_text(shift: Six) -> str:
-    return " ".join(f"{AXES[axis].upper()}{value:.10g}" for axis, value in enumerate(shift) if value != 0.0) or "none"
+    return (
+        " ".join(f"{AXES[axis].upper()}{value:.10g}" for axis, value in enumerate(shift) if value != 0.0)
+        or "none"
+    )
 
 
 def _set_shift(control: Interpreter, block: Block) -> None:
@@ -179,8 +184,8 @@ def _set_origin(control: Interpreter, block: Block) -> None:
 def from_machine(control: Interpreter, block: Block) -> Six:
     """Return the end of a G53 motion in the active work offset (3.5.12).
 
-    Its words are machine coordinates of the spindle gauge point, so that a length offset in force shortens Z; the text does
-    not say so, it follows from 2.1.2.3.
+    Its words are machine coordinates of the spindle gauge point, so that a length offset in force shortens Z;
+    the text does not say so, it follows from 2.1.2.3.
 
     Parameters
     ----------
@@ -216,7 +221,9 @@ def _in_work(control: Interpreter, name: str, place: list[float | None], section
             continue
         zero = origin[axis]
         if zero is None:
-            raise LanguageError(name, "refused: where the work offset lies in the machine is not known", section)
+            raise LanguageError(
+                name, "refused: where the work offset lies in the machine is not known", section
+            )
         end[axis] = value - zero
         if axis == _Z:
             length = length_mm(control, state.offset_h)

@@ -59,7 +59,7 @@ class Block:
 
 def shown(character: str) -> str:
     """Return a character as it can be printed."""
-    return character if " " <= character <= "~" else f"character {ord(character)}"
+    return character if " " <= character <= "~" else f"CHARACTER {ord(character)}"
 
 
 def _squeeze(text: str) -> tuple[str, str | None]:
@@ -119,7 +119,9 @@ def _setting(text: str, at: int, parameters: Mapping[int, float]) -> tuple[int, 
     value, at = real_value(text, at + 1, parameters)
     if index >= FIRST_RESERVED:
         raise LanguageError(
-            f"#{index}", "refused: the control keeps positions and offsets there, a proof cannot follow", "3.2.1"
+            f"#{index}",
+            "refused: the control keeps positions and offsets there, a proof cannot follow",
+            "3.2.1",
         )
     return index, value, at
 
@@ -129,14 +131,18 @@ def _code(letter: str, value: float) -> int:
     nearest = round(value * scale)
     known = G_GROUP if letter == "g" else M_GROUP
     if abs(value * scale - nearest) > INTEGER_SLACK or nearest not in known:
-        raise LanguageError(f"{letter.upper()}{value:g}", "is no code of the language", "3.5" if letter == "g" else "3.6")
+        raise LanguageError(
+            f"{letter.upper()}{value:g}", "is no code of the language", "3.5" if letter == "g" else "3.6"
+        )
     return nearest
 
 
 def _put(block: Block, letter: str, value: float) -> None:
     """Add one word to the block, keeping the rules of repeats (3.3.5) and of modal groups (3.4)."""
     if abs(value) > MAX_NUMBER:
-        raise LanguageError(f"{letter.upper()}{value:g}", f"refused: beyond {MAX_NUMBER:g} in size", "3.3.2.1")
+        raise LanguageError(
+            f"{letter.upper()}{value:g}", f"refused: beyond {MAX_NUMBER:g} in size", "3.3.2.1"
+        )
     if letter in "gm":
         code = _code(letter, value)
         held, groups = (block.g, G_GROUP) if letter == "g" else (block.m, M_GROUP)
@@ -187,7 +193,7 @@ def parse_line(text: str, parameters: Mapping[int, float]) -> Block:
             block.settings.append((index, value))
         elif letter not in LETTERS:
             wrong = "letter" if letter.isalpha() and letter.isascii() else "character"
-            raise LanguageError(shown(letter.upper()), f"is no {wrong} of the language", "3.3.2")
+            raise LanguageError(shown(letter).upper(), f"is no {wrong} of the language", "3.3.2")
         elif letter == "n":
             raise LanguageError("N", "a line number stands first on its line, once", "3.3.1")
         else:

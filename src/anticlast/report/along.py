@@ -10,6 +10,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import numpy.typing as npt
 
 from anticlast.cutter import Cutter
 from anticlast.errors import NotConverged
@@ -31,7 +32,9 @@ from anticlast.tolerances import LIMIT_MM
 
 UNKNOWN = 255  # purpose of a feed move that the plan does not hold
 LOOK_AHEAD = 12  # planned blocks that may be missing from the text in a row (no word changed)
-SAME_WORD = 10 * LIMIT_MM  # mm or degrees; a word read back is off its plan by half a posted digit at most, inch included
+SAME_WORD = (
+    10 * LIMIT_MM
+)  # mm or degrees; a word read back is off its plan by half a posted digit at most, inch included
 
 
 @dataclass(frozen=True, slots=True)
@@ -132,25 +135,37 @@ def contact(job: Job, cutter: Cutter, tip_mm: Floats, axis: Floats) -> tuple[Flo
     Returns
     -------
     contact_mm, normal : (n, 3)
+        nan in rows of a bull or flat end mill where the search does not settle: the cutter stands so upright there
+        that its whole bottom is as near.
 
     Raises
     ------
     NotConverged
-        When the nearest point cannot be found.
+        When the nearest point of the surface cannot be found.
     """
     from anticlast.saddle import Saddle
 
     saddle = Saddle.of(job.part)
     point = tip_mm + cutter.reference_height_mm * axis
     foot, _ = saddle.closest(point)
-    if cutter.shape != "ball":
-        for _ in range(2):  # the normal changes little between the axis and the corner: two rounds leave < 1 um
-            normal = saddle.normal(foot)
-            low = axis * np.sum(axis * normal, axis=1, keepdims=True) - normal
-            size = np.linalg.norm(low, axis=1, keepdims=True)
-            arm = (cutter.radius_mm - cutter.corner_radius_mm) * low / np.where(size > 0, size, 1.0)
-            foot, _ = saddle.closest(point + arm)
-    return saddle.point(foot), saddle.normal(foot)
+    if cutter.shape == "ball":
+        return saddle.point(foot), saddle.normal(foot)
+    settled = np.zeros(len(foot), bool)
+    for _ in range(MOST_ROUNDS):  # each round leaves about (corner circle radius) * curvature / sin(tilt) of the error
+        normal = saddle.normal(foot)
+        low = axis * np.sum(axis * normal, axis=1, keepdims=True) - normal
+        size = np.linalg.norm(low, axis=1, keepdims=True)
+        arm = (cutter.radius_mm - cutter.corner_radius_mm) * low / np.where(size > 0, size, 1.0)
+        last = foot
+        foot, _ = saddle.closest(point + arm)
+        settled = np.linalg.norm(foot - last, axis=1) < SETTLED_MM
+        if settled.all():
+            break
+    foot = np.where(settled[:, None], foot, 0.0)
+    return (
+        np.where(settled[:, None], saddle.point(foot), np.nan),
+        np.where(settled[:, None], saddle.normal(foot), np.nan),
+    )
 
 
 def along(made: Made) -> Along | None:
@@ -176,7 +191,7 @@ def _planned(axis_paths: tuple[AxisPath, ...], columns: list[int]) -> tuple[Floa
     return np.concatenate(words), np.concatenate(purpose), np.concatenate(operation), np.concatenate(passes)
 
 
-def _per_motion(moved: Floats, seconds: Floats) -> Floats:
+def _per_motion(moved: npt.NDArray, seconds: Floats) -> Floats:
     """Feed in mm/min; nan where no time passes."""
     with np.errstate(divide="ignore", invalid="ignore"):
         return np.where(seconds > 0, 60.0 * moved / seconds, np.nan)
@@ -204,6 +219,10 @@ def _touch(made: Made, motion: PartMotion, finishing: Bools) -> tuple[Floats, Fl
             touched[rows], normals[rows] = contact(made.job, cutter, motion.tip_mm[rows], motion.axis[rows])
         except NotConverged as failed:
             notes.append(f"T{cutter.number}: contact, tilt and contact feed are not shown: {failed}")
+            continue
+        lost = int(np.isnan(touched[rows, 0]).sum())
+        if lost:
+            notes.append(f"T{cutter.number}: no single contact at {lost} of {len(rows)} points; nothing is shown there.")
     return touched, normals, tuple(notes)
 
 
@@ -225,7 +244,9 @@ def _of_program(made: Made, program: ReadProgram, motion: PartMotion) -> Along:
     first = of < 0
     row_purpose = np.where(first, np.uint8(Purpose.RAPID), purpose[of])
     row_operation = np.where(first, -1, planned(operations, -1)[of])
-    sweeps = np.array([path.operation.does != "rough" for path in made.axis_paths] + [False])  # last: operation -1
+    sweeps = np.array(
+        [path.operation.does != "rough" for path in made.axis_paths] + [False]
+    )  # last: operation -1
     finishing = (row_purpose <= Purpose.OVERRUN) & sweeps[row_operation]
     touched, normals, notes = _touch(made, motion, finishing)
     reference = _reference(made.job.cutters, motion)

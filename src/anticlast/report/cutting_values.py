@@ -50,7 +50,8 @@ def tilt_range_rad(job: Job, operation: Operation, path: CutterPath | None) -> t
     """Smallest and largest angle between cutter axis and surface normal where the operation cuts; as asked without a path."""
     if path is not None:
         cosines = [
-            np.sum(stretch.axis * stretch.normal, axis=1)[stretch.purpose == Purpose.CUT] for stretch in path.stretches
+            np.sum(stretch.axis * stretch.normal, axis=1)[stretch.purpose == Purpose.CUT]
+            for stretch in path.stretches
         ]
         every = np.concatenate(cosines) if cosines else np.empty(0)
         if every.size and operation.does != "rough":

@@ -149,7 +149,13 @@ def _span(values: Floats, *, from_zero: bool = False) -> list[float]:
 
 def _quantity(key: str, title: str, unit: str, digits: int, values: Floats, **more: Any) -> dict[str, Any]:
     span = more.pop("span", None) or _span(values)
-    entry = {"key": key, "title": title, "unit": unit, "digits": digits, "span": [float(f"{edge:.9g}") for edge in span]}
+    entry = {
+        "key": key,
+        "title": title,
+        "unit": unit,
+        "digits": digits,
+        "span": [float(f"{edge:.9g}") for edge in span],
+    }
     return {**entry, **more, "values": values}
 
 
@@ -162,7 +168,9 @@ def quantities(made: Made, rows: Along, units: Units) -> list[dict[str, Any]]:
     crest = np.full(len(rows.line), np.nan)
     if scallop_map is not None and scallop_map.height_mm.size:
         wide = stepover[np.isfinite(stepover)]
-        crest = highest_near(scallop_map, rows.contact_mm, float(np.percentile(wide, 99)) if wide.size else 1.0)
+        crest = highest_near(
+            scallop_map, rows.contact_mm, float(np.percentile(wide, 99)) if wide.size else 1.0
+        )
     cutting = rows.cutting
     on_part = np.where(cutting, reached, np.nan)
     passes = np.where(rows.pass_index >= 0, rows.pass_index + 1.0, np.nan)
@@ -184,7 +192,9 @@ def quantities(made: Made, rows: Along, units: Units) -> list[dict[str, Any]]:
 def path_data(made: Made, rows: Along, units: Units) -> dict[str, Any]:
     """Kept rows of the program with pose, words, line, purpose and quantities."""
     shown = quantities(made, rows, units)
-    chosen, tolerance = kept_rows(rows, [entry["values"] for entry in shown if entry["key"] in SHAPED_BY], made.findings)
+    chosen, tolerance = kept_rows(
+        rows, [entry["values"] for entry in shown if entry["key"] in SHAPED_BY], made.findings
+    )
     decimals = [_decimals(made.job, letter) for letter in rows.letters]
     scales = [units.scale if letter in "XYZ" else 1.0 for letter in rows.letters]
     words = np.rint(rows.words[chosen] * np.array(scales) * 10.0 ** np.array(decimals, dtype=float))
@@ -204,7 +214,10 @@ def path_data(made: Made, rows: Along, units: Units) -> dict[str, Any]:
         "operation": packed(rows.operation[chosen].astype(np.int16)),
         "tool": packed(rows.tool[chosen].astype(np.int32)),
         "clock": packed(rows.clock_s[chosen].astype(np.float32)),
-        "purposes": {**{str(int(key)): name for key, name in PURPOSES.items()}, str(UNKNOWN): "other feed move"},
+        "purposes": {
+            **{str(int(key)): name for key, name in PURPOSES.items()},
+            str(UNKNOWN): "other feed move",
+        },
         "quantities": shown,
         "notes": list(rows.notes),
     }
@@ -218,13 +231,19 @@ def _decimals(job: Job, letter: str) -> int:
 
 def scallop_limit_mm(made: Made) -> float | None:
     """Scallop limit of the operation that leaves the surface; None when the job sets a stepover instead."""
-    limits = [op.scallop_mm for op in made.job.operations if op.does == "finish" and op.scallop_mm is not None]
+    limits = [
+        op.scallop_mm for op in made.job.operations if op.does == "finish" and op.scallop_mm is not None
+    ]
     return limits[-1] if limits else None
 
 
 def gouge_limit_mm(made: Made) -> float:
     """Depth below the surface that counts as a gouge: the limit of the gouge check, else what the proof can measure."""
-    limits = [f.limit for f in made.findings if "gouge" in f.check.lower() and f.unit == "mm" and math.isfinite(f.limit)]
+    limits = [
+        f.limit
+        for f in made.findings
+        if "gouge" in f.check.lower() and f.unit == "mm" and math.isfinite(f.limit)
+    ]
     return max(min(limits), MEASURE_MM) if limits else MEASURE_MM
 
 

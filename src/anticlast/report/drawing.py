@@ -131,6 +131,10 @@ def front_drawing(job: Job, units: Units) -> str:
     parts.append(sheet.line(np.array([[low, plane], [high, plane]]), "rapid"))
     for z, name in levels:
         spot = sheet.place(np.array([[low, z]]))[0]
-        parts.append(f'<text x="{spot[0] + 4:.1f}" y="{spot[1] - 5:.1f}">{name} Z {text(units.length(z, bare=True))}</text>')
+        parts.append(
+            f'<text x="{spot[0] + 4:.1f}" y="{spot[1] - 5:.1f}">{name} Z {text(units.length(z, bare=True))}</text>'
+        )
     parts.append(sheet.zero("X", "Z"))
-    return sheet.wrap("Set-up from the front: blank, finished surface at Y 0, clearance plane and program zero", parts)
+    return sheet.wrap(
+        "Set-up from the front: blank, finished surface at Y 0, clearance plane and program zero", parts
+    )

@@ -63,8 +63,8 @@ class Units:
 
     @property
     def small_name(self) -> str:
-        """Unit of scallop, gouge and chord heights."""
-        return "×0.0001 in" if self.inch else "µm"
+        """Unit of scallop, gouge and chord heights: um, or the trade's tenths of a thousandth of an inch."""
+        return "tenths" if self.inch else "µm"
 
     @property
     def scale(self) -> float:

@@ -75,6 +75,7 @@ def page_text(made: Made) -> str:
         "plan": plan_drawing(made.job, rows, units),
         "front": front_drawing(made.job, units),
         "setup": sections.setup(made, units),
+        "travel": sections.travel(made, units),
         "bounds": text(sections.bounds_note(made, units)),
         "missing": text(missing),
         "data": as_json(page_data(made, units, rows)),

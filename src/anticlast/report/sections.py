@@ -76,7 +76,11 @@ def head(made: Made, units: Units) -> str:
     else:
         program = "none written"
     blocks = f", {made.program.blocks} blocks" if made.program and made.released else ""
-    unit = "inch (G20)" if units.inch else "mm (G21)"
+    unit = (
+        "inch (G20), small heights in tenths: 1 tenth = 0.0001 in"
+        if units.inch
+        else "mm (G21), small heights in µm"
+    )
     facts = (
         f"<dt>Program</dt><dd>{program}{blocks}</dd>"
         f"<dt>Machine</dt><dd>{text(machine.title)} <span class='quiet'>({text(machine.name)})</span></dd>"
@@ -99,7 +103,9 @@ def _key_figures(made: Made, units: Units) -> str:
             ("rapid", clock(moving), "G0 moves"),
         ]
     if made.proof is not None:
-        limits = [op.scallop_mm for op in made.job.operations if op.does == "finish" and op.scallop_mm is not None]
+        limits = [
+            op.scallop_mm for op in made.job.operations if op.does == "finish" and op.scallop_mm is not None
+        ]
         asked = f"limit {units.small(limits[-1])}" if limits else "no limit set"
         figures += [
             ("highest scallop", units.small(made.proof.scallop_max_mm), asked),
@@ -143,7 +149,10 @@ def cutters(made: Made, units: Units) -> str:
         return ", ".join(shown) or "not used"
 
     def holder(cutter: Cutter) -> str:
-        steps = [f"⌀{units.length(2 * r, bare=True)} × {units.length(length, bare=True)}" for r, length in cutter.holder]
+        steps = [
+            f"⌀{units.length(2 * r, bare=True)} × {units.length(length, bare=True)}"
+            for r, length in cutter.holder
+        ]
         return ", ".join(steps) + f" {units.name}" if steps else "none given"
 
     pairs = [
@@ -171,13 +180,16 @@ def operations(made: Made, units: Units) -> str:
     finishing = [operation.index for operation in jobs if operation.does == "finish"]
     last = finishing[-1] if finishing else -1
     asked = [_asked(operation, units) for operation in jobs]
-    found = [_found(made, operation, results.get(operation.index), operation.index == last, units) for operation in jobs]
+    found = [
+        _found(made, operation, results.get(operation.index), operation.index == last, units)
+        for operation in jobs
+    ]
     works = [_works(made, operation, paths.get(operation.index), units) for operation in jobs]
-    labels = [(name, [column[name] for column in group]) for group in (asked, found, works) for name in group[0]]
+    labels = [
+        (name, [column[name] for column in group]) for group in (asked, found, works) for name in group[0]
+    ]
     heads = "".join(f'<th scope="col">{operation.index}: {text(operation.does)}</th>' for operation in jobs)
-    return (
-        f'<table class="side"><thead><tr><th scope="col">Operation</th>{heads}</tr></thead><tbody>{_rows(labels)}</tbody></table>'
-    )
+    return f'<table class="side"><thead><tr><th scope="col">Operation</th>{heads}</tr></thead><tbody>{_rows(labels)}</tbody></table>'
 
 
 def _asked(operation: Operation, units: Units) -> dict[str, str]:
@@ -195,7 +207,9 @@ def _asked(operation: Operation, units: Units) -> dict[str, str]:
     }
 
 
-def _found(made: Made, operation: Operation, result: OperationResult | None, last: bool, units: Units) -> dict[str, str]:
+def _found(
+    made: Made, operation: Operation, result: OperationResult | None, last: bool, units: Units
+) -> dict[str, str]:
     names = (
         "passes", "cut length", "link length", "length floor (share of it)", "stepover on the surface",
         "scallop: asked", "scallop: predicted | proven", "time (from feed alone)",
@@ -205,7 +219,9 @@ def _found(made: Made, operation: Operation, result: OperationResult | None, las
         return {**dict.fromkeys(names, "not planned"), names[5]: limit}
     floor = "does not apply"
     if result.length_floor_mm > 0:
-        floor = f"{units.long(result.length_floor_mm)} (× {result.cut_length_mm / result.length_floor_mm:.3f})"
+        floor = (
+            f"{units.long(result.length_floor_mm)} (× {result.cut_length_mm / result.length_floor_mm:.3f})"
+        )
     proven = "cut over later"
     if last:
         proven = units.small(made.proof.scallop_max_mm) if made.proof else NOT_MEASURED
@@ -221,18 +237,18 @@ def _found(made: Made, operation: Operation, result: OperationResult | None, las
 
 def _works(made: Made, operation: Operation, path: CutterPath | None, units: Units) -> dict[str, str]:
     values = cutting_values(made.job, operation, path)
-    tilt = _range(*(plain(math.degrees(angle), 1) for angle in values.tilt_rad), "°").replace(" °", "°")
+    flat, steep = (plain(math.degrees(angle), 1) for angle in values.tilt_rad)
     known = math.isfinite(values.depth_mm)
-    diameter = _range(*(units.length(d, bare=True) for d in values.effective_diameter_mm), units.name)
-    speeds = [units.cutting_speed(speed, bare=True) for speed in values.speed_mm_min]
+    least, most = (units.length(d, bare=True) for d in values.effective_diameter_mm)
+    slow, fast = (units.cutting_speed(speed, bare=True) for speed in values.speed_mm_min)
     tooth = units.length(values.feed_per_tooth_mm)
-    chip = _range(*(units.length(chip, bare=True) for chip in values.chip_mm), units.name)
+    thin, thick = (units.length(chip, bare=True) for chip in values.chip_mm)
     return {
         "depth of cut": units.length(values.depth_mm) if known else "uneven, up to the whole blank",
-        "tilt from the normal": tilt,
-        "diameter that cuts": diameter,
-        "cutting speed there": _range(*speeds, "ft/min" if units.inch else "m/min"),
-        "feed per tooth (chip, thinned)": f"{tooth} ({chip})",
+        "tilt from the normal": f"{_range(flat, steep)}°",
+        "diameter that cuts": _range(least, most, units.name),
+        "cutting speed there": _range(slow, fast, "ft/min" if units.inch else "m/min"),
+        "feed per tooth (chip, thinned)": f"{tooth} ({_range(thin, thick, units.name)})",
     }
 
 
@@ -255,7 +271,9 @@ def checks(made: Made, units: Units) -> str:
             f'<td data-label="line">{line if finding.line > 0 else "none"}</td>'
             f'<td class="said">{text(finding.message)}</td></tr>'
         )
-    heads = "".join(f'<th scope="col">{name}</th>' for name in ("", "check", "worst", "limit", "line", "in words"))
+    heads = "".join(
+        f'<th scope="col">{name}</th>' for name in ("", "check", "worst", "limit", "line", "in words")
+    )
     return f'<table class="checks"><thead><tr>{heads}</tr></thead><tbody>{"".join(rows)}</tbody></table>'
 
 
@@ -266,26 +284,50 @@ def setup(made: Made, units: Units) -> str:
     """Where things stand, cautions, and how to prove out."""
     job = made.job
     machine = job.machine
-    origin = " ".join(f"{axis} {units.length(v, bare=True)}" for axis, v in zip("XYZ", job.part_origin_mm, strict=True))
+    origin = " ".join(
+        f"{axis} {units.length(v, bare=True)}" for axis, v in zip("XYZ", job.part_origin_mm, strict=True)
+    )
     x0, y0, x1, y1 = job.stock.outline.bounds
-    size = " × ".join(units.length(v, bare=True) for v in (x1 - x0, y1 - y0, job.stock.top_mm - job.stock.bottom_mm))
+    size = " × ".join(
+        units.length(v, bare=True) for v in (x1 - x0, y1 - y0, job.stock.top_mm - job.stock.bottom_mm)
+    )
     facts = [
         ("Program zero (G54)", "the saddle point of the part, Z up, with every rotary axis at 0"),
         ("Blank", f"{job.stock.material}, {size} {units.name} (X × Y × Z)"),
-        ("Blank top, bottom", f"Z {units.length(job.stock.top_mm, bare=True)}, Z {units.length(job.stock.bottom_mm)}"),
-        ("Rapid moves stay", f"{units.length(job.clearance_mm)} above the stock"),
+        (
+            "Blank top, bottom",
+            f"Z {units.length(job.stock.top_mm, bare=True)}, Z {units.length(job.stock.bottom_mm)}",
+        ),
+        ("Clearance", f"rapid moves stay {units.length(job.clearance_mm)} above the stock"),
     ]
     if machine.rotary:
-        facts.insert(1, ("Saddle point, from where the rotary axes meet", f"{origin} {units.name}; wrong place, wrong part"))
+        facts.insert(
+            1,
+            (
+                "Saddle point, from where the rotary axes meet",
+                f"{origin} {units.name}; wrong place, wrong part",
+            ),
+        )
     if job.stock.allowance_mm is not None:
-        facts.insert(-1, ("Stock on the surface", f"{units.length(job.stock.allowance_mm)} left by the cut before"))
+        facts.insert(
+            -1, ("Stock on the surface", f"{units.length(job.stock.allowance_mm)} left by the cut before")
+        )
     if any(axis.carries == "cutter" for axis in machine.rotary):
-        facts.append(("Gauge lengths", "as in the cutter table: this machine tilts the cutter, so another length needs another program"))
+        facts.append(
+            (
+                "Gauge lengths",
+                "as in the cutter table: this machine tilts the cutter, so another length needs another program",
+            )
+        )
     listed = "".join(f"<dt>{text(name)}</dt><dd>{text(value)}</dd>" for name, value in facts)
     cautions = "".join(f"<li>{text(caution)}</li>" for caution in made.cautions)
-    material = f'<div class="caution"><h3>Cautions for {text(job.stock.material)}</h3><ul>{cautions}</ul></div>' if cautions else ""
+    material = (
+        f'<div class="caution"><h3>Cautions for {text(job.stock.material)}</h3><ul>{cautions}</ul></div>'
+        if cautions
+        else ""
+    )
     steps = "".join(f"<li>{text(step)}</li>" for step in PROVE_OUT)
-    return f'<dl class="facts">{listed}</dl>{material}<h3>How to prove out</h3><ol>{steps}</ol>{travel(made, units)}'
+    return f'<dl class="facts">{listed}</dl>{material}<h3>How to prove out</h3><ol>{steps}</ol>'
 
 
 def travel(made: Made, units: Units) -> str:
@@ -299,7 +341,11 @@ def travel(made: Made, units: Units) -> str:
         linear = axis is not None and axis.kind == "linear"
         show = (lambda v: units.length(v, bare=True)) if linear else (lambda v: plain(v, 2))
         unit = units.name if linear else "°"
-        has = "endless" if axis is None or axis.limits is None else _range(show(axis.limits[0]), show(axis.limits[1]), unit)
+        has = (
+            "endless"
+            if axis is None or axis.limits is None
+            else _range(show(axis.limits[0]), show(axis.limits[1]), unit)
+        )
         rows.append((letter, [_range(show(low), show(high), unit), has]))
     return (
         '<h3>Travel</h3><table class="travel"><thead><tr><th scope="col">axis</th><th scope="col">used</th>'

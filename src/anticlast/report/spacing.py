@@ -89,7 +89,9 @@ def pooled(scallop: ScallopMap, most_cells: int) -> tuple[Floats, Floats, Floats
     columns, rows = np.arange(0, nx, block), np.arange(0, ny, block)
 
     def fold(pick: np.ufunc) -> Floats:
-        return pick.reduceat(pick.reduceat(scallop.height_mm, rows, axis=0), columns, axis=1).astype(np.float64)
+        return pick.reduceat(pick.reduceat(scallop.height_mm, rows, axis=0), columns, axis=1).astype(
+            np.float64
+        )
 
     def centres(values: Floats, starts: Ints) -> Floats:
         spacing = (values[-1] - values[0]) / max(len(values) - 1, 1)

@@ -1,0 +1,120 @@
+"""The verdict on one program text: every check, and what was measured on the way."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from anticlast.proof import checks
+from anticlast.proof.collisions import Clearance, cutting_body, flute_clearance, least_clearance, nearer, rigid_bodies
+from anticlast.proof.patches import blank_patches, finished_patches
+from anticlast.proof.virtual_cut import measure, scallop_map
+from anticlast.readback.checks import check_axes, check_cutters, known_places
+from anticlast.readback.forward import axis_travel, part_motion
+from anticlast.records import SIX, Proof
+
+if TYPE_CHECKING:
+    from anticlast.records import Bools, Finding, Job, PartMotion, ReadProgram
+
+_NOTHING = Clearance(math.inf, math.inf)
+
+
+def prove(job: Job, program: ReadProgram, grid_mm: float | None = None) -> tuple[Proof, PartMotion]:
+    """Prove a program that was read back, against its job.
+
+    What could be read of a program that breaks the language is measured all the same; it is never released.
+
+    Parameters
+    ----------
+    job : Job
+    program : ReadProgram
+    grid_mm : float, optional
+        Spacing of the virtual cut's nodes [mm]; chosen from the job if not given.
+
+    Returns
+    -------
+    Proof
+    PartMotion
+        The motion that was proved, in part coordinates.
+
+    Raises
+    ------
+    NotConverged
+        An iteration of the geometry stalled.
+    """
+    lengths = {cutter.number: cutter.gauge_length_mm for cutter in job.cutters}
+    # Cutters the job does not know are reported; their motion is placed as if they had no length.
+    used = np.unique(np.concatenate((program.motions.tool, program.motions.offset_h))).tolist()
+    lengths = {**{int(number): 0.0 for number in used}, **lengths}
+    motion = part_motion(program, job.machine, job.part_origin_mm, lengths)
+    travel = axis_travel(program, job.machine, job.part_origin_mm, lengths)
+    findings: list[Finding] = [*program.findings, *check_axes(program, job.machine)]
+    findings += check_cutters(program, {cutter.number for cutter in job.cutters})
+    findings += checks.check_cuts_at_all(program)
+    findings.append(checks.check_units(job, program))
+    findings += checks.check_stock(job)
+    moving = moving_pieces(job, program, motion)
+    findings += checks.check_start_known(program, motion, moving)
+    cut = measure(job, motion, grid_mm, wanted_mm=checks.wanted_height_mm(job), moving=moving)
+    findings.append(checks.check_scallop(job, cut, motion))
+    findings.append(checks.check_gouge(job, cut.gouge, motion))
+    findings.append(checks.check_uncut(job, cut))
+    holder, rapid = _collisions(job, motion, moving, findings)
+    findings += checks.check_travel(job, travel)
+    findings += checks.check_feeds(job, program.motions)
+    findings += checks.check_spindle(job, program.motions)
+    wanted = checks.wanted_height_mm(job)
+    proof = Proof(
+        grid_mm=cut.grid_mm,
+        scallop_max_mm=cut.highest_mm - wanted,
+        scallop_bound_mm=cut.bound_mm - wanted,
+        scallop_at_mm=cut.highest_at_mm,
+        gouge_max_mm=cut.gouge.deepest_mm,
+        gouge_bound_mm=cut.gouge.bound_mm,
+        uncut_area_mm2=cut.uncut_area_mm2,
+        holder_clearance_mm=holder,
+        rapid_clearance_mm=rapid,
+        travel={letter: (low, high) for letter, (low, high, _, _) in travel.items()},
+        findings=tuple(findings),
+        scallop_map=scallop_map(cut),
+    )
+    return proof, motion
+
+
+def _collisions(job: Job, motion: PartMotion, moving: Bools, findings: list[Finding]) -> tuple[float, float]:
+    """Add the findings about collisions; return holder and rapid clearance [mm]."""
+    finished, blank = finished_patches(job), blank_patches(job)
+    flutes = holder = cutting = rigid = in_stock = _NOTHING
+    for cutter in job.cutters:
+        bodies = rigid_bodies(cutter)
+        flutes = nearer(flutes, flute_clearance(finished, motion, moving, cutter, 0.0))
+        holder = nearer(holder, least_clearance(finished, motion, moving, cutter, bodies))
+        at_rapid = moving & motion.rapid
+        cutting = nearer(cutting, least_clearance(blank, motion, at_rapid, cutter, [cutting_body(cutter)]))
+        rigid = nearer(rigid, least_clearance(blank, motion, at_rapid, cutter, bodies))
+        if job.stock.allowance_mm is not None:
+            feeding = moving & ~motion.rapid
+            in_stock = nearer(in_stock, least_clearance(blank, motion, feeding, cutter, bodies, 1.0))
+    findings.append(checks.check_flutes(job, flutes, motion))
+    findings.append(checks.check_holder(holder, motion))
+    findings.append(checks.check_rapids(job, cutting, rigid, motion))
+    findings += checks.check_holder_in_stock(in_stock, motion)
+    return holder.distance_mm, min(cutting.distance_mm, rigid.distance_mm)
+
+
+def moving_pieces(job: Job, program: ReadProgram, motion: PartMotion) -> Bools:
+    """Tell which pieces are motion between places that the program states, (m,) bool.
+
+    Left out are rows where a new length offset puts the tip elsewhere without motion, and the first moves of a program,
+    which start wherever the machine was left.
+    """
+    at_start, at_end = known_places(program)
+    columns = [SIX.index(letter) for letter in job.machine.letters]
+    known = (at_start & at_end)[:, columns].all(axis=1) if len(at_start) else np.zeros(0, bool)
+    moving = motion.fraction > 0.0
+    moving[:1] = False
+    if len(known):
+        moving &= known[np.maximum(motion.motion, 0)]
+    return np.asarray(moving)
