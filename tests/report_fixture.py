@@ -132,7 +132,7 @@ def stretch(job: Job, across: float, turned: bool, number: int, points: int) -> 
 
 
 def axis_words(tip: np.ndarray, axis: np.ndarray, origin: np.ndarray) -> np.ndarray:
-    """Words X Y Z A C for a table that turns the cutter axis upright (closed form of methods for table A/C)."""
+    """Words X Y Z A C for a table that turns the cutter axis upright: A = acos k, C = atan2(i, j)."""
     a = np.arccos(np.clip(axis[:, 2], -1, 1))
     c = np.unwrap(np.arctan2(axis[:, 0], axis[:, 1]))
     p = tip + origin
@@ -184,7 +184,8 @@ def made(
     zero, one = np.zeros(n), np.ones(n, np.int64)
     line = FIRST_LINE + np.arange(n)
     motions = Motions(
-        line, shape, six, before, np.zeros((n, 3)), np.full(n, 17, np.uint8), zero, np.where(rapid, np.nan, asked * 60),
+        line, shape, six, before, np.zeros((n, 3)), np.full(n, 17, np.uint8), zero,
+        np.where(rapid, np.nan, asked * 60),
         np.where(rapid, 0.0, 1 / asked), ~rapid, one, one, one, np.full(n, 18000.0), np.zeros(n, np.uint8),
     )  # fmt: skip
     # The machine slows where the passes end: half the asked feed there, 90 % elsewhere.
@@ -208,8 +209,8 @@ def made(
     )
     return Made(
         job=the_job, released=True, cutter_paths=(plan,), axis_paths=(axis_path,), program=program,
-        program_text=(folder or Path(".")) / "press-mould.ngc", program_sha256="5f" * 32, part_motion=motion, proof=proof,
-        times=times, operations=(result,), findings=findings,
+        program_text=(folder or Path(".")) / "press-mould.ngc", program_sha256="5f" * 32,
+        part_motion=motion, proof=proof, times=times, operations=(result,), findings=findings,
         cautions=("Dust of tooling board: take it off at the cutter and wear a mask.",),
     )  # fmt: skip
 
@@ -285,7 +286,7 @@ def not_planned(base: Made) -> Made:
         "cutter 1 fits the surface", False, 40.0, 31.25, "mm", 0, "T1: ball radius 40 mm against 31.25 mm."
     )
     return Made(
-        job=base.job, released=False, cutter_paths=(), axis_paths=(), program=None, program_text=None, program_sha256="",
-        part_motion=None, proof=None, times=None, operations=(), findings=(bad,),
+        job=base.job, released=False, cutter_paths=(), axis_paths=(), program=None, program_text=None,
+        program_sha256="", part_motion=None, proof=None, times=None, operations=(), findings=(bad,),
         advice=("Choose a ball below 62.5 mm diameter.",),
     )  # fmt: skip

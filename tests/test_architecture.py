@@ -16,9 +16,10 @@ TESTS = sorted((ROOT / "tests").rglob("*.py"))
 # Lower layers first; a module may import from its own layer and those above it in this list, never below.
 LAYERS = (
     {"errors", "tolerances", "cutter", "records", "files"},
-    {"saddle", "outline", "outline_files", "toml_lines", "materials"},
-    {"solid", "passes", "machine", "posting", "readback", "proof", "stock", "job", "job_schema"},
-    {"survey"},
+    {"quadrature", "saddle", "outline", "outline_checks", "outline_cuts", "outline_files", "extremes"},
+    {"toml_lines", "materials", "file_schema"},
+    {"solid", "passes", "machine", "posting", "readback", "proof", "stock"},
+    {"job", "job_schema", "job_checks", "job_speeds", "reach", "survey"},
     {"report"},
     {"pipeline"},
     {"cli"},
@@ -26,7 +27,7 @@ LAYERS = (
 LOWER_HALF = {"readback", "proof"}
 # What the read-back half may share with the planning half: records, geometry, nothing that plans or writes text.
 SHARED_WITH_LOWER_HALF = {
-    "errors", "tolerances", "cutter", "records", "saddle", "outline", "readback", "proof", "stock",
+    "errors", "tolerances", "cutter", "records", "saddle", "outline", "readback", "proof", "stock", "materials",
 }  # fmt: skip
 
 
@@ -37,7 +38,16 @@ def dotted(path: Path) -> str:
 def imported(path: Path) -> set[str]:
     """Every module of the package that a file imports, anywhere in it, as dotted names below the package."""
     found = set()
-    for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+    tree = ast.parse(path.read_text(encoding="utf-8"))
+    annotations_only = {
+        inner
+        for node in ast.walk(tree)
+        if isinstance(node, ast.If) and ast.unparse(node.test) == "TYPE_CHECKING"
+        for inner in ast.walk(node)
+    }
+    for node in ast.walk(tree):
+        if node in annotations_only:
+            continue
         if isinstance(node, ast.ImportFrom) and node.module and node.module.split(".")[0] == "anticlast":
             base = node.module.removeprefix("anticlast").lstrip(".")
             found |= {f"{base}.{alias.name}".lstrip(".") for alias in node.names}

@@ -164,7 +164,7 @@ class TestEveryMachine:
             assert again_tip == pytest.approx(tip, abs=1e-7)
         difference = words[:, :, 3:] - made[:, None, 3:]
         difference -= 360.0 * np.round(difference / 360.0)
-        assert np.abs(difference).max(axis=2).min(axis=1).max(initial=0.0) < MICRO
+        assert np.abs(difference).max(axis=2, initial=0.0).min(axis=1).max() < MICRO
 
     def test_gauge_point_is_the_spindle_end_in_the_machine_frame(self, name):
         kin = Kinematics({**SHIPPED, **OTHERS}[name], (3.0, -4.0, 55.0), 67.0)

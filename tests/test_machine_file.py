@@ -207,7 +207,7 @@ def test_post_folder_of_a_checkout() -> None:
 
 
 def test_post_folder_of_a_wheel(tmp_path: Path) -> None:
-    """A wheel holds post/ as anticlast/_post (pyproject.toml says so); nothing else of the checkout is near."""
+    """A wheel holds post/ as pyproject.toml says; nothing else of the checkout is near."""
     project = tomllib.loads((ROOT / "pyproject.toml").read_text(encoding="utf-8"))
     target = project["tool"]["hatch"]["build"]["targets"]["wheel"]["force-include"]["post"]
     ignore = shutil.ignore_patterns("__pycache__")
@@ -268,6 +268,7 @@ def test_python_post_may_return_the_record(tmp_path: Path) -> None:
     assert (machine.name, machine.source, machine.axes) == ("twin", path, load_machine("mill-3").axes)
 
 
+NO_MODULE = "the post raised ModuleNotFoundError: No module named 'no_such_module'"
 NO_FUNCTION = "1: machine: missing; needs a function machine() that returns the machine's tables"
 BAD_POSTS = {
     "x = 1\n": NO_FUNCTION,
@@ -276,7 +277,10 @@ BAD_POSTS = {
         "2: machine: found 7; machine() needs to return the machine's tables or a records.Machine"
     ),
     "def machine():\n\n    return 1 / 0\n": "3: : the post raised ZeroDivisionError: division by zero",
-    "\n\nimport no_such_module\n": "3: : the post raised ModuleNotFoundError: No module named 'no_such_module'",
+    "\n\nimport no_such_module\n": f"3: : {NO_MODULE}",
+    "def helper():\n    raise OSError('disk')\n\ndef machine():\n    return helper()\n": (
+        "2: : the post raised OSError: disk"
+    ),
     "raise SystemExit('stop')\n": "1: : the post raised SystemExit: stop",
     "def machine(:\n": "1: : not valid Python: invalid syntax",
     "def machine(units):\n    return {}\n": (
@@ -311,13 +315,9 @@ def test_installed_post(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None
     monkeypatch.syspath_prepend(tmp_path)
     machine = load_machine("shop-mill")
     assert (machine.name, machine.source) == ("shop-mill", tmp_path / "shop_post.py")
-    assert faults_of(lambda: load_machine("broken")) == [
-        "0: : the post raised ModuleNotFoundError: No module named 'no_such_module'"
-    ]
+    assert faults_of(lambda: load_machine("broken")) == [f"0: : {NO_MODULE}"]
     assert 'nearest is "shop-mill"' in faults_of(lambda: load_machine("shop-mil"))[0]
-    assert faults_of(list_machines) == [
-        "0: : the post raised ModuleNotFoundError: No module named 'no_such_module'"
-    ]
+    assert faults_of(list_machines) == [f"0: : {NO_MODULE}"]
 
 
 def test_directions_are_unit_vectors() -> None:

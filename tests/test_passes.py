@@ -104,7 +104,7 @@ def rows(path: CutterPath, name: str) -> np.ndarray:
 
 
 class Swept:
-    """Brute force: height left over surface points by capsules about every straight move of the ball's centre."""
+    """Brute force: height left by capsules about all straight moves of the ball's centre."""
 
     def __init__(self, job: Job, path: CutterPath) -> None:
         centres = reference(path)
@@ -119,7 +119,7 @@ class Swept:
         )
 
     def height(self, xy: np.ndarray) -> np.ndarray:
-        """Where the line along the normal first meets swept space, above the surface moved out by the allowance."""
+        """Where the line along the normal first meets swept space, less the allowance."""
         normal = self.saddle.normal(xy)
         point = self.saddle.point(xy)
         near = self.tree.query_ball_point(point + (self.radius + self.allowance) * normal, self.reach)
@@ -146,7 +146,7 @@ class Swept:
 
 
 def highest_scallop(job: Job, path: CutterPath) -> float:
-    """Highest scallop over the outline by brute force: the rim, and the top of ridges all over, found by golden section."""
+    """Highest scallop by brute force: the rim, and tops of ridges found by golden section."""
     swept = Swept(job, path)
     d = path.operation.direction_rad
     along, left = np.array([math.cos(d), math.sin(d)]), np.array([-math.sin(d), math.cos(d)])
@@ -261,15 +261,15 @@ def test_leading_order_step_is_the_known_one():
 def test_predicted_scallop_is_what_brute_force_finds_and_keeps_the_limit(pattern, shape, wish):
     job, path = plan(SHAPES[shape], pattern=pattern, **wish)
     found = highest_scallop(job, path)
-    agreed = max(0.01 * path.scallop_predicted_mm, 0.1 * MICRON)
-    assert found == pytest.approx(path.scallop_predicted_mm, abs=agreed)
+    # Chords that cut into the part may lower every cusp in sight by up to 1.3 %, docs/theory-passes.md#budget.
+    assert 0.985 * path.scallop_predicted_mm <= found <= 1.001 * path.scallop_predicted_mm
     assert found <= path.operation.scallop_mm
     assert path.scallop_predicted_mm <= path.operation.scallop_mm
 
 
 @pytest.mark.parametrize(
     ("a", "radius", "height", "steps", "lengths"),
-    # Square |x|, |y| <= 30 in the cusp metric (J. S. Kim 2007, from memory), recomputed below by scipy.
+    # Square |x|, |y| <= 30 in the cusp metric (T. Kim 2007, from memory), recomputed below by scipy.
     # The table's narrowest steps were read on a coarser grid that misses the corners: hence 0.1 %.
     [
         (0.005, 3.0, 0.010, (0.4632, 0.4756), (7887, 7681, 7676, 7459)),
@@ -312,7 +312,9 @@ def test_cut_lengths_against_the_leading_order_table(a, radius, height, steps, l
 
 # Straight parallel passes alone cost 8.7 % over the floor for a = 0.015 on 100 mm: there the floor is out of
 # their reach.
-@pytest.mark.parametrize(("a", "size"), [(0.005, 60.0), (0.005, 100.0), (0.01, 60.0), (0.01, 100.0), (0.015, 60.0)])
+@pytest.mark.parametrize(
+    ("a", "size"), [(0.005, 60.0), (0.005, 100.0), (0.01, 60.0), (0.01, 100.0), (0.015, 60.0)]
+)
 @pytest.mark.parametrize("height", [0.005, 0.01])
 def test_graded_across_the_concave_direction_is_within_five_percent_of_the_floor(a, size, height):
     outline = outlines.rectangle((size, size))
@@ -340,8 +342,8 @@ def test_graded_steps_follow_the_tightest_point_between_two_passes():
         (span,) = SQUARE.clip_line(0.3, 0.5 * (low + high))
         cusps.append(cusp_height(Saddle.of(job.part), 3.0, np.linspace(*span, 60), low, high, 0.3).max())
     assert max(cusps) <= design * (1 + 1e-6)
-    # All steps are shrunk alike so as to come out even: by half a pass in 77 on average. At the two corners a strip's
-    # tightest point is looked for a little outside.
+    # All steps are shrunk alike so as to come out even: by half a pass in 77 on average. At the two corners a
+    # strip's tightest point is looked for a little outside.
     assert np.median(cusps) > 0.98 * design
     assert min(cusps) > 0.95 * design
 
@@ -474,24 +476,18 @@ def test_straight_moves_of_the_centre_stay_within_the_chord_error_on_both_sides(
         SHAPES["U"], a=0.03, b=0.02, direction_rad=math.radians(degrees), way=way, allowance_mm=0.1
     )
     saddle = Saddle.of(job.part)
-    worst = [0.0, 0.0]
-    for centre in reference(path):
-        for share in (0.25, 0.5, 0.75):
-            between = centre[:-1] + share * np.diff(centre, axis=0)
-            off = saddle.closest(between)[1] - 3.1
-            worst[0] = max(worst[0], -off.min())
-            purpose = path.stretches[0].purpose
-            assert purpose[0] == Purpose.ENTRY
-        worst[1] = max(worst[1], worst[1])
-    assert worst[0] <= 2.0 * path.chord_mm * 1.02 + NANOMETRE
+    inward, outward = 0.0, 0.0
     for s, centre in zip(path.stretches, reference(path), strict=True):
-        middle = 0.5 * (centre[1:] + centre[:-1])
         on = np.isin(s.purpose[1:], [Purpose.CUT, Purpose.OVERRUN, Purpose.LINK])
-        off = saddle.closest(middle[on])[1] - 3.1
-        worst[1] = max(worst[1], off.max())
-    assert worst[1] <= path.chord_mm * 1.02 + NANOMETRE
-    # Not needlessly fine: somewhere the larger of the two is used up.
-    assert max(worst[0] / (2.0 * path.chord_mm), worst[1] / path.chord_mm) > 0.8
+        for share in (0.25, 0.5, 0.75):
+            off = saddle.closest(centre[:-1] + share * np.diff(centre, axis=0))[1] - 3.1
+            # Nowhere too deep, entries and exits included.
+            inward = max(inward, -off.min())
+            outward = max(outward, off[on].max())
+    assert inward <= 2.0 * path.chord_mm * 1.02 + NANOMETRE
+    assert outward <= path.chord_mm * 1.02 + NANOMETRE
+    # Not needlessly fine: somewhere one of the two is used up.
+    assert max(inward / (2.0 * path.chord_mm), outward / path.chord_mm) > 0.8
     assert path.chord_mm == pytest.approx(0.5 * 0.02 * 0.01)
 
 

@@ -1,8 +1,9 @@
-"""The reader against NISTIR 6556: its worked examples, its rules one by one, and the checks on legal programs.
+"""The reader against NISTIR 6556: its worked examples, its rules, and the checks on legal programs.
 
-Source of every expected value unless said otherwise: T. Kramer, F. Proctor, E. Messina, "The NIST RS274NGC Interpreter -
-Version 3", NISTIR 6556, 17 August 2000; the section is named beside each. "Derived" means worked out by hand from the
-section named; "from memory" marks wording or rules recalled without the text at hand.
+Source of every expected value unless said otherwise: T. Kramer, F. Proctor, E. Messina, "The NIST RS274NGC
+Interpreter - Version 3", NISTIR 6556, 17 August 2000; the section is named beside each. "Derived" means
+worked out by hand from the section named; "from memory" marks wording or rules recalled without the text at
+hand.
 """
 
 from __future__ import annotations
@@ -15,7 +16,7 @@ import numpy as np
 import pytest
 
 from anticlast.errors import BadInput
-from anticlast.readback.checks import check_axes, check_cutters, known_places
+from anticlast.readback.checks import check_axes, check_cutters, check_places, known_places
 from anticlast.readback.columns import Columns
 from anticlast.readback.interpreter import Interpreter
 from anticlast.readback.language import LanguageError
@@ -119,7 +120,9 @@ def test_helix_time_of_table_10() -> None:
     """Section 2.1.2.6 over the arc of Table 10, derived: helix of 3.0644 mm, at F20 0.1532 min."""
     program = cut("G1 X3 Y1 F20\nG2 X0 R7.01 Z0.5")
     motions = program.motions
-    assert motions.turns[-1] * math.hypot(1.5, 7.8476 - 1) == pytest.approx(math.sqrt(3.0644**2 - 0.25), abs=PRINTED)
+    assert motions.turns[-1] * math.hypot(1.5, 7.8476 - 1) == pytest.approx(
+        math.sqrt(3.0644**2 - 0.25), abs=PRINTED
+    )
     assert motions.seconds[-1] / 60.0 == pytest.approx(0.1532, abs=PRINTED)
 
 
@@ -155,7 +158,9 @@ def test_canned_cycle_examples() -> None:
     assert moves[0][0] == Shape.RAPID
     assert moves[0][1][:3] == pytest.approx([1, 2, 4.8], abs=NANOMETRE)
     holes = [end[:3] for shape, end in moves if shape == Shape.FEED]
-    assert np.array(holes) == pytest.approx(np.array([[5, 7, 4.2], [9, 12, 4.2], [13, 17, 4.2]]), abs=NANOMETRE)
+    assert np.array(holes) == pytest.approx(
+        np.array([[5, 7, 4.2], [9, 12, 4.2], [13, 17, 4.2]]), abs=NANOMETRE
+    )
     assert moves[-1][1][:3] == pytest.approx([13, 17, 4.8], abs=NANOMETRE)
 
 
@@ -246,14 +251,14 @@ def test_expressions(text: str, value: float) -> None:
 
 
 def test_start_line_of_the_engraving_program() -> None:
-    """Appendix C.1, line n0020: by Table 8 F, S, T, tool change and spindle follow in that order, whatever is written."""
+    """Appendix C.1, line n0020: by Table 8 F, S, T, tool change, spindle, however they are written."""
     program = read(MODES + "n0020 t1 m6 m3 f20 s4000\nM2\n")
     said = [(event.what, event.value) for event in program.events if event.line == 4]
     assert said == [("feed", 20.0), ("speed", 4000.0), ("select", 1.0), ("tool", 1.0), ("spindle", 4000.0)]
 
 
-# Arcs of appendix C.1: start, line, centre, swept degrees, radius. The figures are derived from the program there; the
-# lines are ours, since only the figures were at hand.
+# Arcs of appendix C.1: start, line, centre, swept degrees, radius. The figures are derived from the program
+# there; the lines are ours, since only the figures were at hand.
 ENGRAVED = [
     ((13.5, 0.0), "G3 X11 Y2.5 J2.5", (13.5, 2.5), 270.0, 2.5),
     ((30.0, 2.5), "G2 X30 Y2.5 I2.5", (32.5, 2.5), 360.0, 2.5),
@@ -274,17 +279,18 @@ def test_arcs_of_the_engraving_program() -> None:
     assert length == pytest.approx(56.4519, abs=PRINTED)  # arc length of the whole program
 
 
-CONTOURS = {  # appendix B, Tables 12 and 13 less G41 and G40; text from memory, its sums as derived from the report's figures
+# Appendix B, Tables 12 and 13 less G41 and G40: text from memory, its sums derived from the report.
+CONTOURS = {
     "Table 12": (
-        "G1 X1 Y5 F20\nG1 Y4\nG3 X2 Y3 I1\nG2 X3 Y2 J-1\nG1 Y-1\nG2 X2 Y-2 I-1\nG1 X-2\nG2 X-2.6 Y-0.2 J1\nG1 X1.4 Y2.8\n"
-        "G2 X2 Y3 I0.6 J-0.8",
+        "G1 X1 Y5 F20\nG1 Y4\nG3 X2 Y3 I1\nG2 X3 Y2 J-1\nG1 Y-1\nG2 X2 Y-2 I-1\nG1 X-2\nG2 X-2.6 Y-0.2 J1\n"
+        "G1 X1.4 Y2.8\nG2 X2 Y3 I0.6 J-0.8",
         (2.0, 3.0),
         7.8540,
         {1.0},
     ),
     "Table 13": (
-        "G1 X1.5 Y5 F20\nG1 Y4\nG3 X2 Y3.5 I0.5\nG2 X3.5 Y2 J-1.5\nG1 Y-1\nG2 X2 Y-2.5 I-1.5\nG1 X-2\nG2 X-2.9 Y0.2 J1.5\n"
-        "G1 X1.1 Y3.2\nG2 X2 Y3.5 I0.9 J-1.2",
+        "G1 X1.5 Y5 F20\nG1 Y4\nG3 X2 Y3.5 I0.5\nG2 X3.5 Y2 J-1.5\nG1 Y-1\nG2 X2 Y-2.5 I-1.5\nG1 X-2\n"
+        "G2 X-2.9 Y0.2 J1.5\nG1 X1.1 Y3.2\nG2 X2 Y3.5 I0.9 J-1.2",
         (2.0, 3.5),
         10.2102,
         {0.5, 1.5},
@@ -307,10 +313,15 @@ def test_contours_of_appendix_b(name: str) -> None:
 
 
 def test_canned_cycles_in_the_three_planes() -> None:
-    """Appendix C.3 runs every cycle in three planes without stating results: derived from 3.5.16 for those we follow."""
+    """Appendix C.3 runs every cycle in three planes, results not stated: derived from 3.5.16."""
     for plane, axes in ((17, (0, 1, 2)), (18, (2, 0, 1)), (19, (1, 2, 0))):
         first, second, normal = ("XYZ"[axis] for axis in axes)
-        for code, waits, feeds_out in ((81, False, False), (82, True, False), (85, False, True), (89, True, True)):
+        for code, waits, feeds_out in (
+            (81, False, False),
+            (82, True, False),
+            (85, False, True),
+            (89, True, True),
+        ):
             wait = " P0.25" if waits else ""
             program = cut(f"G{plane} G99 G{code} {first}1 {second}2 {normal}-3 R0.5{wait} F60\n{first}4")
             motions = program.motions
@@ -395,7 +406,9 @@ def test_length_offset_moves_the_reading_not_the_machine() -> None:
 
 
 def test_start_words_are_told() -> None:
-    program = read(MODES + "T1 M6\nM3 S100\nG43 H1\nG1 X5 F10\nM2\n", start_words={"X": 1.0, "Z": 7.0, "C": 30.0})
+    program = read(
+        MODES + "T1 M6\nM3 S100\nG43 H1\nG1 X5 F10\nM2\n", start_words={"X": 1.0, "Z": 7.0, "C": 30.0}
+    )
     assert program.motions.start[0].tolist() == [1.0, 0.0, 7.0, 0.0, 0.0, 30.0]
     starts, _ = known_places(read(MODES + "T1 M6\nM3 S9\nG0 X5\nM2\n", start_words=[0, 0, 9]))
     assert starts.all()
@@ -538,7 +551,9 @@ def test_broken_lines_are_located(line: str, words: str, section: str) -> None:
 def test_a_broken_line_changes_nothing() -> None:
     """5.1.2: after a read error the state is unchanged; motions before the line are kept, none after it."""
     program = read(HEAD + "G1 X1 F100\nG91 G1 X5 Q1\nG1 X2\nM2\n")
-    assert errors(program) == [(HEAD_LINES + 2, "Q: nothing on this line uses this word [NISTIR 6556 section 3.3]")]
+    assert errors(program) == [
+        (HEAD_LINES + 2, "Q: nothing on this line uses this word [NISTIR 6556 section 3.3]")
+    ]
     assert program.motions.line[-1] == HEAD_LINES + 1
     assert len(program.findings) == 1
 
@@ -555,7 +570,9 @@ def test_errors_are_collected_up_to_a_number() -> None:
 
 def test_no_motion_mode_is_assumed() -> None:
     program = read(MODES.replace("G80", "") + "X5\nM2\n")
-    assert errors(program) == [(4, "axis word: no motion mode is stated (G0, G1, ...) [NISTIR 6556 section 3.4]")]
+    assert errors(program) == [
+        (4, "axis word: no motion mode is stated (G0, G1, ...) [NISTIR 6556 section 3.4]")
+    ]
 
 
 # ------------------------------------------------------------------------------------------ file and end
@@ -626,7 +643,9 @@ def test_block_delete() -> None:
 
 def test_messages_and_other_events() -> None:
     """3.3.4, 3.3.5: only the last comment of a line counts, MSG in any case and spacing."""
-    program = cut("( m S g , clamp ok )\n(MSG, no) (plain)\nG4 P2.5\nM0\nM1\nM60\nM48\nM49\nM7\nM8\nM9\nS0\nS500\nM4")
+    program = cut(
+        "( m S g , clamp ok )\n(MSG, no) (plain)\nG4 P2.5\nM0\nM1\nM60\nM48\nM49\nM7\nM8\nM9\nS0\nS500\nM4"
+    )
     said = [(event.what, event.value) for event in program.events if event.line > HEAD_LINES]
     assert said == [
         ("message", "clamp ok"),
@@ -646,11 +665,12 @@ def test_messages_and_other_events() -> None:
     ]
 
 
-# ------------------------------------------------------------------------------------------ machine coordinates
+# ------------------------------------------------------------------------------------------ machine
+# coordinates
 
 
 def test_machine_coordinates_with_a_known_origin() -> None:
-    """3.5.12: G53 is absolute in machine coordinates for one line; with H1 = 40 the gauge point is 40 above the tip."""
+    """3.5.12: G53 is absolute in machine coordinates; with H1 = 40 the gauge point is 40 above the tip."""
     program = cut(
         "G53 G0 X10 Z200 C90\nX1", work_origin=[100.0, 0.0, 55.0, 0.0, 0.0, 30.0], length_offsets={1: 40.0}
     )
@@ -684,7 +704,8 @@ def test_work_offsets_move_the_reading() -> None:
     assert [(found.check, found.line) for found in moved.findings] == [("work offset", HEAD_LINES + 1)]
 
 
-# ------------------------------------------------------------------------------------------ checks on legal programs
+# ------------------------------------------------------------------------------------------ checks on legal
+# programs
 
 LEGAL_BUT_WRONG = [  # program, check, line
     (MODES + "T1 M6\nG43 H1\nG0 Z5\nG1 X1 F5\nM2\n", "spindle running", 7),
@@ -735,11 +756,27 @@ def machine(*rotary: str) -> Machine:
 
 
 def test_words_for_axes_that_are_not_there() -> None:
-    """5.2: whether such words are ignored or an error is the builder's choice, so they must not be there, not even at 0."""
+    """5.2: whether such words are ignored or an error is the builder's choice, so none may be there."""
     program = cut("G1 X1 F5")
     found = check_axes(program, machine("C"))
-    assert [(finding.line, finding.message[:2]) for finding in found] == [(HEAD_LINES, "A:"), (HEAD_LINES, "B:")]
+    assert [(finding.line, finding.message[:2]) for finding in found] == [
+        (HEAD_LINES, "A:"),
+        (HEAD_LINES, "B:"),
+    ]
     assert check_axes(program, machine("A", "B", "C")) == ()
+
+
+def test_places_that_are_not_stated() -> None:
+    """A feed motion may start only where every axis of the machine has been sent, or was told to stand."""
+    text = MODES + "T1 M6\nS1000 M3\nG43 H1\nG0 Z5\nG1 X1 F5\nG1 Y1\nM2\n"
+    found = check_places(read(text), machine("C"))
+    assert [(finding.line, finding.worst, finding.message[-8:]) for finding in found] == [
+        (8, 1.0, "X stands"),
+        (8, 2.0, "Y stands"),
+        (8, 2.0, "C stands"),
+    ]
+    assert check_places(read(text, start_words=[0] * 6, length_offsets={1: 9.0}), machine("C")) == ()
+    assert check_places(cut("G1 X1 F5"), machine("C")) == ()
 
 
 def test_cutters_that_are_not_there() -> None:

@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import base64
+import itertools
 import json
 import math
 import os
+import re
 import subprocess
 import sys
 import zipfile
@@ -15,11 +17,10 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-import report_fixture as fixture
-from browser import opened
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+import report_fixture as fixture
 from anticlast import files
 from anticlast.cutter import Cutter
 from anticlast.errors import CannotWrite
@@ -28,7 +29,7 @@ from anticlast.report import page as page_module
 from anticlast.report import sections
 from anticlast.report.along import UNKNOWN, along, contact, match_blocks
 from anticlast.report.cutting_values import cutting_values, depth_of_cut_mm
-from anticlast.report.data import FEW_ROWS, HEIGHT_STEP_MM, MOST_KNOTS, cutter_profile, page_data
+from anticlast.report.data import FEW_ROWS, HEIGHT_STEP_MM, MOST_KNOTS, cutter_profile
 from anticlast.report.drawing import round_length
 from anticlast.report.numbers import Units, clock, plain
 from anticlast.report.page import filled, page_text, write_page
@@ -36,13 +37,14 @@ from anticlast.report.spacing import distance_to_line, pooled
 from anticlast.report.thinning import thin, thin_to
 from anticlast.report.threejs import ThreeJsNotFound, three_script
 from anticlast.saddle import Saddle
+from browser import opened
 
 MICROMETRE = 1e-3  # mm
 VOID = {"meta", "link", "input", "br", "hr", "img"}
 
 
 class Reader(HTMLParser):
-    """Parses a page strictly enough to notice an element that is left open, and keeps what the tests ask for."""
+    """Parses a page strictly enough to notice an element left open, and keeps what the tests ask for."""
 
     def __init__(self) -> None:
         super().__init__(convert_charrefs=True)
@@ -113,7 +115,7 @@ def data(reader: Reader) -> dict:
     return data_of(reader)
 
 
-# ------------------------------------------------------------------------------------------------ the page as text
+# ---------------------------------------------------------------------- the page as text
 
 
 def test_head_says_what_the_record_says(made: Made, reader: Reader) -> None:
@@ -121,6 +123,7 @@ def test_head_says_what_the_record_says(made: Made, reader: Reader) -> None:
     assert reader.heading == "press mould"
     assert "RELEASED" in said
     assert "WITHHELD" not in said
+    assert "every check passed, 1 warning" in said
     assert "press-mould.ngc" in said
     assert made.program_sha256[:12] in said
     assert made.job.machine.title in said
@@ -136,7 +139,9 @@ def test_page_asks_for_nothing(reader: Reader) -> None:
             assert value is None or value.startswith(("#", "data:")), f"<{tag} {name}={value}>"
 
 
-@pytest.mark.parametrize("name", ['<script>alert(1)</script>"\'&', "{{data}} {{three}}", "</title><h1>x", "\u2028<!--"])
+@pytest.mark.parametrize(
+    "name", ["<script>alert(1)</script>\"'&", "{{data}} {{three}}", "</title><h1>x", "\u2028<!--"]
+)
 def test_hostile_job_names_stay_text(name: str) -> None:
     page = read(page_text(fixture.made(20, 5, name)))
     assert page.heading == name
@@ -147,7 +152,9 @@ def test_hostile_job_names_stay_text(name: str) -> None:
 
 def test_hostile_findings_stay_text(made: Made) -> None:
     bad = Finding("<b>", False, 1.0, 2.0, "<i>", 0, "</table><script>")
-    page = read(page_text(replace(made, findings=(bad,), advice=("<script>",), cautions=("</li>",), released=False)))
+    page = read(
+        page_text(replace(made, findings=(bad,), advice=("<script>",), cautions=("</li>",), released=False))
+    )
     assert len(page.scripts) == 3
     assert not [tag for tag, _ in page.elements if tag in ("b", "i") and "class" not in _]
 
@@ -157,12 +164,15 @@ def test_same_input_same_bytes(made: Made, tmp_path: Path) -> None:
     first = (tmp_path / "one.html").read_bytes()
     here = Path(__file__).resolve().parent
     code = (
-        "import sys; sys.path.insert(0, sys.argv[1]); import report_fixture; from anticlast.report.page import write_page;"
+        "import sys; sys.path.insert(0, sys.argv[1]); import report_fixture; from anticlast.report.page "
+        "import write_page;"
         "write_page(report_fixture.made(), sys.argv[2])"
     )
     source = str(Path(page_module.__file__).parents[2])
     environment = {**os.environ, "PYTHONHASHSEED": "7", "PYTHONPATH": source}
-    subprocess.run([sys.executable, "-c", code, str(here), str(tmp_path / "two.html")], check=True, env=environment)
+    subprocess.run(
+        [sys.executable, "-c", code, str(here), str(tmp_path / "two.html")], check=True, env=environment
+    )
     assert (tmp_path / "two.html").read_bytes() == first
 
 
@@ -194,7 +204,9 @@ def test_page_of_a_job_that_could_not_be_planned(made: Made) -> None:
 
 
 def test_plan_is_shown_when_there_is_no_program(made: Made) -> None:
-    planned = replace(made, released=False, program=None, program_text=None, part_motion=None, proof=None, times=None)
+    planned = replace(
+        made, released=False, program=None, program_text=None, part_motion=None, proof=None, times=None
+    )
     page = read(page_text(planned))
     path = data_of(page)["path"]
     assert path["letters"] == []
@@ -207,6 +219,21 @@ def test_release_is_told_without_colour(made: Made) -> None:
     for job, sign, word in ((made, "✓", "RELEASED"), (fixture.withheld(made), "✗", "WITHHELD")):
         head = sections.head(job, Units(False))
         assert f"{sign}</span><strong>{word}</strong>" in head
+
+
+def luminance(colour: str) -> float:
+    """Relative luminance of #rrggbb, WCAG 2.1."""
+    parts = [int(colour[i : i + 2], 16) / 255 for i in (1, 3, 5)]
+    linear = [part / 12.92 if part <= 0.03928 else ((part + 0.055) / 1.055) ** 2.4 for part in parts]
+    return 0.2126 * linear[0] + 0.7152 * linear[1] + 0.0722 * linear[2]
+
+
+@pytest.mark.parametrize("ink", ["ink", "quiet", "accent", "good", "bad", "warn"])
+def test_lettering_stands_out_from_the_ground(ink: str) -> None:
+    """Contrast of at least 4.5 : 1 for body text, WCAG 2.1 success criterion 1.4.3."""
+    colours = dict(re.findall(r"--(\w+): (#[0-9a-f]{6});", page_module.template("style.css")))
+    for ground in (colours["ground"], colours["panel"], "#fdf0ed", "#f1f3f5", "#fff7e6"):
+        assert (luminance(ground) + 0.05) / (luminance(colours[ink]) + 0.05) >= 4.5
 
 
 def test_written_whole_or_not_at_all(made: Made, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
@@ -229,7 +256,7 @@ def test_values_are_not_searched_for_places() -> None:
         filled("{{c}}", {})
 
 
-# ------------------------------------------------------------------------------------------------ data against the record
+# ---------------------------------------------------------------------- data against the record
 
 
 def test_path_is_the_motion_read_back(made: Made, data: dict) -> None:
@@ -291,9 +318,10 @@ def test_rotary_speed_is_the_fastest_rotary_axis(made: Made, data: dict) -> None
 
 
 def test_local_stepover_against_the_closed_form(made: Made, data: dict) -> None:
-    """Distance from (x, y) to the curve y + s on z = a x^2 - b y^2: s and its rise, less what lies along the curve's tangent.
+    """From (x, y) to the curve y + s on z = a x^2 - b y^2: s and its rise, less what lies along the curve.
 
-    Derived here: the curve bends by k s^2 / 2 off its tangent over the little that the foot is shifted, far below 0.1 um.
+    Derived here: the curve bends by k s^2 / 2 off its tangent over the little that the foot is shifted, far
+    below 0.1 um.
     """
     touch = np.concatenate([stretch.contact_mm for stretch in made.cutter_paths[0].stretches])
     x, y = touch[1:, 0], touch[1:, 1]
@@ -305,14 +333,16 @@ def test_local_stepover_against_the_closed_form(made: Made, data: dict) -> None:
     purpose = unpacked(data["path"]["purpose"])[2:]
     seen = np.isfinite(found) & (np.abs(x) < 28)
     assert seen.sum() > 3500
-    assert np.abs(found[seen] - expected[seen]).max() < 2 * MICROMETRE  # the next pass is a polyline of 1 mm chords
+    assert (
+        np.abs(found[seen] - expected[seen]).max() < 2 * MICROMETRE
+    )  # the next pass is a polyline of 1 mm chords
     assert np.isnan(found[purpose != Purpose.CUT]).all()
     last = quantity(data, "pass")[2:] == 81
     assert np.isnan(found[last]).all()
 
 
 def test_local_scallop_is_the_crest_beside_the_pass(made: Made, data: dict) -> None:
-    """At least the highest cell within a stepover, at most the highest within three, both searched by brute force."""
+    """At least the highest cell within a stepover, at most the highest within three, by brute force."""
     field = made.proof.scallop_map
     crest = quantity(data, "scallop") / 1000  # mm
     tip = unpacked(data["path"]["tip"]).reshape(-1, 3)
@@ -322,7 +352,11 @@ def test_local_scallop_is_the_crest_beside_the_pass(made: Made, data: dict) -> N
     assert len(rows) > 40
     for row in rows:
         away = np.hypot(grid_x - touch[row - 1, 0], grid_y - touch[row - 1, 1])
-        assert np.nanmax(field.height_mm[away <= 0.5]) - 1e-7 <= crest[row] <= np.nanmax(field.height_mm[away <= 1.6]) + 1e-7
+        assert (
+            np.nanmax(field.height_mm[away <= 0.5]) - 1e-7
+            <= crest[row]
+            <= np.nanmax(field.height_mm[away <= 1.6]) + 1e-7
+        )
     assert np.abs(tip[rows] - made.part_motion.tip_mm[rows]).max() < MICROMETRE
 
 
@@ -385,14 +419,16 @@ def test_large_program_stays_small_and_close(tmp_path: Path) -> None:
     assert path["tolerance"] <= 0.05
     kept = np.searchsorted(made.part_motion.line, unpacked(path["line"]))
     true = made.part_motion.tip_mm
-    steps = np.linalg.norm(np.diff(true, axis=0), axis=1) + np.linalg.norm(np.diff(made.part_motion.axis, axis=0), axis=1)
+    steps = np.linalg.norm(np.diff(true, axis=0), axis=1) + np.linalg.norm(
+        np.diff(made.part_motion.axis, axis=0), axis=1
+    )
     along_path = np.concatenate(([0.0], np.cumsum(steps)))
     drawn = [np.interp(along_path, along_path[kept], true[kept, k]) for k in range(3)]
     assert np.abs(np.stack(drawn, axis=1) - true).max() <= path["tolerance"] * 1.001
     assert {finding.line for finding in made.findings if finding.line} <= set(unpacked(path["line"]).tolist())
 
 
-# ------------------------------------------------------------------------------------------------ parts
+# ---------------------------------------------------------------------- parts
 
 
 @settings(max_examples=40, derandomize=True, deadline=None)
@@ -406,14 +442,16 @@ def test_thinning_keeps_its_bound(seed: int, count: int, tolerance: float) -> No
     assert rows[0] == 0
     assert rows[-1] == count - 1
     assert np.isin(np.flatnonzero(keep), rows).all()
-    for low, high in zip(rows[:-1], rows[1:], strict=True):
+    for low, high in itertools.pairwise(rows):
         span = place[high] - place[low]
         inner = np.arange(low, high + 1)
-        # Where the place stands still any share may stand for a row, so the nearest point of the straight line counts.
+        # Rows on which the place stands still have no share of their own: they are left out.
         if span > 0:
             share = ((place[inner] - place[low]) / span)[:, None]
             off = np.abs(values[low] + share * (values[high] - values[low]) - values[inner]).max(axis=1)
-            still = np.concatenate(([False], np.diff(place[inner]) == 0)) | np.concatenate((np.diff(place[inner]) == 0, [False]))
+            still = np.concatenate(([False], np.diff(place[inner]) == 0)) | np.concatenate(
+                (np.diff(place[inner]) == 0, [False])
+            )
             assert (off[~still] <= tolerance * (1 + 1e-9)).all()
 
 
@@ -490,11 +528,13 @@ def test_pooling_takes_the_extremes(made: Made) -> None:
 
 
 def test_chip_against_a_makers_feed_table(made: Made) -> None:
-    """Multipliers 3.6, 1.7 and 1.7 for 0.500/0.010, 0.500/0.050 and 1.000/0.100 in: Dapra, Ball nose feed/speed compensation, table 2."""
+    """Multipliers for diameter/depth in inch: Dapra, Ball nose feed/speed compensation, table 2."""
     for diameter, depth, factor in ((0.5, 0.010, 3.6), (0.5, 0.050, 1.7), (1.0, 0.100, 1.7)):
         ball = Cutter(1, "ball", 12.7 * diameter, 12.7 * diameter, 2, 30.0, 6.0, 60.0)
         operation = replace(made.job.operations[0], cutter=ball, lead_rad=0.0)
-        job = replace(made.job, stock=replace(made.job.stock, allowance_mm=25.4 * depth), operations=(operation,))
+        job = replace(
+            made.job, stock=replace(made.job.stock, allowance_mm=25.4 * depth), operations=(operation,)
+        )
         values = cutting_values(job, operation, None)
         assert values.feed_per_tooth_mm / values.chip_mm[0] == pytest.approx(factor, abs=0.06)
 
@@ -534,7 +574,12 @@ def test_numbers_read_as_a_person_writes_them() -> None:
     mm, inch = Units(False), Units(True)
     assert plain(-0.00001, 3) == "0"
     assert plain(math.nan, 3) == "not measured"
-    assert [clock(value) for value in (6.64, 59.6, 301.2, 7509.0)] == ["6.6 s", "1 min 00 s", "5 min 01 s", "2 h 05 min 09 s"]
+    assert [clock(value) for value in (6.64, 59.6, 301.2, 7509.0)] == [
+        "6.6 s",
+        "1 min 00 s",
+        "5 min 01 s",
+        "2 h 05 min 09 s",
+    ]
     assert mm.length(12.3456) == "12.346 mm"
     assert inch.length(25.4) == "1 in"
     assert mm.small(0.01137) == "11.37 µm"
@@ -551,7 +596,7 @@ def test_numbers_read_as_a_person_writes_them() -> None:
     assert [round_length(value) for value in (1.0, 9.9, 23.0, 0.3)] == [1.0, 5.0, 20.0, pytest.approx(0.2)]
 
 
-# ------------------------------------------------------------------------------------------------ three.js
+# ---------------------------------------------------------------------- three.js
 
 
 def test_three_is_where_trimesh_keeps_it() -> None:
@@ -583,7 +628,7 @@ def test_three_moved_is_said(tmp_path: Path, content: dict[str, str] | None, sai
         three_script(tmp_path)
 
 
-# ------------------------------------------------------------------------------------------------ in a browser
+# ---------------------------------------------------------------------- in a browser
 
 
 @pytest.fixture(scope="module")
@@ -598,7 +643,9 @@ def test_page_works_in_a_browser(written: Path, made: Made) -> None:
         page = seen.page
         page.wait_for_selector("#viewer:not([hidden])")
         # Slider: the read-out follows, with the words of that block.
-        page.evaluate("const s = document.getElementById('at'); s.value = 1000; s.dispatchEvent(new Event('input'))")
+        page.evaluate(
+            "const s = document.getElementById('at'); s.value = 1000; s.dispatchEvent(new Event('input'))"
+        )
         words = page.inner_text("#words")
         end = made.program.motions.end[999]
         assert f"line {fixture.FIRST_LINE + 999}" in words
@@ -612,7 +659,7 @@ def test_page_works_in_a_browser(written: Path, made: Made) -> None:
         assert page.locator("#solid").screenshot() != before
         page.select_option("#colour", "purpose")
         assert "overrun past the outline" in page.inner_text("#legend")
-        # Drawn on demand: no new frame while nothing happens, new ones when a view is asked for and while dragging.
+        # Drawn on demand: no new frame while nothing happens, new ones for a view and while dragging.
         page.wait_for_timeout(300)
         frames = int(page.get_attribute("#solid", "data-frames"))
         page.wait_for_timeout(500)
@@ -658,7 +705,10 @@ def test_map_and_strips_answer_to_pointer_and_keys(written: Path) -> None:
         chart = page.locator("#chart").bounding_box()
         page.mouse.click(chart["x"] + 500, chart["y"] + 60)
         told = page.inner_text("#chart-words")
-        assert all(word in told for word in ("feed asked", "feed reached", "A ", "C ", "local stepover", "local scallop"))
+        assert all(
+            word in told
+            for word in ("feed asked", "feed reached", "A ", "C ", "local stepover", "local scallop")
+        )
         line = told.split()[1]
         assert page.inner_text("#words").startswith(f"line {line} ")
         before = page.evaluate("document.getElementById('chart').toDataURL()")
@@ -700,7 +750,9 @@ def test_without_webgl_the_plan_view_stands_in(written: Path) -> None:
         assert [said for said in seen.console if said.startswith("error")] == []
 
 
-def test_without_three_the_plan_view_stands_in(made: Made, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+def test_without_three_the_plan_view_stands_in(
+    made: Made, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     def moved() -> str:
         raise ThreeJsNotFound("three.js was not found in the trimesh package: moved")
 

@@ -99,11 +99,6 @@ def check_outline_keys(outline: Checked[OutlineTable], units: Units) -> bool:
             f"found {length_text(radius, units)}; needs at most half the shorter side, {limit}",
         )
         good = False
-    if shape == "slot" and size is not None and size[0] < size[1]:
-        outline.fault(
-            "size", "the length is below the width; needs [length, width], the length along part X the larger"
-        )
-        good = False
     points = outline.get("points")
     if shape == "polygon" and points is not None and len(points) < 3:
         outline.fault("points", f"found {len(points)} points; needs at least three")

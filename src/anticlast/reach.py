@@ -126,7 +126,10 @@ def reach(job: Job, operation: Operation) -> Reach:
         off_wish_deg=math.degrees(float(angle_between(axis, wished).max())),
         advice=(),
     )
-    advice = (*_travel_advice(job, operation, found), *_tilt_advice(operation, found))
+    advice = (
+        *_travel_advice(job, operation, found),
+        *_tilt_advice(operation, found, kinematics.rotary_count > 0),
+    )
     return Reach(
         **{name: getattr(found, name) for name in Reach.__slots__ if name != "advice"}, advice=advice
     )
@@ -245,7 +248,7 @@ def _shift_advice(job: Job, operation: Operation, found: Reach, scale: float, un
             room = axis.limits[1] - axis.limits[0] - (high - low)
             if room < 0.0:
                 return (
-                    f"the part needs {(high - low) * scale:.4g} {units} in {axis.letter}, more than there is; "
+                    f"{axis.letter} would have to go {(high - low) * scale:.4g} {units}, more than there is; "
                     "try another feed direction, another lead and lean, or a larger machine"
                 )
             past = over[axis.letter]
@@ -260,10 +263,11 @@ def _shift_advice(job: Job, operation: Operation, found: Reach, scale: float, un
     return "moving the part does not help; try another lead and lean, another stickout, or another machine"
 
 
-def _tilt_advice(operation: Operation, found: Reach) -> list[str]:
+def _tilt_advice(operation: Operation, found: Reach, tilts: bool) -> list[str]:
     """Return what to know about the tilt: out of reach, cutting on the tip, lying down."""
     name, out = f"operation {operation.index}", []
-    if found.off_wish_deg > math.degrees(REACH_RAD):
+    # Without rotary axes the spindle stands as it stands, and nobody expects otherwise.
+    if tilts and found.off_wish_deg > math.degrees(REACH_RAD):
         out.append(
             f"{name}: the machine cannot give the lead and lean asked for everywhere; the cutter axis stands "
             f"up to {found.off_wish_deg:.1f} deg off them"
@@ -272,7 +276,7 @@ def _tilt_advice(operation: Operation, found: Reach) -> list[str]:
     if operation.cutter.shape == "ball" and near < math.degrees(_TIP_RAD):
         out.append(
             f"{name}: the ball cuts within {near:.1f} deg of its tip in places, without cutting speed; "
-            "a lead or lean of 10 to 20 deg avoids it, on machines with enough rotary axes"
+            + ("a lead or lean of 10 to 20 deg avoids it" if tilts else "only a rotary axis could avoid it")
         )
     if far >= 90.0:
         out.append(

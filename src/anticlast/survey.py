@@ -187,8 +187,8 @@ def largest_ball_radius_mm(saddle: Saddle, outline: Outline) -> float:
     A ball that touches at q and reaches the surface at s has radius W(q) |s - q|^2 / (d . Hess z . d), d the
     plan part of s - q. Over the whole saddle the least of these at q is W(q) / (2a), at the mirror image of q
     across x' = 0, and 1/(2a) at the saddle point; so an outline with the saddle point in it takes 1/(2a),
-    which is also the tightest local curvature. Otherwise the answer lies between the least W / (2a) and the least
-    1 / k_max over the outline, and pairs of its points decide. docs/theory-surface.md#largest-ball.
+    which is also the tightest local curvature. Otherwise the answer lies between the least W / (2a) and the
+    least 1 / k_max over the outline, and pairs of its points decide. docs/theory-surface.md#largest-ball.
     """
     if outline.contains(np.zeros((1, 2)))[0]:
         return 0.5 / saddle.a_per_mm
@@ -217,8 +217,11 @@ def largest_ball_radius_mm(saddle: Saddle, outline: Outline) -> float:
 def _touching_radius(saddle: Saddle, q: Floats, s: Floats) -> Floats:
     """Return the radius (n,) [mm] of the ball that touches at q (n, 2) from above and reaches s (n, 2)."""
     step = s - q
-    chord2 = np.einsum("ni,ni->n", step, step) + (saddle.height(*s.T) - saddle.height(*q.T)) ** 2
     rise = np.einsum("ni,ij,nj->n", step, saddle.hessian(), step)
+    # Height of s over q from q's slope, since the difference of the two heights cancels where they are near.
+    zx, zy = saddle.gradient(q[:, 0], q[:, 1])
+    climb = zx * step[:, 0] + zy * step[:, 1] + 0.5 * rise
+    chord2 = np.einsum("ni,ni->n", step, step) + climb * climb
     curved = rise > np.finfo(np.float64).eps * chord2
     return np.where(curved, saddle.stretch(q) * chord2 / np.where(curved, rise, 1.0), np.inf)
 
@@ -235,7 +238,7 @@ def _too_large(job: Job, largest_mm: float, tightest: Place) -> list[str]:
         x, y = (c * scale for c in tightest.at_mm)
         found[cutter.number] = (
             f"T{cutter.number}, ball diameter {2 * cutter.radius_mm * scale:.4g} {job.units}, would cut into "
-            f"the finished form: near X{x:.4g} Y{y:.4g} only less than {2 * room * scale:.4g} {job.units} fits"
+            f"the finished form: near X{x:.4g} Y{y:.4g} only below {2 * room * scale:.4g} {job.units} fits"
         )
     return list(found.values())
 

@@ -71,10 +71,22 @@ PIECE_MM: Final = 2e-5
 
 # Largest turn of all rotary axes together within one piece of read-back motion (radians, 0.5 degrees): between rows a holder is
 # taken to go straight, and 0.5 degrees bend the path of a point 100 mm away by 1 micrometre.
-PIECE_TURN_RAD: Final = 0.00872664625997
+PIECE_TURN_RAD: Final = 0.0087266463
 
 # Arcs that were read are walked in chords that stay this near to them: half of what a measured height may be off.
 ARC_CHORD_MM: Final = 1e-4
 
 # How far an axis may be asked beyond its fastest feed: rounding of the end points of short moves.
 FEED_SHARE: Final = 1e-3
+
+# Smallest distance that straight joint moves may be asked to keep to the intended path: a third of the last posted digit of a
+# length (1e-4 mm), below which more blocks only add more rounding.
+LINEAR_FLOOR_MM: Final = 3e-5
+
+# How far the cutter axis may turn off its wish between rows (radians, 0.05 degrees). A ball does not feel it, for its centre is
+# held; a holder 100 mm up moves by 0.09 mm. Cutters with a flat bottom get less, by their radius.
+AXIS_STRAY_RAD: Final = 0.000872664625997
+
+# Most blocks that the move between two rows of a cutter path is split into; beyond it the path runs through the pole far off
+# the rotary axis, and planning stops rather than lose accuracy.
+SUBDIVISION_CAP: Final = 20000

@@ -281,6 +281,8 @@ def why_unreadable(path: Path, error: Exception) -> str:
             return "is a folder; needs a file"
     except (OSError, ValueError):
         pass
+    if isinstance(error, ValueError):
+        return "cannot be the name of a file"
     if isinstance(error, FileNotFoundError):
         return "no such file"
     if isinstance(error, PermissionError):

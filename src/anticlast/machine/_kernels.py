@@ -293,3 +293,358 @@ def nearest_axis(chain, low, high, pole_rad, wished):
                 top = dot
                 best[i, 0], best[i, 1], best[i, 2] = a0, a1, a2
     return best
+
+
+# ------------------------------------------------------------------------------------------- branches
+
+
+@numba.njit(cache=True, nogil=True)
+def _slerp(a0, a1, a2, b0, b1, b2, angle, t):
+    """Unit vector on the great circle from a to b, ``angle`` radians apart, at share t of the way."""
+    if angle < 1e-9:
+        return a0 + t * (b0 - a0), a1 + t * (b1 - a1), a2 + t * (b2 - a2)
+    s = 1.0 / math.sin(angle)
+    p, q = math.sin((1.0 - t) * angle) * s, math.sin(t * angle) * s
+    return p * a0 + q * b0, p * a1 + q * b1, p * a2 + q * b2
+
+
+@numba.njit(cache=True, nogil=True)
+def _angle(a0, a1, a2, b0, b1, b2):
+    """Angle between two unit vectors, radians, exact for small ones too."""
+    chord = math.sqrt((a0 - b0) ** 2 + (a1 - b1) ** 2 + (a2 - b2) ** 2)
+    return 2.0 * math.asin(min(1.0, 0.5 * chord))
+
+
+@numba.njit(cache=True, nogil=True)
+def _stray(chain, axis_a, axis_b, rot, turn, work):
+    """Largest angle (radians) of three between the axis on an even joint move and the even turn from axis a to axis b."""
+    theta = _angle(axis_a[0], axis_a[1], axis_a[2], axis_b[0], axis_b[1], axis_b[2])
+    worst = 0.0
+    for quarter in (2, 1, 3):
+        share = 0.25 * quarter
+        for j in range(rot.size):
+            work[j] = rot[j] + share * turn[j]
+        a0, a1, a2 = _axis_at(chain, work)
+        w0, w1, w2 = _slerp(axis_a[0], axis_a[1], axis_a[2], axis_b[0], axis_b[1], axis_b[2], theta, share)
+        worst = max(worst, _angle(a0, a1, a2, w0, w1, w2))
+    return worst
+
+
+@numba.njit(cache=True, nogil=True)
+def choose_branches(chain, axis, found, free, low, high, rate, start, wrap_low, wraps, cross_rad, slack_deg):
+    """Branch and whole turns for each row so that the rotary axes travel least and stay inside their limits.
+
+    Dynamic programming (Bellman) over the rows. A state is a branch together with whole turns for each axis that has
+    limits; an axis without limits always takes the short way. From a row to the next an axis turns by half a turn at most.
+    Changing branch is allowed where the even joint move keeps the axis within ``cross_rad`` of its wish: at the pole, or
+    where both branches meet. Words outside the limits cost a thousand times their travel, so they are a last resort.
+
+    Returns
+    -------
+    rot : (n, m) words, degrees, continuous.
+    forced : (n,) uint8, 1 where no allowed change led to the row.
+    """
+    count, branches, m = found.shape
+    lanes = 1
+    for j in range(m):
+        lanes *= wraps[j]
+    states = branches * lanes
+    wall = 1e9
+    cost = np.zeros(states)
+    cost_new = np.zeros(states)
+    word = np.zeros((states, m))
+    word_new = np.zeros((states, m))
+    back = np.zeros((count, states), dtype=np.int32)
+    turn = np.zeros(m)
+    work = np.zeros(m)
+    lane_turns = np.zeros((lanes, m))
+    for lane in range(lanes):
+        rest = lane
+        for j in range(m):
+            lane_turns[lane, j] = wrap_low[j] + rest % wraps[j]
+            rest //= wraps[j]
+    for i in range(count):
+        for s in range(states):
+            branch, lane = s // lanes, s % lanes
+            best, best_from = math.inf, 0
+            for before in range(states if i > 0 else 1):
+                total = cost[before] if i > 0 else 0.0
+                if total >= best:
+                    continue
+                blocked = False
+                for j in range(m):
+                    old = word[before, j] if i > 0 else start[j]
+                    if free[i, branch, j] == 1:
+                        turn[j] = 0.0
+                        if i > 0 and lane_turns[before % lanes, j] != lane_turns[lane, j]:
+                            blocked = True
+                    elif low[j] == -math.inf:
+                        turn[j] = _fold(found[i, branch, j] - old)
+                    else:
+                        turn[j] = found[i, branch, j] + 360.0 * lane_turns[lane, j] - old
+                        if i > 0 and abs(turn[j]) > 180.0 + slack_deg:
+                            blocked = True
+                    total += abs(turn[j]) / rate[j]
+                    now = old + turn[j]
+                    if low[j] != -math.inf:
+                        total += 1000.0 * max(0.0, max(low[j] - now, now - high[j]) - slack_deg) / rate[j]
+                if total >= best:
+                    continue
+                if i > 0 and not blocked and before // lanes != branch:
+                    blocked = _stray(chain, axis[i - 1], axis[i], word[before], turn, work) > cross_rad
+                if blocked:
+                    total += wall
+                if total < best:
+                    best, best_from = total, before
+                    for j in range(m):
+                        word_new[s, j] = (word[before, j] if i > 0 else start[j]) + turn[j]
+            cost_new[s] = best
+            back[i, s] = best_from
+        cost, cost_new = cost_new, cost
+        word, word_new = word_new, word
+    picked = np.zeros(count, dtype=np.int32)
+    picked[count - 1] = np.argmin(cost)
+    for i in range(count - 1, 0, -1):
+        picked[i - 1] = back[i, picked[i]]
+    return _unwrap(chain, axis, found, free, low, start, lane_turns, picked, lanes, cross_rad, slack_deg)
+
+
+@numba.njit(cache=True, nogil=True)
+def _unwrap(chain, axis, found, free, low, start, lane_turns, picked, lanes, cross_rad, slack_deg):
+    """Words (n, m) along a chain of states, and where a change between states was not an allowed one (n,)."""
+    count, _, m = found.shape
+    rot = np.zeros((count, m))
+    forced = np.zeros(count, dtype=np.uint8)
+    turn = np.zeros(m)
+    work = np.zeros(m)
+    for i in range(count):
+        branch, lane = picked[i] // lanes, picked[i] % lanes
+        for j in range(m):
+            old = rot[i - 1, j] if i > 0 else start[j]
+            if free[i, branch, j] == 1:
+                turn[j] = 0.0
+            elif low[j] == -math.inf:
+                turn[j] = _fold(found[i, branch, j] - old)
+            else:
+                turn[j] = found[i, branch, j] + 360.0 * lane_turns[lane, j] - old
+                if i > 0 and abs(turn[j]) > 180.0 + slack_deg:
+                    forced[i] = 1
+            rot[i, j] = old + turn[j]
+        if (
+            i > 0
+            and picked[i - 1] // lanes != branch
+            and _stray(chain, axis[i - 1], axis[i], rot[i - 1], turn, work) > cross_rad
+        ):
+            forced[i] = 1
+    return rot, forced
+
+
+# ---------------------------------------------------------------------------------------- subdivision
+
+
+@numba.njit(cache=True, nogil=True)
+def _radii(chain, base, rot, height, x, y, z):
+    """Distances of the point ``height`` above the tip from the work-carrying axes: from the outermost, and from the other."""
+    a0, a1, a2 = _spindle(chain, rot)
+    arm = base[3] - height
+    p0, p1, p2 = x + base[0] - arm * a0, y + base[1] - arm * a1, z + base[2] + base[3] - arm * a2
+    outer, inner = 0.0, 0.0
+    for j in range(chain.shape[0]):
+        if chain[j, 7] == 1.0:
+            k0, k1, k2 = chain[j, 0], chain[j, 1], chain[j, 2]
+            d0, d1, d2 = p0 - chain[j, 3], p1 - chain[j, 4], p2 - chain[j, 5]
+            along = k0 * d0 + k1 * d1 + k2 * d2
+            inner = math.sqrt(max(0.0, d0 * d0 + d1 * d1 + d2 * d2 - along * along))
+            if outer == 0.0:
+                outer = inner
+            angle = -chain[j, 6] * rot[j] * _DEG
+            p0, p1, p2 = _spin(k0, k1, k2, angle, d0, d1, d2)
+            p0, p1, p2 = p0 + chain[j, 3], p1 + chain[j, 4], p2 + chain[j, 5]
+    return outer, inner
+
+
+@numba.njit(cache=True, nogil=True)
+def deviation(chain, base, height, p, q, axis_p, axis_q, theta, t_a, rot_a, xyz_a, t_b, rot_b, xyz_b, work):
+    """How far a straight joint move from a to b strays from the intended path from row p to row q.
+
+    Sampled at the quarters of the block, plus what the samples can miss: between samples a quarter apart a curve with
+    second derivative M leaves its chord by no more than M/128 (docs/theory-machine.md, "Straight moves of the joints").
+
+    Returns
+    -------
+    off_mm : float
+        Bound on the distance of the point ``height`` above the tip from the straight line p q.
+    turned_rad : float
+        Bound on the angle between the axis and the even turn from axis_p to axis_q.
+    sampled_rad : float
+        The same angle, as sampled.
+    """
+    m = chain.shape[0]
+    table, head = 0.0, 0.0
+    for j in range(m):
+        if chain[j, 7] == 1.0:
+            table += abs(rot_b[j] - rot_a[j]) * _DEG
+        else:
+            head += abs(rot_b[j] - rot_a[j]) * _DEG
+    if table + head == 0.0 and theta == 0.0:
+        return 0.0, 0.0, 0.0
+    d0, d1, d2 = q[0] - p[0], q[1] - p[1], q[2] - p[2]
+    square = d0 * d0 + d1 * d1 + d2 * d2
+    off, sampled = 0.0, 0.0
+    for quarter in (1, 2, 3):
+        share = 0.25 * quarter
+        for j in range(m):
+            work[j] = rot_a[j] + share * (rot_b[j] - rot_a[j])
+        x = xyz_a[0] + share * (xyz_b[0] - xyz_a[0])
+        y = xyz_a[1] + share * (xyz_b[1] - xyz_a[1])
+        z = xyz_a[2] + share * (xyz_b[2] - xyz_a[2])
+        g0, g1, g2, a0, a1, a2 = _to_part(chain, base, work, height, x, y, z)
+        g0, g1, g2 = g0 - p[0], g1 - p[1], g2 - p[2]
+        along = 0.0
+        if square > 0.0:
+            along = min(1.0, max(0.0, (g0 * d0 + g1 * d1 + g2 * d2) / square))
+        g0, g1, g2 = g0 - along * d0, g1 - along * d1, g2 - along * d2
+        off = max(off, math.sqrt(g0 * g0 + g1 * g1 + g2 * g2))
+        t = t_a + share * (t_b - t_a)
+        w0, w1, w2 = _slerp(axis_p[0], axis_p[1], axis_p[2], axis_q[0], axis_q[1], axis_q[2], theta, t)
+        sampled = max(sampled, _angle(a0, a1, a2, w0, w1, w2))
+    speed = math.sqrt((xyz_b[0] - xyz_a[0]) ** 2 + (xyz_b[1] - xyz_a[1]) ** 2 + (xyz_b[2] - xyz_a[2]) ** 2)
+    arm = abs(base[3] - height)
+    speed += arm * head
+    outer, inner = _radii(chain, base, rot_a, height, xyz_a[0], xyz_a[1], xyz_a[2])
+    outer += speed
+    inner += speed + table * outer
+    bend = arm * head * head + 2.0 * table * speed + table * table * max(outer, inner)
+    turn = table + head
+    arc = theta * (t_b - t_a)
+    return off + bend / 128.0, sampled + (turn * turn + arc * arc) / 128.0, sampled
+
+
+@numba.njit(cache=True, nogil=True)
+def _middle(chain, pole_rad, rate, u0, u1, u2, rot_a, rot_b, solved, loose, out):
+    """Exact rotary words for the axis u, on the branch and turn nearest to halfway between a and b."""
+    m = chain.shape[0]
+    branches = _solve(chain, pole_rad, u0, u1, u2, solved, loose)
+    best, pick = math.inf, 0
+    for b in range(branches):
+        total = 0.0
+        for j in range(m):
+            half = 0.5 * (rot_a[j] + rot_b[j])
+            solved[b, j] = half if loose[b, j] == 1 else half + _fold(solved[b, j] - half)
+            total += abs(solved[b, j] - half) / rate[j]
+        if total < best:
+            best, pick = total, b
+    for j in range(m):
+        out[j] = solved[pick, j]
+
+
+@numba.njit(cache=True, nogil=True)
+def _twice(table):
+    """A table with the same rows and as many more of zeros."""
+    larger = np.zeros((2 * table.shape[0], table.shape[1]))
+    for i in range(table.shape[0]):
+        for j in range(table.shape[1]):
+            larger[i, j] = table[i, j]
+    return larger
+
+
+@numba.njit(cache=True, nogil=True)
+def subdivide(
+    chain, base, height, lever, point, axis, rot, rate, angle_digits, budget, axis_tol, axis_slack, pole_rad, cap
+):
+    """Split the moves between rows until straight joint moves keep to the intended path.
+
+    Parameters
+    ----------
+    height : float
+        Height above the tip (mm) of the point that goes straight between rows.
+    lever : float
+        Distance (mm) from the cutter axis at which a turned axis moves the cut; its share counts against ``budget``.
+    point, axis : (n, 3)
+        That point, and the cutter axis, at each row.
+    rot : (n, m)
+        Rotary words at each row, rounded.
+    angle_digits : float
+        10 to the number of digits of a rotary word.
+    budget, axis_tol, axis_slack : float
+        Allowed distance (mm), allowed angle (radians), and what of the angle is rounding and not counted by ``lever``.
+    cap : int
+        Most blocks that one move may be split into.
+
+    Returns
+    -------
+    row : (b,) int64
+        The row each block leads to (1 to n - 1).
+    share : (b,)
+        How far along the move to that row the block ends, (0, 1].
+    words : (b, 3 + m)
+        X Y Z not rounded, rotary words rounded.
+    failed : int
+        First row that the cap stopped; -1 if none.
+    worst_mm, worst_rad : float
+        Largest bounds met: distance of the point, angle of the axis.
+    """
+    count, m = rot.shape
+    row = np.zeros(count + 64, dtype=np.int64)
+    share = np.zeros(count + 64)
+    words = np.zeros((count + 64, 3 + m))
+    made = 0
+    deep = 48
+    t_stack = np.zeros(deep + 1)
+    rot_stack = np.zeros((deep + 1, m))
+    xyz_stack = np.zeros((deep + 1, 3))
+    rot_a, xyz_a, work = np.zeros(m), np.zeros(3), np.zeros(m)
+    solved, loose = np.zeros((2, m)), np.zeros((2, m), dtype=np.uint8)
+    worst_mm, worst_rad = 0.0, 0.0
+    for i in range(1, count):
+        p, q, e, f = point[i - 1], point[i], axis[i - 1], axis[i]
+        theta = _angle(e[0], e[1], e[2], f[0], f[1], f[2])
+        t_a = 0.0
+        for j in range(m):
+            rot_a[j] = rot[i - 1, j]
+            rot_stack[0, j] = rot[i, j]
+        xyz_a[0], xyz_a[1], xyz_a[2] = _to_words(chain, base, rot_a, height, p[0], p[1], p[2])
+        top = 0
+        t_stack[0] = 1.0
+        x, y, z = _to_words(chain, base, rot[i], height, q[0], q[1], q[2])
+        xyz_stack[0, 0], xyz_stack[0, 1], xyz_stack[0, 2] = x, y, z
+        first = made
+        while top >= 0:
+            t_b = t_stack[top]
+            rot_b, xyz_b = rot_stack[top], xyz_stack[top]
+            off, turned, sampled = deviation(
+                chain, base, height, p, q, e, f, theta, t_a, rot_a, xyz_a, t_b, rot_b, xyz_b, work
+            )
+            if turned <= axis_tol and off + lever * max(0.0, turned - axis_slack) <= budget:
+                worst_mm, worst_rad = max(worst_mm, off), max(worst_rad, turned)
+                if made == row.size:
+                    row, share, words = np.append(row, row), np.append(share, share), _twice(words)
+                row[made], share[made] = i, t_b
+                for j in range(m):
+                    words[made, 3 + j] = rot_a[j] = rot_b[j]
+                for j in range(3):
+                    words[made, j] = xyz_a[j] = xyz_b[j]
+                made += 1
+                t_a = t_b
+                top -= 1
+                continue
+            if top == deep or made - first >= cap:
+                return row[:made], share[:made], words[:made], i, off, turned
+            t = 0.5 * (t_a + t_b)
+            if sampled <= 0.9 * axis_tol and lever * max(0.0, sampled - axis_slack) <= 0.5 * budget:
+                # The axis may go evenly; only the point has to be put back on its line.
+                for j in range(m):
+                    work[j] = 0.5 * (rot_a[j] + rot_b[j])
+            else:
+                u0, u1, u2 = _slerp(e[0], e[1], e[2], f[0], f[1], f[2], theta, t)
+                _middle(chain, pole_rad, rate, u0, u1, u2, rot_a, rot_b, solved, loose, work)
+            top += 1
+            t_stack[top] = t
+            for j in range(m):
+                rot_stack[top, j] = math.floor(work[j] * angle_digits + 0.5) / angle_digits
+            x = p[0] + t * (q[0] - p[0])
+            y = p[1] + t * (q[1] - p[1])
+            z = p[2] + t * (q[2] - p[2])
+            x, y, z = _to_words(chain, base, rot_stack[top], height, x, y, z)
+            xyz_stack[top, 0], xyz_stack[top, 1], xyz_stack[top, 2] = x, y, z
+    return row[:made], share[:made], words[:made], -1, worst_mm, worst_rad

@@ -137,7 +137,7 @@ class Kinematics:
             keep = np.broadcast_to(np.asarray(near, dtype=np.float64), (len(tips), self.rotary_count))
             rot = np.where(choices.free.astype(bool), keep[:, None, :], rot)
         count, branches, m = rot.shape
-        flat = np.ascontiguousarray(rot.reshape(-1, m))
+        flat = np.ascontiguousarray(rot.reshape(count * branches, m))
         words = _kernels.place(self.chain, self.base, flat, 0.0, np.repeat(tips, branches, axis=0))
         return words.reshape(count, branches, 3 + m), choices.miss_rad <= REACH_RAD
 

@@ -1,0 +1,1 @@
+"""How the surface is swept: spacing of the passes, their order, links, entries, tilt; the planning half."""

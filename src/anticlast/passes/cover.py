@@ -1,4 +1,4 @@
-"""What the outline asks of straight passes: where it is met, and how far each pass must run to cover its strip.
+"""What the outline asks of straight passes: where it is met, and how far each must run to cover its strip.
 
 All in the plan coordinates (u, v) of a `PassFrame`. docs/theory-passes.md#cover.
 """
@@ -80,7 +80,7 @@ def sample(frame: PassFrame, outline: Outline, height_mm: float) -> Samples:
 
 
 def spread(first: Floats, last: Floats, spacing_mm: float) -> tuple[Ints, Floats]:
-    """Return points on intervals at most a spacing apart, both ends among them: interval index (m,) and place (m,)."""
+    """Return interval index and place (m,) of points at most a spacing apart, interval ends among them."""
     count = np.maximum(1, np.ceil((last - first) / spacing_mm)).astype(np.int64) + 1
     owner = np.repeat(np.arange(first.size), count)
     within = np.arange(owner.size) - np.repeat(np.cumsum(count) - count, count)

@@ -1,4 +1,4 @@
-"""How the cutter comes onto the surface and leaves it: an arc tangent to the pass, in the plane of feed and normal.
+"""How the cutter comes onto the surface and off it: an arc tangent to the pass, square to the surface.
 
 docs/theory-passes.md#entry.
 """
@@ -28,7 +28,7 @@ _CORNER_RAD = math.radians(5.0)
 
 
 def arc_back_and_up(radius_mm: float, height_mm: float, chord_mm: float) -> Floats:
-    """Return the way off a pass as (back, up) pairs (m, 2) [mm], from the first row after the pass to the highest.
+    """Return the way off a pass as (back, up) pairs (m, 2) [mm], from the first row off it to the highest.
 
     Along a circle of ``radius_mm`` tangent to the pass, back = r sin t, up = r (1 - cos t), to ``height_mm``,
     or to the steepest turn and straight on from there. The circle curves off the part, so its chords lie on
@@ -93,7 +93,8 @@ def way_off(
         radius *= 0.5
     raise CannotPlan(
         "entry clear of the surface",
-        f"no way onto the surface near ({centre_mm[0]:.3f}, {centre_mm[1]:.3f}) keeps the ball off it; use a smaller cutter",
+        f"no way onto the surface near ({centre_mm[0]:.3f}, {centre_mm[1]:.3f}) keeps the ball off it; "
+        "use a smaller cutter",
         reach_mm - worst,
         0.0,
     )

@@ -1,4 +1,4 @@
-"""The saddle seen along straight plan-view passes: (u, v) coordinates, leading-order steps, the ball's centre path.
+"""The saddle seen along straight plan-view passes: (u, v) coordinates, leading order, the ball's centre path.
 
 u runs along the feed, v to its left: u = x cos d + y sin d, v = -x sin d + y cos d. z is a quadratic form in
 (u, v) as it is in (x, y), so everything here is closed form. Curvature is positive where the surface is
@@ -62,9 +62,9 @@ class PassFrame:
     # -------------------------------------------------------------------------------------- leading order
 
     def cusp_form(self, u_mm: Floats, v_mm: Floats) -> tuple[Floats, Floats, Floats]:
-        """Return the cusp metric times 8h: q_uu, q_uv, q_vv (n,) [1/mm], so that a step d leaves h = q(d, d) / 8.
+        """Return 8h times the cusp metric: q_uu, q_uv, q_vv (n,) [1/mm]; a step d leaves h = q(d, d) / 8.
 
-        On the finished surface q = I/R - II (J. S. Kim 2007, Constant cusp height tool paths as geodesic
+        On the finished surface q = I/R - II (T. Kim 2007, Constant cusp height tool paths as geodesic
         parallels, CAD 39:477-489, from memory). On the surface moved out by the allowance m, with I, II and S
         = II/I of the finished one, q = I (1 - m S) (1 - (R + m) S) / R = (I - (R + 2m) II + m (R + m) II I^-1
         II) / R.
@@ -88,7 +88,7 @@ class PassFrame:
         )
 
     def crowding(self, u_mm: Floats, v_mm: Floats) -> Floats:
-        """Return 1 / p^2 per 1 / (8h) (n,) [1/mm]: q_vv - q_uv^2 / q_uu. A plan step p between passes leaves h = p^2/8 of it.
+        """Return q_vv - q_uv^2 / q_uu (n,) [1/mm]: passes a plan step p apart leave h = p^2 / 8 of it.
 
         The same as s^2 = 8h / [1/R - k_b - tau^2 / (1/R - k_t)] with p = s sqrt(1 + z_u^2) / W.
         """
@@ -96,14 +96,14 @@ class PassFrame:
         return q_vv - q_uv * q_uv / q_uu
 
     def shear(self, u_mm: Floats, v_mm: Floats) -> Floats:
-        """Return by how much u of the ball that cuts deepest over a point moves per unit of v (n,) [1]: -q_uv / q_uu."""
+        """Return -q_uv / q_uu (n,) [1]: how far along the pass, per v, the ball that cuts deepest is."""
         q_uu, q_uv, _ = self.cusp_form(u_mm, v_mm)
         return -q_uv / q_uu
 
     # -------------------------------------------------------------------------------------- exact
 
     def centre(self, u_mm: Floats, v_mm: Floats, du: Floats, dv: Floats) -> tuple[Floats, Floats, Floats]:
-        """Return the ball's centre and its first two derivatives (n, 3) along the plan direction (du, dv), in (u, v, z).
+        """Return the ball's centre (n, 3) and its first two derivatives along (du, dv), all in (u, v, z).
 
         C = r + (R + m) n, n = N/W, N = (-z_u, -z_v, 1). Along a straight plan line N' is constant, so
         n'' = -2 N' p/W^3 - N (q/W^3 - 3 p^2/W^5), p = N . N', q = N' . N'.
@@ -132,7 +132,8 @@ class PassFrame:
     def heading(self, xy_mm: Floats, along: Floats) -> Floats:
         """Return the unit direction (n, 3), part coordinates, of the ball's centre.
 
-        Where the surface twists it is not that of the contact: C' = r' + (R + m) n', and n' has a part across the feed.
+        Where the surface twists it is not that of the contact: C' = r' + (R + m) n', and n' has a part across
+        the feed.
 
         Parameters
         ----------
@@ -191,7 +192,7 @@ class PassFrame:
 
 
 def _deepest_step(d: Floats, d1: Floats, d2: Floats, n: Floats, radius_mm: float) -> tuple[Floats, Floats]:
-    """Return where a ball cuts the normal, and the Newton step (to subtract) to where that is lowest along the pass."""
+    """Return where a ball cuts the normal, and the Newton step (to subtract) to its lowest along the pass."""
     a, a1, a2 = (np.einsum("...i,...i->...", x, n) for x in (d, d1, d2))
     dd = np.einsum("...i,...i->...", d, d)
     inside = radius_mm * radius_mm - dd + a * a

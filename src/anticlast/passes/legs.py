@@ -1,4 +1,4 @@
-"""From pieces in cutting order to legs: straight plan moves with the contact on the surface, and where the cutter lifts.
+"""From pieces in cutting order to legs: straight plan moves on the surface; and where the cutter lifts.
 
 docs/theory-passes.md#links.
 """
@@ -68,7 +68,7 @@ def linked(
 
 
 def legs_of(frame: PassFrame, pieces: Pieces, order: list[Cut], stays: Bools) -> Legs:
-    """Return the legs of all pieces in cutting order, split exactly where a pass crosses the outline, with links between."""
+    """Return the legs of all pieces, split exactly where a pass crosses the outline, with links between."""
     corners: list[tuple[float, float]] = []
     ends: list[tuple[float, float]] = []
     purposes: list[int] = []
@@ -105,7 +105,7 @@ def legs_of(frame: PassFrame, pieces: Pieces, order: list[Cut], stays: Bools) ->
 
 
 def _runs(first: float, last: float, inside: Floats) -> list[tuple[float, float, int]]:
-    """Return one piece as (from, to, purpose) runs of growing u: CUT inside the outline, OVERRUN elsewhere."""
+    """Return one piece as (from, to, purpose) runs of growing u: CUT inside the outline, OVERRUN outside."""
     runs: list[tuple[float, float, int]] = []
     at = first
     for a, b in inside.tolist():

@@ -1,4 +1,4 @@
-"""The order in which the pieces of straight passes are cut: cells, zigzag inside a cell, then the nearest cell.
+"""The order in which pieces of straight passes are cut: cells, zigzag inside a cell, then the nearest cell.
 
 Boustrophedon decomposition (H. Choset, Coverage of known spaces: the boustrophedon cellular decomposition,
 Autonomous Robots 9 (2000) 247-253, from memory): sweeping the passes, a cell goes on while each piece has
@@ -90,6 +90,6 @@ def _end(pieces: Pieces, piece: int, sign: int) -> tuple[float, float]:
 
 
 def _distance(here: tuple[float, float] | None, pieces: Pieces, piece: int, sign: int) -> float:
-    """Return the way from where the cutter stands to the start of a piece, mm; before the first, its line stands for it."""
+    """Return the way from where the cutter stands to the start of a piece, mm; 0 before the first piece."""
     u, v = _start(pieces, piece, sign)
     return math.hypot(u - here[0], v - here[1]) if here else 0.0

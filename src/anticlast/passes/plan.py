@@ -7,10 +7,13 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
+import numpy.typing as npt
 
 from anticlast.errors import CannotPlan, NotConverged
+from anticlast.outline import Outline
 from anticlast.passes import entry, graded, raster
 from anticlast.passes.cover import Samples, pieces_of, sample
 from anticlast.passes.cusp import require_fit
@@ -20,7 +23,6 @@ from anticlast.passes.order import cutting_order
 from anticlast.passes.rows import Chords, Nearest, Rows, Tilt, rows_of, sag_density
 from anticlast.passes.spacing import Left, left_behind
 from anticlast.passes.tilt import tip_from_contact
-from anticlast.outline import Outline
 from anticlast.records import CutterPath, Floats, Job, Operation, Purpose, Stretch, frozen_array
 from anticlast.saddle import Saddle
 from anticlast.tolerances import CHORD_SHARE_OF_SCALLOP, SIDEWAYS_SHARE_OF_STEP
@@ -42,6 +44,8 @@ _GROUND_OVERRUNS = 2.0
 # The cutter stays down on a link that takes no longer than this (seconds at feed): a lift, a rapid and an
 # entry take more.
 _LINK_SECONDS = 1.0
+# Curvature changes little over this much of a surface that a ball of some millimetres all but fills.
+_FIT_MM = 0.5
 
 
 @dataclass(frozen=True, slots=True)
@@ -113,12 +117,13 @@ def plan_operation(job: Job, operation: Operation, nearest_axis: Nearest) -> Cut
 
 
 def require_pattern(operation: Operation) -> None:
-    """Raise `CannotPlan` unless the operation's pattern is available and its cutter is one the pattern can use."""
+    """Raise `CannotPlan` unless the operation's pattern is available and can use its cutter."""
     if operation.pattern not in PATTERNS:
         names = " and ".join(sorted(PATTERNS))
         raise CannotPlan(
             "pattern",
-            f"operation {operation.index}: pattern {operation.pattern!r} is not available; the patterns are {names}",
+            f"operation {operation.index}: pattern {operation.pattern!r} is not available; "
+            f"the patterns are {names}",
         )
     if operation.cutter.shape != "ball":
         raise CannotPlan(
@@ -129,10 +134,8 @@ def require_pattern(operation: Operation) -> None:
 
 
 def _require_fit(saddle: Saddle, outline: Outline, operation: Operation) -> None:
-    """Raise `CannotPlan` unless the ball fits all over the outline. k_max falls away from the origin, so rim and origin decide."""
-    rim = outline.boundary_points(1.0)
-    origin = np.zeros((1, 2))
-    places = np.vstack((rim, origin)) if outline.contains(origin)[0] else rim
+    """Raise `CannotPlan` unless the ball fits the concave curvature all over the outline."""
+    places = np.vstack((outline.boundary_points(_FIT_MM), outline.grid(_FIT_MM)))
     require_fit(saddle, operation.cutter.radius_mm, places, operation.allowance_mm)
 
 
@@ -166,7 +169,7 @@ def _budget(operation: Operation, height_mm: float) -> float:
 
 
 def _chords(operation: Operation, height_mm: float, left: Left) -> Chords:
-    """Return the planner's half of the budget. Inward, a chord takes stock off, so it may be twice as long a sag."""
+    """Return the planner's half of the budget; inward, where chords take stock off, it may be twice that."""
     outward = 0.5 * _budget(operation, height_mm)
     sideways = SIDEWAYS_SHARE_OF_STEP * (left.stepover_mm[0] or operation.cutter.radius_mm)
     return Chords(
@@ -175,7 +178,7 @@ def _chords(operation: Operation, height_mm: float, left: Left) -> Chords:
 
 
 def _overrun(frame: PassFrame, outline: Outline, lines_mm: Floats) -> float:
-    """Return how far passes run past the outline: a plan step, and as far as the deepest cut runs ahead over one."""
+    """Return how far passes run past the outline: a step, and as far as the deepest cut runs ahead in it."""
     low, high = outline.v_range(frame.direction_rad)
     gap = float(np.diff(lines_mm).max()) if lines_mm.size > 1 else 0.0
     gap = max(gap, 2.0 * (float(lines_mm[0]) - low), 2.0 * (high - float(lines_mm[-1])))
@@ -184,12 +187,10 @@ def _overrun(frame: PassFrame, outline: Outline, lines_mm: Floats) -> float:
 
 
 def _predicted(frame: PassFrame, laid: _Laid) -> float:
-    """Return the highest scallop to expect: the exact cusp, and what chords make of it.
+    """Return the highest scallop to expect: the exact cusp, and the whole chord's sag where the feed is concave.
 
-    A chord's sag runs from 0 at its ends to the full sag in its middle, two thirds of it on average, and the
-    two passes beside a cusp have their chord ends at different places. Along a concave feed chords lie off
-    the part and raise the cusp; the highest of many stands at two thirds of the sag or more. Along a convex
-    feed they lower it; the highest is lowered by a third or less. docs/theory-passes.md#budget.
+    Chord ends of neighbouring passes do not line up, so of many cusps some stand on the middles of two chords that lie
+    off the part, and some on the ends of two that cut into it. docs/theory-passes.md#budget.
     """
     left = laid.left
     xy = frame.xy(left.u_mm, left.v_mm)
@@ -197,8 +198,8 @@ def _predicted(frame: PassFrame, laid: _Laid) -> float:
     density = sag_density(frame, xy, along, laid.chords)
     _, _, bend = frame.centre(left.u_mm, left.v_mm, np.ones(1), np.zeros(1))
     up = np.einsum("ni,ni->n", bend, frame.normal_uv(left.u_mm, left.v_mm))
-    sag = up / (8.0 * np.maximum(density, np.finfo(float).tiny) ** 2)
-    return float((left.height_mm + np.where(up > 0.0, 2.0 / 3.0, 1.0 / 3.0) * sag).max())
+    sag = np.maximum(up, 0.0) / (8.0 * np.maximum(density, np.finfo(float).tiny) ** 2)
+    return float((left.height_mm + np.where(up > 0.0, sag, 0.0)).max())
 
 
 def _cut_length(saddle: Saddle, legs: Legs) -> float:
@@ -207,7 +208,7 @@ def _cut_length(saddle: Saddle, legs: Legs) -> float:
 
 
 def _rise_mm(job: Job, operation: Operation) -> float:
-    """Return how far above its pass the ball starts an entry: clear of the stock that earlier operations left."""
+    """Return how far above its pass the ball starts an entry: clear of what earlier operations left."""
     earlier = [other.allowance_mm for other in job.operations if other.index < operation.index]
     before = max([job.stock.allowance_mm or 0.0, *earlier])
     return max(before - operation.allowance_mm, 0.0) + entry.ABOVE_STOCK_MM
@@ -218,7 +219,7 @@ def _stretches(frame: PassFrame, operation: Operation, rows: Rows, rise_mm: floa
     bounds = np.searchsorted(rows.stretch, np.arange(int(rows.stretch[-1]) + 2))
     return tuple(
         _stretch(frame, operation, rows, slice(int(first), int(last)), rise_mm)
-        for first, last in zip(bounds[:-1], bounds[1:], strict=True)
+        for first, last in pairwise(bounds)
     )
 
 
@@ -251,7 +252,7 @@ def _stretch(frame: PassFrame, operation: Operation, rows: Rows, run: slice, ris
     )
     share = np.where(purpose == Purpose.ENTRY, entry.ENTRY_FEED_SHARE, 1.0)
 
-    def held(values: Floats) -> Floats:
+    def held(values: npt.NDArray) -> npt.NDArray:
         """Return rows with the pass's end values standing still on entry and exit."""
         return np.concatenate((values[[0] * len(into)], values, values[[-1] * len(off)]))
 

@@ -18,24 +18,24 @@ _ROUNDS = 8
 
 
 def evenly(low_mm: float, high_mm: float, edges_mm: tuple[float, float], step_mm: float) -> Floats:
-    """Return the fewest lines (n,) between two edges, everything shrunk alike so that they come out even at both.
+    """Return the fewest lines (n,) between two edges, all shrunk alike so that they come out even at both.
 
     Neither edge distance nor step is exceeded; all are smaller by the same share.
     """
     width = high_mm - low_mm
     count = max(1, math.ceil((width - sum(edges_mm)) / step_mm - 1e-9) + 1)
     shrink = width / (sum(edges_mm) + (count - 1) * step_mm)
-    return low_mm + shrink * (edges_mm[0] + step_mm * np.arange(count))
+    return low_mm + shrink * (edges_mm[0] + step_mm * np.arange(count, dtype=np.float64))
 
 
 def lines_for_scallop(frame: PassFrame, outline: Outline, samples: Samples, height_mm: float) -> Floats:
-    """Return v of the passes (n,), ascending [mm]: the fewest at one plan step that leave at most ``height_mm``."""
+    """Return v of the passes (n,) [mm], ascending: the fewest at one step that keep to ``height_mm``."""
     step = widest_constant_step(frame, samples, height_mm)
     return evenly(samples.v_low_mm, samples.v_high_mm, edge_distances(frame, samples, height_mm), step)
 
 
 def lines_for_stepover(frame: PassFrame, outline: Outline, samples: Samples, stepover_mm: float) -> Floats:
-    """Return v of the passes (n,), ascending [mm], whose largest distance on the surface inside the outline is as given.
+    """Return v of the passes (n,) [mm], ascending, at most the stepover apart on the surface.
 
     The step is not shrunk to come out even: what is over is shared by the two edges, neither farther than
     half a step.
@@ -66,13 +66,13 @@ def lines_for_stepover(frame: PassFrame, outline: Outline, samples: Samples, ste
 
 
 def _about(middle_mm: float, count: int, step_mm: float) -> Floats:
-    return middle_mm + step_mm * (np.arange(count) - 0.5 * (count - 1))
+    return middle_mm + step_mm * (np.arange(count, dtype=np.float64) - 0.5 * (count - 1))
 
 
 def _settled_step(
     frame: PassFrame, outline: Outline, middle_mm: float, count: int, step_mm: float, stepover_mm: float
 ) -> float:
-    """Return the plan step at which ``count`` lines about a middle lie at most the stepover apart on the surface."""
+    """Return the plan step at which ``count`` lines about a middle lie just the stepover apart."""
     miss = 0.0
     for _ in range(_ROUNDS):
         largest = left_behind(frame, outline, _about(middle_mm, count, step_mm)).stepover_mm[1]

@@ -1,4 +1,4 @@
-"""From legs to rows: points along each leg so close that the ball's centre, going straight between them, stays true.
+"""From legs to rows: points so close that the ball's centre, going straight between them, stays true.
 
 Between rows the reference point goes straight. How far that strays from the centre path is settled by the
 path's own curvature, in closed form: toward the normal it changes the scallop or gouges, sideways it only
@@ -29,7 +29,7 @@ _PROBES_ON_LINK = 9
 
 @dataclass(frozen=True, slots=True)
 class Chords:
-    """How far a straight move of the ball's centre may lie from its path, mm: off the part, into it, and sideways."""
+    """How far straight moves of the ball's centre may stray, mm: off the part, into it, sideways."""
 
     outward_mm: float
     inward_mm: float
@@ -48,7 +48,7 @@ class Tilt:
 
 @dataclass(frozen=True, slots=True)
 class Rows:
-    """Rows of all stretches, one after the other; fields as in ``records.Stretch``. ``tangent`` is along the feed, unit."""
+    """Rows of all stretches in order, as in ``records.Stretch``; ``tangent`` is along the feed, unit."""
 
     contact_mm: Floats
     normal: Floats
@@ -60,7 +60,7 @@ class Rows:
 
 
 def sag_density(frame: PassFrame, xy: Floats, along: Floats, chords: Chords) -> Floats:
-    """Return how many rows per plan millimetre (n,) [1/mm] a move along unit plan directions needs at xy (n, 2).
+    """Return how many rows per plan millimetre (n,) a move along unit plan directions needs at xy (n, 2).
 
     A chord of length l under curvature k sags l^2 k / 8. C'' splits into its part along the normal, outward
     where positive (concave feed), and the part along the surface square to C'.
@@ -150,7 +150,7 @@ def _link_axes(frame: PassFrame, legs: Legs, along: Floats, tilt: Tilt) -> tuple
 
 
 def _wished(frame: PassFrame, xy: Floats, along: Floats, tilt: Tilt) -> tuple[Floats, Floats, Floats]:
-    """Return wished axis, normal and feed tangent (n, 3) at xy (n, 2) fed along unit plan directions (n, 2)."""
+    """Return wished axis, normal, feed tangent (n, 3) at xy (n, 2), fed along unit plan directions (n, 2)."""
     zx, zy = frame.saddle.gradient(xy[:, 0], xy[:, 1])
     normal = np.column_stack((-zx, -zy, np.ones_like(zx)))
     normal /= np.linalg.norm(normal, axis=1, keepdims=True)
@@ -171,7 +171,7 @@ def _axes(
     link_ends: tuple[Floats, Floats],
     tilt: Tilt,
 ) -> tuple[Floats, Floats, Floats]:
-    """Return reached axis, normal and tangent (n, 3): the wish on passes, an even turn on links, as near as can be."""
+    """Return reached axis, normal, tangent (n, 3): nearest to the wish, or on links to an even turn."""
     axis, normal, tangent = _wished(frame, xy, along, tilt)
     link = np.flatnonzero(legs.purpose[leg] == Purpose.LINK)
     if link.size and tilt.fixed is None:

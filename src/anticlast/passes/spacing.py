@@ -1,4 +1,4 @@
-"""How far apart passes may lie: the tightest place, the outline's edges, and what a set of lines leaves behind.
+"""How far apart passes may lie: the tightest place, the outline's edges, and what lines leave behind.
 
 Exact cusps come from ``passes.scallop``; the leading-order metric only picks the places worth asking about.
 docs/theory-passes.md#spacing.
@@ -13,8 +13,8 @@ import numpy as np
 
 from anticlast.outline import Outline
 from anticlast.passes.cover import Samples, spread
-from anticlast.passes.frame import PassFrame
 from anticlast.passes.cusp import cusp_height, lines_beside, plan_step, surface_step
+from anticlast.passes.frame import PassFrame
 from anticlast.records import Floats
 
 # The exact cusp leaves the leading order by a share of about h/R and of the curvature's change over half a
@@ -27,7 +27,7 @@ _RIM_SAMPLES_PER_GAP = 4.0
 
 
 def tight(crowding: Floats, share: float = _TIGHT_SHARE) -> np.ndarray:
-    """Return the indices of the places whose metric comes within a share of the worst, at most a few hundred."""
+    """Return the indices of the places whose metric is within a share of the worst, at most a few hundred."""
     found = np.flatnonzero(crowding >= (1.0 - share) * crowding.max())
     if found.size > _MOST_PLACES:
         found = found[np.argpartition(crowding[found], -_MOST_PLACES)[-_MOST_PLACES:]]
@@ -35,7 +35,7 @@ def tight(crowding: Floats, share: float = _TIGHT_SHARE) -> np.ndarray:
 
 
 def widest_constant_step(frame: PassFrame, samples: Samples, height_mm: float) -> float:
-    """Return the largest plan step [mm] that leaves at most ``height_mm`` wherever a cusp may stand in the outline."""
+    """Return the largest plan step [mm] that leaves at most ``height_mm`` all over the outline."""
     at = tight(samples.crowding)
     right, left = lines_beside(
         frame.saddle,
@@ -50,7 +50,7 @@ def widest_constant_step(frame: PassFrame, samples: Samples, height_mm: float) -
 
 
 def next_step(frame: PassFrame, samples: Samples, v_mm: float, height_mm: float) -> float:
-    """Return the plan step [mm] from pass line v to the next on its left: as wide as the tightest point between allows."""
+    """Return the plan step [mm] from pass line v to the next: what the tightest point between allows."""
     reach = 0.0
     while True:
         window = samples.window(v_mm, v_mm + reach)
@@ -64,7 +64,7 @@ def next_step(frame: PassFrame, samples: Samples, v_mm: float, height_mm: float)
                 frame.saddle, frame.radius_mm, u, v_mm, frame.direction_rad, height_mm, frame.allowance_mm
             ).min()
         )
-        if step <= reach or reach == 0.0 and step <= samples.gap_mm:
+        if step <= max(reach, samples.gap_mm):
             return step
         reach = step if reach == 0.0 else 1.05 * step
 
@@ -112,7 +112,7 @@ class Left:
 
 
 def left_behind(frame: PassFrame, outline: Outline, lines_mm: Floats) -> Left:
-    """Return what passes on ``lines_mm`` (n,), ascending v, leave inside the outline: cusps between them, and on its rim."""
+    """Return what passes on lines (n,), ascending v, leave in the outline: between them and on its rim."""
     places = []
     stepover = (0.0, 0.0)
     if lines_mm.size > 1:
@@ -141,7 +141,7 @@ def left_behind(frame: PassFrame, outline: Outline, lines_mm: Floats) -> Left:
 
 
 def _on_rim(frame: PassFrame, outline: Outline, lines_mm: Floats) -> tuple[Floats, Floats, Floats]:
-    """Return (u, v) of the rim's worst points and the height there: the least that the passes on either side leave."""
+    """Return the rim's worst points and the height there: the least that passes on either side leave."""
     low, high = outline.v_range(frame.direction_rad)
     gap = float(np.diff(lines_mm).mean()) if lines_mm.size > 1 else high - low
     u, v = frame.uv(outline.boundary_points(gap / _RIM_SAMPLES_PER_GAP))

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-import importlib.util
 from collections.abc import Callable, Iterable
 from typing import IO
 
 from anticlast.errors import BadInput, Fault
+from anticlast.machine.python_post import load_module
 from anticlast.posting.writer import write_program
 from anticlast.records import AxisPath, Job, Machine
 
@@ -26,14 +26,7 @@ def writer_for(machine: Machine) -> Writer:
     """
     if machine.source.suffix != ".py":
         return write_program
-    spec = importlib.util.spec_from_file_location(f"anticlast_post_{machine.source.stem}", machine.source)
-    try:
-        if spec is None or spec.loader is None:
-            raise ImportError("not a Python file")
-        module = importlib.util.module_from_spec(spec)
-        spec.loader.exec_module(module)
-    except Exception as error:
-        raise BadInput(Fault(str(machine.source), 0, "", f"cannot be loaded: {type(error).__name__}: {error}")) from error
+    module = load_module(machine.source, str(machine.source))
     write = getattr(module, "write", write_program)
     if not callable(write):
         raise BadInput(Fault(str(machine.source), 0, "write", "is not a function write(job, axis_paths, stream)"))

@@ -262,9 +262,183 @@ def bin_pieces(
 
 
 @njit(cache=True, nogil=True)
-def entry(q: tuple, n: tuple, c0: np.ndarray, c1: np.ndarray, size: np.ndarray) -> tuple[float, float, float]:
-    """Return height, share and cosine where a line enters the swept volume of one piece; see `ball_entry`."""
-    return ball_entry(q, n, c0, c1, size[1])
+def pose_entry(
+    q: tuple, n: tuple, c: tuple, axis: tuple, size: np.ndarray, out: np.ndarray
+) -> tuple[float, float]:
+    """Return where a line q + h n, coming from below, enters a bull or flat end mill in one pose.
+
+    The cutter is a cylinder (radius ``disc``, from the reference point up to ``flutes``) grown by the corner radius.
+    Its distance is convex along the line, so Newton's method from outside never oversteps the entry;
+    docs/theory-proof.md#bull-and-flat-ends.
+
+    Parameters
+    ----------
+    q, n, c, axis : (x, y, z) [mm, 1]
+        Point and direction of the line, reference point, unit cutter axis.
+    size : (disc, corner, sine, flutes) [mm]
+    out : (3,)
+        Gets the outward unit normal of the cutter at the entry, or at the nearest approach of a line that misses.
+
+    Returns
+    -------
+    height, nearest : float [mm]
+        h of the entry, inf if the line misses; h of the nearest point then.
+    """
+    disc, corner, flutes = size[0], size[1], size[3]
+    wx, wy, wz = q[0] - c[0], q[1] - c[1], q[2] - c[2]
+    z0 = wx * axis[0] + wy * axis[1] + wz * axis[2]
+    nz = n[0] * axis[0] + n[1] * axis[1] + n[2] * axis[2]
+    aa = max(0.0, 1.0 - nz * nz)
+    bb = wx * n[0] + wy * n[1] + wz * n[2] - z0 * nz
+    ww = wx * wx + wy * wy + wz * wz
+    cc = ww - z0 * z0
+    if nz > 0.1:
+        h = (-corner - z0) / nz
+    else:
+        h = -(math.sqrt(ww) + disc + corner + flutes + 1.0)
+    gap, along, across = 0.0, 0.0, 0.0
+    hit, low, high = False, h, math.inf
+    for _ in range(_STEPS):
+        z = z0 + h * nz
+        r = math.sqrt(max(0.0, (aa * h + 2.0 * bb) * h + cc))
+        over = max(-z, z - flutes)
+        side = r - disc
+        up = -1.0 if -z >= z - flutes else 1.0
+        if over > 0.0 and side > 0.0:
+            far = math.sqrt(over * over + side * side)
+            along, across = up * over / far, side / far
+        elif over >= side:
+            far = over
+            along, across = up, 0.0
+        else:
+            far = side
+            along, across = 0.0, 1.0
+        gap = far - corner
+        slope = along * nz + (across * (aa * h + bb) / r if r > 0.0 else 0.0)
+        if gap <= 1e-10:
+            hit = True
+            break
+        if slope < -1e-9:
+            low = h
+            step = h - gap / slope
+            h = step if step < high else 0.5 * (low + high)
+        else:
+            # No crossing up to here; the nearest point lies between, where the distance is least.
+            high = h
+            h = 0.5 * (low + high)
+        if high - low <= 1e-6:
+            break
+    # Radial direction at the place reached.
+    px, py, pz = wx + h * n[0], wy + h * n[1], wz + h * n[2]
+    z = px * axis[0] + py * axis[1] + pz * axis[2]
+    px, py, pz = px - z * axis[0], py - z * axis[1], pz - z * axis[2]
+    r = math.sqrt(px * px + py * py + pz * pz)
+    scale = across / r if r > 0.0 else 0.0
+    out[0] = along * axis[0] + scale * px
+    out[1] = along * axis[1] + scale * py
+    out[2] = along * axis[2] + scale * pz
+    return (h if hit else math.inf), h
+
+
+@njit(cache=True, nogil=True)
+def pose_at(
+    t: float, c0: np.ndarray, c1: np.ndarray, a0: np.ndarray, a1: np.ndarray
+) -> tuple[tuple, tuple, float]:  # fmt: skip
+    """Return reference point, unit axis and the length of the mean axis at a share t of a piece."""
+    x, y, z = a0[0] + t * (a1[0] - a0[0]), a0[1] + t * (a1[1] - a0[1]), a0[2] + t * (a1[2] - a0[2])
+    length = math.sqrt(x * x + y * y + z * z)
+    c = (c0[0] + t * (c1[0] - c0[0]), c0[1] + t * (c1[1] - c0[1]), c0[2] + t * (c1[2] - c0[2]))
+    return c, (x / length, y / length, z / length), length
+
+
+@njit(cache=True, nogil=True)
+def entry_and_slope(
+    t: float, q: tuple, n: tuple, c0: np.ndarray, c1: np.ndarray, a0: np.ndarray, a1: np.ndarray, size: np.ndarray,
+    out: np.ndarray,
+) -> tuple[float, float]:  # fmt: skip
+    """Return the entry height at a share t of a piece and how it changes with t; for a miss inf and which way it nears."""
+    c, axis, length = pose_at(t, c0, c1, a0, a1)
+    h, near = pose_entry(q, n, c, axis, size, out)
+    px, py, pz = q[0] + near * n[0] - c[0], q[1] + near * n[1] - c[1], q[2] + near * n[2] - c[2]
+    dx, dy, dz = (a1[0] - a0[0]) / length, (a1[1] - a0[1]) / length, (a1[2] - a0[2]) / length
+    on = dx * axis[0] + dy * axis[1] + dz * axis[2]
+    dx, dy, dz = dx - on * axis[0], dy - on * axis[1], dz - on * axis[2]
+    ap = axis[0] * px + axis[1] * py + axis[2] * pz
+    dp = dx * px + dy * py + dz * pz
+    vx = c1[0] - c0[0] + dx * ap - axis[0] * dp
+    vy = c1[1] - c0[1] + dy * ap - axis[1] * dp
+    vz = c1[2] - c0[2] + dz * ap - axis[2] * dp
+    toward = out[0] * vx + out[1] * vy + out[2] * vz
+    if math.isinf(h):
+        return h, -toward
+    rate = out[0] * n[0] + out[1] * n[1] + out[2] * n[2]
+    return h, toward / min(rate, -1e-9)
+
+
+@njit(cache=True, nogil=True)
+def mill_entry(
+    q: tuple, n: tuple, c0: np.ndarray, c1: np.ndarray, a0: np.ndarray, a1: np.ndarray, size: np.ndarray, below: float
+) -> tuple[float, float, float]:
+    """Return where a line enters a bull or flat end mill along one piece; what is no lower than ``below`` is a miss.
+
+    Over the share t of the piece the entry height is convex to first order in the turn of the axis; its tangents at
+    two ends that slope towards each other meet at a lower bound, which ends the search.
+
+    Returns
+    -------
+    height, share, cosine
+        As `ball_entry`.
+    """
+    # The bottom plane: below it at both ends of the piece, a point stays out of the cutter all along.
+    top = min(below, 1e6)
+    x, y, z = q[0] + top * n[0], q[1] + top * n[1], q[2] + top * n[2]
+    first = (x - c0[0]) * a0[0] + (y - c0[1]) * a0[1] + (z - c0[2]) * a0[2]
+    last = (x - c1[0]) * a1[0] + (y - c1[1]) * a1[1] + (z - c1[2]) * a1[2]
+    bow = (c1[0] - c0[0]) * (a1[0] - a0[0]) + (c1[1] - c0[1]) * (a1[1] - a0[1]) + (c1[2] - c0[2]) * (a1[2] - a0[2])
+    if max(first, last) + 0.25 * abs(bow) < -size[1]:
+        return math.inf, 0.0, 0.0
+    out = np.empty(3)
+    s0, s1 = 0.0, 1.0
+    h0, g0 = entry_and_slope(s0, q, n, c0, c1, a0, a1, size, out)
+    best, share = h0, s0
+    cosine = -(out[0] * n[0] + out[1] * n[1] + out[2] * n[2])
+    if g0 < 0.0:
+        h1, g1 = entry_and_slope(s1, q, n, c0, c1, a0, a1, size, out)
+        if h1 < best:
+            best, share = h1, s1
+            cosine = -(out[0] * n[0] + out[1] * n[1] + out[2] * n[2])
+        if g1 > 0.0:
+            for step in range(_STEPS):
+                both = not (math.isinf(h0) or math.isinf(h1))
+                t = 0.5 * (s0 + s1)
+                if both:
+                    meet = min(max((h0 - h1 + g1 * s1 - g0 * s0) / (g1 - g0), s0), s1)
+                    bound = h0 + g0 * (meet - s0)
+                    if bound >= below or best - bound <= 1e-7:
+                        break
+                    t = meet if step % 2 == 0 else s0 - g0 * (s1 - s0) / (g1 - g0)
+                if s1 - s0 <= 1e-9 or t <= s0 or t >= s1:
+                    break
+                h, g = entry_and_slope(t, q, n, c0, c1, a0, a1, size, out)
+                if h < best:
+                    best, share = h, t
+                    cosine = -(out[0] * n[0] + out[1] * n[1] + out[2] * n[2])
+                if g < 0.0:
+                    s0, h0, g0 = t, h, g
+                else:
+                    s1, h1, g1 = t, h, g
+    if best >= below:
+        return math.inf, 0.0, 0.0
+    return best, share, cosine
+
+
+@njit(cache=True, nogil=True)
+def entry(q: tuple, n: tuple, pieces: tuple, k: int, below: float) -> tuple[float, float, float]:
+    """Return height, share and cosine where a line enters the swept volume of piece k; see `ball_entry`."""
+    c0, c1, a0, a1, size, _ = pieces
+    if size[k, 0] == 0.0 and size[k, 1] > 0.0:
+        return ball_entry(q, n, c0[k], c1[k], size[k, 1])
+    return mill_entry(q, n, c0[k], c1[k], a0[k], a1[k], size[k], below)
 
 
 @njit(cache=True, nogil=True)
@@ -277,27 +451,28 @@ def surface_at(a: float, b: float, x: float, y: float) -> tuple[tuple, tuple]:
 
 @njit(cache=True, nogil=True)
 def cut_node(
-    q: tuple, n: tuple, height: float, owner: int, listed: np.ndarray, c0: np.ndarray, c1: np.ndarray,
-    size: np.ndarray, state: np.ndarray, floor: float,
-) -> tuple[float, int]:  # fmt: skip
+    q: tuple, n: tuple, height: float, owner: int, listed: np.ndarray, pieces: tuple, floor: float
+) -> tuple[float, int]:
     """Return the residual height [mm] and the piece that left it, after the listed pieces cut one normal line.
 
     A piece in state 1 lowers the residual if and only if the point at the present residual lies inside its swept ball:
     its upper half is higher than any residual of interest. A piece in state 2 may lie below altogether; it counts
     as far as it meets the line above ``floor``, where the line leaves the part.
     """
+    c0, c1, _, _, size, state = pieces
     px, py, pz = q[0] + height * n[0], q[1] + height * n[1], q[2] + height * n[2]
     for e in range(listed.size):
         k = listed[e]
-        if state[k] == 1 and size[k, 0] == 0.0 and not in_ball(px, py, pz, c0[k], c1[k], size[k, 1]):
+        ball = size[k, 0] == 0.0 and size[k, 1] > 0.0
+        if ball and state[k] == 1 and not in_ball(px, py, pz, c0[k], c1[k], size[k, 1]):
             continue
-        h, _, _ = entry(q, n, c0[k], c1[k], size[k])
+        h, _, _ = entry(q, n, pieces, k, height)
         if h >= height:
             continue
         if h < floor:
             if state[k] == 2:
                 # The same line downwards: where it enters from above is where it leaves.
-                up, _, _ = entry(q, (-n[0], -n[1], -n[2]), c0[k], c1[k], size[k])
+                up, _, _ = entry(q, (-n[0], -n[1], -n[2]), pieces, k, math.inf)
                 if -up <= floor:
                     continue
             h = floor
@@ -323,7 +498,8 @@ def sweep(
     tiles : (first, after last)
     lists : (start, pieces)
         From `bin_pieces`.
-    pieces : (c0, c1, size, state)
+    pieces : (c0, c1, a0, a1, size, state)
+        Reference points and axes at both ends [mm, 1], size and state as in `bin_pieces`.
     above : float [mm]
         Only nodes that stand at least this high are worked on.
     height : (n,) [mm]
@@ -334,7 +510,6 @@ def sweep(
     a, b, _ = surface
     x, y, floor, node_start = nodes
     start, listing = lists
-    c0, c1, size, state = pieces
     for t in range(tiles[0], tiles[1]):
         listed = listing[start[t] : start[t + 1]]
         if listed.size == 0:
@@ -343,9 +518,7 @@ def sweep(
             if height[i] < above:
                 continue
             q, n = surface_at(a, b, x[i], y[i])
-            height[i], owner[i] = cut_node(
-                q, n, height[i], owner[i], listed, c0, c1, size, state, floor[i]
-            )  # fmt: skip
+            height[i], owner[i] = cut_node(q, n, height[i], owner[i], listed, pieces, floor[i])
 
 
 # ---------------------------------------------------------------------------------------- upper bound between nodes
@@ -356,34 +529,40 @@ _STEEP = 0.84
 
 
 @njit(cache=True, nogil=True)
-def sag_ball(surface: tuple, edge2: float, heights: tuple, cosine: float, corner: float, w: float) -> float:
+def sag(surface: tuple, edge2: float, high: float, cosine: float, bend_radius: float, spread: float, turn: float) -> float:
     """Return how far one piece's residual can stand above its chord plane over a triangle [mm]; inf if too steep.
 
-    h'' >= -(2a + 4A sin(T) |h'| + 12 A^2 |h|) / cos(T), T the angle between normal line and swept volume, and the
-    chord plane is off by at most edge^2 / 6 times that; docs/theory-proof.md#bound.
+    h'' >= -(2a + 2k sin(T) |h'| + 3 k^2 |h| + 2 turn (W + 1) + turn^2 reach) / cos(T), k = 2 max(a, b), T the angle
+    between normal line and swept volume; the chord plane is off by at most half of that times
+    edge^2 / 3 + spread^2 / 4: docs/theory-proof.md#bound.
 
     Parameters
     ----------
-    surface : (a, b, slope)
+    surface : (a, b, w)
+        w the largest 1 / cos(slope) over the nodes.
     edge2 : float [mm^2]
         Longest edge of the triangle in plan, squared.
-    heights : (h0, h1, h2) [mm]
+    high : float [mm]
+        Largest residual at the corners, in size.
     cosine : float
         Smallest cosine of T at the corners.
-    corner : float [mm]
+    bend_radius : float [mm]
         Smallest radius of curvature of the swept volume.
-    w : float
-        Largest 1 / cos(slope) over the nodes.
+    spread : float [mm]
+        How far apart along the piece the corners' entries lie; 0 for a ball, whose swept volume is convex.
+    turn : float [1/mm]
+        Turn of the axis per length of the piece.
     """
-    a, b, _ = surface
+    a, b, w = surface
     k = 2.0 * max(a, b)
-    theta = math.acos(min(1.0, cosine)) + (1.5 * w / corner + k) * math.sqrt(edge2 / 3.0)
+    reach = math.sqrt(edge2 / 3.0)
+    theta = math.acos(min(1.0, cosine)) + 1.5 * (w * reach + spread) / bend_radius + k * reach
     if theta > _STEEP:
         return math.inf
     sine, cosine = math.sin(theta), math.cos(theta)
-    high = max(abs(heights[0]), abs(heights[1]), abs(heights[2]))
-    slope = (w * sine + k * high) / cosine
-    return (2.0 * a + 2.0 * k * sine * slope + 3.0 * k * k * high) / cosine * edge2 / 6.0
+    slope = ((w + 1.0) * sine + k * high) / cosine
+    bend = 2.0 * a + 2.0 * k * sine * slope + 3.0 * k * k * high + 2.0 * turn * (w + 1.0)
+    return bend / cosine * (edge2 / 6.0 + spread * spread / 8.0)
 
 
 @njit(cache=True, nogil=True)
@@ -415,7 +594,7 @@ def lower_of_two(first: np.ndarray, second: np.ndarray, weights: np.ndarray) -> 
 
 @njit(cache=True, nogil=True)
 def triangle_bound(
-    surface: tuple, corners: np.ndarray, owners: np.ndarray, count: int, pieces: tuple, cap: float, w: float,
+    surface: tuple, corners: np.ndarray, owners: np.ndarray, count: int, pieces: tuple, cap: float,
     value: np.ndarray, weights: np.ndarray,
 ) -> float:  # fmt: skip
     """Return an upper bound [mm] of the residual over one triangle from a few pieces.
@@ -433,35 +612,40 @@ def triangle_bound(
         Gets the barycentric place where the bound is reached.
     """
     a, b, _ = surface
-    c0, c1, size, _ = pieces
+    c0, c1, a0, a1, size, _ = pieces
     edge2 = 0.0
     for i in range(3):
         j = (i + 1) % 3
         edge2 = max(edge2, (corners[i, 0] - corners[j, 0]) ** 2 + (corners[i, 1] - corners[j, 1]) ** 2)
     usable = 0
-    cosines = np.ones(_OWNERS)
-    for o in range(count):
-        value[o, :] = math.inf
-        cosines[o] = 1.0
+    cosines, least, most = np.ones(_OWNERS), np.ones(_OWNERS), np.zeros(_OWNERS)
     for i in range(3):
         q, n = surface_at(a, b, corners[i, 0], corners[i, 1])
         for o in range(count):
-            k = owners[o]
-            h, _, cosine = entry(q, n, c0[k], c1[k], size[k])
+            h, share, cosine = entry(q, n, pieces, owners[o], math.inf)
             value[o, i] = h
             cosines[o] = min(cosines[o], cosine)
+            least[o], most[o] = min(least[o], share), max(most[o], share)
     bound = cap
     weights[:] = 1.0 / 3.0
     place = np.empty(3)
     for o in range(count):
         if math.isinf(value[o, 0]) or math.isinf(value[o, 1]) or math.isinf(value[o, 2]):
             continue
-        sag = sag_ball(
-            surface, edge2, (value[o, 0], value[o, 1], value[o, 2]), cosines[o], size[owners[o], 1], w
-        )  # fmt: skip
-        if math.isinf(sag):
+        k = owners[o]
+        spread, turn, bend_radius = 0.0, 0.0, size[k, 1]
+        if size[k, 0] > 0.0:
+            length = math.sqrt((c1[k, 0] - c0[k, 0]) ** 2 + (c1[k, 1] - c0[k, 1]) ** 2 + (c1[k, 2] - c0[k, 2]) ** 2)
+            spread = (most[o] - least[o]) * length
+            turned = math.sqrt((a1[k, 0] - a0[k, 0]) ** 2 + (a1[k, 1] - a0[k, 1]) ** 2 + (a1[k, 2] - a0[k, 2]) ** 2)
+            turn = 1.1 * turned / max(length, 1e-9)
+            # A flat end has no corner arc: along its rim the normal turns with the rim itself.
+            bend_radius = size[k, 1] if size[k, 1] > 0.0 else size[k, 0]
+        high = max(abs(value[o, 0]), abs(value[o, 1]), abs(value[o, 2]))
+        over = sag(surface, edge2, high, cosines[o], bend_radius, spread, turn)
+        if math.isinf(over):
             continue
-        value[usable] = value[o] + sag
+        value[usable] = value[o] + over
         for p in range(usable + 1):
             found = lower_of_two(value[p], value[usable], place)
             if found < bound:
@@ -489,7 +673,7 @@ def add_owner(owners: np.ndarray, count: int, new: int) -> int:
 @njit(cache=True, nogil=True)
 def refine(
     surface: tuple, nodes: tuple, triangles: np.ndarray, grid: tuple, lists: tuple, pieces: tuple,
-    cap: float, w: float, slack: float, owner: np.ndarray, best: np.ndarray, budget: int,
+    cap: float, slack: float, owner: np.ndarray, best: np.ndarray, budget: int,
 ) -> float:  # fmt: skip
     """Search a run of triangles for the highest residual, and return a bound that none of them exceeds [mm].
 
@@ -498,14 +682,14 @@ def refine(
 
     Parameters
     ----------
-    surface : (a, b, slope)
-    nodes : (x, y, floor)
+    surface : (a, b, w)
+    nodes : (x, y)
     triangles : (m, 3) int32
         Nodes at the corners.
     grid : (x low, y low, tile [mm], tiles in x, tiles in y)
     lists : (start, pieces)
-    pieces : (c0, c1, size, state)
-    cap, w, slack : float
+    pieces : (c0, c1, a0, a1, size, state)
+    cap, slack : float [mm]
     owner : (n,) int32
     best : (4,)
         Highest residual so far [mm], its x, y [mm] and its piece; changed in place.
@@ -513,9 +697,8 @@ def refine(
         Most quarterings; once spent, bounds stand as they are.
     """
     a, b, _ = surface
-    x, y, floor = nodes
+    x, y = nodes
     start, listing = lists
-    c0, c1, size, state = pieces
     x_low, y_low, tile, nx, ny = grid
     stack = np.empty((3 * _DEEPEST + 4, 3, 2))
     depth = np.empty(3 * _DEEPEST + 4, np.int32)
@@ -538,7 +721,7 @@ def refine(
             owners[:] = known[top]
             count, level = counts[top], depth[top]
             top -= 1
-            found = triangle_bound(surface, corners, owners, count, pieces, cap, w, value, weights)
+            found = triangle_bound(surface, corners, owners, count, pieces, cap, value, weights)
             if found <= best[0] + slack or level >= _DEEPEST or budget <= 0:
                 bound = max(bound, found)
                 continue
@@ -549,7 +732,7 @@ def refine(
             v = min(max(int(math.floor((py - y_low) / tile)), 0), ny - 1)
             t = v * nx + u
             q, n = surface_at(a, b, px, py)
-            h, k = cut_node(q, n, cap, -1, listing[start[t] : start[t + 1]], c0, c1, size, state, -math.inf)
+            h, k = cut_node(q, n, cap, -1, listing[start[t] : start[t + 1]], pieces, -math.inf)
             if h > best[0]:
                 best[0], best[1], best[2], best[3] = h, px, py, k
             if k >= 0:

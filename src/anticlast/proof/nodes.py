@@ -55,9 +55,9 @@ class Nodes:
     grid_x_mm: Floats
     grid_y_mm: Floats
 
-    def triangle_areas_mm2(self) -> Floats:
-        """Return the plan area of each triangle, (m,) [mm^2]."""
-        p = self.xy[self.triangles]
+    def triangle_areas_mm2(self, rows: npt.NDArray[np.int64]) -> Floats:
+        """Return the plan area of some triangles, (k,) [mm^2]."""
+        p = self.xy[self.triangles[rows]]
         one, two = p[:, 1] - p[:, 0], p[:, 2] - p[:, 0]
         return 0.5 * np.abs(one[:, 0] * two[:, 1] - one[:, 1] * two[:, 0])
 
@@ -179,21 +179,25 @@ def _tiled(
     )
 
 
-def part_depths_mm(nodes: Nodes, outline: Outline, saddle: Saddle, bottom_mm: float) -> Floats:
-    """Return how far along the normal the part reaches below each node, (n,) [mm], negative or zero.
+def part_depths_mm(xy: Floats, outline: Outline, saddle: Saddle, bottom_mm: float) -> Floats:
+    """Return how far along the normal the part reaches below surface points, (n,) [mm], negative or zero.
 
     The normal line leaves the part through its bottom or through the side under the outline, whichever comes first.
+
+    Parameters
+    ----------
+    xy : (n, 2) [mm]
+        Plan of the points, inside the outline, part coordinates.
     """
-    normal = saddle.normal(nodes.xy)
-    z = saddle.height(nodes.xy[:, 0], nodes.xy[:, 1])
+    normal = saddle.normal(xy)
+    z = saddle.height(xy[:, 0], xy[:, 1])
     depth = np.minimum((bottom_mm - z) / normal[:, 2], 0.0)
-    far = nodes.xy + depth[:, None] * normal[:, :2]
-    out = np.flatnonzero(~outline.contains(far))
-    near, out_depth = np.zeros(len(out)), depth[out].copy()
+    out = np.flatnonzero(~outline.contains(xy + depth[:, None] * normal[:, :2]))
+    near, far = np.zeros(len(out)), depth[out].copy()
     for _ in range(_BISECTIONS):
-        middle = 0.5 * (near + out_depth)
-        held = outline.contains(nodes.xy[out] + middle[:, None] * normal[out, :2])
+        middle = 0.5 * (near + far)
+        held = outline.contains(xy[out] + middle[:, None] * normal[out, :2])
         near = np.where(held, middle, near)
-        out_depth = np.where(held, out_depth, middle)
+        far = np.where(held, far, middle)
     depth[out] = near
     return depth

@@ -24,8 +24,8 @@ from anticlast.tolerances import BOUND_SLACK_MM, MEASURE_MM, UNCUT_MM
 if TYPE_CHECKING:
     from anticlast.records import Bools, Floats, Job, PartMotion, ScallopMap
 
-# Finest and coarsest grid chosen without being asked, and most nodes along the longer side.
-_FINEST_MM, _COARSEST_MM, _MOST_STEPS = 0.05, 0.5, 1000
+# Grid chosen without being asked: this fine up to the most steps along the longer side, and at least so many steps.
+_GRID_MM, _MOST_STEPS, _LEAST_STEPS = 0.1, 1000, 200
 # Most quarterings of triangles in one run of the search for the peak: about a minute's work; the bound stays honest.
 _QUARTERINGS = 20_000_000
 _MAP_SIDE = 400
@@ -67,14 +67,14 @@ class Cut:
 
 
 def choose_grid_mm(job: Job) -> float:
-    """Return the grid spacing [mm] for a job: at most 1000 steps along the longer side, 0.05 to 0.5 mm.
+    """Return the grid spacing [mm] for a job: 0.1 mm, but 200 to 1000 steps along the outline's longer side.
 
     The spacing does not limit the accuracy of the highest residual, which is searched for between nodes; it sets how
     much of that search there is.
     """
     x0, y0, x1, y1 = job.part.outline.bounds
     side = max(x1 - x0, y1 - y0)
-    return float(min(max(np.ceil(side / _MOST_STEPS * 100.0) / 100.0, _FINEST_MM), _COARSEST_MM))
+    return float(min(max(_GRID_MM, side / _MOST_STEPS), side / _LEAST_STEPS))
 
 
 def measure(
@@ -113,6 +113,7 @@ def measure(
     gouge = deepest_gouge(saddle, job.part.outline, pieces)
     highest, bound = field.search()
     untouched = np.mean(field.owner[nodes.triangles] < 0, axis=1)
+    some = np.flatnonzero(untouched)
     x, y = saddle.plan(highest[1], highest[2])
     return Cut(
         grid_mm=grid,
@@ -124,7 +125,7 @@ def measure(
         highest_at_mm=(float(x), float(y)),
         highest_piece=int(highest[3]),
         gouge=gouge,
-        uncut_area_mm2=float(np.sum(untouched * nodes.triangle_areas_mm2())),
+        uncut_area_mm2=float(np.sum(untouched[some] * nodes.triangle_areas_mm2(some))),
     )
 
 
@@ -160,10 +161,14 @@ class _Field:
             _kernels.bin_pieces(*arguments, start, listing, self.state)
         self.lists = (start, listing)
         if np.any(self.state == 2) and np.isinf(self.floor[0]):
-            self.floor = part_depths_mm(self.nodes, self.job.part.outline, self.saddle, self.job.stock.bottom_mm)
+            self.floor = self._depths(np.arange(len(self.height)))
 
-    def _kernel_pieces(self) -> tuple[Floats, Floats, Floats, npt.NDArray[np.uint8]]:
-        return self.pieces.c0, self.pieces.c1, self.pieces.size, self.state
+    def _depths(self, rows: npt.NDArray[np.int64]) -> Floats:
+        return part_depths_mm(self.nodes.xy[rows], self.job.part.outline, self.saddle, self.job.stock.bottom_mm)
+
+    def _kernel_pieces(self) -> tuple[npt.NDArray, ...]:
+        own = self.pieces
+        return own.c0, own.c1, own.a0, own.a1, own.size, self.state
 
     def _sweep(self, above_mm: float) -> None:
         nodes = self.nodes
@@ -186,9 +191,9 @@ class _Field:
         if np.any(missed) and self.low < self.cap:
             self._bin(self.cap)
             self._sweep(self.low)
-        if np.isinf(self.floor[0]) and np.any(self.height < -MEASURE_MM):
-            self.floor = part_depths_mm(self.nodes, self.job.part.outline, self.saddle, self.job.stock.bottom_mm)
-            self.height = np.maximum(self.height, np.minimum(self.floor, 0.0))
+        low = np.flatnonzero(self.height < -MEASURE_MM)
+        if np.isinf(self.floor[0]) and low.size:
+            self.height[low] = np.maximum(self.height[low], self._depths(low))
 
     def search(self) -> tuple[Floats, float]:
         """Return the highest residual with its place and piece, (4,), and a bound over the whole outline."""
@@ -201,13 +206,14 @@ class _Field:
         # What is looked at stands no higher than the highest node and what a coarse cell may hide above it.
         reach = min(self.cap, 2.0 * highest + nodes.tiling[2] ** 2 / 100.0)
         self._bin(reach)
-        lists, arrays = self.lists, (nodes.x, nodes.y, self.floor)
+        lists, arrays = self.lists, (nodes.x, nodes.y)
+        surface = (*self.surface[:2], self.stretch)
 
         def run(span: tuple[int, int]) -> tuple[Floats, float]:
             own = best.copy()
             bound = _kernels.refine(
-                self.surface, arrays, nodes.triangles[span[0] : span[1]], nodes.tiling, lists, self._kernel_pieces(),
-                self.cap, self.stretch, BOUND_SLACK_MM, self.owner, own, _QUARTERINGS,
+                surface, arrays, nodes.triangles[span[0] : span[1]], nodes.tiling, lists, self._kernel_pieces(),
+                self.cap, BOUND_SLACK_MM, self.owner, own, _QUARTERINGS,
             )  # fmt: skip
             return own, bound
 

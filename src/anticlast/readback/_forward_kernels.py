@@ -24,7 +24,12 @@ AXIS_COLUMNS = 9
 
 
 @numba.njit(cache=True, nogil=True)
-def _turn(vector, axes, k, angle):
+def _turn(
+    vector: np.ndarray,
+    axes: np.ndarray,
+    k: int,
+    angle: float,
+) -> None:
     """Turn a vector in place by an angle about the direction of rotary axis k (Rodrigues' formula)."""
     dx, dy, dz = axes[k, DIRECTION], axes[k, DIRECTION + 1], axes[k, DIRECTION + 2]
     cosine, sine = math.cos(angle), math.sin(angle)
@@ -36,7 +41,11 @@ def _turn(vector, axes, k, angle):
 
 
 @numba.njit(cache=True, nogil=True)
-def _away(point, axes, k):
+def _away(
+    point: np.ndarray,
+    axes: np.ndarray,
+    k: int,
+) -> float:
     """Distance of a point from rotary axis k."""
     x = point[0] - axes[k, THROUGH]
     y = point[1] - axes[k, THROUGH + 1]
@@ -46,7 +55,16 @@ def _away(point, axes, k):
 
 
 @numba.njit(cache=True, nogil=True)
-def _machine(words, offset_mm, gauge_mm, pivot_mm, origin, axes, tip, axis):
+def _machine(
+    words: np.ndarray,
+    offset_mm: float,
+    gauge_mm: float,
+    pivot_mm: float,
+    origin: np.ndarray,
+    axes: np.ndarray,
+    tip: np.ndarray,
+    axis: np.ndarray,
+) -> None:
     """Tip and cutter axis in the machine frame."""
     axis[0], axis[1], axis[2] = 0.0, 0.0, 1.0
     for k in range(axes.shape[0] - 1, -1, -1):
@@ -60,7 +78,13 @@ def _machine(words, offset_mm, gauge_mm, pivot_mm, origin, axes, tip, axis):
 
 
 @numba.njit(cache=True, nogil=True)
-def _into_work(words, axes, k, tip, axis):
+def _into_work(
+    words: np.ndarray,
+    axes: np.ndarray,
+    k: int,
+    tip: np.ndarray,
+    axis: np.ndarray,
+) -> None:
     """Undo rotary axis k, which carries the work, on a machine-frame point and direction."""
     angle = -axes[k, TURNS] * words[int(axes[k, WORD])]
     for i in range(3):
@@ -72,7 +96,16 @@ def _into_work(words, axes, k, tip, axis):
 
 
 @numba.njit(cache=True, nogil=True)
-def pose(words, offset_mm, gauge_mm, pivot_mm, origin, axes, tip, axis):
+def pose(
+    words: np.ndarray,
+    offset_mm: float,
+    gauge_mm: float,
+    pivot_mm: float,
+    origin: np.ndarray,
+    axes: np.ndarray,
+    tip: np.ndarray,
+    axis: np.ndarray,
+) -> None:
     """Tip and cutter axis in part coordinates, written into tip and axis (3,).
 
     The inverse of p -> R1 (R2 (p + origin - t2) + t2 - t1) + t1 for the axes that carry the work, applied to
@@ -88,7 +121,15 @@ def pose(words, offset_mm, gauge_mm, pivot_mm, origin, axes, tip, axis):
 
 
 @numba.njit(cache=True, nogil=True)
-def between(start, end, fraction, turned, centre, plane, words):
+def between(
+    start: np.ndarray,
+    end: np.ndarray,
+    fraction: float,
+    turned: float,
+    centre: np.ndarray,
+    plane: int,
+    words: np.ndarray,
+) -> None:
     """Words part of the way along a motion; ``turned`` is the signed angle of an arc, 0 on a straight one."""
     for i in range(6):
         words[i] = start[i] + fraction * (end[i] - start[i])
@@ -110,7 +151,18 @@ def between(start, end, fraction, turned, centre, plane, words):
 
 
 @numba.njit(cache=True, nogil=True)
-def _pieces(start, end, turned, centre, plane, lengths, pivot_mm, origin, axes, limits):
+def _pieces(
+    start: np.ndarray,
+    end: np.ndarray,
+    turned: float,
+    centre: np.ndarray,
+    plane: int,
+    lengths: np.ndarray,
+    pivot_mm: float,
+    origin: np.ndarray,
+    axes: np.ndarray,
+    limits: np.ndarray,
+) -> float:
     """Pieces that one motion needs. ``limits``: tip off straight (mm), turn (rad), chord of an arc (mm).
 
     A smooth curve over a unit of time leaves its chord by at most an eighth of its greatest second
@@ -159,9 +211,20 @@ def _pieces(start, end, turned, centre, plane, lengths, pivot_mm, origin, axes, 
 
 @numba.njit(cache=True, nogil=True)
 def count_pieces(
-    starts, ends, turned, centres, planes, lengths, pivot_mm, origin, axes, limits, counts, jumps
-):
-    """Fill counts (n,) with pieces of each motion, jumps (n,) with 1 where it starts off the end of the one before."""
+    starts: np.ndarray,
+    ends: np.ndarray,
+    turned: np.ndarray,
+    centres: np.ndarray,
+    planes: np.ndarray,
+    lengths: np.ndarray,
+    pivot_mm: float,
+    origin: np.ndarray,
+    axes: np.ndarray,
+    limits: np.ndarray,
+    counts: np.ndarray,
+    jumps: np.ndarray,
+) -> None:
+    """Fill counts (n,) with pieces of each motion, jumps (n,) with 1 where it starts off the end before."""
     tip, axis = np.empty(3), np.empty(3)
     before, axis_before = np.empty(3), np.empty(3)
     for row in range(starts.shape[0]):
@@ -194,22 +257,22 @@ def count_pieces(
 
 @numba.njit(cache=True, nogil=True)
 def walk(
-    starts,
-    ends,
-    turned,
-    centres,
-    planes,
-    lengths,
-    pivot_mm,
-    origin,
-    axes,
-    counts,
-    jumps,
-    tips,
-    directions,
-    motion,
-    fraction,
-):  # noqa: E501
+    starts: np.ndarray,
+    ends: np.ndarray,
+    turned: np.ndarray,
+    centres: np.ndarray,
+    planes: np.ndarray,
+    lengths: np.ndarray,
+    pivot_mm: float,
+    origin: np.ndarray,
+    axes: np.ndarray,
+    counts: np.ndarray,
+    jumps: np.ndarray,
+    tips: np.ndarray,
+    directions: np.ndarray,
+    motion: np.ndarray,
+    fraction: np.ndarray,
+) -> int:
     """Fill the pieces: pose at the end of each, with a row of fraction 0 where a motion starts elsewhere."""
     words = np.empty(6)
     row = 0
@@ -231,8 +294,21 @@ def walk(
 
 @numba.njit(cache=True, nogil=True)
 def gauge_extremes(
-    starts, ends, turned, centres, planes, lengths, pivot_mm, origin, axes, counts, known, lowest, highest, at
-):  # noqa: E501
+    starts: np.ndarray,
+    ends: np.ndarray,
+    turned: np.ndarray,
+    centres: np.ndarray,
+    planes: np.ndarray,
+    lengths: np.ndarray,
+    pivot_mm: float,
+    origin: np.ndarray,
+    axes: np.ndarray,
+    counts: np.ndarray,
+    known: np.ndarray,
+    lowest: np.ndarray,
+    highest: np.ndarray,
+    at: np.ndarray,
+) -> None:
     """Extremes of the spindle gauge point (machine frame) over the motions, and the row each is met in.
 
     ``known`` (n, 3): 1 where the whole motion has a known place along that axis, 2 where only its end has, 0

@@ -44,7 +44,7 @@ _NINE = 57
 
 
 @numba.njit(cache=True, nogil=True)
-def _number(text, at):
+def _number(text: np.ndarray, at: int) -> tuple[float, int]:
     """Read a plain number: (value, where it ends); an end of -1 means it is not plain."""
     size = text.size
     sign = 1.0
@@ -82,7 +82,9 @@ def _number(text, at):
 
 
 @numba.njit(cache=True, nogil=True)
-def _line(text, at, may_delete, values, found):
+def _line(
+    text: np.ndarray, at: int, may_delete: int, values: np.ndarray, found: np.ndarray
+) -> tuple[int, int]:
     """Read one plain line into values and found: X Y Z A B C, F, G.
 
     Returns (where its line end is, words) or (-1, 0) if it is not plain. ``found`` has a 1 for each word.
@@ -147,7 +149,19 @@ def _line(text, at, may_delete, values, found):
 
 
 @numba.njit(cache=True, nogil=True)
-def read_plain(text, at, line, ints, floats, row, lines, shapes, starts, ends, feeds):
+def read_plain(
+    text: np.ndarray,
+    at: int,
+    line: int,
+    ints: np.ndarray,
+    floats: np.ndarray,
+    row: int,
+    lines: np.ndarray,
+    shapes: np.ndarray,
+    starts: np.ndarray,
+    ends: np.ndarray,
+    feeds: np.ndarray,
+) -> tuple[int, int, int, int]:
     """Read plain lines from ``at`` on until one is not plain, the text ends or the columns are full.
 
     Parameters

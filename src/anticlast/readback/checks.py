@@ -1,4 +1,4 @@
-"""What a legal program can still get wrong before it cuts: no cutter, no spindle, no feed, no length offset, a strange axis.
+"""What a legal program can still get wrong before it cuts: cutter, spindle, feed, length offset, axes.
 
 Each check looks at the columns of motions, so it costs the same however the motions were read. Only what
 fails is reported; ``worst`` counts the motions at fault and ``line`` is the first of them.
@@ -116,7 +116,7 @@ def check_axes(program: ReadProgram, machine: Machine) -> tuple[Finding, ...]:
 
 
 def check_cutters(program: ReadProgram, numbers: Collection[int]) -> tuple[Finding, ...]:
-    """Return a finding for each cutter loaded, or H in force on a motion, that is not among the known cutters.
+    """Return a finding for each T or H in force on a motion that is not among the known cutters.
 
     Parameters
     ----------
@@ -156,19 +156,40 @@ def known_places(program: ReadProgram) -> tuple[Bools, Bools]:
         Columns X Y Z A B C.
     """
     lines = program.motions.line
-    starts = np.ones((len(lines), 6), dtype=np.bool_)
-    ends = np.ones((len(lines), 6), dtype=np.bool_)
+    starts = np.zeros((len(lines), 6), dtype=np.bool_)
+    ends = np.zeros((len(lines), 6), dtype=np.bool_)
     changes = [event for event in program.events if event.what in ("position known", "position unknown")]
     for axis, letter in enumerate(SIX):
         mine = [event for event in changes if event.value == letter]
-        if not mine:
-            continue
         at = np.array([event.line for event in mine])
-        known = np.array([event.what == "position known" for event in mine])
-        # State before the first change is its opposite.
-        known = np.concatenate([[not known[0]], known])
+        known = np.array([False] + [event.what == "position known" for event in mine])
         starts[:, axis] = known[np.searchsorted(at, lines, side="left")]
         ends[:, axis] = known[np.searchsorted(at, lines, side="right")]
-        lost = at[[event.what == "position unknown" for event in mine]]
+        lost = [event.line for event in mine if event.what == "position unknown"]
         starts[np.isin(lines, lost), axis] = False
     return starts, ends
+
+
+def check_places(program: ReadProgram, machine: Machine) -> tuple[Finding, ...]:
+    """Return a finding for each axis of the machine that a feed motion starts at an unknown place of.
+
+    Such a motion cuts from wherever the machine was left, so nothing can be proved of it.
+
+    Parameters
+    ----------
+    program : ReadProgram
+    machine : Machine
+
+    Returns
+    -------
+    tuple of Finding
+        Check "position stated".
+    """
+    motions = program.motions
+    starts, _ = known_places(program)
+    feeding = motions.shape != Shape.RAPID
+    found: list[Finding] = []
+    for letter in machine.letters:
+        message = f"feed motion while the program has not said where {letter} stands"
+        found += _failed("position stated", motions, feeding & ~starts[:, SIX.index(letter)], message)
+    return tuple(found)

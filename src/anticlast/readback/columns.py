@@ -1,4 +1,4 @@
-"""Growing columns of motions, shared by the plain-text kernel and the interpreter, and what is worked out from them."""
+"""Growing columns of motions, shared by the compiled reader and the interpreter, and their times."""
 
 from __future__ import annotations
 
@@ -81,7 +81,7 @@ class Columns:
         held["coolant"][low:high] = state.coolant
 
     def motions(self, rows: int) -> Motions:
-        """Return the first ``rows`` motions as a record, times worked out; the columns must not grow any more."""
+        """Return the first ``rows`` motions as a record; the columns must not grow any more."""
 
         def cut(values: np.ndarray) -> np.ndarray:
             return values[:rows] if 2 * rows >= len(values) else values[:rows].copy()

@@ -14,7 +14,8 @@ from anticlast.readback.language import LanguageError, label, whole
 PROVABLE: Final = frozenset((810, 820, 850, 890))
 _DWELLS: Final = frozenset((820, 890))
 _FEEDS_OUT: Final = frozenset((850, 890))
-_MOST_REPEATS: Final = 10_000  # ours: bounds the memory that one short line can ask for
+# Ours, for all lines of a program together: bounds the memory that short lines can ask for.
+MOST_REPEATS: Final = 10_000
 _REFUSED: Final = {
     830: "how far it backs off between pecks is not stated",
     840: "its feed is tied to the spindle's turning",
@@ -47,9 +48,21 @@ class Hole:
     retract_to_r: bool
 
 
-def repeats_of(value: float | None) -> int:
-    """Return the L word of a canned cycle: 1 if absent, else a positive integer."""
-    return 1 if value is None else whole("L", value, 1, _MOST_REPEATS, "3.5.16")
+def repeats_of(value: float | None, before: int) -> int:
+    """Return the L word of a canned cycle: 1 if absent, else a positive integer (3.5.16).
+
+    Parameters
+    ----------
+    value : float or None
+    before : int
+        Repeats beyond the first that earlier lines asked for.
+    """
+    repeats = 1 if value is None else whole("L", value, 1, MOST_REPEATS, "3.5.16")
+    if before + repeats - 1 > MOST_REPEATS:
+        raise LanguageError(
+            f"L{repeats}", f"refused: more than {MOST_REPEATS} repeats in one program", "3.5.16"
+        )
+    return repeats
 
 
 def refuse_unknown(code: int) -> None:

@@ -1,4 +1,4 @@
-"""Values of words: numbers, parameters, functions and bracketed expressions (NISTIR 6556 sections 3.3.2.1 to 3.3.2.4).
+"""Values of words: numbers, parameters, functions, bracketed expressions (NISTIR 6556 section 3.3.2).
 
 Text comes here in lower case with blanks taken out.
 """
@@ -150,7 +150,7 @@ def parameter_index(value: float) -> int:
 
 
 def _expression(text: str, at: int, parameters: Mapping[int, float], depth: int) -> tuple[float, int]:
-    """Read ``[a op b op ...]``: ``**`` binds first, then ``* / MOD``, then the rest; equals from left to right."""
+    """Read ``[a op b ...]``: ``**`` binds first, then ``* / MOD``, then the rest; left to right."""
     value, at = real_value(text, at + 1, parameters, depth)
     values, operators = [value], []
     while text[at : at + 1] != "]":

@@ -160,7 +160,7 @@ def _setting(
     part_origin_mm: Sequence[float],
     gauge_length_by_tool: Mapping[int, float],
 ) -> tuple[np.ndarray, np.ndarray, float, np.ndarray, np.ndarray]:
-    """Return rotary axes, part origin, pivot length, lengths (n, 2) and signed arc angles (n,) for the kernels."""
+    """Return axes, part origin, pivot length, lengths (n, 2) and signed arc angles (n,) for the kernels."""
     axes = np.zeros((len(machine.rotary), kernels.AXIS_COLUMNS))
     for k, axis in enumerate(machine.rotary):
         axes[k, kernels.WORD] = SIX.index(axis.letter)

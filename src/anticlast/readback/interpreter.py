@@ -1,4 +1,4 @@
-"""One line after another, as NISTIR 6556 says a control executes them: Table 8 (section 3.8) gives the order inside a line.
+"""Executes one line after another in the order that Table 8 (NISTIR 6556 section 3.8) gives.
 
 A line that breaks the language changes nothing: no state, no motion, no event is kept of it.
 """
@@ -73,7 +73,9 @@ class Interpreter:
         self.notes: list[Finding] = []
         self.blocks = 0
         self.line = 0
-        self.state = State(at=start or ZERO, known=0 if start is None else 0b111111)
+        self.state = State(at=start or ZERO)
+        if start is not None:
+            self.gain(0b111111)
         if work_origin is not None:
             first = (*map(float, work_origin), 0.0, 0.0, 0.0)[:6]
             self.state.origins = (first, *(UNKNOWN,) * 8)

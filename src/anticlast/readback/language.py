@@ -1,4 +1,4 @@
-"""The words of RS-274 as NISTIR 6556 lists them: letters, codes, modal groups and the section that rules each.
+"""The words of RS-274 as NISTIR 6556 lists them: letters, codes, modal groups, and their sections.
 
 Source: T. Kramer, F. Proctor, E. Messina, "The NIST RS274NGC Interpreter - Version 3", NISTIR 6556, 17 August
 2000. All section numbers in this folder are that report's. G codes are held times ten, so that 54 is 540 and

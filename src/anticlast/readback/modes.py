@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import copy
 from dataclasses import dataclass, field
 
 MM_PER_INCH = 25.4
@@ -39,6 +38,8 @@ class State:
         1 under M3, -1 under M4, 0 stopped.
     depth, clear, dwell : float or None
         Words of the running canned cycle that stay in force from line to line (3.5.16).
+    repeats : int
+        Repeats of canned cycles beyond the first of each line, so far.
     stated : frozenset of str
         Modal groups that the program has stated.
     told : frozenset of str
@@ -68,6 +69,7 @@ class State:
     depth: float | None = None
     clear: float | None = None
     dwell: float | None = None
+    repeats: int = 0
     ended: bool = False
     moved: bool = False
     stated: frozenset[str] = field(default_factory=frozenset)
@@ -85,4 +87,10 @@ class State:
 
     def snapshot(self) -> State:
         """Return a copy; every field is immutable, so a shallow one does."""
-        return copy.copy(self)
+        twin = State()
+        for name in _FIELDS:
+            setattr(twin, name, getattr(self, name))
+        return twin
+
+
+_FIELDS = tuple(State.__slots__)

@@ -165,9 +165,10 @@ def _cycle(control: Interpreter, code: int, block: Block) -> None:
         clear_mm=clear_mm,
         depth_mm=depth * state.factor + (state.shift[normal] if state.absolute else clear_mm),
         dwell_s=dwell or 0.0,
-        repeats=cycles.repeats_of(words.get("l")),
+        repeats=cycles.repeats_of(words.get("l"), state.repeats),
         retract_to_r=state.retract_to_r,
     )
+    state.repeats += hole.repeats - 1
     rotary = state.at[3:]
     for what, point, seconds in cycles.steps_of(hole):
         if what == "dwell":

@@ -1,4 +1,4 @@
-"""Reads a program in the language of NISTIR 6556 and says what a control would do, or where it breaks the language.
+"""Reads a program in the language of NISTIR 6556: what a control would do, or where the text is wrong.
 
 Written from that report alone; it shares nothing with the half of the project that plans and posts programs.
 """
@@ -23,7 +23,6 @@ from anticlast.records import Finding, ReadProgram
 
 MOST_ERRORS: Final = 20
 MOST_BYTES: Final = 2**30
-_MOST_MOTIONS: Final = 50_000_000
 _LINE_END: Final = re.compile(rb"\r\n|\n|\r")
 _PERCENT_LINE: Final = re.compile(rb"(?:^|(?<=[\r\n]))[ \t]*%[ \t]*(?=[\r\n]|$)")
 _COMMENT_ONLY: Final = re.compile(r"\([^()]*\)")
@@ -231,11 +230,8 @@ class _Reading:
             return
         try:
             self.control.execute(self.line, text, self.block_delete)
-            if self.control.columns.rows > _MOST_MOTIONS:
-                raise LanguageError("program", f"refused: more than {_MOST_MOTIONS} motions", "3.1")
         except LanguageError as error:
             self._error(str(error))
-            self.gave_up = self.gave_up or self.control.columns.rows > _MOST_MOTIONS
 
     def _error(self, message: str) -> None:
         control = self.control

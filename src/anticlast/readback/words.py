@@ -1,4 +1,4 @@
-"""One line of text to its words (NISTIR 6556 section 3.3): block delete, line number, words, settings, comments."""
+"""One line of text to its items (NISTIR 6556 section 3.3): number, words, settings, comments."""
 
 from __future__ import annotations
 
@@ -63,7 +63,7 @@ def shown(character: str) -> str:
 
 
 def _squeeze(text: str) -> tuple[str, str | None]:
-    """Take comments and blanks out of a line; return what is left, in lower case, and the last comment's text."""
+    """Take comments and blanks out of a line; return the rest in lower case, and the last comment."""
     if len(text) > MAX_LINE:
         raise LanguageError("line", f"is longer than {MAX_LINE} characters", "3.3")
     comment = None

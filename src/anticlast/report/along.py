@@ -1,8 +1,8 @@
 """What happens along the program: one row a piece of motion, with the quantities that a machinist asks about.
 
-The rows are what the control will do, as read back from the program text. Only what the text does not say (the purpose of a
-move, the pass it belongs to) is taken from the plan, matched block by block. Without a program the planned path itself is
-shown, and the quantities that need a program stay empty.
+The rows are what the control will do, as read back from the program text. Only what the text does not say
+(the purpose of a move, the pass it belongs to) is taken from the plan, matched block by block. Without a
+program the planned path itself is shown, and the quantities that need a program stay empty.
 """
 
 from __future__ import annotations
@@ -32,9 +32,11 @@ from anticlast.tolerances import LIMIT_MM
 
 UNKNOWN = 255  # purpose of a feed move that the plan does not hold
 LOOK_AHEAD = 12  # planned blocks that may be missing from the text in a row (no word changed)
-SAME_WORD = (
-    10 * LIMIT_MM
-)  # mm or degrees; a word read back is off its plan by half a posted digit at most, inch included
+# mm or degrees; a word read back is off its plan by half a posted digit at most, inch included
+SAME_WORD = 10 * LIMIT_MM
+MOST_ROUNDS = 30
+# mm; change of the contact in the last round, far below what a picture or a feed shows
+SETTLED_MM = 1e-4
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,7 +48,8 @@ class Along:
     letters : tuple of str
         Axis letters of ``words``; empty when there is no program.
     tip_mm, axis, contact_mm : (n, 3)
-        Pose of the cutter, and its contact on the finished surface (nan where it does not cut), part coordinates.
+        Pose of the cutter, and its contact on the finished surface (nan where it does not cut), part
+        coordinates.
     words : (n, k)
         Program words at the end of the block that the row is part of: mm and degrees.
     line : (n,) int64
@@ -59,8 +62,8 @@ class Along:
     clock_s : (n,)
         Time since the start.
     asked_mm_min, reached_mm_min : (n,)
-        Feed that F asks for and mean feed that the machine reaches over the block: of the cutter contact where it cuts,
-        else of the reference point. nan on rapids.
+        Feed that F asks for and mean feed that the machine reaches over the block: of the cutter contact
+        where it cuts, else of the reference point. nan on rapids.
     tilt_rad : (n,)
         Angle between cutter axis and surface normal; nan where it does not cut.
     rotary_deg_min : (n,)
@@ -124,8 +127,8 @@ def match_blocks(ends: Floats, words: Floats) -> Ints:
 def contact(job: Job, cutter: Cutter, tip_mm: Floats, axis: Floats) -> tuple[Floats, Floats]:
     """Contact on the finished surface and the normal there, for a cutter that touches it.
 
-    A ball touches where its centre is nearest to the surface. A bull or flat end mill touches with its corner: the centre of
-    the corner arc lies in the plane of axis and normal, on the low side.
+    A ball touches where its centre is nearest to the surface. A bull or flat end mill touches with its
+    corner: the centre of the corner arc lies in the plane of axis and normal, on the low side.
 
     Parameters
     ----------
@@ -135,8 +138,8 @@ def contact(job: Job, cutter: Cutter, tip_mm: Floats, axis: Floats) -> tuple[Flo
     Returns
     -------
     contact_mm, normal : (n, 3)
-        nan in rows of a bull or flat end mill where the search does not settle: the cutter stands so upright there
-        that its whole bottom is as near.
+        nan in rows of a bull or flat end mill where the search does not settle: the cutter stands so upright
+        there that its whole bottom is as near.
 
     Raises
     ------
@@ -151,7 +154,9 @@ def contact(job: Job, cutter: Cutter, tip_mm: Floats, axis: Floats) -> tuple[Flo
     if cutter.shape == "ball":
         return saddle.point(foot), saddle.normal(foot)
     settled = np.zeros(len(foot), bool)
-    for _ in range(MOST_ROUNDS):  # each round leaves about (corner circle radius) * curvature / sin(tilt) of the error
+    for _ in range(
+        MOST_ROUNDS
+    ):  # each round leaves about (corner circle radius) * curvature / sin(tilt) of the error
         normal = saddle.normal(foot)
         low = axis * np.sum(axis * normal, axis=1, keepdims=True) - normal
         size = np.linalg.norm(low, axis=1, keepdims=True)
@@ -169,7 +174,7 @@ def contact(job: Job, cutter: Cutter, tip_mm: Floats, axis: Floats) -> tuple[Flo
 
 
 def along(made: Made) -> Along | None:
-    """Return the rows of a job's program, or of its plan when there is no program; None when there is neither."""
+    """Return the rows of a job's program, else of its plan; None when there is neither."""
     if made.program is not None and made.part_motion is not None and len(made.part_motion.line) > 1:
         return _of_program(made, made.program, made.part_motion)
     if made.cutter_paths:
@@ -222,7 +227,9 @@ def _touch(made: Made, motion: PartMotion, finishing: Bools) -> tuple[Floats, Fl
             continue
         lost = int(np.isnan(touched[rows, 0]).sum())
         if lost:
-            notes.append(f"T{cutter.number}: no single contact at {lost} of {len(rows)} points; nothing is shown there.")
+            notes.append(
+                f"T{cutter.number}: no single contact at {lost} of {len(rows)} points, so none is shown."
+            )
     return touched, normals, tuple(notes)
 
 
@@ -285,7 +292,7 @@ def _angle(one: Floats, two: Floats) -> Floats:
 
 
 def _seconds(times: MotionTimes | None, program: ReadProgram) -> tuple[Floats, Floats]:
-    """Time of each motion as estimated and as F asks; without an estimate both are what F asks, rapids nothing."""
+    """Time of each motion as estimated and as F asks; without an estimate what F asks, rapids nothing."""
     asked = np.nan_to_num(program.motions.seconds)
     if times is None:
         return asked, asked

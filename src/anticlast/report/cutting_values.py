@@ -37,7 +37,7 @@ class CuttingValues:
 
 
 def depth_of_cut_mm(job: Job, operation: Operation) -> float:
-    """Stock that an operation finds on the surface less what it leaves; nan when nothing before left an even allowance."""
+    """Stock found on the surface less what is left; nan when nothing before left an even allowance."""
     found = math.nan if job.stock.allowance_mm is None else job.stock.allowance_mm
     for before in job.operations:
         if before.index >= operation.index:
@@ -47,7 +47,7 @@ def depth_of_cut_mm(job: Job, operation: Operation) -> float:
 
 
 def tilt_range_rad(job: Job, operation: Operation, path: CutterPath | None) -> tuple[float, float]:
-    """Smallest and largest angle between cutter axis and surface normal where the operation cuts; as asked without a path."""
+    """Smallest and largest angle of the cutter axis to the normal where it cuts; as asked without a path."""
     if path is not None:
         cosines = [
             np.sum(stretch.axis * stretch.normal, axis=1)[stretch.purpose == Purpose.CUT]
@@ -66,9 +66,10 @@ def tilt_range_rad(job: Job, operation: Operation, path: CutterPath | None) -> t
 def cutting_values(job: Job, operation: Operation, path: CutterPath | None) -> CuttingValues:
     """Work out speed and chip at the effective diameter.
 
-    A ball cuts on D_e = D sin(tilt + acos(1 - 2 ap / D)) at most (``Cutter.effective_diameter_mm``); makers' tables multiply
-    the feed by D / D_e to keep the chip (Dapra, Ball nose feed and speed compensation, table 2), so an uncompensated feed per
-    tooth leaves a chip of D_e / D of it. Without an even allowance the full diameter is taken.
+    A ball cuts on D_e = D sin(tilt + acos(1 - 2 ap / D)) at most (``Cutter.effective_diameter_mm``); makers'
+    tables multiply the feed by D / D_e to keep the chip (Dapra, Ball nose feed and speed compensation, table
+    2), so an uncompensated feed per tooth leaves a chip of D_e / D of it. Without an even allowance the full
+    diameter is taken.
     """
     cutter = operation.cutter
     depth = depth_of_cut_mm(job, operation)

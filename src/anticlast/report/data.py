@@ -1,7 +1,7 @@
-"""What the page's pictures are drawn from, packed small: numbers as base64 typed arrays inside one JSON object.
+"""What the page's pictures are drawn from: numbers as base64 typed arrays inside one JSON object.
 
-Everything that the viewer, the map and the charts show is decided here: which rows of the program are kept, how each quantity
-is scaled into the job's units, and where its scale starts and ends.
+Everything that the viewer, the map and the charts show is decided here: which rows of the program are kept,
+how each quantity is scaled into the job's units, and where its scale starts and ends.
 """
 
 from __future__ import annotations
@@ -29,6 +29,7 @@ AXIS_UNIT = 0.004  # change of the unit axis that counts like PATH_MM (0.23 degr
 SHARE = 0.02  # share of a quantity's range that counts like PATH_MM, before the number of knots forces more
 MOST_SHARE = 0.16  # beyond this the path gives way as well
 HEIGHT_STEP_MM = 1e-5  # one step of the map's int16 heights
+FLAT = 1e-5  # share of a value below which its changes are round-off
 MESH_PARTS = 64  # edges of the drawn surface along its longer side
 SHAPED_BY = ("reached", "tilt", "rotary")  # quantities whose course along the program the kept rows follow
 PURPOSES = {
@@ -42,7 +43,7 @@ PURPOSES = {
 
 
 def packed(values: np.ndarray) -> dict[str, str]:
-    """Return an array as its little-endian type name and base64 bytes; ``unpacked`` in the page's script undoes it."""
+    """Return an array as its little-endian type name and base64 bytes; ``page.unpacked`` undoes it."""
     array = np.ascontiguousarray(values)
     array = array.astype(array.dtype.newbyteorder("<"), copy=False)
     kind = {"f": "f", "i": "i", "u": "u"}[array.dtype.kind] + str(array.dtype.itemsize)
@@ -50,7 +51,7 @@ def packed(values: np.ndarray) -> dict[str, str]:
 
 
 def cutter_profile(cutter: Cutter) -> list[dict[str, Any]]:
-    """Half outlines (radius, height above the tip) of cutting end, shank and holder, to be turned about the axis, in mm."""
+    """Half outlines [radius, height above the tip], mm, of cutting end, shank and holder."""
     corner, radius = cutter.corner_radius_mm, cutter.radius_mm
     turn = np.linspace(-math.pi / 2, 0.0, 13) if corner > 0 else np.zeros(1)
     arc = np.column_stack((radius - corner + corner * np.cos(turn), corner + corner * np.sin(turn)))
@@ -92,7 +93,7 @@ def surface_mesh(job: Job) -> dict[str, Any]:
 
 
 def kept_rows(rows: Along, quantities: list[Floats], findings: tuple[Finding, ...]) -> tuple[Ints, float]:
-    """Rows of the program that are drawn: changes of kind, lines that a finding names, and as many as the picture needs.
+    """Choose the rows that are drawn: changes of kind, lines that findings name, and what the picture needs.
 
     Returns
     -------
@@ -138,13 +139,18 @@ def _even(values: Floats) -> Floats:
 
 
 def _span(values: Floats, *, from_zero: bool = False) -> list[float]:
-    """Ends of a colour scale: the 0.5 and 99.5 per cent points, so that one odd block does not flatten the rest."""
+    """Ends of a colour scale: 0.5 and 99.5 per cent points, so that one odd block does not hide the rest."""
     finite = values[np.isfinite(values)]
     if not finite.size:
         return [0.0, 1.0]
     low, high = (float(edge) for edge in np.percentile(finite, (0.5, 99.5)))
     low = 0.0 if from_zero else low
-    return [low, high if high > low else low + (abs(low) * 0.01 or 1.0)]
+    if high - low <= FLAT * max(
+        abs(low), abs(high)
+    ):  # one and the same value everywhere: give the scale some width
+        width = 0.01 * abs(high) or 1.0
+        return [low - (0.0 if from_zero else width), high + width]
+    return [low, high]
 
 
 def _quantity(key: str, title: str, unit: str, digits: int, values: Floats, **more: Any) -> dict[str, Any]:
@@ -160,8 +166,8 @@ def _quantity(key: str, title: str, unit: str, digits: int, values: Floats, **mo
 
 
 def quantities(made: Made, rows: Along, units: Units) -> list[dict[str, Any]]:
-    """Quantities that the passes can be coloured by, each in the unit it is shown in, nan where it does not apply."""
-    feed = f"{units.name}/min"
+    """Quantities to colour the passes by, each in the unit it is shown in, nan where it does not apply."""
+    feed, digits = f"{units.name}/min", 1 if units.inch else 0
     reached = rows.reached_mm_min if np.isfinite(rows.reached_mm_min).any() else rows.asked_mm_min
     stepover = local_stepover(rows.contact_mm, rows.cutting, rows.operation, rows.pass_index)
     scallop_map = made.proof.scallop_map if made.proof else None
@@ -175,9 +181,9 @@ def quantities(made: Made, rows: Along, units: Units) -> list[dict[str, Any]]:
     on_part = np.where(cutting, reached, np.nan)
     passes = np.where(rows.pass_index >= 0, rows.pass_index + 1.0, np.nan)
     return [
-        _quantity("reached", "contact feed reached", feed, 1 if units.inch else 0, reached * units.scale,
+        _quantity("reached", "contact feed reached", feed, digits, reached * units.scale,
                   span=_span(on_part * units.scale, from_zero=True)),
-        _quantity("asked", "contact feed asked", feed, 1 if units.inch else 0, rows.asked_mm_min * units.scale,
+        _quantity("asked", "contact feed asked", feed, digits, rows.asked_mm_min * units.scale,
                   span=_span(np.where(cutting, rows.asked_mm_min, np.nan) * units.scale, from_zero=True)),
         _quantity("tilt", "tilt of the axis from the surface normal", "°", 2, np.degrees(rows.tilt_rad)),
         _quantity("rotary", "rotary speed", "rev/min", 2, rows.rotary_deg_min / 360.0,
@@ -230,15 +236,20 @@ def _decimals(job: Job, letter: str) -> int:
 
 
 def scallop_limit_mm(made: Made) -> float | None:
-    """Scallop limit of the operation that leaves the surface; None when the job sets a stepover instead."""
+    """Lowest scallop limit of the finishing operations; None when the job sets stepovers only."""
     limits = [
         op.scallop_mm for op in made.job.operations if op.does == "finish" and op.scallop_mm is not None
     ]
-    return limits[-1] if limits else None
+    return min(limits) if limits else None
+
+
+def wanted_height_mm(made: Made) -> float:
+    """Height over the finished surface that the last operation is to leave; scallops count from there."""
+    return made.job.operations[-1].allowance_mm if made.job.operations else 0.0
 
 
 def gouge_limit_mm(made: Made) -> float:
-    """Depth below the surface that counts as a gouge: the limit of the gouge check, else what the proof can measure."""
+    """Depth that counts as a gouge: the limit of the gouge check, else what the proof can measure."""
     limits = [
         f.limit
         for f in made.findings
@@ -248,7 +259,7 @@ def gouge_limit_mm(made: Made) -> float:
 
 
 def map_data(made: Made) -> dict[str, Any] | None:
-    """The scallop map, made coarse by keeping the highest and lowest height of each block of cells; None without a map."""
+    """The scallop map, coarse: highest and lowest height of each block of cells; None without a map."""
     scallop = made.proof.scallop_map if made.proof else None
     if made.proof is None or scallop is None or not np.isfinite(scallop.height_mm).any():
         return None
@@ -261,9 +272,10 @@ def map_data(made: Made) -> dict[str, Any] | None:
         "ny": len(y),
         "x0": float(x[0]),
         "y0": float(y[0]),
-        "dx": float((x[-1] - x[0]) / max(len(x) - 1, 1)) or made.proof.grid_mm,
-        "dy": float((y[-1] - y[0]) / max(len(y) - 1, 1)) or made.proof.grid_mm,
+        "dx": float(x[1] - x[0]) if len(x) > 1 else made.proof.grid_mm,
+        "dy": float(y[1] - y[0]) if len(y) > 1 else made.proof.grid_mm,
         "step": step,
+        "wanted": wanted_height_mm(made),
         "high": packed(high_codes[0]),
         "low": packed(high_codes[1]),
         "limit": limit,

@@ -1,4 +1,4 @@
-"""Line drawings that need no script: the passes in plan, and the set-up from the front. For print, and where WebGL is missing."""
+"""Line drawings that need no script, for print and where WebGL is missing: passes in plan, set-up."""
 
 from __future__ import annotations
 
@@ -41,8 +41,10 @@ class _Sheet:
         """Mark of program zero with the directions of its two axes."""
         x, y = self.place(np.zeros((1, 2)))[0]
         return (
-            f'<g class="zero"><circle cx="{x:.1f}" cy="{y:.1f}" r="6"/><path d="M{x:.1f} {y:.1f}h46m-7 -4l7 4l-7 4"/>'
-            f'<path d="M{x:.1f} {y:.1f}v-46m-4 7l4 -7l4 7"/><text x="{x + 50:.1f}" y="{y + 5:.1f}">{across}</text>'
+            f'<g class="zero"><circle cx="{x:.1f}" cy="{y:.1f}" r="6"/>'
+            f'<path d="M{x:.1f} {y:.1f}h46m-7 -4l7 4l-7 4"/>'
+            f'<path d="M{x:.1f} {y:.1f}v-46m-4 7l4 -7l4 7"/>'
+            f'<text x="{x + 50:.1f}" y="{y + 5:.1f}">{across}</text>'
             f'<text x="{x - 5:.1f}" y="{y - 52:.1f}">{up}</text></g>'
         )
 
@@ -59,7 +61,8 @@ class _Sheet:
     def wrap(self, title: str, parts: list[str]) -> str:
         body = "".join(parts)
         return (
-            f'<svg class="drawing" viewBox="0 0 {WIDTH:.0f} {self.height:.0f}" role="img" aria-label="{text(title)}">'
+            f'<svg class="drawing" viewBox="0 0 {WIDTH:.0f} {self.height:.0f}" role="img"'
+            f' aria-label="{text(title)}">'
             f"<title>{text(title)}</title>{body}</svg>"
         )
 
@@ -115,7 +118,7 @@ def _passes(sheet: _Sheet, rows: Along) -> list[str]:
 
 
 def front_drawing(job: Job, units: Units) -> str:
-    """Set-up seen from the front (X to the right, Z up): blank, finished surface, program zero, clearance plane."""
+    """Set-up seen from the front (X to the right, Z up): blank, surface, program zero, clearance plane."""
     x0, _, x1, _ = job.stock.outline.bounds
     a0, _, a1, _ = job.part.outline.bounds
     low, high = min(x0, a0), max(x1, a1)
@@ -132,7 +135,8 @@ def front_drawing(job: Job, units: Units) -> str:
     for z, name in levels:
         spot = sheet.place(np.array([[low, z]]))[0]
         parts.append(
-            f'<text x="{spot[0] + 4:.1f}" y="{spot[1] - 5:.1f}">{name} Z {text(units.length(z, bare=True))}</text>'
+            f'<text x="{spot[0] + 4:.1f}" y="{spot[1] - 5:.1f}">'
+            f"{name} Z {text(units.length(z, bare=True))}</text>"
         )
     parts.append(sheet.zero("X", "Z"))
     return sheet.wrap(

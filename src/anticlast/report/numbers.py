@@ -18,6 +18,12 @@ def text(value: object) -> str:
     return escape(str(value), quote=True)
 
 
+def sentence(said: str) -> str:
+    """Start with a capital and end with a stop; the rest stays as it is."""
+    said = said.strip()
+    return said[:1].upper() + said[1:] + ("" if said.endswith((".", "!", "?")) else ".") if said else ""
+
+
 def plain(value: float, digits: int) -> str:
     """Fixed digits without trailing zeros and without a negative zero; words where there is no number."""
     if math.isnan(value):
@@ -46,7 +52,7 @@ def clock(seconds: float) -> str:
 
 @dataclass(frozen=True, slots=True)
 class Units:
-    """The job's units for print. Every method takes mm (or mm/min) and returns text with its unit unless ``bare``.
+    """The job's units for print: mm or mm/min in, text out, with its unit unless ``bare``.
 
     Attributes
     ----------
@@ -110,8 +116,20 @@ class Units:
         number = plain(value_mm2 * self.scale**2, 4 if self.inch else 2)
         return self._with(number, f"{self.name}²", False)
 
+    def gap(self, value_mm: float) -> str:
+        """A clearance; infinite when nothing is near."""
+        return "nothing near" if math.isinf(value_mm) else self.length(value_mm)
+
+    def found(self, value: float, unit: str, limit: float) -> str:
+        """A finding's worst, beside its limit; infinite when nothing came near."""
+        return "nothing near" if math.isinf(value) else self.checked(value, unit, limit)
+
+    def allowed(self, value: float, unit: str, worst: float) -> str:
+        """A finding's limit, beside its worst; nan when none was set."""
+        return "none set" if math.isnan(value) else self.checked(value, unit, worst)
+
     def checked(self, value: float, unit: str, beside: float) -> str:
-        """A finding's figure: mm turned into the job's units, small ones into um or tenths; other units as they are.
+        """A finding's figure: mm in the job's units, small ones in um or tenths; other units as they are.
 
         Parameters
         ----------
@@ -124,6 +142,10 @@ class Units:
         """
         if unit == "mm2":
             return self.area(value)
+        if unit == "mm/min":
+            return self.feed(value)
+        if not unit and value == beside == 0:
+            return "–"  # a check that is either met or not
         if unit != "mm":
             return self._with(plain(value, 3), unit, not unit)
         sizes = [abs(size) for size in (value, beside) if math.isfinite(size)]

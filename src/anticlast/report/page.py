@@ -1,7 +1,7 @@
-"""One self-contained page for the machinist: everything in one file, no script, picture or font from elsewhere.
+"""One self-contained page for the machinist: everything in one file, nothing from elsewhere.
 
-The same result always gives the same bytes: the page holds no date, no path and nothing random. A content policy inside the
-page forbids it every request.
+The same result always gives the same bytes: the page holds no date, no path and nothing random. A content
+policy inside the page forbids it every request.
 """
 
 from __future__ import annotations
@@ -30,7 +30,7 @@ def template(name: str) -> str:
 
 
 def filled(form: str, values: dict[str, str]) -> str:
-    """Put values into ``{{name}}`` places, each once and in one go, so that no value is searched for places itself.
+    """Put values into ``{{name}}`` places, all in one go, so that no value is searched for places itself.
 
     Raises
     ------
@@ -41,7 +41,7 @@ def filled(form: str, values: dict[str, str]) -> str:
 
 
 def as_json(data: object) -> str:
-    """JSON that may stand inside a script element: no ``<``, so no element can be closed or opened from inside."""
+    """JSON that may stand inside a script element: without ``<`` no element can be closed from inside."""
     return json.dumps(data, separators=(",", ":"), allow_nan=False).replace("<", "\\u003c")
 
 
@@ -56,7 +56,8 @@ def page_text(made: Made) -> str:
     Returns
     -------
     str
-        HTML, the same for the same input. Without three.js in the installed trimesh the page shows plan views only and says so.
+        HTML, the same for the same input. Without three.js in the installed trimesh the page shows plan views
+        only and says so.
     """
     units = Units(made.job.units == "inch")
     rows = along(made)

@@ -49,7 +49,8 @@ _LOOK: dict[str, Any] = {
     "figure.facecolor": PAPER,
     "savefig.facecolor": PAPER,
     "hatch.linewidth": 0.5,
-    # Text stays text in SVG: smaller, and it can be searched and read out. A fixed salt keeps its ids the same.
+    # Text stays text in SVG: smaller, and it can be searched and read out. A fixed salt keeps its ids the
+    # same.
     "svg.fonttype": "none",
     "svg.hashsalt": "anticlast",
 }

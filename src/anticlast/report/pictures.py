@@ -1,6 +1,7 @@
 """Pictures on paper and screen: stepover against scallop over the part, and the set-up (``picture_setup``).
 
-Figures are made without pyplot, so nothing is kept between pictures. matplotlib is imported when a picture is drawn.
+Figures are made without pyplot, so nothing is kept between pictures. matplotlib is imported when a picture
+is drawn.
 """
 
 from __future__ import annotations
@@ -27,14 +28,15 @@ _CELLS = 72  # of the map along the longer side; a smooth function needs no more
 _BANDS = 9
 _NOTHING_VARIES = 1e-6  # of the value itself: beyond what the iterations behind it settle
 _CURVE_POINTS = 25
+_DRAWN_POINTS = 600
 
 
 def scallop_picture(job: Job, answer: ScallopAnswer, path: Path) -> None:
     """Draw what ``scallop`` answered: a plan map of what varies, and the curves at its two extremes.
 
-    The map shows the stepover at the scallop asked for, or the scallop at the stepover asked for, with the feed
-    direction, a scale bar and the tightest and widest place. Beside it, scallop against stepover at both places and
-    on a flat. Lengths are in the job's units.
+    The map shows the stepover at the scallop asked for, or the scallop at the stepover asked for, with the
+    feed direction, a scale bar and the tightest and widest place. Beside it, scallop against stepover at
+    both places and on a flat. Lengths are in the job's units.
 
     Parameters
     ----------
@@ -74,11 +76,14 @@ def _heading(figure: Any, job: Job, answer: ScallopAnswer, units: Units) -> None
     )
     allowance = f", allowance {units.length(answer.allowance_mm)}" if answer.allowance_mm else ""
     figure.text(
-        0.03, 0.915,
+        0.03,
+        0.915,
         f"T{answer.cutter}, ball diameter {units.length(2 * answer.radius_mm)}; {asked}; "
         f"feed {math.degrees(answer.direction_rad):.4g}° from part X{allowance}",
-        size=9.5, color=sheet.QUIET, va="center",
-    )  # fmt: skip
+        size=9.5,
+        color=sheet.QUIET,
+        va="center",
+    )
 
 
 # ------------------------------------------------------------------------------------ the map
@@ -146,13 +151,14 @@ def _bands(axes: Any, below: Any, shown: tuple[Floats, Floats, Any, Floats], ask
     if high - low <= _NOTHING_VARIES * high:
         levels = 0.5 * (low + high) * np.array([0.99, 1.01])
     else:
-        levels = MaxNLocator(_BANDS, steps=[1, 2, 2.5, 5, 10]).tick_values(low, high)
+        levels = np.asarray(MaxNLocator(_BANDS, steps=[1, 2, 2.5, 5, 10]).tick_values(low, high))
     filled = axes.tricontourf(x, y, faces, values, levels=levels, cmap="cividis")
     inner = levels[(levels > low) & (levels < high)]
     if inner.size:
         axes.tricontour(x, y, faces, values, levels=inner, colors=sheet.INK, linewidths=0.4, alpha=0.55)
     bar = axes.figure.colorbar(filled, cax=below, orientation="horizontal")
-    digits = next(d for d in range(12) if np.allclose(np.round(levels, d), levels, rtol=0, atol=1e-3 * 10.0**-d))
+    near = 1e-3 * (levels[1] - levels[0])
+    digits = next(count for count in range(15) if np.abs(np.round(levels, count) - levels).max() <= near)
     every = 1 if digits <= 4 and len(levels) < 8 else 2
     bar.set_ticks(levels[::every], labels=[f"{level:.{digits}f}" for level in levels[::every]])
     name = "stepover" if asked == "scallop" else "scallop"
@@ -163,9 +169,18 @@ def _bands(axes: Any, below: Any, shown: tuple[Floats, Floats, Any, Floats], ask
 def _feed_arrow(axes: Any, x: float, y: float, reach: float, direction_rad: float) -> None:
     dx, dy = reach * math.cos(direction_rad), reach * math.sin(direction_rad)
     axes.annotate(
-        "", (x + dx, y + dy), (x - dx, y - dy),
-        arrowprops={"arrowstyle": "-|>", "color": sheet.INK, "lw": 1.6, "mutation_scale": 13, "shrinkA": 0, "shrinkB": 0},
-    )  # fmt: skip
+        "",
+        (x + dx, y + dy),
+        (x - dx, y - dy),
+        arrowprops={
+            "arrowstyle": "-|>",
+            "color": sheet.INK,
+            "lw": 1.6,
+            "mutation_scale": 13,
+            "shrinkA": 0,
+            "shrinkB": 0,
+        },
+    )
     axes.text(x - 1.3 * reach, y, "feed", ha="right", va="center", size=8.5)
 
 
@@ -190,9 +205,18 @@ def _places(axes: Any, answer: ScallopAnswer, units: Units, middle_x: float, mid
             up = not up
         placed.append((x, y))
         axes.annotate(
-            name, (x, y), (9 if right else -9, 9 if up else -9), textcoords="offset points", size=9, weight="bold",
-            color=colour, ha="left" if right else "right", va="bottom" if up else "top", path_effects=halo, zorder=6,
-        )  # fmt: skip
+            name,
+            (x, y),
+            (9 if right else -9, 9 if up else -9),
+            textcoords="offset points",
+            size=9,
+            weight="bold",
+            color=colour,
+            ha="left" if right else "right",
+            va="bottom" if up else "top",
+            path_effects=halo,
+            zorder=6,
+        )
 
 
 # ------------------------------------------------------------------------------------ the curves
@@ -202,14 +226,14 @@ def _curves(axes: Any, job: Job, answer: ScallopAnswer, units: Units) -> None:
     """Scallop against stepover at the tightest and widest place and on a flat, with what was asked marked."""
     saddle, scale = Saddle.of(job.part), units.scale
     widest = 1.3 * max(answer.stepover_mm[2], answer.flat_stepover_mm)
-    steps = np.linspace(0.0, min(widest, 2.0 * answer.radius_mm), _CURVE_POINTS)
+    steps = np.linspace(0.0, min(widest, 2.0 * answer.radius_mm), _DRAWN_POINTS)
     flat = np.array([steps, [flat_height(answer.radius_mm, float(step)) for step in steps]])
     curves = [
         ("tightest place", _curve(saddle, answer, answer.tightest_at_mm, widest), sheet.TIGHT, "-"),
         ("widest place", _curve(saddle, answer, answer.widest_at_mm, widest), sheet.WIDE, "-."),
         ("flat rule", flat, sheet.QUIET, "--"),
     ]
-    near = axes.inset_axes((0.15, 0.57, 0.38, 0.38))
+    near = axes.inset_axes((0.18, 0.57, 0.36, 0.38))
     for panel in (axes, near):
         for name, curve, colour, style in curves:
             panel.plot(curve[0] * scale, curve[1] * scale, style, color=colour, lw=1.6, label=name)
@@ -238,18 +262,27 @@ def _curve(saddle: Saddle, answer: ScallopAnswer, at_mm: tuple[float, float], wi
     # Scallop goes with the square of the stepover, so a first pair scales to the end of the curve.
     known = 0.5 * (answer.scallop_mm[0] + answer.scallop_mm[2])
     highest = min(known * (widest_mm / step_of(known)) ** 2 * 1.1, 0.5 * answer.radius_mm)
-    heights = highest * np.linspace(0.0, 1.0, _CURVE_POINTS) ** 2
-    return np.array([[0.0, *(step_of(float(height)) for height in heights[1:])], heights])
+    # Stepover over the root of the scallop hardly changes, so few exact points make a fine curve.
+    roots = math.sqrt(highest) * np.linspace(0.0, 1.0, _CURVE_POINTS)[1:]
+    ratios = [step_of(float(root * root)) / root for root in roots]
+    drawn = np.linspace(0.0, roots[-1], _DRAWN_POINTS)
+    return np.array([np.interp(drawn, roots, ratios) * drawn, drawn * drawn])
 
 
 def _near(axes: Any, near: Any, answer: ScallopAnswer, scale: float) -> None:
-    """Set the window of the small panel to where the three curves meet what was asked for, so that they part."""
+    """Set the window of the small panel to where the curves meet what was asked for, so that they part."""
     from matplotlib.ticker import MaxNLocator
 
-    spots = np.array([
-        (answer.stepover_mm[0], answer.scallop_mm[2]), (answer.stepover_mm[2], answer.scallop_mm[0]),
-        (answer.flat_stepover_mm, answer.flat_scallop_mm),
-    ]) * scale  # fmt: skip
+    spots = (
+        np.array(
+            [
+                (answer.stepover_mm[0], answer.scallop_mm[2]),
+                (answer.stepover_mm[2], answer.scallop_mm[0]),
+                (answer.flat_stepover_mm, answer.flat_scallop_mm),
+            ]
+        )
+        * scale
+    )
     low, high = spots.min(axis=0), spots.max(axis=0)
     middle = 0.5 * (low + high)
     # Scallop goes with the square of the stepover: half the relative spread in one is the whole in the other.
@@ -301,8 +334,12 @@ def _table(axes: Any, answer: ScallopAnswer, units: Units) -> None:
         axes.text(1.0, y, f"{h * units.scale:.{digits + 1}f}", ha="right", va="center", size=9)
     low, high = (f"{value * units.scale:.{digits + 1}f}" for value in answer.flat_leaves_mm)
     axes.text(
-        0.0, 0.15,
+        0.0,
+        0.15,
         f"The flat rule's stepover leaves {low} to {high} {units.name} here.\n"
         f"Roughness across the feed, at worst: Ra {answer.ra_um:.2f} µm, Rz {answer.rz_um:.2f} µm",
-        va="center", size=8.5, color=sheet.INK, linespacing=1.5,
-    )  # fmt: skip
+        va="center",
+        size=8.5,
+        color=sheet.INK,
+        linespacing=1.5,
+    )

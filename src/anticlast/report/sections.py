@@ -1,4 +1,4 @@
-"""The page's words and tables: head, what is cut with what, checks, set-up. HTML text, everything from outside escaped."""
+"""The page's words and tables as HTML text; everything from outside is escaped."""
 
 from __future__ import annotations
 
@@ -10,18 +10,23 @@ import numpy as np
 from anticlast.cutter import Cutter
 from anticlast.records import CutterPath, Finding, Made, Operation, OperationResult, Shape
 from anticlast.report.cutting_values import cutting_values
-from anticlast.report.numbers import NOT_MEASURED, Units, clock, plain, text
+from anticlast.report.data import scallop_limit_mm, wanted_height_mm
+from anticlast.report.numbers import NOT_MEASURED, Units, clock, plain, sentence, text
 
 SHAPES = {"ball": "ball end", "bull": "bull nose", "flat": "flat end"}
 PROVE_OUT = (
-    "Read the machine's own manual and the rules of your shop first; they come before this page. Trained people only.",
-    "Set the blank and clamps as drawn. Check that nothing stands in the way of the holder or of a turning table.",
-    "Set the work offset (G54) on program zero, and a length offset for every cutter from the table above. Check both twice.",
-    "Check that each cutter has the diameter, stickout and holder of the table: the proof holds for these only.",
-    "Prove out above the part: raise G54 in Z until the whole program runs in the air, single block, rapid override low, "
-    "a hand on feed hold.",
-    "Lower G54 to its true place and take the first pass of each operation in single block, watching distance to go.",
-    "Eye and hearing protection on. Keep clear of chips, dust and everything that turns; let nobody reach in while it moves.",
+    "Read the machine's own manual and the rules of your shop first; they come before this page. "
+    "Trained people only.",
+    "Set the blank and clamps as drawn. Check that nothing stands in the way of holder or turning table.",
+    "Set the work offset (G54) on program zero, and a length offset for every cutter from the table above. "
+    "Check both twice.",
+    "Check each cutter's diameter, stickout and holder against the table: the proof holds for these only.",
+    "Prove out above the part: raise G54 in Z until the whole program runs in the air, single block, "
+    "rapid override low, a hand on feed hold.",
+    "Lower G54 to its true place and take the first pass of each operation in single block, "
+    "watching distance to go.",
+    "Eye and hearing protection on. Keep clear of chips, dust and everything that turns; "
+    "let nobody reach in while it moves.",
     "Measure after the first part before you cut the next.",
 )
 
@@ -45,6 +50,14 @@ def _rows(pairs: Iterable[tuple[str, list[str]]]) -> str:
     )
 
 
+def _side(name: str, heads: str, pairs: Iterable[tuple[str, list[str]]]) -> str:
+    """A table with a quantity a row and a thing a column."""
+    return (
+        f'<table class="side"><thead><tr><th scope="col">{name}</th>{heads}</tr></thead>'
+        f"<tbody>{_rows(pairs)}</tbody></table>"
+    )
+
+
 def _range(low: str, high: str, unit: str = "") -> str:
     """Two figures without units as a range, or one if they print alike."""
     if NOT_MEASURED in (low, high):
@@ -60,14 +73,13 @@ def head(made: Made, units: Units) -> str:
     """Job, verdict, program, machine, and the figures looked for first."""
     machine = made.job.machine
     if made.released:
-        stamp = '<p class="stamp released"><span aria-hidden="true">✓</span><strong>RELEASED</strong> every check passed</p>'
+        warnings = sum(not finding.ok for finding in findings_of(made))
+        more = f", {warnings} warning{'s' if warnings != 1 else ''}" if warnings else ""
+        stamp = _stamp("released", "✓", f"every check passed{more}")
     else:
         count = sum(not finding.ok and not finding.warning for finding in findings_of(made))
         failed = f"{count} check{'s' if count != 1 else ''} failed" if count else "not proven"
-        stamp = (
-            f'<p class="stamp withheld"><span aria-hidden="true">✗</span><strong>WITHHELD</strong> {failed}: there is no '
-            "program to run</p>"
-        )
+        stamp = _stamp("withheld", "✗", f"{failed}: there is no program to run")
     if made.program_text is not None:
         program = (
             f"{text(made.program_text.name)}, SHA-256 <code title='{text(made.program_sha256)}'>"
@@ -76,19 +88,24 @@ def head(made: Made, units: Units) -> str:
     else:
         program = "none written"
     blocks = f", {made.program.blocks} blocks" if made.program and made.released else ""
-    unit = (
-        "inch (G20), small heights in tenths: 1 tenth = 0.0001 in"
-        if units.inch
-        else "mm (G21), small heights in µm"
-    )
+    unit = "inch (G20), small heights in tenths: 1 tenth = 0.0001 in" if units.inch else "mm (G21)"
+    if machine.rotary:
+        unit += "; rotary words in degrees"
     facts = (
         f"<dt>Program</dt><dd>{program}{blocks}</dd>"
         f"<dt>Machine</dt><dd>{text(machine.title)} <span class='quiet'>({text(machine.name)})</span></dd>"
-        f"<dt>Units</dt><dd>{unit}; rotary words in degrees</dd>"
+        f"<dt>Units</dt><dd>{unit}</dd>"
     )
     return (
         f'<div class="who"><p class="kind">Saddle finishing, shop sheet</p><h1>{text(made.job.name)}</h1>'
         f"<dl>{facts}</dl></div>{stamp}{_key_figures(made, units)}{_to_change(made)}"
+    )
+
+
+def _stamp(state: str, sign: str, words: str) -> str:
+    return (
+        f'<p class="stamp {state}"><span aria-hidden="true">{sign}</span><strong>{state.upper()}</strong>'
+        f" {words}</p>"
     )
 
 
@@ -103,14 +120,12 @@ def _key_figures(made: Made, units: Units) -> str:
             ("rapid", clock(moving), "G0 moves"),
         ]
     if made.proof is not None:
-        limits = [
-            op.scallop_mm for op in made.job.operations if op.does == "finish" and op.scallop_mm is not None
-        ]
-        asked = f"limit {units.small(limits[-1])}" if limits else "no limit set"
+        limit = scallop_limit_mm(made)
+        asked = "no limit set" if limit is None else f"limit {units.small(limit)}"
         figures += [
             ("highest scallop", units.small(made.proof.scallop_max_mm), asked),
             ("deepest gouge", units.small(made.proof.gouge_max_mm), "below the surface"),
-            ("holder keeps off by", units.length(made.proof.holder_clearance_mm), "nearest to the stock"),
+            ("holder keeps off by", units.gap(made.proof.holder_clearance_mm), "from the finished surface"),
         ]
     if not figures:
         return ""
@@ -125,7 +140,7 @@ def _to_change(made: Made) -> str:
     if made.released:
         return ""
     failed = [finding for finding in findings_of(made) if not finding.ok and not finding.warning]
-    said = list(dict.fromkeys([*made.advice, *(f.message for f in failed)]))
+    said = list(dict.fromkeys(map(sentence, [*made.advice, *(f.message for f in failed)])))
     if not said:
         said = ["The program was not proven. Run the job again and read what it says."]
     items = "".join(f"<li>{text(line)}</li>" for line in said)
@@ -169,7 +184,7 @@ def cutters(made: Made, units: Units) -> str:
         ("feed at the contact", [each((op.feed_mm_min for op in ops), "feed") for ops in used]),
     ]
     heads = "".join(f'<th scope="col">T{cutter.number}</th>' for cutter in columns)
-    return f'<table class="side"><thead><tr><th scope="col">Cutter</th>{heads}</tr></thead><tbody>{_rows(pairs)}</tbody></table>'
+    return _side("Cutter", heads, pairs)
 
 
 def operations(made: Made, units: Units) -> str:
@@ -179,7 +194,7 @@ def operations(made: Made, units: Units) -> str:
     paths = {path.operation.index: path for path in made.cutter_paths}
     finishing = [operation.index for operation in jobs if operation.does == "finish"]
     last = finishing[-1] if finishing else -1
-    asked = [_asked(operation, units) for operation in jobs]
+    asked = [_asked(made, operation, units) for operation in jobs]
     found = [
         _found(made, operation, results.get(operation.index), operation.index == last, units)
         for operation in jobs
@@ -189,20 +204,23 @@ def operations(made: Made, units: Units) -> str:
         (name, [column[name] for column in group]) for group in (asked, found, works) for name in group[0]
     ]
     heads = "".join(f'<th scope="col">{operation.index}: {text(operation.does)}</th>' for operation in jobs)
-    return f'<table class="side"><thead><tr><th scope="col">Operation</th>{heads}</tr></thead><tbody>{_rows(labels)}</tbody></table>'
+    return _side("Operation", heads, labels)
 
 
-def _asked(operation: Operation, units: Units) -> dict[str, str]:
-    axis = "follows the surface"
-    if operation.fixed_axis is not None:
-        axis = "fixed at " + ", ".join(plain(value, 4) for value in operation.fixed_axis)
+def _asked(made: Made, operation: Operation, units: Units) -> dict[str, str]:
     lead, lean = (plain(math.degrees(angle), 2) for angle in (operation.lead_rad, operation.lean_rad))
+    if not made.job.machine.rotary:
+        axis = "upright: the machine has no rotary axis"
+    elif operation.fixed_axis is not None:
+        axis = "fixed at " + ", ".join(plain(value, 4) for value in operation.fixed_axis)
+    else:
+        axis = f"follows the surface; lead {lead}°, lean {lean}°"
     return {
         "cutter": f"T{operation.cutter.number}",
         "pattern": operation.pattern,
         "direction from part X": f"{plain(math.degrees(operation.direction_rad), 2)}°",
         "way": "both ways" if operation.way == "both" else "one way",
-        "cutter axis": f"{axis}; lead {lead}°, lean {lean}°" if operation.fixed_axis is None else axis,
+        "cutter axis": axis,
         "allowance left": units.length(operation.allowance_mm),
     }
 
@@ -266,10 +284,10 @@ def checks(made: Made, units: Units) -> str:
         line = f'<button type="button" class="to-line" data-line="{finding.line}">{finding.line}</button>'
         rows.append(
             f'<tr class="{css}"><td class="mark">{word}</td><th scope="row">{text(finding.check)}</th>'
-            f'<td data-label="worst">{text(units.checked(finding.worst, finding.unit, finding.limit))}</td>'
-            f'<td data-label="limit">{text(units.checked(finding.limit, finding.unit, finding.worst))}</td>'
+            f'<td data-label="worst">{text(units.found(finding.worst, finding.unit, finding.limit))}</td>'
+            f'<td data-label="limit">{text(units.allowed(finding.limit, finding.unit, finding.worst))}</td>'
             f'<td data-label="line">{line if finding.line > 0 else "none"}</td>'
-            f'<td class="said">{text(finding.message)}</td></tr>'
+            f'<td class="said">{text(sentence(finding.message))}</td></tr>'
         )
     heads = "".join(
         f'<th scope="col">{name}</th>' for name in ("", "check", "worst", "limit", "line", "in words")
@@ -316,7 +334,7 @@ def setup(made: Made, units: Units) -> str:
         facts.append(
             (
                 "Gauge lengths",
-                "as in the cutter table: this machine tilts the cutter, so another length needs another program",
+                "as in the cutter table: the cutter tilts, so another length needs another program",
             )
         )
     listed = "".join(f"<dt>{text(name)}</dt><dd>{text(value)}</dd>" for name, value in facts)
@@ -335,6 +353,7 @@ def travel(made: Made, units: Units) -> str:
     if made.proof is None or not made.proof.travel:
         return ""
     limits = {axis.letter: axis for axis in made.job.machine.axes}
+    origin = "where the rotary axes meet" if made.job.machine.rotary else "the machine file's zero"
     rows = []
     for letter, (low, high) in made.proof.travel.items():
         axis = limits.get(letter)
@@ -350,7 +369,7 @@ def travel(made: Made, units: Units) -> str:
     return (
         '<h3>Travel</h3><table class="travel"><thead><tr><th scope="col">axis</th><th scope="col">used</th>'
         f'<th scope="col">has</th></tr></thead><tbody>{_rows(rows)}</tbody></table>'
-        '<p class="quiet">Linear axes: spindle gauge point, counted from where the rotary axes meet.</p>'
+        f'<p class="quiet">Linear axes: spindle gauge point, counted from {origin}.</p>'
     )
 
 
@@ -360,8 +379,10 @@ def bounds_note(made: Made, units: Units) -> str:
     if proof is None:
         return ""
     sure = units.small(proof.scallop_bound_mm) if np.isfinite(proof.scallop_bound_mm) else NOT_MEASURED
+    wanted = wanted_height_mm(made)
+    allowance = f" Heights count from the allowance of {units.length(wanted)} that is left." if wanted else ""
     uncut = f" {units.area(proof.uncut_area_mm2)} is left uncut." if proof.uncut_area_mm2 > 0 else ""
     return (
-        f"Measured on the program as read back, on a grid of {units.length(proof.grid_mm)}; between grid points the scallop "
-        f"is at most {sure}.{uncut}"
+        f"Measured on the program read back, on a grid of {units.length(proof.grid_mm)}; between grid points "
+        f"the scallop is at most {sure}.{allowance}{uncut}"
     )

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from anticlast.records import Bools, Bytes, Floats, Ints, ScallopMap
+from anticlast.records import Bools, Floats, Ints, ScallopMap
 
 MOST_POINTS = 240  # a pass; spacing changes slowly along it
 
@@ -42,10 +42,10 @@ def distance_to_line(points: Floats, line: Floats) -> Floats:
 
 
 def local_stepover(contact_mm: Floats, cutting: Bools, operation: Ints, pass_index: Ints) -> Floats:
-    """Distance on the surface from each contact to the next pass of its operation, (n,) mm; nan where none lies beside it.
+    """Distance on the surface from each contact to the next pass, (n,) mm; nan where none lies beside it.
 
-    The straight distance stands for the one along the surface: over a stepover s they differ by s^3 k^2 / 24, k the
-    curvature, which is below 1e-5 of s for any scallop worth the name. Derived here.
+    The straight distance stands for the one along the surface: over a stepover s they differ by s^3 k^2 / 24,
+    k the curvature, which is below 1e-5 of s for any scallop worth the name. Derived here.
     """
     found = np.full(len(contact_mm), np.nan)
     usable = cutting & np.isfinite(contact_mm[:, 0]) & (pass_index >= 0)
@@ -94,7 +94,7 @@ def pooled(scallop: ScallopMap, most_cells: int) -> tuple[Floats, Floats, Floats
         )
 
     def centres(values: Floats, starts: Ints) -> Floats:
-        spacing = (values[-1] - values[0]) / max(len(values) - 1, 1)
+        spacing = values[1] - values[0] if len(values) > 1 else 0.0
         return values[0] + spacing * (starts + (block - 1) / 2)
 
     return centres(scallop.x_mm, columns), centres(scallop.y_mm, rows), fold(np.fmax), fold(np.fmin)
@@ -120,8 +120,8 @@ def highest_near(scallop: ScallopMap, contact_mm: Floats, reach_mm: float) -> Fl
             near = np.fmax(near, wide[dy : dy + high.shape[0], dx : dx + high.shape[1]])
     found = np.full(len(contact_mm), np.nan)
     good = np.flatnonzero(np.isfinite(contact_mm[:, 0]))
-    step_x = (x[-1] - x[0]) / max(len(x) - 1, 1) or 1.0
-    step_y = (y[-1] - y[0]) / max(len(y) - 1, 1) or 1.0
+    step_x = x[1] - x[0] if len(x) > 1 else 1.0
+    step_y = y[1] - y[0] if len(y) > 1 else 1.0
     i = np.rint((contact_mm[good, 0] - x[0]) / step_x).astype(int)
     j = np.rint((contact_mm[good, 1] - y[0]) / step_y).astype(int)
     inside = (i >= 0) & (i < len(x)) & (j >= 0) & (j < len(y))
@@ -143,8 +143,3 @@ def coded(values: Floats, unit: float) -> tuple[np.ndarray, float]:
     step = max(unit, top / 32767.0)
     codes = np.where(np.isfinite(values), np.rint(np.nan_to_num(values) / step), -32768)
     return codes.astype(np.int16), step
-
-
-def as_codes(values: Floats, scale: float) -> Bytes:
-    """Turn unit components into int16 by ``scale``, clipped; returned as int16."""
-    return np.clip(np.rint(values * scale), -32767, 32767).astype(np.int16)

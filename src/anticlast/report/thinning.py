@@ -1,4 +1,4 @@
-"""Fewer points for the same picture: drop knots of a polyline while every dropped one stays within a known distance."""
+"""Fewer points for the same picture: drop knots of a polyline, each within a known distance of the rest."""
 
 from __future__ import annotations
 
@@ -11,11 +11,11 @@ GROWTH = 1.6  # step by which the tolerance grows while too many knots are left
 
 
 def thin(values: Floats, along: Floats, keep: Bools, tolerance: float) -> Ints:
-    """Return rows that, joined by straight lines over ``along``, pass within ``tolerance`` of every row in each column.
+    """Return rows that, joined by straight lines over ``along``, pass near every row in each column.
 
-    Every other knot is dropped where allowed, round by round. The bound adds up: if a knot lies d from the line joining its
-    neighbours, and what was dropped on either side lay within e, then everything lies within d + e of the new line (the
-    difference of two polylines is largest at a knot). Derived here.
+    Every other knot is dropped where allowed, round by round. The bound adds up: if a knot lies d from the
+    line joining its neighbours, and what was dropped on either side lay within e, then everything lies within
+    d + e of the new line (the difference of two polylines is largest at a knot). Derived here.
 
     Parameters
     ----------

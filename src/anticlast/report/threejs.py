@@ -1,8 +1,9 @@
 """Where three.js comes from: the copy that the trimesh wheel carries for its own previews.
 
-The project holds no copy of three.js. Its script (MIT licence, global ``THREE``) with TrackballControls stands inside the one
-script element of ``resources/templates/viewer.zip`` of the trimesh package; it is cut out when a page is written, licence
-line included, and whatever follows TrackballControls there is left behind.
+The project holds no copy of three.js. Its script (MIT licence, global ``THREE``) with TrackballControls
+stands inside the one script element of ``resources/templates/viewer.zip`` of the trimesh package; it is cut
+out when a page is written, licence line included, and whatever follows TrackballControls there is left
+behind.
 """
 
 from __future__ import annotations
@@ -22,18 +23,18 @@ CONTROLS_END = "THREE.TrackballControls=TrackballControls;})();"
 
 
 class ThreeJsNotFound(AnticlastError):
-    """three.js does not stand where the trimesh wheel used to carry it; the message says what was looked for."""
+    """three.js is not where the trimesh wheel used to carry it; the message says what was looked for."""
 
 
 def _fail(what: str) -> ThreeJsNotFound:
     return ThreeJsNotFound(
-        f"three.js was not found in the trimesh package: {what}. A release of trimesh may have moved it; trimesh 4.5 to 5.2 "
-        f"carry it in {ARCHIVE.as_posix()}"
+        f"three.js was not found in the trimesh package: {what}. A release of trimesh may have moved it; "
+        f"trimesh 4.5 to 5.2 carry it in {ARCHIVE.as_posix()}"
     )
 
 
 def trimesh_folder() -> Path | None:
-    """Return the folder of the installed trimesh package without importing it (the import takes a quarter of a second)."""
+    """Return the folder of the installed trimesh package without importing it, which would take 0.25 s."""
     spec = importlib.util.find_spec("trimesh")
     places = list(spec.submodule_search_locations or ()) if spec else []
     return Path(places[0]) if places else None

@@ -87,17 +87,18 @@
     pen.textAlign = "left";
     const title = strip.unit ? `${strip.title}, ${strip.unit}` : strip.title;
     pen.fillText(title, LEFT, top - 7);
-    let x = LEFT + pen.measureText(title).width + 22;
+    const [gap, sample] = width < 480 ? [12, 14] : [22, 24];
+    let x = LEFT + pen.measureText(title).width + gap;
     if (strip.lines.length > 1) {
       for (const line of strip.lines) {
         stroke(pen, line);
         pen.beginPath();
         pen.moveTo(x, top - 11);
-        pen.lineTo(x + 24, top - 11);
+        pen.lineTo(x + sample, top - 11);
         pen.stroke();
         pen.setLineDash([]);
-        pen.fillText(line.name, x + 29, top - 7);
-        x += 52 + pen.measureText(line.name).width;
+        pen.fillText(line.name, x + sample + 5, top - 7);
+        x += sample + 5 + gap + pen.measureText(line.name).width;
       }
     }
     pen.strokeStyle = "#c3cad2";
@@ -126,8 +127,9 @@
       pen.lineTo(width - RIGHT, toY(strip.mark));
       pen.stroke();
       pen.setLineDash([]);
+      const words = `limit ${page.fixed(strip.mark, strip.digits)}`;
       pen.fillStyle = "#8c1c13";
-      pen.fillText(`limit ${page.fixed(strip.mark, strip.digits)}`, width - RIGHT - 4, toY(strip.mark) + 15);
+      pen.fillText(words, width - RIGHT, top - 7); // above the frame, clear of the curve
     }
   }
   function stroke(pen, line) {

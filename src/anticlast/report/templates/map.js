@@ -24,7 +24,7 @@
       for (let i = 0; i < map.nx; i++) {
         const cell = j * map.nx + i;
         if (high[cell] === NONE) continue;
-        const top = high[cell] * map.step, bottom = low[cell] * map.step;
+        const top = high[cell] * map.step - map.wanted, bottom = low[cell] * map.step;
         let rgb = page.ramp(top / map.top);
         if (bottom < -map.gouge) { rgb = GOUGE; gouged.push([i, j]); }
         else if (top > bad) { rgb = OVER; over.push([i, j]); }
@@ -150,8 +150,8 @@
     if (i < 0 || j < 0 || i >= map.nx || j >= map.ny || high[cell] === NONE) {
       out.textContent = `${where}   outside the outline`;
     } else {
-      const most = high[cell] * map.step, least = low[cell] * map.step;
-      const word = least < -map.gouge ? "   GOUGE" : most > bad ? "   OVER THE LIMIT" : "";
+      const most = high[cell] * map.step - map.wanted, least = low[cell] * map.step - map.wanted;
+      const word = least + map.wanted < -map.gouge ? "   GOUGE" : most > bad ? "   OVER THE LIMIT" : "";
       out.textContent = `${where}   highest ${page.small(most)} ${unit.small}, lowest ${page.small(least)} ${unit.small}${word}`;
     }
     draw();

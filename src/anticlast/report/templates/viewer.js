@@ -26,7 +26,7 @@
   const scene = new THREE.Scene();
   const camera = new THREE.PerspectiveCamera(32, 1, 1, 5000);
   camera.up.set(0, 0, 1);
-  scene.add(new THREE.HemisphereLight(0xffffff, 0x8c8478, 0.75));
+  scene.add(new THREE.HemisphereLight(0xffffff, 0x8c8c8c, 0.7));
   const lamp = new THREE.DirectionalLight(0xffffff, 0.55);
   scene.add(lamp);
 
@@ -56,7 +56,7 @@
     shape.setAttribute("normal", new THREE.BufferAttribute(normals, 3));
     shape.setIndex(new THREE.BufferAttribute(index, 1));
     // Pushed back a little, so that passes lying on the surface are not half hidden by it.
-    const look = new THREE.MeshLambertMaterial({ color: 0xc9c4b8, side: THREE.DoubleSide, polygonOffset: true, polygonOffsetFactor: 2, polygonOffsetUnits: 4 });
+    const look = new THREE.MeshLambertMaterial({ color: 0xb4b6b4, side: THREE.DoubleSide, polygonOffset: true, polygonOffsetFactor: 2, polygonOffsetUnits: 4 });
     return new THREE.Mesh(shape, look);
   }
 

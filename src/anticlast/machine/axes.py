@@ -1,0 +1,216 @@
+"""From a cutter path in part coordinates to program words: straight joint moves that keep to the intended path.
+
+Between two rows of a stretch the reference point is meant to go straight and the axis to turn evenly; the control moves the
+axes of the machine straight instead. The words are split until what the control does stays within a budget of what was
+meant, checked by forward kinematics. docs/theory-machine.md, "Straight moves of the joints".
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from anticlast.errors import CannotPlan
+from anticlast.machine import _kernels, branches
+from anticlast.machine.blocks import Blocks, Digits, joined, limit_notes, split_long, time_blocks
+from anticlast.machine.hops import Hops
+from anticlast.machine.kinematics import Kinematics
+from anticlast.records import AxisPath, CutterPath, Floats, Job, Operation, Purpose, Stretch, frozen_array
+from anticlast.tolerances import (
+    AXIS_STRAY_RAD,
+    CHORD_SHARE_OF_SCALLOP,
+    LINEAR_FLOOR_MM,
+    POLE_RAD,
+    SAME_POINT_MM,
+    SUBDIVISION_CAP,
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Budget:
+    """How far straight joint moves may leave the intended path, rounding of the words not counted.
+
+    Attributes
+    ----------
+    point_mm : float
+        For the reference point; with ``lever_mm`` times the angle of the axis for a cutter with a flat bottom.
+    axis_rad : float
+        For the cutter axis.
+    lever_mm : float
+        Distance from the cutter axis to the generating corner arc: 0 for a ball.
+    """
+
+    point_mm: float
+    axis_rad: float
+    lever_mm: float
+
+
+def budget_of(operation: Operation) -> Budget:
+    """Return what an operation leaves for straight joint moves.
+
+    Half the tolerance, the other half being for chords; and half of what chords and linearisation together may add to
+    the scallop.
+    """
+    point = operation.tolerance_mm / 2.0
+    if operation.scallop_mm is not None:
+        point = min(point, CHORD_SHARE_OF_SCALLOP * operation.scallop_mm / 2.0)
+    point = max(point, LINEAR_FLOOR_MM)
+    lever = operation.cutter.radius_mm - operation.cutter.corner_radius_mm
+    # Half of the budget may go into the axis, so that the point keeps the other half.
+    axis = AXIS_STRAY_RAD if lever <= 0.0 else min(AXIS_STRAY_RAD, 0.5 * point / lever)
+    return Budget(point, axis, max(lever, 0.0))
+
+
+def axis_path(
+    job: Job, cutter_path: CutterPath, start_words: Floats | None = None, *, last: bool = False
+) -> AxisPath:
+    """Turn an operation's cutter path into motion of the machine axes.
+
+    Parameters
+    ----------
+    job : Job
+    cutter_path : CutterPath
+        Stretches in part coordinates, in cutting order.
+    start_words : (k,) or None
+        Words where the operation before ended, with that operation's cutter; None for the first operation.
+    last : bool
+        The program ends with this operation: the rotary axes return to 0 at the end.
+
+    Returns
+    -------
+    AxisPath
+        Words rounded to the digits that are posted. Row 0 is a rapid to a safe height (above where the machine stands,
+        or for the first operation above the first approach with the rotary axes at 0), so that all words may be posted.
+
+    Raises
+    ------
+    CannotPlan
+        A cutter axis is out of reach, or the path cannot be kept to within ``SUBDIVISION_CAP`` blocks a move.
+    """
+    operation = cutter_path.operation
+    kinematics = Kinematics(job.machine, job.part_origin_mm, operation.cutter.gauge_length_mm)
+    digits = Digits.of(job)
+    budget = budget_of(operation)
+    hops = Hops(job, operation, kinematics, digits)
+    stand = None if start_words is None else _with_this_cutter(job, operation, start_words)
+    parts: list[Blocks] = []
+    notes: dict[str, None] = {}
+    if not cutter_path.stretches:
+        raise CannotPlan("cutter path", f"operation {operation.index} has no motion to post")
+    rotary = np.zeros(kinematics.rotary_count) if stand is None else stand[3:]
+    start = stand
+    for number, stretch in enumerate(cutter_path.stretches):
+        rotary_words = branches.choose(kinematics, stretch.axis, rotary, 0.8 * budget.axis_rad, budget.axis_rad)
+        notes.update(dict.fromkeys(rotary_words.notes))
+        cut, first = stretch_blocks(job, operation, kinematics, digits, budget, stretch, rotary_words.rotary_deg)
+        if stand is None:
+            stand = start = hops.first_stand(first)
+        lead_in = hops.first(stand, first) if number == 0 else hops.between(stand, first)
+        parts += [lead_in, cut]
+        stand = cut.words[-1] if len(cut.words) else first
+        rotary = stand[3:]
+    parts.append(hops.leave(stand, home=last))
+    notes.update(dict.fromkeys(hops.notes))
+    blocks = joined(parts)
+    blocks = split_long(time_blocks(blocks, start, job), start, job, digits)
+    notes.update(dict.fromkeys(limit_notes(kinematics, blocks.words)))
+    return AxisPath(
+        operation=operation,
+        letters=kinematics.letters,
+        words=frozen_array(blocks.words),
+        rapid=frozen_array(blocks.rapid, np.bool_),
+        minutes=frozen_array(blocks.minutes),
+        purpose=frozen_array(blocks.purpose, np.uint8),
+        pass_index=frozen_array(blocks.pass_index, np.int64),
+        start=frozen_array(start),
+        notes=tuple(notes),
+    )
+
+
+def _with_this_cutter(job: Job, operation: Operation, words: Floats) -> Floats:
+    """Words where the machine stands after a cutter change: the axes stay, the tip moves by the difference of lengths.
+
+    XYZ + part origin + (0, 0, L) is the pivot, or the gauge point, which a cutter change does not move.
+    """
+    at = next(i for i, other in enumerate(job.operations) if other.index == operation.index)
+    before = job.operations[at - 1].cutter if at > 0 else operation.cutter
+    stand = np.array(words, dtype=np.float64)
+    stand[2] += before.gauge_length_mm - operation.cutter.gauge_length_mm
+    return stand
+
+
+def stretch_blocks(
+    job: Job,
+    operation: Operation,
+    kinematics: Kinematics,
+    digits: Digits,
+    budget: Budget,
+    stretch: Stretch,
+    rotary_deg: Floats,
+) -> tuple[Blocks, Floats]:
+    """Blocks of one stretch, and the words (k,) of its first row.
+
+    Raises
+    ------
+    CannotPlan
+        Naming the place that the cap on blocks stopped at.
+    """
+    height = operation.cutter.reference_height_mm
+    axis = np.ascontiguousarray(stretch.axis)
+    point = np.ascontiguousarray(stretch.tip_mm + height * axis)
+    rot = digits.round_angle(rotary_deg)
+    first = digits.round_words(kinematics.place(point[:1], rot[:1], height))[0]
+    # Rounding turns the axis by up to half a digit of each word whatever is done.
+    slack = math.radians(0.5 * digits.angle_step_deg) * kinematics.rotary_count
+    rate = np.array([a.feed for a in job.machine.rotary], dtype=np.float64)
+    row, share, words, failed, off, turned = _kernels.subdivide(
+        kinematics.chain, kinematics.base, height, budget.lever_mm, point, axis, rot, rate, 1.0 / digits.angle_step_deg,
+        budget.point_mm, budget.axis_rad + slack, slack, POLE_RAD, SUBDIVISION_CAP,
+    )  # fmt: skip
+    if failed >= 0:
+        raise _too_many(stretch, failed, off, turned, budget)
+    minutes = row_minutes(stretch, point)
+    part = np.diff(share, prepend=0.0)
+    fresh = np.diff(row, prepend=0) != 0
+    part[fresh] = share[fresh]
+    made = Blocks(
+        words=digits.round_words(words),
+        rapid=np.zeros(len(row), dtype=np.bool_),
+        minutes=minutes[row] * part,
+        purpose=np.asarray(stretch.purpose)[row],
+        pass_index=np.asarray(stretch.pass_index)[row],
+    )
+    return made.moving(first), first
+
+
+def row_minutes(stretch: Stretch, point: Floats) -> Floats:
+    """Minutes that the feed asks for the move to each row (n,); 0 for row 0.
+
+    On a pass the feed is that of the cutter contact. Where the contact stands still it is that of the reference point
+    (n, 3), and on links and descents that of whichever goes further.
+    """
+    contact = np.linalg.norm(np.diff(stretch.contact_mm, axis=0), axis=1)
+    reference = np.linalg.norm(np.diff(point, axis=0), axis=1)
+    on_pass = (stretch.purpose[1:] == Purpose.CUT) | (stretch.purpose[1:] == Purpose.OVERRUN)
+    length = np.where(on_pass & (contact > SAME_POINT_MM), contact, np.maximum(contact, reference))
+    return np.append(0.0, length / stretch.feed_mm_min[1:])
+
+
+def _too_many(stretch: Stretch, row: int, off_mm: float, turned_rad: float, budget: Budget) -> CannotPlan:
+    """Say where, and by how much, straight joint moves could not be brought to the path."""
+    x, y, z = stretch.contact_mm[row]
+    where = f"before the contact ({x:.3f}, {y:.3f}, {z:.3f}), pass {int(stretch.pass_index[row]) + 1}"
+    if off_mm > budget.point_mm:
+        message = (
+            f"straight moves of the axes stay {off_mm * 1e3:.2f} µm off the path {where}, {budget.point_mm * 1e3:.2f} µm"
+            f" are allowed; lean the cutter away from the pole, allow a larger tolerance or post more digits"
+        )
+        return CannotPlan("linearisation", message, off_mm, budget.point_mm, "mm")
+    turned, allowed = math.degrees(turned_rad), math.degrees(budget.axis_rad)
+    message = (
+        f"straight moves of the axes turn the cutter {turned:.4g} degrees off its wish {where}, {allowed:.4g} are"
+        f" allowed; lean the cutter away from the pole, allow a larger tolerance or post more digits"
+    )
+    return CannotPlan("linearisation", message, turned, allowed, "deg")
