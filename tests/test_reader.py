@@ -403,6 +403,7 @@ def test_length_offset_moves_the_reading_not_the_machine() -> None:
     assert starts[-2:].all()
     assert not starts[0].any()
     assert ends[0].all()
+    assert known.motions.start[0].tolist() == [0.0] * 6  # not even the offset of 40 moves a place nobody told
 
 
 def test_start_words_are_told() -> None:

@@ -194,10 +194,10 @@ def _dxf_curve(entity: Any, chord: float) -> Any | None:
 
 
 def _spline_points(spline: Any, chord: float) -> Floats:
-    """Return points (n, 3) along a B-spline over its domain, which for a periodic one ends short of the knots.
+    """Return points (n, 3) along a B-spline over its domain; a periodic one ends short of its outer knots.
 
-    Each knot span is halved evenly until its halfway points keep to their chords; the error falls fourfold with each
-    halving, so what lies between is no further away than they are.
+    Each knot span is halved evenly until its halfway points keep to their chords; the error falls fourfold
+    with each halving, so what lies between is no further away than they are.
     """
     knots, degree = np.array(spline.knots()), int(spline.degree)
     inner = np.unique(knots[degree : len(knots) - degree])

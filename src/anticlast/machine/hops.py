@@ -16,6 +16,7 @@ from anticlast.machine.blocks import Blocks, Digits
 from anticlast.machine.kinematics import Kinematics
 from anticlast.records import Floats, Job, Operation, Purpose
 from anticlast.saddle import Saddle
+from anticlast.tolerances import SAME_DIRECTION_RAD
 
 # The blank's outline is taken with corners cut to this many mm and grown by as much: fewer edges to measure from.
 _OUTLINE_MM = 0.05
@@ -52,6 +53,7 @@ class Hops:
         heights = (job.stock.top_mm, job.stock.bottom_mm)
         self._corners = np.concatenate([np.column_stack([edge, np.full(len(edge), z)]) for z in heights])
         self._girth_from_mm, self._girth = _girth(operation)
+        self._far_mm = float(self._girth.max()) + job.clearance_mm + 1.0
 
     # ------------------------------------------------------------------------------------------ hops
 
@@ -123,10 +125,29 @@ class Hops:
         spindle = self._kinematics.spindle(words[None, :])[0]
         # The spindle goes up along machine Z afterwards; in the part that is this direction.
         up = self._up_in_part(words)
-        lift = self._lift_mm(tip[0], axis[0], up)
+        lift = self._inside_limits(words, spindle, self._lift_mm(tip[0], axis[0], up))
         above = words.copy()
         above[:3] += lift * spindle
         return self._digits.round_words(above[None, :])[0]
+
+    def _inside_limits(self, words: Floats, spindle: Floats, lift_mm: float) -> float:
+        """The lift, or as much of it as the travel of X Y Z allows, with a note of what is missing."""
+        gauge = self._kinematics.gauge_point(words[None, :])[0]
+        possible = lift_mm
+        for place, way, axis in zip(gauge, spindle, self._kinematics.machine.linear, strict=True):
+            if axis.limits is not None and abs(way) > SAME_DIRECTION_RAD:
+                room = (axis.limits[1] - place) / way if way > 0.0 else (axis.limits[0] - place) / way
+                possible = min(possible, max(0.0, room - self._digits.length_step_mm))
+        if possible < lift_mm:
+            self._note(
+                f"the cutter cannot be drawn back clear of the blank by {self._job.clearance_mm:g} mm:"
+                f" {lift_mm - possible:.2f} mm of travel are missing"
+            )
+        return possible
+
+    def _note(self, text: str) -> None:
+        if text not in self.notes:
+            self.notes.append(text)
 
     def _up_in_part(self, words: Floats) -> Floats:
         """Machine Z as a direction in part coordinates."""
@@ -172,11 +193,16 @@ class Hops:
     def _from_blank_mm(self, points: Floats) -> Floats:
         """Distance (n,) of points (n, 3) from the blank, or less; 0 inside. What lies under the blank counts as blank."""
         stock = self._job.stock
+        distance = np.maximum(points[:, 2] - stock.top_mm, 0.0)
+        # Far above the top, the height over it is bound enough.
+        near = distance < self._far_mm
+        points = points[near]
         aside = shapely.distance(self._plan, shapely.points(points[:, :2]))
-        distance = np.hypot(aside, np.maximum(points[:, 2] - stock.top_mm, 0.0))
+        close = np.hypot(aside, distance[near])
         if stock.allowance_mm is not None:
             _, over = self._saddle.closest(points)
-            distance = np.maximum(distance, over - stock.allowance_mm)
+            close = np.maximum(close, over - stock.allowance_mm)
+        distance[near] = close
         return distance
 
     # --------------------------------------------------------------------------------- height to turn at
@@ -202,12 +228,10 @@ class Hops:
             return height
         highest = limits[1] - float(kinematics.gauge_offset(words)[:, 2].max())
         if height > highest:
-            note = (
+            self._note(
                 f"Z cannot rise high enough to turn over the blank with {self._job.clearance_mm:g} mm clearance:"
                 f" {height - highest:.2f} mm of travel are missing"
             )
-            if note not in self.notes:
-                self.notes.append(note)
             return highest - self._digits.length_step_mm
         return height
 

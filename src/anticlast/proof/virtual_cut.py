@@ -27,7 +27,7 @@ if TYPE_CHECKING:
 # Grid chosen without being asked: this fine up to the most steps along the longer side, and at least so many steps.
 _GRID_MM, _MOST_STEPS, _LEAST_STEPS = 0.1, 1000, 200
 # Most quarterings of triangles in one run of the search for the peak: about a minute's work; the bound stays honest.
-_QUARTERINGS = 20_000_000
+_QUARTERINGS = 20_000
 _MAP_SIDE = 400
 
 

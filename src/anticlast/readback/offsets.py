@@ -52,7 +52,7 @@ def length_offset(control: Interpreter, code: int, block: Block) -> None:
             control.note("length offset", f"H{number} has no cutter, so its length is unknown")
         if old is None or new is None:
             control.lose(1 << _Z)
-        else:
+        elif state.known >> _Z & 1:
             at = list(state.at)
             at[_Z] += old - new
             state.at = (at[0], at[1], at[2], at[3], at[4], at[5])
@@ -83,10 +83,10 @@ def _read_anew(control: Interpreter, old: tuple[float | None, ...], new: tuple[f
     lost = 0
     for axis in range(6):
         before, after = old[axis], new[axis]
-        if before is not None and after is not None:
-            at[axis] += before - after
-        else:
+        if before is None or after is None:
             lost |= 1 << axis
+        elif control.state.known >> axis & 1:
+            at[axis] += before - after
     control.state.at = (at[0], at[1], at[2], at[3], at[4], at[5])
     control.lose(lost)
 

@@ -7,7 +7,7 @@ program the planned path itself is shown, and the quantities that need a program
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 import numpy.typing as npt
@@ -28,12 +28,13 @@ from anticlast.records import (
     Purpose,
     ReadProgram,
 )
-from anticlast.tolerances import LIMIT_MM
+from anticlast.tolerances import LIMIT_MM, PIECE_MM
 
 UNKNOWN = 255  # purpose of a feed move that the plan does not hold
 LOOK_AHEAD = 12  # planned blocks that may be missing from the text in a row (no word changed)
 # mm or degrees; a word read back is off its plan by half a posted digit at most, inch included
 SAME_WORD = 10 * LIMIT_MM
+PIECES = 15  # of a motion as read back that are drawn as one
 MOST_ROUNDS = 30
 # mm; change of the contact in the last round, far below what a picture or a feed shows
 SETTLED_MM = 1e-4
@@ -70,6 +71,8 @@ class Along:
         Fastest rotary axis over the block; 0 on a machine without.
     notes : tuple of str
         What could not be worked out, and why.
+    slack_mm : float
+        Furthest that the tip may leave the straight line between two rows.
     """
 
     letters: tuple[str, ...]
@@ -88,6 +91,7 @@ class Along:
     tilt_rad: Floats
     rotary_deg_min: Floats
     notes: tuple[str, ...] = ()
+    slack_mm: float = 0.0
 
     @property
     def cutting(self) -> Bools:
@@ -233,7 +237,33 @@ def _touch(made: Made, motion: PartMotion, finishing: Bools) -> tuple[Floats, Fl
     return touched, normals, tuple(notes)
 
 
+def fewer_pieces(motion: PartMotion) -> tuple[PartMotion, float]:
+    """Keep the end of each motion and every so many of the pieces within it.
+
+    The read-back splits a motion evenly until each piece is straight within ``PIECE_MM``. The sagitta of an
+    arc grows with the square of its length, so k pieces taken as one are straight within k^2 of that. Derived
+    here.
+
+    Returns
+    -------
+    motion : PartMotion
+    slack_mm : float
+        Furthest that the tip may now leave the straight lines; 0 if nothing was dropped.
+    """
+    n = len(motion.motion)
+    last = np.ones(n, bool)
+    last[:-1] = motion.motion[1:] != motion.motion[:-1]
+    starts = np.concatenate(([0], np.flatnonzero(last)[:-1] + 1))
+    within = np.arange(n) - np.repeat(starts, np.diff(np.concatenate((starts, [n]))))
+    rows = np.flatnonzero(last | (within % PIECES == PIECES - 1))
+    if len(rows) == n:
+        return motion, 0.0
+    kept = {field.name: getattr(motion, field.name)[rows] for field in fields(motion)}
+    return PartMotion(**kept), PIECES**2 * PIECE_MM
+
+
 def _of_program(made: Made, program: ReadProgram, motion: PartMotion) -> Along:
+    motion, slack = fewer_pieces(motion)
     motions = program.motions
     letters = made.job.machine.letters
     columns = ["XYZABC".index(letter) for letter in letters]
@@ -251,9 +281,8 @@ def _of_program(made: Made, program: ReadProgram, motion: PartMotion) -> Along:
     first = of < 0
     row_purpose = np.where(first, np.uint8(Purpose.RAPID), purpose[of])
     row_operation = np.where(first, -1, planned(operations, -1)[of])
-    sweeps = np.array(
-        [path.operation.does != "rough" for path in made.axis_paths] + [False]
-    )  # last: operation -1
+    # The last entry stands for operation -1.
+    sweeps = np.array([*(path.operation.does != "rough" for path in made.axis_paths), False])
     finishing = (row_purpose <= Purpose.OVERRUN) & sweeps[row_operation]
     touched, normals, notes = _touch(made, motion, finishing)
     reference = _reference(made.job.cutters, motion)
@@ -283,6 +312,7 @@ def _of_program(made: Made, program: ReadProgram, motion: PartMotion) -> Along:
         tilt_rad=np.where(finishing & (row_purpose == Purpose.CUT), _angle(motion.axis, normals), np.nan),
         rotary_deg_min=np.where(first, 0.0, np.nan_to_num(_per_motion(turned, seconds))[of]),
         notes=notes,
+        slack_mm=slack,
     )
 
 

@@ -168,7 +168,12 @@ def _quantity(key: str, title: str, unit: str, digits: int, values: Floats, **mo
 def quantities(made: Made, rows: Along, units: Units) -> list[dict[str, Any]]:
     """Quantities to colour the passes by, each in the unit it is shown in, nan where it does not apply."""
     feed, digits = f"{units.name}/min", 1 if units.inch else 0
-    reached = rows.reached_mm_min if np.isfinite(rows.reached_mm_min).any() else rows.asked_mm_min
+    # Links, entries and exits turn the cutter about a contact that hardly moves; a contact feed says nothing there.
+    off = np.isin(rows.purpose, (Purpose.LINK, Purpose.ENTRY, Purpose.EXIT))
+    asked = np.where(off, np.nan, rows.asked_mm_min)
+    reached = np.where(off, np.nan, rows.reached_mm_min)
+    if not np.isfinite(reached).any():
+        reached = asked
     stepover = local_stepover(rows.contact_mm, rows.cutting, rows.operation, rows.pass_index)
     scallop_map = made.proof.scallop_map if made.proof else None
     crest = np.full(len(rows.line), np.nan)
@@ -183,8 +188,8 @@ def quantities(made: Made, rows: Along, units: Units) -> list[dict[str, Any]]:
     return [
         _quantity("reached", "contact feed reached", feed, digits, reached * units.scale,
                   span=_span(on_part * units.scale, from_zero=True)),
-        _quantity("asked", "contact feed asked", feed, digits, rows.asked_mm_min * units.scale,
-                  span=_span(np.where(cutting, rows.asked_mm_min, np.nan) * units.scale, from_zero=True)),
+        _quantity("asked", "contact feed asked", feed, digits, asked * units.scale,
+                  span=_span(np.where(cutting, asked, np.nan) * units.scale, from_zero=True)),
         _quantity("tilt", "tilt of the axis from the surface normal", "°", 2, np.degrees(rows.tilt_rad)),
         _quantity("rotary", "rotary speed", "rev/min", 2, rows.rotary_deg_min / 360.0,
                   span=_span(rows.rotary_deg_min / 360.0, from_zero=True)),
@@ -208,8 +213,10 @@ def path_data(made: Made, rows: Along, units: Units) -> dict[str, Any]:
         entry["values"] = packed(entry["values"][chosen].astype(np.float32))
     return {
         "rows": len(chosen),
-        "of_rows": len(rows.line),
-        "tolerance": float(f"{tolerance:.4g}"),
+        "of_rows": max(
+            len(rows.line), len(made.part_motion.line) if made.part_motion and rows.letters else 0
+        ),
+        "tolerance": float(f"{tolerance + rows.slack_mm:.4g}"),
         "letters": list(rows.letters),
         "decimals": decimals,
         "words": packed(np.clip(words, -(2.0**31) + 1, 2.0**31 - 1).astype(np.int32)),

@@ -145,7 +145,7 @@ const page = (() => {
   line.max = path.line[path.rows - 1];
   const notes = [...path.notes];
   if (path.of_rows > path.rows) {
-    notes.unshift(`${path.rows} of ${path.of_rows} block ends are kept here; the drawn path stays within ${page.fixed(path.tolerance * page.data.units.scale, page.data.units.digits)} ${page.data.units.length} of the program's.`);
+    notes.unshift(`${path.rows} of ${path.of_rows} places along the motion are kept here; the drawn path stays within ${page.fixed(path.tolerance * page.data.units.scale, page.data.units.digits)} ${page.data.units.length} of the program's.`);
   }
   byId("path-note").textContent = notes.join(" ");
 

@@ -1,0 +1,209 @@
+"""What a leaned bull or flat end mill leaves along a straight pass, with the true cutter on the true surface.
+
+Plan coordinates of a feed direction: u along it, v to its left. Heights are measured along the upward normal of the
+finished surface, from the surface moved out by the allowance; negative is a gouge. docs/theory-matched.md.
+"""
+
+from __future__ import annotations
+
+import math
+import os
+from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from anticlast.cutter import Cutter
+from anticlast.passes import _profile_kernels as kernels
+from anticlast.passes.cusp import plan_of, turned_form
+from anticlast.passes.tilt import lead_and_lean, reference_from_contact, wished_axis
+from anticlast.records import Floats
+from anticlast.saddle import Saddle
+
+Nearest = Callable[[Floats], Floats]
+
+# Poses of a table per radius of the bottom disc: fine enough that every contact of bottom and surface has a row near it.
+_POSES_PER_DISC = 6.0
+# Golden sections about the lowest pose: a corner arc makes a smooth minimum, a sharp edge a kink that needs more.
+_ROUNDS_ROUND, _ROUNDS_SHARP = 15, 24
+# Rows are looked at this far past the rear of the bottom, shares of the cutter radius.
+_PAST_REAR = 0.25
+_RIDGE_ROUNDS = 16
+
+
+@dataclass(frozen=True, slots=True)
+class Sweep:
+    """A bull or flat end mill on the saddle, fed along straight plan lines.
+
+    Attributes
+    ----------
+    saddle : Saddle
+    direction_rad : float
+        Of +u, from part X.
+    cutter : Cutter
+    allowance_mm : float
+        Stock left along the normal.
+    nearest : callable
+        From wished cutter axes (n, 3) in part coordinates to the reachable ones nearest to them.
+    """
+
+    saddle: Saddle
+    direction_rad: float
+    cutter: Cutter
+    allowance_mm: float
+    nearest: Nearest
+
+    @property
+    def disc_mm(self) -> float:
+        """Radius of the flat bottom: distance of the corner arc's centre from the cutter axis."""
+        return self.cutter.radius_mm - self.cutter.corner_radius_mm
+
+    @property
+    def step_mm(self) -> float:
+        """Plan distance between the poses of a table."""
+        return max(self.disc_mm, 0.5 * self.cutter.corner_radius_mm) / _POSES_PER_DISC
+
+    @property
+    def reach_mm(self) -> float:
+        """How far along the feed, before or behind its contact, the cutter's bottom can meet the surface."""
+        return 2.0 * self.disc_mm + (1.0 + _PAST_REAR) * max(self.cutter.corner_radius_mm, _PAST_REAR * self.cutter.radius_mm)
+
+    def poses(
+        self, u_mm: Floats, v_mm: Floats, way: npt.ArrayLike, lead_rad: Floats, lean_rad: npt.ArrayLike, lift_mm: npt.ArrayLike
+    ) -> tuple[Floats, Floats]:
+        """Return reference point [mm] and unit axis (n, 3) in part coordinates at contacts (u, v).
+
+        Parameters
+        ----------
+        u_mm, v_mm : (n,)
+        way : int or (n,)
+            +1 fed along +u, -1 against it.
+        lead_rad, lean_rad : (n,)
+            Wished; the machine's nearest axis is taken.
+        lift_mm : (n,)
+            The cutter stands this much off the contact along the normal, besides the allowance.
+        """
+        xy = plan_of(u_mm, v_mm, self.direction_rad)
+        normal = self.saddle.normal(xy)
+        sign = np.broadcast_to(np.asarray(way, dtype=np.float64), (len(xy),))
+        tangent = self.saddle.tangent(xy, self.direction_rad) * sign[:, None]
+        axis = self.nearest(np.ascontiguousarray(wished_axis(normal, tangent, lead_rad, lean_rad)))
+        point = reference_from_contact(self.saddle.point(xy), normal, axis, self.cutter, self.allowance_mm)
+        return point + np.broadcast_to(np.asarray(lift_mm), (len(xy),))[:, None] * normal, axis
+
+    def reached(self, u_mm: Floats, v_mm: Floats, way: npt.ArrayLike, axis: Floats) -> tuple[Floats, Floats]:
+        """Return the lead and lean (n,) [rad] at which axes (n, 3) stand at contacts (u, v)."""
+        xy = plan_of(u_mm, v_mm, self.direction_rad)
+        sign = np.broadcast_to(np.asarray(way, dtype=np.float64), (len(xy),))
+        tangent = self.saddle.tangent(xy, self.direction_rad) * sign[:, None]
+        return lead_and_lean(axis, self.saddle.normal(xy), tangent)
+
+    def table(self, point: Floats, axis: Floats) -> Floats:
+        """Return poses (n, 6) in (u, v, z) from reference points and axes (n, 3) in part coordinates."""
+        c, s = math.cos(self.direction_rad), math.sin(self.direction_rad)
+        turn = np.array([[c, -s, 0.0], [s, c, 0.0], [0.0, 0.0, 1.0]])
+        return np.ascontiguousarray(np.hstack((point @ turn, axis @ turn)))
+
+    def _tool(self) -> Floats:
+        rounds = _ROUNDS_ROUND if self.cutter.corner_radius_mm > 0.0 else _ROUNDS_SHARP
+        return np.array([self.disc_mm, self.cutter.corner_radius_mm, float(rounds)])
+
+    def profiles(
+        self, u_mm: Floats, v_mm: Floats, way: npt.ArrayLike, lead_rad: Floats, lean_rad: Floats, aside_mm: Floats
+    ) -> tuple[Floats, Floats]:
+        """Return what passes leave beside their lines, and how far ahead of the place it is cut, (n, m) [mm].
+
+        Lead and lean stay as they are within the cutter's reach of each station (u, v) (n,). Above the line of the pass
+        the height is 0, or negative where the rear of the bottom gouges.
+
+        Parameters
+        ----------
+        aside_mm : (m,)
+            Plan distances to the left of the line.
+        """
+        half = math.ceil(self.reach_mm / self.step_mm)
+        offsets = np.arange(-half, half + 1) * self.step_mm
+        many = offsets.size
+        sign = np.broadcast_to(np.asarray(way, dtype=np.float64), u_mm.shape)
+        point, axis = self.poses(
+            (u_mm[:, None] + offsets).ravel(),
+            np.repeat(v_mm, many),
+            np.repeat(sign, many),
+            np.repeat(lead_rad, many),
+            np.repeat(lean_rad, many),
+            0.0,
+        )
+        tables = self.table(point, axis).reshape(u_mm.size, many, 6)
+        height, shift = np.empty((u_mm.size, aside_mm.size)), np.empty((u_mm.size, aside_mm.size))
+        form, tool = turned_form(self.saddle, self.direction_rad), self._tool()
+
+        def run(part: slice) -> None:
+            kernels.profiles(
+                form, tool, u_mm[part], v_mm[part], aside_mm, tables[part], self.step_mm, height[part], shift[part]
+            )
+
+        _in_bands(run, u_mm.size)
+        return height - self.allowance_mm, shift
+
+    def heights(self, u_mm: Floats, v_mm: Floats, track: Track) -> Floats:
+        """Return what one whole pass leaves over plan points (n,) [mm]; inf where it does not reach."""
+        height = np.empty(u_mm.size)
+        form, tool = turned_form(self.saddle, self.direction_rad), self._tool()
+
+        def run(part: slice) -> None:
+            kernels.heights(
+                form, tool, u_mm[part], v_mm[part], track.table, track.start_mm, self.step_mm, self.reach_mm, height[part]
+            )
+
+        _in_bands(run, u_mm.size)
+        return height - self.allowance_mm
+
+    def ridges(self, u_mm: Floats, first: Track, second: Track) -> tuple[Floats, Floats]:
+        """Return v and height (n,) [mm] of the ridge between two neighbouring passes, first below second in v."""
+        place, height = np.empty(u_mm.size), np.empty(u_mm.size)
+        low, high = np.full(u_mm.size, first.v_mm), np.full(u_mm.size, second.v_mm)
+        form, tool = turned_form(self.saddle, self.direction_rad), self._tool()
+        start = np.array([first.start_mm, second.start_mm])
+
+        def run(part: slice) -> None:
+            kernels.ridges(
+                form, tool, u_mm[part], low[part], high[part], first.table, second.table, start,
+                self.step_mm, self.reach_mm, _RIDGE_ROUNDS, place[part], height[part],
+            )  # fmt: skip
+
+        _in_bands(run, u_mm.size)
+        return place, height - self.allowance_mm
+
+
+@dataclass(frozen=True, slots=True)
+class Track:
+    """Poses of one pass at even steps of its contact: row i at u = start + i step, in (u, v, z)."""
+
+    v_mm: float
+    start_mm: float
+    table: Floats
+
+
+def _in_bands(run: Callable[[slice], None], count: int) -> None:
+    """Run over slices of ``count`` in as many threads as there are processors."""
+    threads = min(os.cpu_count() or 1, max(1, count // 8))
+    if threads == 1:
+        run(slice(0, count))
+        return
+    bounds = np.linspace(0, count, 4 * threads + 1).astype(int)
+    with ThreadPoolExecutor(threads) as pool:
+        list(pool.map(run, [slice(int(a), int(b)) for a, b in zip(bounds[:-1], bounds[1:], strict=True)]))
+
+
+def osculating_lead_rad(disc_mm: float, corner_radius_mm: float, curvature_per_mm: npt.ArrayLike) -> Floats:
+    """Return the lead [rad] at which the swept profile has the surface's curvature across the feed.
+
+    r_eff = r + (R - r) / sin(lead) equals 1 / k at sin(lead) = (R - r) k / (1 - r k): the r-offset of the ellipse that a disc
+    of radius R - r sweeps (docs/theory-matched.md#start; R / sin(lead) for r = 0 is that of G. W. Vickers and K. W. Quan,
+    Ball-mills versus end-mills for curved surface machining, J. Eng. Ind. 111 (1989) 22-26, from memory). Zero where
+    the surface is not concave across the feed, a quarter turn where no lead does it.
+    """
+    k = np.maximum(np.asarray(curvature_per_mm, dtype=np.float64), 0.0)
+    return np.arcsin(np.minimum(disc_mm * k / np.maximum(1.0 - corner_radius_mm * k, 1e-9), 1.0))
