@@ -52,7 +52,11 @@ def imported(path: Path) -> set[str]:
             base = node.module.removeprefix("anticlast").lstrip(".")
             found |= {f"{base}.{alias.name}".lstrip(".") for alias in node.names}
         elif isinstance(node, ast.Import):
-            found |= {alias.name.removeprefix("anticlast.") for alias in node.names if alias.name.startswith("anticlast.")}
+            found |= {
+                alias.name.removeprefix("anticlast.")
+                for alias in node.names
+                if alias.name.startswith("anticlast.")
+            }
     return found
 
 
@@ -94,7 +98,13 @@ def test_kernels_see_arrays_only(path: Path) -> None:
 def test_planning_cannot_be_reached_from_the_geometry() -> None:
     for name in ("saddle", "outline", "cutter"):
         path = PACKAGE / f"{name}.py"
-        assert not {stage(target) for target in imported(path)} & {"passes", "machine", "posting", "readback", "proof"}
+        assert not {stage(target) for target in imported(path)} & {
+            "passes",
+            "machine",
+            "posting",
+            "readback",
+            "proof",
+        }
 
 
 def _calls(tree: ast.AST, names: set[str]) -> list[ast.Expr]:
@@ -111,7 +121,9 @@ def _calls(tree: ast.AST, names: set[str]) -> list[ast.Expr]:
 @pytest.mark.parametrize("path", TESTS, ids=lambda path: path.name)
 def test_tests_can_fail(path: Path) -> None:
     tree = ast.parse(path.read_text(encoding="utf-8"))
-    assert not _calls(tree, {"allclose", "isclose", "array_equal", "approx"}), "a comparison's answer is dropped"
+    assert not _calls(tree, {"allclose", "isclose", "array_equal", "approx"}), (
+        "a comparison's answer is dropped"
+    )
     for node in ast.walk(tree):
         if isinstance(node, ast.FunctionDef) and node.name.startswith("test_"):
             source = ast.unparse(node)
@@ -119,13 +131,19 @@ def test_tests_can_fail(path: Path) -> None:
             assert checks, f"{path.name}:{node.lineno} {node.name} asserts nothing"
         if isinstance(node, ast.Call) and getattr(node.func, "attr", "") == "raises":
             name = ast.unparse(node.args[0]) if node.args else ""
-            assert name not in {"Exception", "BaseException"}, f"{path.name}:{node.lineno} accepts any exception"
+            assert name not in {"Exception", "BaseException"}, (
+                f"{path.name}:{node.lineno} accepts any exception"
+            )
 
 
 def _tracked_texts() -> list[Path]:
     kept = []
     for folder in ("src", "tests", "docs", "post", "samples", ".ci"):
-        kept += [path for path in sorted((ROOT / folder).rglob("*")) if path.is_file() and "__pycache__" not in path.parts]
+        kept += [
+            path
+            for path in sorted((ROOT / folder).rglob("*"))
+            if path.is_file() and "__pycache__" not in path.parts
+        ]
     return [*kept, ROOT / "README.md", ROOT / "DEVELOPERS.md", ROOT / "pyproject.toml"]
 
 

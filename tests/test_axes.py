@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 import math
+import re
 from dataclasses import replace
 
 import numpy as np
 import pytest
-from test_kinematics import OTHERS, SHIPPED, X, Y, Z, machine, rotary
 
 from anticlast.errors import CannotPlan
 from anticlast.machine import branches
@@ -16,6 +16,7 @@ from anticlast.machine.blocks import Digits
 from anticlast.machine.kinematics import Kinematics
 from anticlast.records import CutterPath, Purpose, Stretch
 from anticlast.saddle import Saddle
+from test_kinematics import OTHERS, SHIPPED, X, Y, Z, machine, rotary
 
 LAST_DIGIT_MM = 1e-4
 ROUNDING_MM = math.sqrt(3.0) / 2.0 * LAST_DIGIT_MM  # three words each off by half a digit
@@ -161,14 +162,18 @@ class TestBranches:
         """A cone of axes walked round three times turns C three times, without a jump."""
         kin = Kinematics(SHIPPED["trunnion-ac"], (0, 0, 0), 60.0)
         around = np.linspace(0, 6 * math.pi, 800)
-        axis = np.column_stack([0.3 * np.cos(around), 0.3 * np.sin(around), np.full(800, math.sqrt(1 - 0.09))])
+        axis = np.column_stack(
+            [0.3 * np.cos(around), 0.3 * np.sin(around), np.full(800, math.sqrt(1 - 0.09))]
+        )
         chosen = branches.choose(kin, axis, np.zeros(2), 1e-4, 1e-6)
         assert np.ptp(chosen.rotary_deg[:, 1]) == pytest.approx(1080.0, abs=1e-6)
         assert np.abs(np.diff(chosen.rotary_deg[:, 1])).max() < 2.0
 
     def test_limited_axis_takes_the_turn_that_lasts(self):
         """C within +-360: one and a half turns fit only if they start at the right end."""
-        bounded = machine(rotary("A", X, "work", limits=(-120, 30)), rotary("C", Z, "work", limits=(-360, 360)))
+        bounded = machine(
+            rotary("A", X, "work", limits=(-120, 30)), rotary("C", Z, "work", limits=(-360, 360))
+        )
         kin = Kinematics(bounded, (0, 0, 0), 60.0)
         # The branch with A < 0 has C at -90 degrees plus the direction, so it starts at 120 or, the only one that lasts, -240.
         around = np.radians(np.linspace(-150, 390, 600))
@@ -179,7 +184,9 @@ class TestBranches:
         assert np.abs(np.diff(chosen.rotary_deg[:, 1])).max() < 2.0
 
     def test_a_limit_that_cannot_be_kept_is_named(self):
-        bounded = machine(rotary("A", X, "work", limits=(-120, 0)), rotary("C", Z, "work", limits=(-180, 180)))
+        bounded = machine(
+            rotary("A", X, "work", limits=(-120, 0)), rotary("C", Z, "work", limits=(-180, 180))
+        )
         kin = Kinematics(bounded, (0, 0, 0), 60.0)
         around = np.radians(np.linspace(-270, 450, 600))
         axis = np.column_stack([0.6 * np.cos(around), 0.6 * np.sin(around), np.full(600, 0.8)])
@@ -211,6 +218,25 @@ class TestBranches:
             travel = np.abs(np.diff(chosen, axis=0, prepend=np.zeros((1, 2)))).sum()
             assert travel == pytest.approx(best, abs=1e-6)
 
+    def test_linear_limits_decide_between_branches(self):
+        """A part far to one side: the short branch would carry Y past its limit, the long one does not."""
+        made = SHIPPED["trunnion-ac"]
+        y = replace(made.axes[1], limits=(-30.0, 75.0))
+        made = replace(made, axes=(made.axes[0], y, *made.axes[2:]))
+        kin = Kinematics(made, (0, 0, 0), 60.0)
+        tilt = np.radians(np.linspace(10.0, 20.0, 30))
+        axis = np.column_stack([np.zeros(30), np.sin(tilt), np.cos(tilt)])
+        tip = np.tile([0.0, -40.0, 0.0], (30, 1))
+        start = (
+            np.array([-10.0, 0.0])
+            if kin.forward([[0, 0, 0, -10.0, 0.0]])[1][0, 1] > 0
+            else np.array([10.0, 0.0])
+        )
+        free = branches.choose(kin, axis, start, 1e-4, 1e-6).rotary_deg
+        kept = branches.choose(kin, axis, start, 1e-4, 1e-6, tip).rotary_deg
+        assert kin.gauge_point(kin.place(tip, free))[:, 1].min() < -30.0
+        assert kin.gauge_point(kin.place(tip, kept))[:, 1].min() >= -30.0
+
     def test_out_of_reach_is_refused(self, make_job):
         job = with_machine(make_job(), SHIPPED["rotary-a"])
         stretch = stretch_along(job, 0.0, np.linspace(-9, 9, 10), 20.0)
@@ -227,14 +253,23 @@ class TestTimes:
     def test_contact_feed(self, make_job):
         """Minutes of a pass = contact length / feed where no axis is at its limit (3 axes, slow feed)."""
         job = with_machine(make_job(), SHIPPED["mill-3"])
-        stretch = stretch_along(job, 2.0, np.linspace(-9, 9, 200), 0.0, lambda a: np.tile([0.0, 0.0, 1.0], (len(a), 1)), feed=300.0)
+        stretch = stretch_along(
+            job,
+            2.0,
+            np.linspace(-9, 9, 200),
+            0.0,
+            lambda a: np.tile([0.0, 0.0, 1.0], (len(a), 1)),
+            feed=300.0,
+        )
         path = axis_path(job, path_of(job, stretch))
         length = np.linalg.norm(np.diff(stretch.contact_mm, axis=0), axis=1).sum()
         assert path.minutes[path.purpose == Purpose.CUT].sum() == pytest.approx(length / 300.0, rel=1e-9)
 
     def test_contact_that_stands_still_uses_the_reference_point(self, make_job):
         job = with_machine(make_job(), SHIPPED["mill-3"])
-        stretch = stretch_along(job, 0.0, np.linspace(0, 1, 3), 0.0, lambda a: np.tile([0.0, 0.0, 1.0], (len(a), 1)))
+        stretch = stretch_along(
+            job, 0.0, np.linspace(0, 1, 3), 0.0, lambda a: np.tile([0.0, 0.0, 1.0], (len(a), 1))
+        )
         still = replace(
             stretch,
             contact_mm=np.repeat(stretch.contact_mm[:1], 3, axis=0),
@@ -301,7 +336,9 @@ class TestWords:
         """After a cutter change the axes stand still, so Z reads lower by what the new cutter is longer."""
         job = with_machine(make_job(), SHIPPED["trunnion-ac"])
         short = job.operations[0]
-        long_ = replace(short, index=2, cutter=replace(short.cutter, number=2, stickout_mm=short.cutter.stickout_mm + 7.0))
+        long_ = replace(
+            short, index=2, cutter=replace(short.cutter, number=2, stickout_mm=short.cutter.stickout_mm + 7.0)
+        )
         job = replace(job, operations=(short, long_))
         stretch = stretch_along(job, 2.0, np.linspace(-9, 9, 30))
         one = axis_path(job, path_of(job, stretch))
@@ -317,7 +354,9 @@ def cutter_points(cutter, count=40):
     rings = []
     corner = cutter.corner_radius_mm
     for angle in np.linspace(0, math.pi / 2, 7):
-        rings.append((cutter.radius_mm - corner + corner * math.sin(angle), corner - corner * math.cos(angle)))
+        rings.append(
+            (cutter.radius_mm - corner + corner * math.sin(angle), corner - corner * math.cos(angle))
+        )
     rings.append((0.0, 0.0))
     for body in cutter.bodies():
         rings += [(body.radius_mm, h) for h in np.linspace(body.low_mm, body.high_mm, 9)]
@@ -398,9 +437,9 @@ def test_height_beyond_the_machine_is_noted(make_job):
 
 
 def test_travel_past_a_limit_is_noted(make_job):
-    job = with_machine(make_job(), SHIPPED["trunnion-ac"], (-205.0, 0.0, 30.0))
+    job = with_machine(make_job(), SHIPPED["trunnion-ac"], (-300.0, 0.0, 30.0))
     path = axis_path(job, path_of(job, stretch_along(job, 3.0, np.linspace(-9, 9, 15))))
-    assert any(note.startswith("X has to go ") for note in path.notes)
+    assert any(re.match("[XY] has to go [0-9.]+ mm past its limit", note) for note in path.notes)
 
 
 def test_cap_on_blocks_is_not_silent(make_job, monkeypatch):
@@ -443,5 +482,7 @@ def test_y_axis_is_used(make_job):
         job = with_machine(make_job(), SHIPPED[name])
         assert SHIPPED[name].rotary[0].direction == axis
         kin = Kinematics(job.machine, job.part_origin_mm, 79.0)
-        path = axis_path(job, path_of(job, stretch_along(job, 0.0, np.linspace(-9, 9, 15), 0.0, kin.nearest_axis)))
+        path = axis_path(
+            job, path_of(job, stretch_along(job, 0.0, np.linspace(-9, 9, 15), 0.0, kin.nearest_axis))
+        )
         assert bool(np.ptp(path.words[path.purpose == Purpose.CUT, 3]) > 4.0) is tilt

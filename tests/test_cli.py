@@ -8,10 +8,10 @@ import sys
 from pathlib import Path
 
 import pytest
-from conftest import job_text
 from typer.testing import CliRunner
 
 from anticlast.cli import app
+from conftest import job_text
 
 ROOT = Path(__file__).resolve().parents[1]
 COMMANDS = ("make", "survey", "scallop", "machines", "prove")
@@ -25,7 +25,12 @@ def run(*words: str | Path):
 def job_file(tmp_path: Path) -> Path:
     path = tmp_path / "job.toml"
     path.write_text(
-        job_text(machine="mill-3", outline='shape = "circle"\ndiameter = 14.0', limit="scallop = 0.02", tolerance=0.01),
+        job_text(
+            machine="mill-3",
+            outline='shape = "circle"\ndiameter = 14.0',
+            limit="scallop = 0.02",
+            tolerance=0.01,
+        ),
         encoding="utf-8",
     )
     return path
@@ -70,7 +75,9 @@ def test_make_json_is_data_only(job_file: Path, tmp_path: Path) -> None:
 
 
 def test_bad_job_exits_2_with_every_fault_and_writes_nothing(job_file: Path, tmp_path: Path) -> None:
-    text = job_file.read_text().replace("diameter = 6.0", "diametre = 6.0").replace("feed = 1500", "feed = -3")
+    text = (
+        job_file.read_text().replace("diameter = 6.0", "diametre = 6.0").replace("feed = 1500", "feed = -3")
+    )
     job_file.write_text(text)
     result = run("make", job_file, "--out", tmp_path / "out")
     assert result.exit_code == 2
@@ -99,7 +106,16 @@ def test_survey_json_has_the_contracted_keys(job_file: Path) -> None:
 
 def test_scallop_json_has_the_contracted_keys(job_file: Path) -> None:
     data = json.loads(run("scallop", job_file, "--stepover", "0.5", "--json").output)
-    assert set(data) >= {"cutter", "direction_deg", "stepover_mm", "scallop_mm", "at", "flat_rule", "ra_um", "rz_um"}
+    assert set(data) >= {
+        "cutter",
+        "direction_deg",
+        "stepover_mm",
+        "scallop_mm",
+        "at",
+        "flat_rule",
+        "ra_um",
+        "rz_um",
+    }
     assert set(data["stepover_mm"]) == {"tightest", "mean", "widest"}
     assert set(data["scallop_mm"]) == {"smallest", "mean", "largest"}
     # Flat rule, any handbook: R = 3, s = 0.5 -> h = 0.010434814.

@@ -257,6 +257,7 @@ def test_good_file_in_mm_and_radians() -> None:
         "fixed_axis": None,
         "tolerance_mm": 0.002,
         "way": "both",
+        "lead_margin_rad": pytest.approx(math.radians(0.05)),
     }
 
 

@@ -27,7 +27,17 @@ def linear(letter: str, low: float = -200.0, high: float = 400.0) -> Axis:
 def rotary(letter, direction, carries, turns=None, limits=None, through=(0.0, 0.0, 0.0)) -> Axis:
     turns = turns if turns is not None else (-1 if carries == "work" else 1)
     return Axis(
-        letter, "rotary", limits, 3600.0, 3600.0, 1500.0, 3e4, carries, tuple(direction), tuple(through), turns
+        letter,
+        "rotary",
+        limits,
+        3600.0,
+        3600.0,
+        1500.0,
+        3e4,
+        carries,
+        tuple(direction),
+        tuple(through),
+        turns,
     )
 
 
@@ -46,9 +56,7 @@ SHIPPED = {
     "rotary-b": machine(rotary("B", Y, "work", limits=(-110, 110))),
     "trunnion-ac": machine(rotary("A", X, "work", limits=(-120, 30)), rotary("C", Z, "work")),
     "trunnion-bc": machine(rotary("B", Y, "work", limits=(-30, 120)), rotary("C", Z, "work")),
-    "head-b-table-c": machine(
-        rotary("B", Y, "cutter", limits=(-95, 95)), rotary("C", Z, "work"), pivot=40.0
-    ),
+    "head-b-table-c": machine(rotary("B", Y, "cutter", limits=(-95, 95)), rotary("C", Z, "work"), pivot=40.0),
 }
 OTHERS = {
     "head-cb": machine(rotary("C", Z, "cutter"), rotary("B", Y, "cutter"), pivot=120.0),
@@ -56,7 +64,9 @@ OTHERS = {
     "nutating table": machine(
         rotary("B", (0, -HALF, HALF), "work", through=(0, 5, -30)), rotary("C", Z, "work", through=(1, 2, 3))
     ),
-    "table A, head B": machine(rotary("A", X, "work", through=(0, 3, -20)), rotary("B", Y, "cutter"), pivot=50.0),
+    "table A, head B": machine(
+        rotary("A", X, "work", through=(0, 3, -20)), rotary("B", Y, "cutter"), pivot=50.0
+    ),
     "head B, table A": machine(rotary("B", Y, "cutter"), rotary("A", X, "work", turns=1), pivot=50.0),
     "trunnion-ac off crossing": machine(
         rotary("A", X, "work", through=(0, 0, -12)), rotary("C", Z, "work", through=(0, 7, 0))
@@ -185,9 +195,14 @@ class TestEveryMachine:
         found = kin.nearest_axis(wished)
         assert np.linalg.norm(found, axis=1) == pytest.approx(np.ones(60), abs=1e-12)
         ranges = [
-            np.linspace(*(a.limits if a.limits is not None else (-180.0, 180.0)), 181) for a in kin.machine.rotary
+            np.linspace(*(a.limits if a.limits is not None else (-180.0, 180.0)), 181)
+            for a in kin.machine.rotary
         ]
-        grid = np.stack(np.meshgrid(*ranges, indexing="ij"), axis=-1).reshape(-1, len(ranges)) if ranges else None
+        grid = (
+            np.stack(np.meshgrid(*ranges, indexing="ij"), axis=-1).reshape(-1, len(ranges))
+            if ranges
+            else None
+        )
         rot = grid if grid is not None else np.zeros((1, 0))
         _, reachable = kin.forward(np.column_stack([np.zeros((len(rot), 3)), rot]))
         best = (wished @ reachable.T).max(axis=1)
@@ -246,8 +261,12 @@ class TestChain:
         kin = Kinematics(SHIPPED["rotary-a"], (0, 0, 0), 60.0)
         _, valid = kin.inverse([[0.0, 0.0, 0.0]], [[math.sin(0.1), 0.0, math.cos(0.1)]])
         assert not valid.any()
-        nutating = Kinematics(machine(rotary("C", Z, "work"), rotary("B", (0, 0.5, math.sqrt(0.75)), "cutter")), (0, 0, 0), 60)
-        _, valid = nutating.inverse([[0.0, 0.0, 0.0]], random_axes(np.random.default_rng(0), 1, 0.0) * [1, 1, -1])
+        nutating = Kinematics(
+            machine(rotary("C", Z, "work"), rotary("B", (0, 0.5, math.sqrt(0.75)), "cutter")), (0, 0, 0), 60
+        )
+        _, valid = nutating.inverse(
+            [[0.0, 0.0, 0.0]], random_axes(np.random.default_rng(0), 1, 0.0) * [1, 1, -1]
+        )
         assert not valid.any()
 
     def test_parallel_axes_are_refused(self):

@@ -10,10 +10,10 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from conftest import job_text
 
 from anticlast import pipeline
 from anticlast.errors import CannotWrite
+from conftest import job_text
 
 ROOT = Path(__file__).resolve().parents[1]
 MICROMETRE = 1e-3
@@ -69,7 +69,10 @@ VARIED = {
         "diameter": 0.25, "stickout": 1.4, "limit": "scallop = 0.0004", "feed": 50, "tolerance": 0.00015,
     },
 }  # fmt: skip
-INCH_CUTTER = ("flute_length = 18.0", "flute_length = 0.75"), ("[[16.0, 20.0], [32.0, 25.0]]", "[[0.6, 0.8], [1.25, 1.0]]")
+INCH_CUTTER = (
+    ("flute_length = 18.0", "flute_length = 0.75"),
+    ("[[16.0, 20.0], [32.0, 25.0]]", "[[0.6, 0.8], [1.25, 1.0]]"),
+)
 
 
 def text_of(changes: dict[str, object]) -> str:
@@ -109,7 +112,12 @@ def test_outputs_are_as_contracted(tmp_path: Path) -> None:
     job_file.write_text(job_text(machine="mill-3", outline=CIRCLE), encoding="utf-8")
     out = tmp_path / "deep" / "out"
     made = pipeline.make(job_file, out)
-    assert sorted(path.name for path in out.iterdir()) == ["report.html", "summary.json", "surface.stl", "test-tile.ngc"]
+    assert sorted(path.name for path in out.iterdir()) == [
+        "report.html",
+        "summary.json",
+        "surface.stl",
+        "test-tile.ngc",
+    ]
     summary = json.loads((out / "summary.json").read_text())
     program = (out / "test-tile.ngc").read_bytes()
     assert summary["schema"] == 1
@@ -151,7 +159,9 @@ def test_a_ball_too_large_is_refused_with_the_one_that_fits(tmp_path: Path) -> N
     assert summary["released"] is False
     failed = [finding for finding in summary["proof"]["findings"] if not finding["ok"]]
     assert len(failed) == 1
-    assert failed[0]["limit"] == pytest.approx(12.5, rel=1e-6)  # 1 / (2 a), a = 0.04: methods of any geometry text
+    assert failed[0]["limit"] == pytest.approx(
+        12.5, rel=1e-6
+    )  # 1 / (2 a), a = 0.04: methods of any geometry text
     assert (tmp_path / "report.html").exists()
 
 
@@ -176,13 +186,17 @@ def test_a_withheld_program_removes_the_old_one(tmp_path: Path) -> None:
     out = tmp_path / "out"
     job_file.write_text(job_text(machine="mill-3", outline=CIRCLE), encoding="utf-8")
     assert pipeline.make(job_file, out).released
-    job_file.write_text(job_text(machine="mill-3", outline=CIRCLE, a=0.2, top=20.0, bottom=-24.0), encoding="utf-8")
+    job_file.write_text(
+        job_text(machine="mill-3", outline=CIRCLE, a=0.2, top=20.0, bottom=-24.0), encoding="utf-8"
+    )
     assert not pipeline.make(job_file, out).released
     assert not list(out.glob("*.ngc"))
     assert not list(out.glob(".*"))
 
 
-@pytest.mark.skipif(os.name == "nt" or getattr(os, "geteuid", lambda: 0)() == 0, reason="needs a folder that refuses writing")
+@pytest.mark.skipif(
+    os.name == "nt" or getattr(os, "geteuid", lambda: 0)() == 0, reason="needs a folder that refuses writing"
+)
 def test_unwritable_folder_changes_nothing(tmp_path: Path) -> None:
     out = tmp_path / "out"
     out.mkdir(mode=0o500)
@@ -197,7 +211,9 @@ def test_samples_are_released(sample: str, tmp_path: Path) -> None:
     assert made.released, [finding.message for finding in made.findings if not finding.ok]
 
 
-@pytest.mark.parametrize(("a", "radius", "height"), [(0.005, 3.0, 0.005), (0.01, 3.0, 0.01), (0.01, 5.0, 0.005)])
+@pytest.mark.parametrize(
+    ("a", "radius", "height"), [(0.005, 3.0, 0.005), (0.01, 3.0, 0.01), (0.01, 5.0, 0.005)]
+)
 def test_graded_is_within_five_percent_of_the_floor_along_the_crown(make_job, a, radius, height) -> None:
     job = make_job(
         machine="mill-3", pattern="graded", a=a, diameter=2 * radius, limit=f"scallop = {height}", tolerance=0.002,
@@ -217,4 +233,6 @@ def test_speed_of_contact_is_the_feed_asked(make_job, tmp_path: Path) -> None:
     minutes = float(axes.minutes[cutting].sum())
     assert minutes >= path.cut_length_mm / job.operations[0].feed_mm_min * 0.999
     read = made.program.motions
-    assert float(np.nansum(read.seconds)) / 60 == pytest.approx(float(axes.minutes[~axes.rapid].sum()), rel=0.03)
+    assert float(np.nansum(read.seconds)) / 60 == pytest.approx(
+        float(axes.minutes[~axes.rapid].sum()), rel=0.03
+    )

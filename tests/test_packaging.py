@@ -20,7 +20,9 @@ LIST = (
 
 def listed(python_path: Path, cwd: Path) -> tuple[set[str], Path]:
     env = {**os.environ, "PYTHONPATH": str(python_path)}
-    done = subprocess.run([sys.executable, "-c", LIST], capture_output=True, text=True, check=True, cwd=cwd, env=env)
+    done = subprocess.run(
+        [sys.executable, "-c", LIST], capture_output=True, text=True, check=True, cwd=cwd, env=env
+    )
     names, _, folder = done.stdout.strip().rpartition("\n")[2].partition("|")
     return set(names.split()), Path(folder)
 
@@ -55,5 +57,10 @@ def test_from_a_checkout_or_editable_install(tmp_path: Path) -> None:
 def test_the_wheel_carries_all_it_needs(wheel: Path) -> None:
     names = set(zipfile.ZipFile(wheel).namelist())
     for path in (ROOT / "src" / "anticlast").rglob("*"):
-        if path.is_file() and "__pycache__" not in path.parts and path.suffix != ".nbi" and path.suffix != ".nbc":
+        if (
+            path.is_file()
+            and "__pycache__" not in path.parts
+            and path.suffix != ".nbi"
+            and path.suffix != ".nbc"
+        ):
             assert "anticlast/" + path.relative_to(ROOT / "src" / "anticlast").as_posix() in names

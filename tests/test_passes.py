@@ -362,7 +362,8 @@ def test_raster_passes_are_evenly_spaced_and_half_a_step_from_the_edges():
 def test_stepover_given_is_the_largest_distance_on_the_surface(shape):
     job, path = plan(SHAPES[shape], a=0.03, scallop_mm=None, stepover_mm=0.37, direction_rad=0.9)
     assert path.stepover_mm[1] == pytest.approx(0.37, abs=10 * NANOMETRE)
-    assert highest_scallop(job, path) == pytest.approx(path.scallop_predicted_mm, abs=0.1 * MICRON)
+    found = highest_scallop(job, path)
+    assert 0.975 * path.scallop_predicted_mm <= found <= 1.001 * path.scallop_predicted_mm
     # Outside truth: distances from surface points of one pass to the nearest pass beside it, shapely-free.
     d = path.operation.direction_rad
     left = np.array([-math.sin(d), math.cos(d)])

@@ -88,6 +88,9 @@ def test_per_minute_feed_never_faster_than_asked_and_at_most_two_percent_slower(
         words = dict((word[0], float(word[1:])) for word in WORD.findall(line) if word[0] in "XYZF")
         if line.startswith("(") or not words:
             continue
+        if set(words) == {"Z"} and line.startswith("G0"):  # Z goes alone first; the rest of row 0 follows
+            standing.update(words)
+            continue
         row = next(rows)
         before = np.array(list(standing.values()))
         feed = words.pop("F", feed)
@@ -109,6 +112,9 @@ def test_words_come_back_to_the_last_digit(make_job) -> None:
             continue
         for letter, value in words.items():
             standing["XYZAC".index(letter)] = value
+        if np.isnan(standing).any():  # Z goes alone first; the rest of row 0 follows
+            assert set(words) == {"Z"}
+            continue
         np.testing.assert_allclose(standing, path.words[row], atol=1e-9)
         row += 1
     assert row == len(path.words)
@@ -144,7 +150,9 @@ def test_line_numbers_wrap_below_six_digits(make_job) -> None:
     control = replace(job.machine.control, line_numbers=True)
     job = replace(job, machine=replace(job.machine, control=control))
     numbers = [
-        int(match.group(1)) for line in texts(job, axis_path(job, 100_050)) if (match := re.match(r"N(\d+) ", line))
+        int(match.group(1))
+        for line in texts(job, axis_path(job, 100_050))
+        if (match := re.match(r"N(\d+) ", line))
     ]
     assert max(numbers) == 99999
     assert numbers[-1] < 200
@@ -170,7 +178,14 @@ class _Sink(io.TextIOBase):
 
 @pytest.mark.parametrize(
     ("value", "decimals", "text"),
-    [(-0.00001, 4, "0"), (1.5, 4, "1.5"), (100.0, 0, "100"), (-2.0, 3, "-2"), (0.00005, 4, "0.0001"), (1e-9, 4, "0")],
+    [
+        (-0.00001, 4, "0"),
+        (1.5, 4, "1.5"),
+        (100.0, 0, "100"),
+        (-2.0, 3, "-2"),
+        (0.00005, 4, "0.0001"),
+        (1e-9, 4, "0"),
+    ],
 )
 def test_plain_numbers(value, decimals, text) -> None:
     assert plain(value, decimals) == text

@@ -16,6 +16,7 @@ import numpy as np
 import pytest
 
 from anticlast.errors import BadInput
+from anticlast.readback import reader
 from anticlast.readback.checks import check_axes, check_cutters, check_places, known_places
 from anticlast.readback.columns import Columns
 from anticlast.readback.interpreter import Interpreter
@@ -616,7 +617,7 @@ def test_text_after_the_end_is_found() -> None:
     assert program.motions.line[-1] == HEAD_LINES
 
 
-def test_files_that_cannot_be_used(tmp_path: Path) -> None:
+def test_files_that_cannot_be_used(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     with pytest.raises(BadInput, match="cannot be read: No such file"):
         read_program(tmp_path / "none.ngc")
     with pytest.raises(BadInput, match="is a folder"):
@@ -626,6 +627,10 @@ def test_files_that_cannot_be_used(tmp_path: Path) -> None:
     with pytest.raises(BadInput, match="zero byte") as caught:
         read_program(binary)
     assert caught.value.faults[0].line == 2
+    monkeypatch.setattr(reader, "MOST_BYTES", 4)
+    with pytest.raises(BadInput, match="longer than the 4 bytes"):
+        read_program(binary)
+    monkeypatch.undo()
     good = tmp_path / "good.ngc"
     good.write_text(HEAD + "G1 X1 F5\nM2\n")
     program = read_program(good)

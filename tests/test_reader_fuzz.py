@@ -53,8 +53,9 @@ plain_line = st.tuples(
 ).map("".join)
 OTHER_LINES = """
 (note)|(MSG, hello)|G90|G91|G93|G94|G20|G21|M5|M3 S200|M8|M9|G49|G43 H2|G2 X1 Y1 R5 F9
-G3 X2 Y2 I1 J1 F3|G3 I1 X#1|#1=5|G1 X[1+2] F5|G92 X1 C5|G92.1|G92.2|G92.3|G55|G54|G81 Z-1 R1 X4|G80|T2 M6|G4 P1|X#1|G53 G0 X1|%|M2|Q5
-G18|G17|M30|G28|G10 L2 P1 X1|G1 X1 X2|G64|G82 X1 Z-2 R1 P1 L3|G1 X1 (c) F3|G0 Y5;|G1X1Y2Z3F4|G1 G91 X5||\t
+G3 X2 Y2 I1 J1 F3|G3 I1 X#1|#1=5|G1 X[1+2] F5|G92 X1 C5|G92.1|G92.2|G92.3|G55|G54|G81 Z-1 R1 X4
+G80|T2 M6|G4 P1|X#1|G53 G0 X1|%|M2|Q5|G18|G17|M30|G28|G10 L2 P1 X1|G1 X1 X2|G64
+G82 X1 Z-2 R1 P1 L3|G1 X1 (c) F3|G0 Y5;|G1X1Y2Z3F4|G1 G91 X5||\t
 """
 other_line = st.sampled_from(OTHER_LINES.strip("\n").replace("\n", "|").split("|"))
 program_text = st.lists(st.one_of(plain_line, plain_line, plain_line, other_line), max_size=30)

@@ -9,6 +9,7 @@ import time
 from pathlib import Path
 
 import pytest
+
 from conftest import job_text
 
 CIRCLE = 'shape = "circle"\ndiameter = 12.0'

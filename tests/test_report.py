@@ -24,10 +24,10 @@ import report_fixture as fixture
 from anticlast import files
 from anticlast.cutter import Cutter
 from anticlast.errors import CannotWrite
-from anticlast.records import Finding, Made, Purpose
+from anticlast.records import Finding, Made, PartMotion, Purpose
 from anticlast.report import page as page_module
 from anticlast.report import sections
-from anticlast.report.along import UNKNOWN, along, contact, match_blocks
+from anticlast.report.along import UNKNOWN, along, contact, fewer_pieces, match_blocks
 from anticlast.report.cutting_values import cutting_values, depth_of_cut_mm
 from anticlast.report.data import FEW_ROWS, HEIGHT_STEP_MM, MOST_KNOTS, cutter_profile
 from anticlast.report.drawing import round_length
@@ -37,6 +37,7 @@ from anticlast.report.spacing import distance_to_line, pooled
 from anticlast.report.thinning import thin, thin_to
 from anticlast.report.threejs import ThreeJsNotFound, three_script
 from anticlast.saddle import Saddle
+from anticlast.tolerances import PIECE_MM
 from browser import opened
 
 MICROMETRE = 1e-3  # mm
@@ -477,6 +478,33 @@ def test_blocks_are_matched_past_extra_rows_on_either_side() -> None:
     assert match_blocks(ends, words).tolist() == [-1, *range(8), -1, *range(11, 20)]
 
 
+def test_pieces_of_a_motion_are_joined_within_the_slack(made: Made) -> None:
+    """A quarter turn at 40 mm split as finely as the read-back does: sagitta r phi^2 / 8 <= PIECE_MM."""
+    radius = 40.0
+    count = math.ceil((math.pi / 2) / math.sqrt(8 * PIECE_MM / radius))
+    turn = np.linspace(0, math.pi / 2, count + 1)
+    tip = np.column_stack((radius * np.cos(turn), radius * np.sin(turn), np.zeros(count + 1)))
+    of = np.zeros(count + 1, np.int64)
+    of[0] = -1
+    fine = PartMotion(
+        tip,
+        np.tile([0.0, 0.0, 1.0], (count + 1, 1)),
+        of + 1,
+        of < 0,
+        of + 2,
+        of,
+        np.linspace(0, 1, count + 1),
+    )
+    coarse, slack = fewer_pieces(fine)
+    assert len(coarse.motion) < len(fine.motion) / 12
+    assert coarse.fraction[-1] == 1.0
+    x = np.interp(fine.fraction, coarse.fraction, coarse.tip_mm[:, 0])
+    y = np.interp(fine.fraction, coarse.fraction, coarse.tip_mm[:, 1])
+    off = np.hypot(x - tip[:, 0], y - tip[:, 1]).max()
+    assert 0.3 * slack < off <= slack < 0.01
+    assert fewer_pieces(made.part_motion) == (made.part_motion, 0.0)
+
+
 def test_moves_outside_the_plan_are_told_so(made: Made) -> None:
     short = replace(made.axis_paths[0], words=made.axis_paths[0].words + 500.0)
     rows = along(replace(made, axis_paths=(short,)))
@@ -707,7 +735,15 @@ def test_map_and_strips_answer_to_pointer_and_keys(written: Path) -> None:
         told = page.inner_text("#chart-words")
         assert all(
             word in told
-            for word in ("feed asked", "feed reached", "A ", "C ", "local stepover", "local scallop")
+            for word in (
+                "feed job 1500",
+                "feed program",
+                "feed reached",
+                "A ",
+                "C ",
+                "local stepover",
+                "local scallop",
+            )
         )
         line = told.split()[1]
         assert page.inner_text("#words").startswith(f"line {line} ")

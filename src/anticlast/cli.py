@@ -80,7 +80,11 @@ def _finding_line(finding: Finding) -> str:
 def _report(made: Made, out: Path) -> None:
     job = made.job
     for entry in made.operations:
-        floor = f", {entry.cut_length_mm / entry.length_floor_mm:.3f} of the floor" if entry.length_floor_mm else ""
+        floor = (
+            f", {entry.cut_length_mm / entry.length_floor_mm:.3f} of the floor"
+            if entry.length_floor_mm
+            else ""
+        )
         typer.echo(
             f"operation {entry.index}: {entry.does}, {entry.pattern}, T{entry.cutter}: {entry.passes} passes,"
             f" cut length {entry.cut_length_mm / 1000:.2f} m{floor}, links {entry.link_length_mm / 1000:.2f} m,"
@@ -107,7 +111,8 @@ def make(
     job: JobArgument,
     out: Annotated[Path, typer.Option("--out", metavar="DIR", help="Folder for the results.")] = Path("out"),
     grid: Annotated[
-        float | None, typer.Option("--grid", metavar="MM", min=0.01, max=5.0, help="Spacing of the proof's grid, mm.")
+        float | None,
+        typer.Option("--grid", metavar="MM", min=0.01, max=5.0, help="Spacing of the proof's grid, mm."),
     ] = None,
     as_json: JsonOption = False,
 ) -> None:
@@ -150,17 +155,23 @@ def _ball_operation(operations: tuple[Operation, ...], job: Path) -> Operation:
     raise BadInput(Fault(str(job), 0, "operation", "no operation uses a ball cutter; scallop needs one"))
 
 
-@app.command(epilog="Example: anticlast scallop samples/formwork-tile/job.toml --scallop 0.005 --picture scallop.png")
+@app.command(
+    epilog="Example: anticlast scallop samples/formwork-tile/job.toml --scallop 0.005 --picture scallop.png"
+)
 def scallop(
     job: JobArgument,
     stepover: Annotated[
-        float | None, typer.Option("--stepover", metavar="S", help="Distance between passes, in the job's units.")
+        float | None,
+        typer.Option("--stepover", metavar="S", help="Distance between passes, in the job's units."),
     ] = None,
     height: Annotated[
         float | None, typer.Option("--scallop", metavar="H", help="Scallop height, in the job's units.")
     ] = None,
     direction: Annotated[
-        float | None, typer.Option("--direction", metavar="DEG", help="Feed direction from part X; the job's if not given.")
+        float | None,
+        typer.Option(
+            "--direction", metavar="DEG", help="Feed direction from part X; the job's if not given."
+        ),
     ] = None,
     picture: Annotated[
         Path | None, typer.Option("--picture", metavar="FILE", help="Also draw a plan map: .png or .svg.")
@@ -181,10 +192,14 @@ def scallop(
             if value is not None and not 0 < value < float("inf"):
                 raise BadInput(Fault("command line", 0, name, f"found {value}; give a length above 0"))
         if picture is not None and picture.suffix.lower() not in {".png", ".svg"}:
-            raise BadInput(Fault("command line", 0, "--picture", f"found {picture.name!r}; give a .png or .svg file"))
+            raise BadInput(
+                Fault("command line", 0, "--picture", f"found {picture.name!r}; give a .png or .svg file")
+            )
         loaded = pipeline.load_job(job)
         operation = _ball_operation(loaded.operations, job)
-        answer = pipeline.scallop(loaded, operation, stepover=stepover, scallop=height, direction_deg=direction)
+        answer = pipeline.scallop(
+            loaded, operation, stepover=stepover, scallop=height, direction_deg=direction
+        )
         if picture is not None:
             from anticlast.report.pictures import scallop_picture
 
@@ -192,7 +207,7 @@ def scallop(
     if as_json:
         _print_json(answer.as_json())
         return
-    for line in answer.lines():
+    for line in answer.lines(loaded.units):
         typer.echo(line)
     if picture is not None:
         typer.echo(f"picture: {picture}")
@@ -216,9 +231,12 @@ def machines(as_json: JsonOption = False) -> None:
 @app.command(epilog="Example: anticlast prove out/formwork-tile.ngc --job samples/formwork-tile/job.toml")
 def prove(
     program: Annotated[Path, typer.Argument(metavar="PROGRAM", help="RS-274 program.", show_default=False)],
-    job: Annotated[Path, typer.Option("--job", metavar="JOB", help="Job file it is for.", show_default=False)],
+    job: Annotated[
+        Path, typer.Option("--job", metavar="JOB", help="Job file it is for.", show_default=False)
+    ],
     grid: Annotated[
-        float | None, typer.Option("--grid", metavar="MM", min=0.01, max=5.0, help="Spacing of the proof's grid, mm.")
+        float | None,
+        typer.Option("--grid", metavar="MM", min=0.01, max=5.0, help="Spacing of the proof's grid, mm."),
     ] = None,
     as_json: JsonOption = False,
 ) -> None:

@@ -76,7 +76,9 @@ class CannotPlan(AnticlastError):
 
     exit_status = 1
 
-    def __init__(self, check: str, message: str, worst: float = 0.0, limit: float = 0.0, unit: str = "mm") -> None:
+    def __init__(
+        self, check: str, message: str, worst: float = 0.0, limit: float = 0.0, unit: str = "mm"
+    ) -> None:
         super().__init__(message)
         self.check = check
         self.worst = worst

@@ -298,6 +298,7 @@ def _operations(draft: _Draft, cutters: Mapping[int, Cutter], machine: Machine) 
                 fixed_axis=checks.axis_of(table),
                 tolerance_mm=table.tolerance,
                 way=table.way,
+                lead_margin_rad=math.radians(table.lead_margin),
             )
         )
         left_before = table.allowance

@@ -204,6 +204,8 @@ def _check_pattern(operation: Checked[OperationTable], cutter: Checked[CutterTab
         operation.fault(
             "pattern", 'found "matched" with a ball cutter; needs a bull or flat cutter, or another pattern'
         )
+    if pattern != "matched" and "lead_margin" in operation.given:
+        operation.fault("lead_margin", f'has no place in the pattern "{pattern}"; only "matched" sets the lead itself')
 
 
 def _check_step(

@@ -131,3 +131,4 @@ class OperationTable(FileTable):
     fixed: Direction | None = None
     tolerance: Annotated[float, Quantity("length", 0.0001, 0.1)] = 0.002
     way: Literal["both", "one-way"] = "both"
+    lead_margin: Annotated[float, Quantity("degrees", 0, 5)] = 0.05

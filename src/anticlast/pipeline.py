@@ -151,7 +151,9 @@ def read_back(job: Job, path: Path) -> ReadProgram:
     """Read a program text as the control would."""
     from anticlast.readback.reader import read_program
 
-    return read_program(path, length_offsets={cutter.number: cutter.gauge_length_mm for cutter in job.cutters})
+    return read_program(
+        path, length_offsets={cutter.number: cutter.gauge_length_mm for cutter in job.cutters}
+    )
 
 
 def _result(path: CutterPath, axes: AxisPath, floor_mm: float, times: tuple[float, float]) -> OperationResult:
@@ -195,7 +197,9 @@ def floor_mm(job: Job, path: CutterPath) -> float:
     return float(length_floor_mm(Saddle.of(job.part), job.part.outline, operation.cutter.radius_mm, height))
 
 
-def _share_times(times: MotionTimes, program: ReadProgram, starts: tuple[int, ...]) -> list[tuple[float, float]]:
+def _share_times(
+    times: MotionTimes, program: ReadProgram, starts: tuple[int, ...]
+) -> list[tuple[float, float]]:
     """Split the program's time over its operations, given the line on which each starts."""
     bounds = np.searchsorted(program.motions.line, np.array([*starts, np.iinfo(np.int64).max]))
     return [
@@ -227,14 +231,22 @@ def fit_findings(job: Job) -> tuple[Finding, ...]:
                 line=0,
                 message=f"T{cutter.number}: ball radius {cutter.radius_mm:.4g} mm against {largest:.4g} mm, the tightest concave"
                 " radius of the surface"
-                + ("" if ok else f". It would cut into the finished form; choose a ball below {2 * largest:.4g} mm diameter"),
+                + (
+                    ""
+                    if ok
+                    else f". It would cut into the finished form; choose a ball below {2 * largest:.4g} mm diameter"
+                ),
             )
         )
     return tuple(findings)
 
 
 def make(
-    job: Job | str | Path, out: str | Path = "out", *, grid_mm: float | None = None, progress: Progress = _quiet
+    job: Job | str | Path,
+    out: str | Path = "out",
+    *,
+    grid_mm: float | None = None,
+    progress: Progress = _quiet,
 ) -> Made:
     """Run the main job: plan, post, read back, prove, estimate, report.
 
@@ -339,7 +351,9 @@ def _sha256(path: Path) -> str:
     return digest.hexdigest()
 
 
-def prove(program: str | Path, job: Job, *, grid_mm: float | None = None, progress: Progress = _quiet) -> Made:
+def prove(
+    program: str | Path, job: Job, *, grid_mm: float | None = None, progress: Progress = _quiet
+) -> Made:
     """Prove any program text for a job, whoever wrote it. Writes nothing.
 
     Raises
@@ -405,7 +419,9 @@ def summary(made: Made) -> dict[str, Any]:
     ):  # fmt: skip
         proof_entry[key] = _number(getattr(proof, key)) if proof else None
     if proof:
-        proof_entry["travel"] = {axis: [float(low), float(high)] for axis, (low, high) in proof.travel.items()}
+        proof_entry["travel"] = {
+            axis: [float(low), float(high)] for axis, (low, high) in proof.travel.items()
+        }
     rapid = program.motions.shape == 0 if program else np.zeros(0, bool)
     total = float(times.seconds.sum()) if times else 0.0
     rapid_s = float(times.seconds[rapid].sum()) if times else 0.0
@@ -419,7 +435,8 @@ def summary(made: Made) -> dict[str, Any]:
             "blocks": program.blocks if program else 0,
         },
         "operations": [
-            {**asdict(entry), "stepover_mm": [float(value) for value in entry.stepover_mm]} for entry in made.operations
+            {**asdict(entry), "stepover_mm": [float(value) for value in entry.stepover_mm]}
+            for entry in made.operations
         ],
         "proof": proof_entry,
         "time": {

@@ -7,6 +7,7 @@ radians, except *program words*: those are what the text says, so a rotary word 
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 from enum import IntEnum
 from pathlib import Path
@@ -165,7 +166,8 @@ class Operation:
 
     ``feed_mm_min`` is wanted at the cutter contact. ``lead_rad`` leans the cutter axis from the surface normal toward the
     feed direction, ``lean_rad`` sideways, positive to the left of it. ``fixed_axis`` is a unit vector in part coordinates
-    when the axis does not follow the surface, else None.
+    when the axis does not follow the surface, else None. ``lead_margin_rad`` is the tilt error of the machine under which a
+    *matched* pass must not gouge beyond the tolerance; in that pattern ``lead_rad`` is the least lead.
     """
 
     index: int
@@ -183,6 +185,7 @@ class Operation:
     fixed_axis: tuple[float, float, float] | None
     tolerance_mm: float
     way: Literal["both", "one-way"]
+    lead_margin_rad: float = math.radians(0.05)
 
 
 @dataclass(frozen=True, slots=True)

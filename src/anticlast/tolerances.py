@@ -90,3 +90,19 @@ AXIS_STRAY_RAD: Final = 0.000872664625997
 # Most blocks that the move between two rows of a cutter path is split into; beyond it the path runs through the pole far off
 # the rotary axis, and planning stops rather than lose accuracy.
 SUBDIVISION_CAP: Final = 20000
+
+# How far a control in G64 is taken to cut a corner (mm), and a rotary axis to stay short of its word (degrees: the same 57 mm
+# from the axis). NISTIR 6556 gives G64 no tolerance word; half a hundredth is a usual setting for finishing (common practice).
+CORNER_MM: Final = 0.005
+CORNER_DEG: Final = 0.005
+
+# Exact path (G61) stops at a corner sharper than this (radians, 0.1 degrees); less is one smooth line in posted digits.
+EXACT_PATH_RAD: Final = 0.00175
+
+# A motion that takes no more than this share longer than its feed asks for is not called held back.
+HELD_BACK_SHARE: Final = 0.01
+
+# How far pieces of read-back motion may be joined into one for the stock field: a hundredth of its usual grid spacing at the
+# cutting end, and at a point 60 mm up the axis what a clearance is told to.
+STOCK_CHORD_MM: Final = 0.003
+STOCK_REACH_MM: Final = 0.02

@@ -36,7 +36,9 @@ WIDE = "machine.toml"
 
 def wide_machine(folder: Path) -> None:
     text = (ROOT / "post" / "trunnion-ac.toml").read_text(encoding="utf-8")
-    text = text.replace("limits = [-75.0, 75.0]", "limits = [-200.0, 200.0]").replace("[0.0, 260.0]", "[0.0, 400.0]")
+    text = text.replace("limits = [-75.0, 75.0]", "limits = [-200.0, 200.0]").replace(
+        "[0.0, 260.0]", "[0.0, 400.0]"
+    )
     (folder / WIDE).write_text(text, encoding="utf-8")
 
 
@@ -45,7 +47,9 @@ def child(job: str, out: str) -> None:
 
     began = time.perf_counter()
     stamps: list[tuple[str, float]] = []
-    made = pipeline.make(job, out, grid_mm=0.1, progress=lambda text: stamps.append((text, time.perf_counter())))
+    made = pipeline.make(
+        job, out, grid_mm=0.1, progress=lambda text: stamps.append((text, time.perf_counter()))
+    )
     took = time.perf_counter() - began
     stamps.append(("end", time.perf_counter()))
     for (text, start), (_, stop) in zip(stamps, stamps[1:], strict=False):

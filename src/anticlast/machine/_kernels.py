@@ -22,7 +22,9 @@ _DEG = math.pi / 180.0
 
 
 @numba.njit(cache=True, nogil=True)
-def _spin(k0, k1, k2, angle, x, y, z):
+def _spin(
+    k0: float, k1: float, k2: float, angle: float, x: float, y: float, z: float
+) -> tuple[float, float, float]:
     """Turn (x, y, z) right-handed about the unit vector k by an angle in radians (Rodrigues' rotation formula)."""
     c = math.cos(angle)
     s = math.sin(angle)
@@ -35,7 +37,7 @@ def _spin(k0, k1, k2, angle, x, y, z):
 
 
 @numba.njit(cache=True, nogil=True)
-def _spindle(chain, rot):
+def _spindle(chain: np.ndarray, rot: np.ndarray) -> tuple[float, float, float]:
     """Spindle direction in the machine frame at rotary words ``rot`` (degrees)."""
     a0, a1, a2 = 0.0, 0.0, 1.0
     for j in range(chain.shape[0] - 1, -1, -1):
@@ -46,7 +48,7 @@ def _spindle(chain, rot):
 
 
 @numba.njit(cache=True, nogil=True)
-def _axis_at(chain, rot):
+def _axis_at(chain: np.ndarray, rot: np.ndarray) -> tuple[float, float, float]:
     """Cutter axis in part coordinates at rotary words ``rot`` (degrees)."""
     a0, a1, a2 = _spindle(chain, rot)
     for j in range(chain.shape[0]):
@@ -57,7 +59,9 @@ def _axis_at(chain, rot):
 
 
 @numba.njit(cache=True, nogil=True)
-def _to_part(chain, base, rot, height, x, y, z):
+def _to_part(
+    chain: np.ndarray, base: np.ndarray, rot: np.ndarray, height: float, x: float, y: float, z: float
+) -> tuple[float, float, float, float, float, float]:
     """Part coordinates of the point ``height`` above the tip, and the cutter axis, at the words (x, y, z, rot)."""
     a0, a1, a2 = _spindle(chain, rot)
     arm = base[3] - height
@@ -76,7 +80,9 @@ def _to_part(chain, base, rot, height, x, y, z):
 
 
 @numba.njit(cache=True, nogil=True)
-def _to_words(chain, base, rot, height, p0, p1, p2):
+def _to_words(
+    chain: np.ndarray, base: np.ndarray, rot: np.ndarray, height: float, p0: float, p1: float, p2: float
+) -> tuple[float, float, float]:
     """Words X Y Z that bring the point ``height`` above the tip to the part point p, at rotary words ``rot``."""
     p0, p1, p2 = p0 + base[0], p1 + base[1], p2 + base[2]
     for j in range(chain.shape[0] - 1, -1, -1):
@@ -91,14 +97,16 @@ def _to_words(chain, base, rot, height, p0, p1, p2):
 
 
 @numba.njit(cache=True, nogil=True)
-def _fold(word):
+def _fold(word: float) -> float:
     """Fold a word in degrees into (-180, 180]."""
     word = word - 360.0 * math.floor((word + 180.0) / 360.0)
     return 180.0 if word == -180.0 else word
 
 
 @numba.njit(cache=True, nogil=True)
-def _about(k0, k1, k2, p0, p1, p2, q0, q1, q2):
+def _about(
+    k0: float, k1: float, k2: float, p0: float, p1: float, p2: float, q0: float, q1: float, q2: float
+) -> tuple[float, float]:
     """Angle (radians) about k that turns p as near as possible to q, and the size of what decides it (0: any angle)."""
     kp = k0 * p0 + k1 * p1 + k2 * p2
     kq = k0 * q0 + k1 * q1 + k2 * q2
@@ -108,7 +116,9 @@ def _about(k0, k1, k2, p0, p1, p2, q0, q1, q2):
 
 
 @numba.njit(cache=True, nogil=True)
-def _solve(chain, pole_rad, u0, u1, u2, rot, free):
+def _solve(
+    chain: np.ndarray, pole_rad: float, u0: float, u1: float, u2: float, rot: np.ndarray, free: np.ndarray
+) -> int:
     """Rotary words (2, m) that point the cutter along u on both branches; marks words that u leaves ``free``.
 
     Two rotations (Paden-Kahan subproblem 2): the vector w = Rot(second) z = Rot(first)^-1 u lies on two cones. Returns
@@ -167,7 +177,7 @@ def _solve(chain, pole_rad, u0, u1, u2, rot, free):
 
 
 @numba.njit(cache=True, nogil=True)
-def forward(chain, base, words):
+def forward(chain: np.ndarray, base: np.ndarray, words: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Tip (n, 3) and cutter axis (n, 3) in part coordinates of program words (n, 3 + m)."""
     count = words.shape[0]
     tip = np.zeros((count, 3))
@@ -180,7 +190,7 @@ def forward(chain, base, words):
 
 
 @numba.njit(cache=True, nogil=True)
-def spindle(chain, rot):
+def spindle(chain: np.ndarray, rot: np.ndarray) -> np.ndarray:
     """Spindle direction (n, 3) in the machine frame at rotary words (n, m)."""
     axis = np.zeros((rot.shape[0], 3))
     for i in range(rot.shape[0]):
@@ -189,7 +199,9 @@ def spindle(chain, rot):
 
 
 @numba.njit(cache=True, nogil=True)
-def solve_rotary(chain, pole_rad, axis):
+def solve_rotary(
+    chain: np.ndarray, pole_rad: float, axis: np.ndarray
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Rotary words (n, branches, m), words left free (same shape, 0 or 1), and the angle by which each misses (n, branches)."""
     count, m = axis.shape[0], chain.shape[0]
     branches = 2 if m == 2 else 1
@@ -211,7 +223,9 @@ def solve_rotary(chain, pole_rad, axis):
 
 
 @numba.njit(cache=True, nogil=True)
-def place(chain, base, rot, height, point):
+def place(
+    chain: np.ndarray, base: np.ndarray, rot: np.ndarray, height: float, point: np.ndarray
+) -> np.ndarray:
     """Words (n, 3 + m) that bring the point ``height`` above the tip to ``point`` (n, 3) at rotary words (n, m)."""
     count, m = rot.shape
     words = np.zeros((count, 3 + m))
@@ -224,7 +238,7 @@ def place(chain, base, rot, height, point):
 
 
 @numba.njit(cache=True, nogil=True)
-def _into(word, low, high):
+def _into(word: float, low: float, high: float) -> float:
     """Move a word by whole turns into [low, high] if possible, else to the nearer end (measured round the circle)."""
     if low == -math.inf:
         return word
@@ -236,7 +250,16 @@ def _into(word, low, high):
 
 
 @numba.njit(cache=True, nogil=True)
-def _aim(chain, low, high, which, rot, u0, u1, u2):
+def _aim(
+    chain: np.ndarray,
+    low: np.ndarray,
+    high: np.ndarray,
+    which: int,
+    rot: np.ndarray,
+    u0: float,
+    u1: float,
+    u2: float,
+) -> None:
     """Set word ``which`` of ``rot`` so that, the others standing, the axis comes nearest to u inside the limits."""
     first = 1 if chain.shape[0] == 2 and chain[1, 7] == 1.0 else 0
     k0, k1, k2 = chain[which, 0], chain[which, 1], chain[which, 2]
@@ -256,7 +279,9 @@ def _aim(chain, low, high, which, rot, u0, u1, u2):
 
 
 @numba.njit(cache=True, nogil=True)
-def nearest_axis(chain, low, high, pole_rad, wished):
+def nearest_axis(
+    chain: np.ndarray, low: np.ndarray, high: np.ndarray, pole_rad: float, wished: np.ndarray
+) -> np.ndarray:
     """Reachable cutter axis (n, 3) nearest to the wished one (n, 3), rotary limits (m,) in degrees respected.
 
     Every stationary point of the angle between axis and wish is tried: both exact branches, the second word where its cone
@@ -299,7 +324,9 @@ def nearest_axis(chain, low, high, pole_rad, wished):
 
 
 @numba.njit(cache=True, nogil=True)
-def _slerp(a0, a1, a2, b0, b1, b2, angle, t):
+def _slerp(
+    a0: float, a1: float, a2: float, b0: float, b1: float, b2: float, angle: float, t: float
+) -> tuple[float, float, float]:
     """Unit vector on the great circle from a to b, ``angle`` radians apart, at share t of the way."""
     if angle < 1e-9:
         return a0 + t * (b0 - a0), a1 + t * (b1 - a1), a2 + t * (b2 - a2)
@@ -309,14 +336,21 @@ def _slerp(a0, a1, a2, b0, b1, b2, angle, t):
 
 
 @numba.njit(cache=True, nogil=True)
-def _angle(a0, a1, a2, b0, b1, b2):
+def _angle(a0: float, a1: float, a2: float, b0: float, b1: float, b2: float) -> float:
     """Angle between two unit vectors, radians, exact for small ones too."""
     chord = math.sqrt((a0 - b0) ** 2 + (a1 - b1) ** 2 + (a2 - b2) ** 2)
     return 2.0 * math.asin(min(1.0, 0.5 * chord))
 
 
 @numba.njit(cache=True, nogil=True)
-def _stray(chain, axis_a, axis_b, rot, turn, work):
+def _stray(
+    chain: np.ndarray,
+    axis_a: np.ndarray,
+    axis_b: np.ndarray,
+    rot: np.ndarray,
+    turn: np.ndarray,
+    work: np.ndarray,
+) -> float:
     """Largest angle (radians) of three between the axis on an even joint move and the even turn from axis a to axis b."""
     theta = _angle(axis_a[0], axis_a[1], axis_a[2], axis_b[0], axis_b[1], axis_b[2])
     worst = 0.0
@@ -331,13 +365,28 @@ def _stray(chain, axis_a, axis_b, rot, turn, work):
 
 
 @numba.njit(cache=True, nogil=True)
-def choose_branches(chain, axis, found, free, low, high, rate, start, wrap_low, wraps, cross_rad, slack_deg):
+def choose_branches(
+    chain: np.ndarray,
+    axis: np.ndarray,
+    found: np.ndarray,
+    free: np.ndarray,
+    outside: np.ndarray,
+    low: np.ndarray,
+    high: np.ndarray,
+    rate: np.ndarray,
+    start: np.ndarray,
+    wrap_low: np.ndarray,
+    wraps: np.ndarray,
+    cross_rad: float,
+    slack_deg: float,
+) -> tuple[np.ndarray, np.ndarray]:
     """Branch and whole turns for each row so that the rotary axes travel least and stay inside their limits.
 
     Dynamic programming (Bellman) over the rows. A state is a branch together with whole turns for each axis that has
     limits; an axis without limits always takes the short way. From a row to the next an axis turns by half a turn at most.
     Changing branch is allowed where the even joint move keeps the axis within ``cross_rad`` of its wish: at the pole, or
-    where both branches meet. Words outside the limits cost a thousand times their travel, so they are a last resort.
+    where both branches meet. Words outside the limits cost a thousand times their travel, so they are a last resort;
+    ``outside`` (n, branches) is what each choice costs for the linear axes' limits.
 
     Returns
     -------
@@ -368,7 +417,7 @@ def choose_branches(chain, axis, found, free, low, high, rate, start, wrap_low, 
             branch, lane = s // lanes, s % lanes
             best, best_from = math.inf, 0
             for before in range(states if i > 0 else 1):
-                total = cost[before] if i > 0 else 0.0
+                total = (cost[before] if i > 0 else 0.0) + outside[i, branch]
                 if total >= best:
                     continue
                 blocked = False
@@ -410,7 +459,19 @@ def choose_branches(chain, axis, found, free, low, high, rate, start, wrap_low, 
 
 
 @numba.njit(cache=True, nogil=True)
-def _unwrap(chain, axis, found, free, low, start, lane_turns, picked, lanes, cross_rad, slack_deg):
+def _unwrap(
+    chain: np.ndarray,
+    axis: np.ndarray,
+    found: np.ndarray,
+    free: np.ndarray,
+    low: np.ndarray,
+    start: np.ndarray,
+    lane_turns: np.ndarray,
+    picked: np.ndarray,
+    lanes: int,
+    cross_rad: float,
+    slack_deg: float,
+) -> tuple[np.ndarray, np.ndarray]:
     """Words (n, m) along a chain of states, and where a change between states was not an allowed one (n,)."""
     count, _, m = found.shape
     rot = np.zeros((count, m))
@@ -443,7 +504,9 @@ def _unwrap(chain, axis, found, free, low, start, lane_turns, picked, lanes, cro
 
 
 @numba.njit(cache=True, nogil=True)
-def _radii(chain, base, rot, height, x, y, z):
+def _radii(
+    chain: np.ndarray, base: np.ndarray, rot: np.ndarray, height: float, x: float, y: float, z: float
+) -> tuple[float, float]:
     """Distances of the point ``height`` above the tip from the work-carrying axes: from the outermost, and from the other."""
     a0, a1, a2 = _spindle(chain, rot)
     arm = base[3] - height
@@ -464,7 +527,23 @@ def _radii(chain, base, rot, height, x, y, z):
 
 
 @numba.njit(cache=True, nogil=True)
-def deviation(chain, base, height, p, q, axis_p, axis_q, theta, t_a, rot_a, xyz_a, t_b, rot_b, xyz_b, work):
+def deviation(
+    chain: np.ndarray,
+    base: np.ndarray,
+    height: float,
+    p: np.ndarray,
+    q: np.ndarray,
+    axis_p: np.ndarray,
+    axis_q: np.ndarray,
+    theta: float,
+    t_a: float,
+    rot_a: np.ndarray,
+    xyz_a: np.ndarray,
+    t_b: float,
+    rot_b: np.ndarray,
+    xyz_b: np.ndarray,
+    work: np.ndarray,
+) -> tuple[float, float, float]:
     """How far a straight joint move from a to b strays from the intended path from row p to row q.
 
     Sampled at the quarters of the block, plus what the samples can miss: between samples a quarter apart a curve with
@@ -521,7 +600,19 @@ def deviation(chain, base, height, p, q, axis_p, axis_q, theta, t_a, rot_a, xyz_
 
 
 @numba.njit(cache=True, nogil=True)
-def _middle(chain, pole_rad, rate, u0, u1, u2, rot_a, rot_b, solved, loose, out):
+def _middle(
+    chain: np.ndarray,
+    pole_rad: float,
+    rate: np.ndarray,
+    u0: float,
+    u1: float,
+    u2: float,
+    rot_a: np.ndarray,
+    rot_b: np.ndarray,
+    solved: np.ndarray,
+    loose: np.ndarray,
+    out: np.ndarray,
+) -> None:
     """Exact rotary words for the axis u, on the branch and turn nearest to halfway between a and b."""
     m = chain.shape[0]
     branches = _solve(chain, pole_rad, u0, u1, u2, solved, loose)
@@ -539,7 +630,7 @@ def _middle(chain, pole_rad, rate, u0, u1, u2, rot_a, rot_b, solved, loose, out)
 
 
 @numba.njit(cache=True, nogil=True)
-def _twice(table):
+def _twice(table: np.ndarray) -> np.ndarray:
     """A table with the same rows and as many more of zeros."""
     larger = np.zeros((2 * table.shape[0], table.shape[1]))
     for i in range(table.shape[0]):
@@ -550,8 +641,21 @@ def _twice(table):
 
 @numba.njit(cache=True, nogil=True)
 def subdivide(
-    chain, base, height, lever, point, axis, rot, rate, angle_digits, budget, axis_tol, axis_slack, pole_rad, cap
-):
+    chain: np.ndarray,
+    base: np.ndarray,
+    height: float,
+    lever: float,
+    point: np.ndarray,
+    axis: np.ndarray,
+    rot: np.ndarray,
+    rate: np.ndarray,
+    angle_digits: float,
+    budget: float,
+    axis_tol: float,
+    axis_slack: float,
+    pole_rad: float,
+    cap: int,
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, int, float, float]:
     """Split the moves between rows until straight joint moves keep to the intended path.
 
     Parameters

@@ -27,6 +27,9 @@ from anticlast.tolerances import (
     SUBDIVISION_CAP,
 )
 
+# Share of the axis's allowance that a change of branch may use; the rest is for what happens between the rows.
+CROSS_SHARE = 0.8
+
 
 @dataclass(frozen=True, slots=True)
 class Budget:
@@ -97,20 +100,24 @@ def axis_path(
     stand = None if start_words is None else _with_this_cutter(job, operation, start_words)
     parts: list[Blocks] = []
     notes: dict[str, None] = {}
-    if not cutter_path.stretches:
-        raise CannotPlan("cutter path", f"operation {operation.index} has no motion to post")
     rotary = np.zeros(kinematics.rotary_count) if stand is None else stand[3:]
     start = stand
     for number, stretch in enumerate(cutter_path.stretches):
-        rotary_words = branches.choose(kinematics, stretch.axis, rotary, 0.8 * budget.axis_rad, budget.axis_rad)
+        rotary_words = branches.choose(
+            kinematics, stretch.axis, rotary, CROSS_SHARE * budget.axis_rad, budget.axis_rad, stretch.tip_mm
+        )
         notes.update(dict.fromkeys(rotary_words.notes))
-        cut, first = stretch_blocks(job, operation, kinematics, digits, budget, stretch, rotary_words.rotary_deg)
+        cut, first = stretch_blocks(
+            job, operation, kinematics, digits, budget, stretch, rotary_words.rotary_deg
+        )
         if stand is None:
             stand = start = hops.first_stand(first)
         lead_in = hops.first(stand, first) if number == 0 else hops.between(stand, first)
         parts += [lead_in, cut]
         stand = cut.words[-1] if len(cut.words) else first
         rotary = stand[3:]
+    if stand is None or start is None:
+        raise CannotPlan("cutter path", f"operation {operation.index} has no motion to post")
     parts.append(hops.leave(stand, home=last))
     notes.update(dict.fromkeys(hops.notes))
     blocks = joined(parts)

@@ -14,9 +14,9 @@ import numpy as np
 
 from anticlast.errors import CannotPlan
 from anticlast.machine import _kernels
-from anticlast.machine.kinematics import Kinematics, RotaryChoices
-from anticlast.records import Floats
-from anticlast.tolerances import LIMIT_DEG
+from anticlast.machine.kinematics import Kinematics, RotaryChoices, limit_arrays
+from anticlast.records import Bytes, Floats
+from anticlast.tolerances import LIMIT_DEG, LIMIT_MM
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,7 +35,14 @@ class Chosen:
     notes: tuple[str, ...]
 
 
-def choose(kinematics: Kinematics, axis: Floats, start_deg: Floats, cross_rad: float, reach_rad: float) -> Chosen:
+def choose(
+    kinematics: Kinematics,
+    axis: Floats,
+    start_deg: Floats,
+    cross_rad: float,
+    reach_rad: float,
+    tip_mm: Floats | None = None,
+) -> Chosen:
     """Choose rotary words for a row of cutter axes.
 
     Parameters
@@ -49,6 +56,8 @@ def choose(kinematics: Kinematics, axis: Floats, start_deg: Floats, cross_rad: f
         The axis may be off its wish by this much while the machine changes from one branch to the other.
     reach_rad : float
         The words may miss a row's axis by this much.
+    tip_mm : (n, 3), optional
+        Cutter tips in part coordinates: if given, branches that keep X Y Z inside their limits are preferred.
 
     Returns
     -------
@@ -78,8 +87,21 @@ def choose(kinematics: Kinematics, axis: Floats, start_deg: Floats, cross_rad: f
     first, count = _turns(low, high)
     found, free = _settle_start(choices)
     rate = np.array([a.feed for a in rotary], dtype=np.float64)
+    outside = _linear_cost(kinematics, found, free, tip_mm)
     rot, _ = _kernels.choose_branches(
-        kinematics.chain, axis, found, free, low, high, rate, start_deg, first, count, cross_rad, LIMIT_DEG
+        kinematics.chain,
+        axis,
+        found,
+        free,
+        outside,
+        low,
+        high,
+        rate,
+        start_deg,
+        first,
+        count,
+        cross_rad,
+        LIMIT_DEG,
     )
     return Chosen(rot, _limit_notes(kinematics, rot))
 
@@ -92,7 +114,7 @@ def _turns(low: Floats, high: Floats) -> tuple[Floats, Floats]:
     return first.astype(np.int64), (last - first + 1.0).astype(np.int64)
 
 
-def _settle_start(choices: RotaryChoices) -> tuple[Floats, np.ndarray]:
+def _settle_start(choices: RotaryChoices) -> tuple[Floats, Bytes]:
     """Give a word that is free from the first row on the value it has where it first is decided.
 
     The stretch then starts with the word it will need, and does not turn while the cutter is down. A word that is free on
@@ -106,6 +128,25 @@ def _settle_start(choices: RotaryChoices) -> tuple[Floats, np.ndarray]:
                 found[: decided[0], branch, j] = found[decided[0], branch, j]
                 free[: decided[0], branch, j] = 0
     return found, free
+
+
+def _linear_cost(kinematics: Kinematics, found: Floats, free: Bytes, tip_mm: Floats | None) -> Floats:
+    """Cost (n, branches) of words that put the spindle gauge point outside X Y Z limits; whole turns do not matter.
+
+    In the unit of the kernel: minutes of travel at the fastest feed, a thousandfold. A row whose words are free has none,
+    for its X Y Z are decided by the rows around it.
+    """
+    count, branches = found.shape[:2]
+    cost = np.zeros((count, branches))
+    if tip_mm is None:
+        return cost
+    low, high = limit_arrays(kinematics.machine.linear)
+    rate = np.array([a.feed for a in kinematics.machine.linear])
+    for branch in range(branches):
+        gauge = kinematics.gauge_point(kinematics.place(tip_mm, found[:, branch]))
+        past = np.maximum(np.maximum(low - gauge, gauge - high) - LIMIT_MM, 0.0)
+        cost[:, branch] = np.where(free[:, branch].any(axis=1), 0.0, 1000.0 * (past / rate).sum(axis=1))
+    return cost
 
 
 def _limit_notes(kinematics: Kinematics, rot: Floats) -> tuple[str, ...]:

@@ -49,7 +49,7 @@ class Hops:
         outline = job.stock.outline.polygon
         self._plan = shapely.simplify(outline, _OUTLINE_MM).buffer(_OUTLINE_MM, join_style="mitre")
         shapely.prepare(self._plan)
-        edge = np.asarray(shapely.convex_hull(self._plan).exterior.coords)[:-1]
+        edge = shapely.get_coordinates(shapely.convex_hull(self._plan))[:-1]
         heights = (job.stock.top_mm, job.stock.bottom_mm)
         self._corners = np.concatenate([np.column_stack([edge, np.full(len(edge), z)]) for z in heights])
         self._girth_from_mm, self._girth = _girth(operation)
@@ -98,7 +98,9 @@ class Hops:
         lift_mm = float(np.linalg.norm(off[:3] - stand[:3]))
         return [(off, False, lift_mm), (raised, True, 0.0)]
 
-    def _across_and_down(self, above: Floats, height: float, first: Floats) -> list[tuple[Floats, bool, float]]:
+    def _across_and_down(
+        self, above: Floats, height: float, first: Floats
+    ) -> list[tuple[Floats, bool, float]]:
         across = above.copy()
         across[2] = height
         drop_mm = -float(np.linalg.norm(above[:3] - first[:3]))
@@ -256,7 +258,11 @@ class Hops:
     def _radius_mm(self) -> float:
         """Furthest that anything which turns is from a rotary axis: blank corners, and the tip from its pivot."""
         chain = self._kinematics.chain
-        far = self._kinematics.base[3] + self._operation.cutter.radius_mm if self._kinematics.carries_cutter else 0.0
+        far = (
+            self._kinematics.base[3] + self._operation.cutter.radius_mm
+            if self._kinematics.carries_cutter
+            else 0.0
+        )
         stand = self._corners + self._kinematics.part_origin_mm
         for row in chain[chain[:, 7] == 1.0]:
             # Turning about another axis before may carry a corner away from this one, by no more than the two lie apart.

@@ -214,7 +214,9 @@ def _check_axes(machine: Machine) -> None:
     rotary = machine.rotary
     if machine.letters[:3] != LINEAR or len(machine.linear) != 3:
         found = " ".join(machine.letters)
-        faults.append(Fault(str(machine.source), 0, "axis", f"axes are {found}; X Y Z must come first, once each"))
+        faults.append(
+            Fault(str(machine.source), 0, "axis", f"axes are {found}; X Y Z must come first, once each")
+        )
     if len(rotary) > 2:
         message = f"{len(rotary)} rotary axes; at most two can be planned for"
         faults.append(Fault(str(machine.source), 0, "axis", message))

@@ -28,8 +28,10 @@ def _ground(form, u, v, out):
 
 
 @numba.njit(cache=True, nogil=True)
-def _entry(line, pose, disc, corner):
+def _entry(line, pose, disc, corner, below):
     """Return the height h at which a line q + h n, coming from below, enters the cutter; inf if it misses.
+
+    The cutter lies above the plane of its bottom: what meets that plane no lower than ``below`` counts as a miss.
 
     line (6,) is q and n, pose (6,) reference point and axis. Under the bottom disc the plane decides; beyond it
     the distance to disc and side is convex along the line, and Newton's method from outside never oversteps.
@@ -44,6 +46,8 @@ def _entry(line, pose, disc, corner):
     drift = wx * nx + wy * ny + wz * nz - z0 * rise
     away = wx * wx + wy * wy + wz * wz - z0 * z0
     h = (-corner - z0) / rise
+    if h >= below:
+        return np.inf
     reach2 = (flat * h + 2.0 * drift) * h + away
     if reach2 <= disc * disc:
         return h
@@ -89,7 +93,7 @@ def _left(line, table, low, high, tool, pose):
     for i in range(low, high + 1):
         for k in range(6):
             pose[k] = table[i, k]
-        h = _entry(line, pose, disc, corner)
+        h = _entry(line, pose, disc, corner, best)
         if h < best:
             best, row = h, i
     if row < 0:
@@ -97,9 +101,9 @@ def _left(line, table, low, high, tool, pose):
     first, last = float(max(row - 1, low)), float(min(row + 1, high))
     b, c = last - _GOLDEN * (last - first), first + _GOLDEN * (last - first)
     _pose(table, b, pose)
-    hb = _entry(line, pose, disc, corner)
+    hb = _entry(line, pose, disc, corner, np.inf)
     _pose(table, c, pose)
-    hc = _entry(line, pose, disc, corner)
+    hc = _entry(line, pose, disc, corner, np.inf)
     at = float(row)
     for _ in range(int(tool[2])):
         if hb <= hc:
@@ -108,14 +112,14 @@ def _left(line, table, low, high, tool, pose):
             last, c, hc = c, b, hb
             b = last - _GOLDEN * (last - first)
             _pose(table, b, pose)
-            hb = _entry(line, pose, disc, corner)
+            hb = _entry(line, pose, disc, corner, np.inf)
         else:
             if hc < best:
                 best, at = hc, c
             first, b, hb = b, c, hc
             c = first + _GOLDEN * (last - first)
             _pose(table, c, pose)
-            hc = _entry(line, pose, disc, corner)
+            hc = _entry(line, pose, disc, corner, np.inf)
     return best, at
 
 

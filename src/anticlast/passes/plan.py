@@ -19,6 +19,7 @@ from anticlast.passes.cover import Samples, pieces_of, sample
 from anticlast.passes.cusp import require_fit
 from anticlast.passes.frame import PassFrame
 from anticlast.passes.legs import Legs, legs_of, linked
+from anticlast.passes.matched import plan_matched
 from anticlast.passes.order import cutting_order
 from anticlast.passes.rows import Chords, Nearest, Rows, Tilt, rows_of, sag_density
 from anticlast.passes.spacing import Left, left_behind
@@ -83,6 +84,8 @@ def plan_operation(job: Job, operation: Operation, nearest_axis: Nearest) -> Cut
         If no spacing of the passes settles.
     """
     require_pattern(operation)
+    if operation.pattern == "matched":
+        return plan_matched(job, operation, nearest_axis, _rise_mm(job, operation))
     saddle, outline = Saddle.of(job.part), job.part.outline
     _require_fit(saddle, outline, operation)
     frame = PassFrame(saddle, operation.direction_rad, operation.cutter.radius_mm, operation.allowance_mm)
@@ -118,8 +121,10 @@ def plan_operation(job: Job, operation: Operation, nearest_axis: Nearest) -> Cut
 
 def require_pattern(operation: Operation) -> None:
     """Raise `CannotPlan` unless the operation's pattern is available and can use its cutter."""
+    if operation.pattern == "matched":
+        return
     if operation.pattern not in PATTERNS:
-        names = " and ".join(sorted(PATTERNS))
+        names = " and ".join(sorted([*PATTERNS, "matched"]))
         raise CannotPlan(
             "pattern",
             f"operation {operation.index}: pattern {operation.pattern!r} is not available; "

@@ -29,5 +29,7 @@ def writer_for(machine: Machine) -> Writer:
     module = load_module(machine.source, str(machine.source))
     write = getattr(module, "write", write_program)
     if not callable(write):
-        raise BadInput(Fault(str(machine.source), 0, "write", "is not a function write(job, axis_paths, stream)"))
+        raise BadInput(
+            Fault(str(machine.source), 0, "write", "is not a function write(job, axis_paths, stream)")
+        )
     return write  # type: ignore[no-any-return]

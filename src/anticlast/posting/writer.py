@@ -11,7 +11,7 @@ from typing import IO
 
 import numpy as np
 
-from anticlast.records import AxisPath, Job, Purpose
+from anticlast.records import AxisPath, Floats, Job, Purpose
 
 MM_PER_INCH = 25.4
 CHUNK = 4096  # blocks formatted at a time; bounds the memory
@@ -78,11 +78,17 @@ def _header(job: Job, paths: Sequence[AxisPath], dialect: _Dialect) -> Iterator[
 
     yield comment(f"JOB: {job.name}")
     yield comment(f"MACHINE: {machine.title}")
-    yield comment(f"UNITS: {unit}. ROTARY WORDS: DEGREES, POSITIVE AS THE WORKPIECE SEES IT, NISTIR 6556 SECTION 2.1.2.2")
+    yield comment(
+        f"UNITS: {unit}. ROTARY WORDS: DEGREES, POSITIVE AS THE WORKPIECE SEES IT, NISTIR 6556 SECTION 2.1.2.2"
+    )
     yield comment("PROGRAM ZERO G54: SADDLE POINT OF THE PART, ALL ROTARY AXES AT 0")
     if machine.rotary:
-        origin = " ".join(f"{axis}{length(value)}" for axis, value in zip("XYZ", job.part_origin_mm, strict=True))
-        yield comment(f"SADDLE POINT AT ROTARY 0, FROM WHERE THE ROTARY AXES MEET: {origin}. THE PROGRAM IS WRONG FOR ANY OTHER")
+        origin = " ".join(
+            f"{axis}{length(value)}" for axis, value in zip("XYZ", job.part_origin_mm, strict=True)
+        )
+        yield comment(
+            f"SADDLE POINT AT ROTARY 0, FROM WHERE THE ROTARY AXES MEET: {origin}. THE PROGRAM IS WRONG FOR ANY OTHER"
+        )
     if machine.rotary and dialect.inverse:
         yield comment("F UNDER G93 IS ONE OVER THE MINUTES OF ITS BLOCK, NISTIR 6556 SECTION 3.5.19")
     yield comment(f"F UNDER G94 IS {unit} PER MINUTE OF THE CUTTER TIP")
@@ -95,7 +101,9 @@ def _header(job: Job, paths: Sequence[AxisPath], dialect: _Dialect) -> Iterator[
             f" STICKOUT {length(cutter.stickout_mm)} GAUGE LENGTH {length(cutter.gauge_length_mm)} OFFSET H{cutter.number}"
         )
     if any(axis.carries == "cutter" for axis in machine.rotary):
-        yield comment("THE CUTTER TILTS: XYZ HOLD THE GAUGE LENGTHS ABOVE. ANOTHER LENGTH NEEDS ANOTHER PROGRAM")
+        yield comment(
+            "THE CUTTER TILTS: XYZ HOLD THE GAUGE LENGTHS ABOVE. ANOTHER LENGTH NEEDS ANOTHER PROGRAM"
+        )
     stock = job.stock
     yield comment(f"BLANK: {stock.material}, TOP Z{length(stock.top_mm)}, BOTTOM Z{length(stock.bottom_mm)}")
     for line in (
@@ -130,25 +138,37 @@ def _columns(path: AxisPath, rows: slice, dialect: _Dialect) -> list[list[str]]:
     return columns
 
 
-def _per_minute(path: AxisPath, dialect: _Dialect) -> np.ndarray:
+def _steps(path: AxisPath, rows: slice) -> Floats:
+    """How far each axis goes in each block of a slice, (n, k), mm and degrees."""
+    before = path.start if rows.start == 0 else path.words[rows.start - 1]
+    return np.diff(path.words[rows], axis=0, prepend=before[None, :])
+
+
+def _per_minute(path: AxisPath, rows: slice, dialect: _Dialect) -> list[float]:
     """F of each block under G94: XYZ length a minute, or degrees a minute when only rotary axes move (section 3.5.19)."""
-    steps = np.diff(path.words, axis=0, prepend=path.start[None, :])
+    steps = _steps(path, rows)
     linear = np.array([letter in "XYZ" for letter in path.letters])
     along = np.sqrt((steps[:, linear] ** 2).sum(axis=1)) * dialect.scale
     around = np.sqrt((steps[:, ~linear] ** 2).sum(axis=1))
     with np.errstate(invalid="ignore", divide="ignore"):
-        return np.where(along > 0, along, around) / path.minutes
+        asked: list[float] = (np.where(along > 0, along, around) / path.minutes[rows]).tolist()
+    return asked
+
+
+def _chunks(path: AxisPath) -> Iterator[slice]:
+    for low in range(0, len(path.rapid), CHUNK):
+        yield slice(low, min(low + CHUNK, len(path.rapid)))
 
 
 def _moves(path: AxisPath, dialect: _Dialect, standing: list[str], inverse: bool) -> Iterator[str]:
     """Blocks of one operation. ``standing`` holds each axis word the control stands at and is kept up to date."""
     mode = ""
     feed_text = ""
-    per_minute = np.empty(0) if inverse else _per_minute(path, dialect)
     last_feed = math.inf
     last_pass = -1
-    for low in range(0, len(path.rapid), CHUNK):
-        rows = slice(low, min(low + CHUNK, len(path.rapid)))
+    height = path.letters.index("Z")
+    for rows in _chunks(path):
+        per_minute = [] if inverse else _per_minute(path, rows, dialect)
         columns = _columns(path, rows, dialect)
         rapids = path.rapid[rows].tolist()
         minutes = path.minutes[rows].tolist()
@@ -162,6 +182,11 @@ def _moves(path: AxisPath, dialect: _Dialect, standing: list[str], inverse: bool
             changed = [word for word, old in zip(words, standing, strict=True) if word != old]
             if not changed:
                 continue
+            if rapid and "" in standing and len(changed) > 1:
+                # Where the machine stands is not known: Z goes alone first, to the height that clears the blank.
+                yield "G0 " + words[height]
+                changed = [word for word in changed if word is not words[height]]
+                mode = "G0"
             standing[:] = words
             code = "G0" if rapid else "G1"
             if code != mode:
@@ -171,7 +196,7 @@ def _moves(path: AxisPath, dialect: _Dialect, standing: list[str], inverse: bool
                 changed.append("F" + plain(1.0 / minutes[i], dialect.feed))
             elif not rapid:
                 # A feed word stands while it is no faster than asked and at most 2 % slower: fewer words, same time.
-                asked = float(per_minute[low + i])
+                asked = per_minute[i]
                 if not (0.98 * asked <= last_feed <= 1.0005 * asked):
                     last_feed = asked
                     text = plain(asked, dialect.feed)
@@ -186,11 +211,12 @@ def _turns_at_feed(path: AxisPath) -> bool:
     rotary = np.array([letter in "ABC" for letter in path.letters])
     if not rotary.any():
         return False
-    steps = np.diff(path.words, axis=0, prepend=path.start[None, :])[:, rotary]
-    return bool(np.any(np.abs(steps[~path.rapid]) > 0))
+    return any(bool(np.any(_steps(path, rows)[~path.rapid[rows]][:, rotary] != 0)) for rows in _chunks(path))
 
 
-def _operation(job: Job, path: AxisPath, dialect: _Dialect, loaded: int, standing: list[str]) -> Iterator[str]:
+def _operation(
+    job: Job, path: AxisPath, dialect: _Dialect, loaded: int, standing: list[str]
+) -> Iterator[str]:
     operation = path.operation
     cutter = operation.cutter
     yield comment(
@@ -236,8 +262,11 @@ def program_lines(job: Job, paths: Iterable[AxisPath]) -> Iterator[str]:
         number = 0
         for line in lines:
             # Numbers wrap: five digits are the most a line number may have, and they may repeat (section 3.3.1).
+            if line.startswith("("):
+                yield line
+                continue
             number = number % LAST_N + 1
-            yield line if line.startswith("(") else f"N{number} {line}"
+            yield f"N{number} {line}"
     yield "%"
 
 

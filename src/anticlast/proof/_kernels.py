@@ -13,51 +13,8 @@ import numpy as np
 from numba import njit
 
 _STEPS = 80
-
-
-@njit(cache=True, nogil=True)
-def foot(a: float, b: float, x: float, y: float, z: float) -> tuple[float, float, float]:
-    """Return the signed distance of a point from the surface and the plan of its foot.
-
-    With t the height over the foot, the foot is (x/(1-2at), y/(1+2bt)) and t solves one increasing equation on
-    (-1/(2b), 1/(2a)); docs/theory-proof.md#distance.
-
-    Parameters
-    ----------
-    a, b : float [1/mm]
-    x, y, z : float [mm]
-
-    Returns
-    -------
-    distance, foot_x, foot_y : float [mm]
-        Distance positive above the surface.
-    """
-    low, high = -0.5 / b, 0.5 / a
-    t = (z - a * x * x + b * y * y) / (1.0 + 4.0 * a * a * x * x + 4.0 * b * b * y * y)
-    t = min(max(t, 0.98 * low), 0.98 * high)
-    fx, fy = x, y
-    for _ in range(_STEPS):
-        u, v = 1.0 / (1.0 - 2.0 * a * t), 1.0 / (1.0 + 2.0 * b * t)
-        fx, fy = x * u, y * v
-        miss = t + a * fx * fx - b * fy * fy - z
-        if miss > 0.0:
-            high = t
-        else:
-            low = t
-        step = miss / (1.0 + 4.0 * a * a * fx * fx * u + 4.0 * b * b * fy * fy * v)
-        if abs(step) <= 1e-15 * (1.0 + abs(t)):
-            break
-        t -= step
-        if t <= low or t >= high:
-            t = 0.5 * (low + high)
-    return t * math.sqrt(1.0 + 4.0 * (a * a * fx * fx + b * b * fy * fy)), fx, fy
-
-
-@njit(cache=True, nogil=True)
-def feet(a: float, b: float, points: np.ndarray, distance: np.ndarray, plan: np.ndarray) -> None:
-    """Fill ``distance`` (n,) and ``plan`` (n, 2) [mm] with `foot` of ``points`` (n, 3) [mm]."""
-    for i in range(points.shape[0]):
-        distance[i], plan[i, 0], plan[i, 1] = foot(a, b, points[i, 0], points[i, 1], points[i, 2])
+# How near to a flat end's rim an entry counts as on it [mm]: the search over a piece stops at about that.
+_RIM_MM = 1e-3
 
 
 @njit(cache=True, nogil=True)
@@ -127,135 +84,6 @@ def in_ball(px: float, py: float, pz: float, c0: np.ndarray, c1: np.ndarray, rad
     else:
         far = ww - wd * wd / dd
     return far < radius * radius
-
-
-# ---------------------------------------------------------------------------------------- which pieces reach a tile
-
-
-@njit(cache=True, nogil=True)
-def chunk_box(a: float, b: float, ends: tuple, size: tuple, high: float, slope: float, box: np.ndarray) -> int:
-    """Find the plan box of the nodes that a short chunk of a piece can cut below a residual height.
-
-    Parameters
-    ----------
-    a, b : float [1/mm]
-    ends : (x0, y0, z0, x1, y1, z1) [mm]
-        Ends of the reference point's path.
-    size : (disc, corner, sine) [mm, mm, 1]
-        Radius of the corner circle (0 for a ball), corner radius, largest sine between cutter axis and surface normal.
-    high : float [mm]
-        Residual height above which nothing is of interest.
-    slope : float
-        Largest sine between surface normal and Z over the nodes.
-    box : (4,) [mm]
-        Gets x low, x high, y low, y high.
-
-    Returns
-    -------
-    int
-        0 out of reach, 1 in reach, 2 in reach and so low that the cutter's upper half may lie below ``high``.
-    """
-    x0, y0, z0, x1, y1, z1 = ends
-    disc, corner, sine = size
-    radius = disc + corner
-    length = math.sqrt((x1 - x0) ** 2 + (y1 - y0) ** 2 + (z1 - z0) ** 2)
-    # Distance to the surface is at least the vertical gap over sqrt(1 + G^2), G the steepest slope within that gap.
-    near = math.inf
-    for x, y, z in ((x0, y0, z0), (x1, y1, z1)):
-        gap = z - a * x * x + b * y * y
-        steep = 2.0 * math.sqrt(a * a * x * x + b * b * y * y) + 2.0 * max(a, b) * abs(gap)
-        near = min(near, gap / math.sqrt(1.0 + steep * steep))
-    if near - length > radius + high:
-        return 0
-    d0, fx0, fy0 = foot(a, b, x0, y0, z0)
-    d1, fx1, fy1 = foot(a, b, x1, y1, z1)
-    low = min(d0, d1) - 0.5 * length
-    if low - radius > high:
-        return 0
-    reach = radius
-    drop = 0.0
-    state = 1
-    bend = 2.0 * a * (1.1 * radius + high + 2.0 * length)
-    rise = 2.0 * max(a, b) * radius
-    if bend < 0.9 and rise < 0.9 and low > -0.1 / b:
-        bend = 2.0 * a / (1.0 - bend)
-        low = min(d0, d1) - bend * length * length / 8.0
-        if low - corner - disc * sine - bend * radius * radius / 2.0 > high:
-            return 0
-        if low <= high + rise * radius / (1.0 - rise) / 2.0:
-            state = 2
-        elif disc == 0.0:
-            drop = max(0.0, low - high - bend * radius * radius / 2.0)
-            reach = math.sqrt(max(0.0, radius * radius - drop * drop)) + drop * max(bend, 2.0 * b) * length / 2.0
-    else:
-        state = 2
-    reach += slope * (max(high, radius - low) + (2.0 * radius if state == 2 else 0.0))
-    box[0], box[1], box[2], box[3] = math.inf, -math.inf, math.inf, -math.inf
-    for x, y, fx, fy in ((x0, y0, fx0, fy0), (x1, y1, fx1, fy1)):
-        w = math.sqrt(1.0 + 4.0 * (a * a * fx * fx + b * b * fy * fy))
-        x += drop * 2.0 * a * fx / w
-        y -= drop * 2.0 * b * fy / w
-        box[0], box[1] = min(box[0], x - reach), max(box[1], x + reach)
-        box[2], box[3] = min(box[2], y - reach), max(box[3], y + reach)
-    return state
-
-
-@njit(cache=True, nogil=True)
-def bin_pieces(
-    surface: tuple, c0: np.ndarray, c1: np.ndarray, size: np.ndarray, active: np.ndarray, high: float, grid: tuple,
-    start: np.ndarray, pieces: np.ndarray, state: np.ndarray,
-) -> None:  # fmt: skip
-    """Count (``pieces`` empty) or list the pieces that reach each tile below a residual height ``high``.
-
-    Parameters
-    ----------
-    surface : (a, b, slope)
-    c0, c1 : (m, 3) [mm]
-    size : (m, 3)
-        As in `chunk_box`.
-    active : (m,) bool
-    grid : (x low, y low, tile [mm], tiles in x, tiles in y)
-    start : (tiles + 1,)
-        Counting: entry t + 1 gets the number for tile t. Listing: running sums of those.
-    pieces : (0,) or (total,) int32
-        In order of motion within each tile.
-    state : (m,) uint8
-        Gets the largest answer of `chunk_box` over the piece.
-    """
-    a, b, slope = surface
-    x_low, y_low, tile, nx, ny = grid
-    last = np.full(nx * ny, -1, np.int32)
-    filled = start[:-1].copy()
-    box = np.empty(4)
-    for k in range(c0.shape[0]):
-        if not active[k]:
-            continue
-        dx, dy, dz = c1[k, 0] - c0[k, 0], c1[k, 1] - c0[k, 1], c1[k, 2] - c0[k, 2]
-        chunks = int(math.ceil(math.sqrt(dx * dx + dy * dy + dz * dz) / (2.0 * tile) + 1e-9))
-        chunks = max(chunks, 1)
-        for j in range(chunks):
-            s, e = j / chunks, (j + 1) / chunks
-            ends = (
-                c0[k, 0] + s * dx, c0[k, 1] + s * dy, c0[k, 2] + s * dz,
-                c0[k, 0] + e * dx, c0[k, 1] + e * dy, c0[k, 2] + e * dz,
-            )  # fmt: skip
-            found = chunk_box(a, b, ends, (size[k, 0], size[k, 1], size[k, 2]), high, slope, box)
-            if found == 0:
-                continue
-            state[k] = max(state[k], found)
-            i0, i1 = max(0, math.floor((box[0] - x_low) / tile)), min(nx - 1, math.floor((box[1] - x_low) / tile))
-            j0, j1 = max(0, math.floor((box[2] - y_low) / tile)), min(ny - 1, math.floor((box[3] - y_low) / tile))
-            for v in range(j0, j1 + 1):
-                for u in range(i0, i1 + 1):
-                    t = v * nx + u
-                    if last[t] == k:
-                        continue
-                    last[t] = k
-                    if pieces.size == 0:
-                        start[t + 1] += 1
-                    else:
-                        pieces[filled[t]] = k
-                        filled[t] += 1
 
 
 # ---------------------------------------------------------------------------------------- residual at nodes
@@ -429,7 +257,27 @@ def mill_entry(
                     s1, h1, g1 = t, h, g
     if best >= below:
         return math.inf, 0.0, 0.0
+    if size[1] == 0.0:
+        cosine = max(cosine, _rim_cosine(q, n, best, pose_at(share, c0, c1, a0, a1), size[0]))
     return best, share, cosine
+
+
+@njit(cache=True, nogil=True)
+def _rim_cosine(q: tuple, n: tuple, h: float, pose: tuple, disc: float) -> float:
+    """Return the cosine between n and the nearest inward normal of a flat end at its rim; -1 away from the rim.
+
+    On the rim every direction between the axis and the inward radius is a normal.
+    """
+    c, axis, _ = pose
+    px, py, pz = q[0] + h * n[0] - c[0], q[1] + h * n[1] - c[1], q[2] + h * n[2] - c[2]
+    z = px * axis[0] + py * axis[1] + pz * axis[2]
+    px, py, pz = px - z * axis[0], py - z * axis[1], pz - z * axis[2]
+    r = math.sqrt(px * px + py * py + pz * pz)
+    if abs(z) > _RIM_MM or abs(r - disc) > _RIM_MM or r == 0.0:
+        return -1.0
+    along = n[0] * axis[0] + n[1] * axis[1] + n[2] * axis[2]
+    inward = -(n[0] * px + n[1] * py + n[2] * pz) / r
+    return math.sqrt(along * along + max(0.0, inward) ** 2)
 
 
 @njit(cache=True, nogil=True)
@@ -497,9 +345,9 @@ def sweep(
         Plan of the nodes (n,) [mm], where their normal lines leave the part (n,) [mm], first node of each tile.
     tiles : (first, after last)
     lists : (start, pieces)
-        From `bin_pieces`.
+        From `_reach_kernels.bin_pieces`.
     pieces : (c0, c1, a0, a1, size, state)
-        Reference points and axes at both ends [mm, 1], size and state as in `bin_pieces`.
+        Reference points and axes at both ends [mm, 1], size and state as in `_reach_kernels.bin_pieces`.
     above : float [mm]
         Only nodes that stand at least this high are worked on.
     height : (n,) [mm]
@@ -593,6 +441,60 @@ def lower_of_two(first: np.ndarray, second: np.ndarray, weights: np.ndarray) -> 
 
 
 @njit(cache=True, nogil=True)
+def chain(pieces: tuple, k: int, length: float, ends: np.ndarray) -> float:
+    """Join the neighbours of a ball's piece to a stretch that reaches about a length to each side.
+
+    A ball about any point of the chord has its centre within the sag of some centre on the pieces, so what the chord
+    leaves is at most the sag over the cosine higher than what the pieces leave: docs/theory-proof.md#bound.
+
+    Parameters
+    ----------
+    pieces, k
+        As in `entry`.
+    length : float [mm]
+    ends : (2, 3) [mm]
+        Gets the ends of the chord.
+
+    Returns
+    -------
+    float [mm]
+        Sag: furthest that an end of a piece between lies from the chord.
+    """
+    c0, c1, _, _, size, state = pieces
+    first, last = k, k
+    for side in range(2):
+        gone = 0.0
+        while gone < length:
+            j = first - 1 if side == 0 else last + 1
+            if j < 0 or j >= c0.shape[0] or state[j] == 0 or size[j, 0] != 0.0 or size[j, 1] != size[k, 1]:
+                break
+            a, b = (j, first) if side == 0 else (last, j)
+            if c1[a, 0] != c0[b, 0] or c1[a, 1] != c0[b, 1] or c1[a, 2] != c0[b, 2]:
+                break
+            gone += math.sqrt((c1[j, 0] - c0[j, 0]) ** 2 + (c1[j, 1] - c0[j, 1]) ** 2 + (c1[j, 2] - c0[j, 2]) ** 2)
+            if side == 0:
+                first = j
+            else:
+                last = j
+    dd = 0.0
+    for i in range(3):
+        ends[0, i], ends[1, i] = c0[first, i], c1[last, i]
+        dd += (ends[1, i] - ends[0, i]) ** 2
+    furthest = 0.0
+    for j in range(first, last):
+        wd, ww = 0.0, 0.0
+        for i in range(3):
+            w = c1[j, i] - ends[0, i]
+            wd += w * (ends[1, i] - ends[0, i])
+            ww += w * w
+        if wd <= 0.0 or wd >= dd:
+            furthest = max(furthest, ww if wd <= 0.0 else ww - 2.0 * wd + dd)
+        else:
+            furthest = max(furthest, ww - wd * wd / dd)
+    return math.sqrt(max(0.0, furthest))
+
+
+@njit(cache=True, nogil=True)
 def triangle_bound(
     surface: tuple, corners: np.ndarray, owners: np.ndarray, count: int, pieces: tuple, cap: float,
     value: np.ndarray, weights: np.ndarray,
@@ -619,10 +521,18 @@ def triangle_bound(
         edge2 = max(edge2, (corners[i, 0] - corners[j, 0]) ** 2 + (corners[i, 1] - corners[j, 1]) ** 2)
     usable = 0
     cosines, least, most = np.ones(_OWNERS), np.ones(_OWNERS), np.zeros(_OWNERS)
-    for i in range(3):
-        q, n = surface_at(a, b, corners[i, 0], corners[i, 1])
-        for o in range(count):
-            h, share, cosine = entry(q, n, pieces, owners[o], math.inf)
+    sags, ends = np.zeros(_OWNERS), np.empty((2, 3))
+    for o in range(count):
+        k = owners[o]
+        ball = size[k, 0] == 0.0 and size[k, 1] > 0.0
+        if ball:
+            sags[o] = chain(pieces, k, math.sqrt(edge2), ends)
+        for i in range(3):
+            q, n = surface_at(a, b, corners[i, 0], corners[i, 1])
+            if ball:
+                h, share, cosine = ball_entry(q, n, ends[0], ends[1], size[k, 1])
+            else:
+                h, share, cosine = entry(q, n, pieces, k, math.inf)
             value[o, i] = h
             cosines[o] = min(cosines[o], cosine)
             least[o], most[o] = min(least[o], share), max(most[o], share)
@@ -645,7 +555,10 @@ def triangle_bound(
         over = sag(surface, edge2, high, cosines[o], bend_radius, spread, turn)
         if math.isinf(over):
             continue
-        value[usable] = value[o] + over
+        # At the angles allowed here the cosine is at least cos(0.84) = 0.667.
+        over += 1.5 * sags[o]
+        for i in range(3):
+            value[usable, i] = value[o, i] + over
         for p in range(usable + 1):
             found = lower_of_two(value[p], value[usable], place)
             if found < bound:

@@ -26,6 +26,8 @@ _TOLERANCE_MM = 0.01
 _SHARE = 0.01
 # Path length of the spans that the search starts with.
 _SPAN_MM = 8.0
+# Height above the corner arc of a bull or flat end up to which the virtual cut looks after the flutes.
+_RIM_MM = 0.5
 
 
 @dataclass(frozen=True, slots=True)
@@ -97,11 +99,15 @@ def nearer(one: Clearance, two: Clearance) -> Clearance:
 def flute_clearance(
     tree: PatchTree, motion: PartMotion, pieces: Bools, cutter: Cutter, interest_mm: float
 ) -> Clearance:
-    """Return the least distance of a ball end mill's flutes above the ball from patches; see `least_clearance`."""
+    """Return the least distance of the flutes above the cutting end from patches; see `least_clearance`.
+
+    On a bull or flat end mill the first stretch above the rim belongs to the cutting end: the virtual cut has it.
+    """
+    rim = 0.0 if cutter.shape == "ball" else _RIM_MM
     flutes = [
-        Body(found.name, found.radius_mm, found.low_mm, found.high_mm)
+        Body(found.name, found.radius_mm, found.low_mm + rim, found.high_mm)
         for found in cutter.bodies()
-        if found.name == "flutes"
+        if found.name == "flutes" and found.high_mm > found.low_mm + rim
     ]
     return least_clearance(tree, motion, pieces, cutter, flutes, interest_mm)
 

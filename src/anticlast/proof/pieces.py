@@ -88,7 +88,7 @@ def take_pieces(
     )
 
 
-def sub_points(c0: Floats, c1: Floats, step_mm: float) -> tuple[npt.NDArray[np.int64], Floats]:
+def sub_points(c0: Floats, c1: Floats, step_mm: float) -> tuple[npt.NDArray[np.int64], Floats, Floats]:
     """Return points no further than a step apart along each of a few segments, ends included.
 
     Parameters
@@ -100,10 +100,12 @@ def sub_points(c0: Floats, c1: Floats, step_mm: float) -> tuple[npt.NDArray[np.i
     -------
     segment : (n,) int64
         Row of the segment each point lies on, ascending.
+    share : (n,)
+        How far along it, 0 to 1.
     points : (n, 3) [mm]
     """
     steps = np.maximum(1, np.ceil(np.linalg.norm(c1 - c0, axis=1) / step_mm).astype(np.int64))
     segment = np.repeat(np.arange(len(c0)), steps + 1)
     first = np.cumsum(steps + 1) - (steps + 1)
     share = (np.arange(len(segment)) - first[segment]) / steps[segment]
-    return segment, c0[segment] + share[:, None] * (c1 - c0)[segment]
+    return segment, share, c0[segment] + share[:, None] * (c1 - c0)[segment]

@@ -8,7 +8,14 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from anticlast.proof import checks
-from anticlast.proof.collisions import Clearance, cutting_body, flute_clearance, least_clearance, nearer, rigid_bodies
+from anticlast.proof.collisions import (
+    Clearance,
+    cutting_body,
+    flute_clearance,
+    least_clearance,
+    nearer,
+    rigid_bodies,
+)
 from anticlast.proof.patches import blank_patches, finished_patches
 from anticlast.proof.virtual_cut import measure, scallop_map
 from anticlast.readback.checks import check_axes, check_cutters, known_places

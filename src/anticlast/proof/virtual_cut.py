@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
-from anticlast.proof import _kernels
+from anticlast.proof import _kernels, _reach_kernels
 from anticlast.proof.gouge import Gouge, deepest_gouge
 from anticlast.proof.nodes import Nodes, lay_nodes, part_depths_mm
 from anticlast.proof.pieces import Pieces, take_pieces
@@ -27,7 +27,7 @@ if TYPE_CHECKING:
 # Grid chosen without being asked: this fine up to the most steps along the longer side, and at least so many steps.
 _GRID_MM, _MOST_STEPS, _LEAST_STEPS = 0.1, 1000, 200
 # Most quarterings of triangles in one run of the search for the peak: about a minute's work; the bound stays honest.
-_QUARTERINGS = 20_000
+_QUARTERINGS = 300_000
 _MAP_SIDE = 400
 
 
@@ -154,11 +154,11 @@ class _Field:
         start, none = np.zeros(tiles + 1, np.int64), np.empty(0, np.int32)
         self.state[:] = 0
         arguments = (self.surface, pieces.c0, pieces.c1, pieces.size, pieces.active, high_mm, self.nodes.tiling)
-        _kernels.bin_pieces(*arguments, start, none, self.state)
+        _reach_kernels.bin_pieces(*arguments, start, none, self.state)
         start = np.cumsum(start)
         listing = np.empty(int(start[-1]), np.int32)
         if listing.size:
-            _kernels.bin_pieces(*arguments, start, listing, self.state)
+            _reach_kernels.bin_pieces(*arguments, start, listing, self.state)
         self.lists = (start, listing)
         if np.any(self.state == 2) and np.isinf(self.floor[0]):
             self.floor = self._depths(np.arange(len(self.height)))

@@ -52,23 +52,29 @@ def _number(text: np.ndarray, at: int) -> tuple[float, int]:
     decimals = 0
     digits = 0
     started = False
-    point = False
+    point = 0
     while at < size:
         mark = text[at]
         if mark in (_SPACE, _TAB):
             at += 1
             continue
         if _ZERO <= mark <= _NINE:
-            if mantissa >= _MOST_DIGITS:
-                return 0.0, -1
-            mantissa = mantissa * 10 + (mark - _ZERO)
-            digits += 1
-            if point:
-                decimals += 1
+            while _ZERO <= mark <= _NINE:
+                if mantissa >= _MOST_DIGITS:
+                    return 0.0, -1
+                mantissa = mantissa * 10 + (mark - _ZERO)
+                digits += 1
+                decimals += point
+                at += 1
+                if at == size:
+                    break
+                mark = text[at]
+            started = True
+            continue
         elif mark == _POINT:
-            if point:
+            if point == 1:
                 return 0.0, -1
-            point = True
+            point = 1
         elif mark in (_MINUS, _PLUS) and not started:
             if mark == _MINUS:
                 sign = -1.0

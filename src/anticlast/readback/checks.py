@@ -21,13 +21,12 @@ def _failed(check: str, motions: Motions, wrong: np.ndarray, message: str) -> li
     return [Finding(check, False, float(len(rows)), 0.0, "motions", int(motions.line[rows[0]]), message)]
 
 
-def motion_findings(motions: Motions, events: tuple[Event, ...]) -> list[Finding]:
+def motion_findings(motions: Motions) -> list[Finding]:
     """Return what is wrong with motions that the language itself allows.
 
     Parameters
     ----------
     motions : Motions
-    events : tuple of Event
 
     Returns
     -------

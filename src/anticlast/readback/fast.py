@@ -58,8 +58,8 @@ def run_plain(
         held["line"], held["shape"], columns.start, columns.end, held["feed_word"],
     )  # fmt: skip
     if row > low:
-        columns.centre[low:row] = 0.0
-        held["turns"][low:row] = 0.0
+        # Centre and turns stay as they were made: zero. Only a line that breaks the language leaves dropped
+        # rows behind, and no row after it is kept.
         columns.constants(low, row, state)
         columns.rows = row
         control.blocks += blocks

@@ -5,7 +5,6 @@ Written from that report alone; it shares nothing with the half of the project t
 
 from __future__ import annotations
 
-import os
 import re
 from collections.abc import Mapping, Sequence
 from pathlib import Path
@@ -95,12 +94,10 @@ def _load(path: Path) -> bytes:
     try:
         if path.is_dir():
             raise BadInput(Fault(str(path), 0, "", "is a folder; a program file was expected"))
-        size = os.stat(path).st_size
-        if size > MOST_BYTES:
-            raise BadInput(
-                Fault(str(path), 0, "", f"has {size} bytes; programs of up to {MOST_BYTES} bytes are read")
-            )
-        data = path.read_bytes()
+        with path.open("rb") as stream:
+            data = stream.read(MOST_BYTES + 1)  # bounded: a device may have no end
+        if len(data) > MOST_BYTES:
+            raise BadInput(Fault(str(path), 0, "", f"is longer than the {MOST_BYTES} bytes that are read"))
     except (OSError, ValueError) as error:
         reason = getattr(error, "strerror", None) or str(error)
         raise BadInput(Fault(str(path), 0, "", f"cannot be read: {reason}")) from None
@@ -142,7 +139,7 @@ def read_bytes(
     if zero >= 0:
         line = len(_LINE_END.findall(data, 0, zero)) + 1
         raise BadInput(Fault(name, line, "", "holds a zero byte, so this is no program text"))
-    lines = data.count(b"\n") + data.count(b"\r")
+    lines = data.count(b"\n") + (data.count(b"\r") if b"\r" in data else 0)
     control = Interpreter(
         Columns(lines + 1),
         length_offsets=length_offsets,
@@ -199,7 +196,7 @@ class _Reading:
         rows, events, notes = self.kept or (control.columns.rows, len(control.events), len(control.notes))
         happened = tuple(control.events[:events])
         motions = control.columns.motions(rows)
-        findings = (*self.errors, *control.notes[:notes], *after, *checks.motion_findings(motions, happened))
+        findings = (*self.errors, *control.notes[:notes], *after, *checks.motion_findings(motions))
         return ReadProgram(
             path=name,
             blocks=control.blocks,

@@ -31,6 +31,7 @@ from anticlast.records import (
 from anticlast.tolerances import LIMIT_MM, PIECE_MM
 
 UNKNOWN = 255  # purpose of a feed move that the plan does not hold
+RUN = 4096  # blocks compared at a time
 LOOK_AHEAD = 12  # planned blocks that may be missing from the text in a row (no word changed)
 # mm or degrees; a word read back is off its plan by half a posted digit at most, inch included
 SAME_WORD = 10 * LIMIT_MM
@@ -114,18 +115,26 @@ def match_blocks(ends: Floats, words: Floats) -> Ints:
     (m,) int64
         Row of ``words``, -1 where no planned block ends there.
     """
-    if len(ends) == len(words) and np.all(np.abs(ends - words) <= SAME_WORD):
-        return np.arange(len(ends))
     found = np.full(len(ends), -1)
-    planned = words.tolist()
-    at = 0
-    for row, end in enumerate(ends.tolist()):
-        for ahead in range(at, min(at + LOOK_AHEAD, len(planned))):
-            if all(abs(a - b) <= SAME_WORD for a, b in zip(end, planned[ahead], strict=True)):
-                found[row] = ahead
-                at = ahead + 1
-                break
+    row = at = 0
+    while row < len(ends) and at < len(words):
+        size = min(RUN, len(ends) - row, len(words) - at)
+        same = _alike(ends[row : row + size], words[at : at + size])
+        run = size if same.all() else int(np.argmin(same))
+        found[row : row + run] = np.arange(at, at + run)
+        row, at = row + run, at + run
+        if run == size:
+            continue
+        ahead = np.flatnonzero(_alike(ends[row], words[at : at + LOOK_AHEAD]))
+        if len(ahead):
+            at += int(ahead[0])  # planned blocks that the text leaves out
+        else:
+            row += 1  # a motion that was not planned
     return found
+
+
+def _alike(one: Floats, two: Floats) -> Bools:
+    return np.all(np.abs(one - two) <= SAME_WORD, axis=-1)
 
 
 def contact(job: Job, cutter: Cutter, tip_mm: Floats, axis: Floats) -> tuple[Floats, Floats]:

@@ -168,7 +168,7 @@ def _quantity(key: str, title: str, unit: str, digits: int, values: Floats, **mo
 def quantities(made: Made, rows: Along, units: Units) -> list[dict[str, Any]]:
     """Quantities to colour the passes by, each in the unit it is shown in, nan where it does not apply."""
     feed, digits = f"{units.name}/min", 1 if units.inch else 0
-    # Links, entries and exits turn the cutter about a contact that hardly moves; a contact feed says nothing there.
+    # Links, entries and exits turn the cutter about a contact that hardly moves: no contact feed there.
     off = np.isin(rows.purpose, (Purpose.LINK, Purpose.ENTRY, Purpose.EXIT))
     asked = np.where(off, np.nan, rows.asked_mm_min)
     reached = np.where(off, np.nan, rows.reached_mm_min)
@@ -231,6 +231,7 @@ def path_data(made: Made, rows: Along, units: Units) -> dict[str, Any]:
             **{str(int(key)): name for key, name in PURPOSES.items()},
             str(UNKNOWN): "other feed move",
         },
+        "feeds": [path.operation.feed_mm_min * units.scale for path in made.cutter_paths],
         "quantities": shown,
         "notes": list(rows.notes),
     }

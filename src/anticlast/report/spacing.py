@@ -6,7 +6,7 @@ import numpy as np
 
 from anticlast.records import Bools, Floats, Ints, ScallopMap
 
-MOST_POINTS = 240  # a pass; spacing changes slowly along it
+MOST_POINTS = 140  # a pass; spacing changes slowly along it
 
 
 def _sampled(rows: Ints) -> Ints:

@@ -19,7 +19,12 @@
   const any = (values) => values.some(Number.isFinite);
   const [reached, asked] = ["reached", "asked"].map(page.quantity);
   if (any(asked.values)) {
-    const lines = [{ name: "asked", values: asked.values, style: "#b04200", dash: [5, 3] }];
+    // What the job asks for, what F in the program asks for (slower where an axis could not follow), what is reached.
+    const wanted = Float32Array.from({ length: path.rows }, (_, i) => (Number.isFinite(asked.values[i]) && path.operation[i] >= 0 ? path.feeds[path.operation[i]] : NaN));
+    const lines = [
+      { name: "job", values: wanted, style: "#4b5a1c", dash: [2, 2] },
+      { name: "program", values: asked.values, style: "#b04200", dash: [5, 3] },
+    ];
     if (any(reached.values)) lines.push({ name: "reached", values: reached.values, style: "#0b4f7d" });
     strips.push({ title: "contact feed", unit: asked.unit, digits: asked.digits, lines, zero: true });
   }
@@ -37,7 +42,7 @@
   }
 
   const LEFT = 68, RIGHT = 10, TALL = 96, GAP = 30, FOOT = 34;
-  let low = first, high = last, rows = [0, path.rows - 1], hover = null;
+  let low = first, high = last, rows = [0, path.rows - 1], hover = null, lift = 0;
 
   function lowest(line) { return byLine ? page.rowOfLine(line) : Math.ceil(line); }
 
@@ -59,7 +64,8 @@
 
   function draw() {
     const width = canvas.clientWidth;
-    const height = strips.length * (TALL + GAP) + FOOT;
+    lift = width < 480 && strips.length && strips[0].lines.length > 1 ? 18 : 0; // the key gets its own line on a phone
+    const height = strips.length * (TALL + GAP) + FOOT + lift;
     const pen = page.sheet(canvas, width, height);
     pen.fillStyle = "#fff";
     pen.fillRect(0, 0, width, height);
@@ -67,7 +73,7 @@
     const toX = (line) => LEFT + (line - low) / Math.max(high - low, 1) * (width - LEFT - RIGHT);
     pen.font = "13px system-ui, sans-serif";
     strips.forEach((strip, n) => {
-      const top = n * (TALL + GAP) + GAP - 6;
+      const top = n * (TALL + GAP) + GAP - 6 + lift;
       frame(pen, strip, top, width, toX);
     });
     ruler(pen, width, height, toX);
@@ -76,7 +82,7 @@
       pen.strokeStyle = style;
       pen.lineWidth = 1.5;
       pen.beginPath();
-      pen.moveTo(toX(place[row]), GAP - 6);
+      pen.moveTo(toX(place[row]), GAP - 6 + lift);
       pen.lineTo(toX(place[row]), height - FOOT);
       pen.stroke();
     }
@@ -86,10 +92,11 @@
     pen.fillStyle = "#1b2430";
     pen.textAlign = "left";
     const title = strip.unit ? `${strip.title}, ${strip.unit}` : strip.title;
-    pen.fillText(title, LEFT, top - 7);
-    const [gap, sample] = width < 480 ? [12, 14] : [22, 24];
-    let x = LEFT + pen.measureText(title).width + gap;
-    if (strip.lines.length > 1) {
+    const keyed = strip.lines.length > 1;
+    pen.fillText(title, LEFT, top - 7 - (keyed ? lift : 0));
+    const [gap, sample] = lift ? [12, 14] : [22, 24];
+    let x = LEFT + (lift ? 0 : pen.measureText(title).width + gap);
+    if (keyed) {
       for (const line of strip.lines) {
         stroke(pen, line);
         pen.beginPath();
@@ -177,7 +184,7 @@
   function ruler(pen, width, height, toX) {
     const span = high - low || 1;
     const power = 10 ** Math.floor(Math.log10(span / 4));
-    const most = Math.max(3, Math.floor((width - LEFT) / 90));
+    const most = Math.max(4, Math.floor((width - LEFT) / 90));
     const step = Math.max(1, [1, 2, 5, 10].map((m) => m * power).find((size) => span / size <= most) || span);
     pen.fillStyle = pen.strokeStyle = "#1b2430";
     pen.textAlign = "center";
@@ -241,8 +248,8 @@
   draw();
 })();
 
-/* Start where the first cut is taken, so that the cutter stands on the part. */
+/* Start at a cut a third of the way, so that the cutter stands on the part. */
 if (page.path) {
-  const cut = page.path.purpose.indexOf(0);
-  page.go(cut < 0 ? 0 : Math.min(cut + Math.round(page.path.rows / 3), page.path.rows - 1));
+  const third = Math.round(page.path.rows / 3);
+  page.go(Math.max(page.path.purpose.indexOf(0, third), 0));
 }
