@@ -8,9 +8,11 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from anticlast.errors import CannotPlan
-from anticlast.machine import branches
+from anticlast.machine import _kernels, branches
 from anticlast.machine.axes import axis_path, budget_of
 from anticlast.machine.blocks import Digits
 from anticlast.machine.kinematics import Kinematics
@@ -182,6 +184,18 @@ class TestBranches:
         assert chosen.notes == ()
         assert np.abs(chosen.rotary_deg[:, 1]).max() <= 360.0
         assert np.abs(np.diff(chosen.rotary_deg[:, 1])).max() < 2.0
+
+    def test_many_turns_inside_wide_limits(self):
+        """C within +-3600: nine turns one way and back, from wherever they fit."""
+        wide = machine(
+            rotary("A", X, "work", limits=(-120, 30)), rotary("C", Z, "work", limits=(-3600, 3600))
+        )
+        kin = Kinematics(wide, (0, 0, 0), 60.0)
+        around = np.radians(np.concatenate([np.linspace(0, 3240 * 2, 3000), np.linspace(6480, 0, 3000)]))
+        axis = np.column_stack([0.6 * np.cos(around), 0.6 * np.sin(around), np.full(6000, 0.8)])
+        chosen = branches.choose(kin, axis, np.zeros(2), 1e-4, 1e-6)
+        assert chosen.notes == ()
+        assert np.ptp(chosen.rotary_deg[:, 1]) == pytest.approx(6480.0, abs=1e-6)
 
     def test_a_limit_that_cannot_be_kept_is_named(self):
         bounded = machine(
@@ -486,3 +500,57 @@ def test_y_axis_is_used(make_job):
             job, path_of(job, stretch_along(job, 0.0, np.linspace(-9, 9, 15), 0.0, kin.nearest_axis))
         )
         assert bool(np.ptp(path.words[path.purpose == Purpose.CUT, 3]) > 4.0) is tilt
+
+
+@settings(max_examples=80, derandomize=True, deadline=None)
+@given(
+    seed=st.integers(0, 10**6),
+    name=st.sampled_from(["trunnion-ac", "head-b-table-c", "nutating head", "nutating table"]),
+)
+def test_deviation_is_a_bound(seed, name):
+    """Sample plus bound is never less than the deviation found at 200 places of the block, by the twin's way."""
+    rng = np.random.default_rng(seed)
+    kin = Kinematics({**SHIPPED, **OTHERS}[name], rng.uniform(-40, 40, 3), 70.0)
+    ends = rng.uniform(-60, 60, (2, 5))
+    ends[1] = ends[0] + rng.normal(0, 1, 5) * [2, 2, 2, 8, 8]
+    tip, axis = kin.forward(ends)
+    height = 3.0
+    point = tip + height * axis
+    theta = math.acos(min(1.0, float(axis[0] @ axis[1])))
+    off, turned, _ = _kernels.deviation(
+        kin.chain, kin.base, height, point[0], point[1], axis[0], axis[1], theta, 0.0, ends[0, 3:], ends[0, :3], 1.0,
+        ends[1, 3:], ends[1, :3], np.zeros(2),
+    )  # fmt: skip
+    share = np.linspace(0, 1, 201)[:, None]
+    tips, axes = kin.forward(ends[0] + share * (ends[1] - ends[0]))
+    found = distance_to_line(tips + height * axes, point).max()
+    wish = (np.sin((1 - share) * theta) * axis[0] + np.sin(share * theta) * axis[1]) / math.sin(theta)
+    strayed = 2 * np.arcsin(np.clip(np.linalg.norm(axes - wish, axis=1) / 2, 0, 1)).max()
+    assert off >= found - 1e-9
+    assert turned >= strayed - 1e-9
+    # and not far above it, even where turn and travel cancel: these blocks turn by some 10 degrees
+    assert off <= 2.0 * found + 0.1
+
+
+def test_interpreted_kernels_agree(make_job):
+    """Branch choice and subdivision, compiled and run by plain Python, give the same blocks."""
+    kin = Kinematics(SHIPPED["trunnion-ac"], (20.0, 5.0, 30.0), 79.0)
+    job = with_machine(make_job(), SHIPPED["trunnion-ac"], (20.0, 5.0, 30.0))
+    stretch = stretch_along(job, 0.5, np.linspace(-3, 3, 7))
+    choices = kin.rotary(stretch.axis)
+    args = (
+        kin.chain, stretch.axis, choices.words, choices.free, np.zeros((7, 2)), kin.low, kin.high, np.full(2, 3600.0),
+        np.zeros(2), np.array([-1, 0]), np.array([3, 1]), 1e-3, 1e-4,
+    )  # fmt: skip
+    fast, plain = _kernels.choose_branches(*args), _kernels.choose_branches.py_func(*args)
+    assert fast[0] == pytest.approx(plain[0], abs=1e-9)
+    assert not fast[1].any()
+    point = stretch.tip_mm + 3.0 * stretch.axis
+    args = (
+        kin.chain, kin.base, 3.0, 0.0, point, stretch.axis, np.round(fast[0], 4), np.full(2, 3600.0), 1e4, 1e-3, 1e-3,
+        2e-6, 1e-7, 1000,
+    )  # fmt: skip
+    fast, plain = _kernels.subdivide(*args), _kernels.subdivide.py_func(*args)
+    assert fast[0].tolist() == plain[0].tolist()
+    assert fast[2] == pytest.approx(plain[2], abs=1e-9)
+    assert fast[3] == plain[3] == -1

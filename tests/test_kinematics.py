@@ -292,3 +292,6 @@ def test_interpreted_kernel_agrees():
     plain = _kernels.solve_rotary.py_func(kin.chain, 1e-7, axis)
     for one, other in zip(fast, plain, strict=True):
         assert one == pytest.approx(other, abs=1e-12)
+    wished = random_axes(np.random.default_rng(6), 20)
+    args = (kin.chain, np.array([-40.0, -100.0]), np.array([70.0, 20.0]), 1e-7, wished)
+    assert _kernels.nearest_axis(*args) == pytest.approx(_kernels.nearest_axis.py_func(*args), abs=1e-12)

@@ -298,6 +298,18 @@ def test_look_ahead_against_its_twin():
     assert found == pytest.approx(interpreted, rel=1e-12)
 
 
+def test_interpreted_corner_speeds_agree():
+    rng = np.random.default_rng(12)
+    way = rng.normal(0, 1, (30, 4)) + [3, 0, 0, 0]
+    length = np.linalg.norm(way, axis=1)
+    unit = way / length[:, None]
+    args = (
+        unit, unit, way, length, rng.uniform(5, 40, 30), rng.random(30) < 0.1, 0, np.array([1, 1, 1, 0.3]),
+        np.array([1.0, 1, 1, 0]), CORNER_MM, CORNER_DEG, 400.0, 1e-3,
+    )  # fmt: skip
+    assert kernels.corner_speeds(*args) == pytest.approx(kernels.corner_speeds.py_func(*args), rel=1e-12)
+
+
 def test_speed_of_a_long_program():
     """100,000 blocks in less than a second once compiled; 3 s here, as the suite may share the machine."""
     rng = np.random.default_rng(2)

@@ -51,6 +51,10 @@ class Cutter:
         Tip to holder face.
     holder : tuple of (radius_mm, length_mm)
         Steps of the holder from its face upwards.
+    plunge : bool or None
+        Cuts to its centre and may go straight down into stock; None: a ball can, bull and flat cannot.
+    ramp_angle_rad : float
+        Steepest way down into stock on a ramp or helix, > 0.
     """
 
     number: int
@@ -62,11 +66,18 @@ class Cutter:
     shank_radius_mm: float
     stickout_mm: float
     holder: tuple[tuple[float, float], ...] = ()
+    plunge: bool | None = None
+    ramp_angle_rad: float = math.radians(3.0)
 
     @property
     def gauge_length_mm(self) -> float:
         """Tip to spindle gauge point: stickout plus all holder steps."""
         return self.stickout_mm + sum(length for _, length in self.holder)
+
+    @property
+    def can_plunge(self) -> bool:
+        """Whether it may go straight down into stock."""
+        return self.shape == "ball" if self.plunge is None else self.plunge
 
     @property
     def reference_height_mm(self) -> float:

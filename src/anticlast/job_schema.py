@@ -35,6 +35,7 @@ Direction = Annotated[
 JOB_TABLES: Final = ("job", "part", "stock", "machine", "cutter", "operation")
 FINISH_PATTERNS: Final = ("raster", "graded", "even", "matched")
 ROUGH_PATTERNS: Final = ("layers",)
+OUTLINE_PATTERNS: Final = ("profile",)
 
 
 class JobTable(FileTable):
@@ -109,14 +110,16 @@ class CutterTable(FileTable):
     shank_diameter: Annotated[float, Quantity("length", 0, 100, above=True)] | None = None
     stickout: Annotated[float, Quantity("length", 0, 500, above=True)]
     holder: Annotated[tuple[HolderStep, ...], Says("a list of steps, each [diameter, length]")] = ()
+    plunge: bool | None = None
+    ramp_angle: Annotated[float, Quantity("degrees", 0.1, 45)] = 3.0
 
 
 class OperationTable(FileTable):
     """``[[operation]]``; ``axis`` has three spellings and is checked apart."""
 
-    does: Literal["rough", "semi-finish", "finish"]
+    does: Literal["rough", "semi-finish", "finish", "outline"]
     cutter: Annotated[int, Quantity("", 1, 9999, whole=True)]
-    pattern: Literal["raster", "graded", "even", "matched", "layers"] | None = None
+    pattern: Literal["raster", "graded", "even", "matched", "layers", "profile"] | None = None
     direction: Degrees = 0.0
     scallop: Annotated[float, Quantity("length", 0.0001, 1)] | None = None
     stepover: Annotated[float, Quantity("length", 0.001, 100)] | None = None
@@ -131,4 +134,13 @@ class OperationTable(FileTable):
     fixed: Direction | None = None
     tolerance: Annotated[float, Quantity("length", 0.0001, 0.1)] = 0.002
     way: Literal["both", "one-way"] = "both"
+    depth_of_cut: Annotated[float, Quantity("length", 0.01, 100)] | None = None
+    width_of_cut: Annotated[float, Quantity("length", 0.01, 100)] | None = None
+    slotting: bool = False
+    reach: Annotated[float, Quantity("length", 0, 200)] | None = None
+    depth: Annotated[float, Quantity("length", 0, 1000, above=True)] | None = None
+    skin: Annotated[float, Quantity("length", 0, 10)] = 0.0
+    tabs: Annotated[int, Quantity("", 0, 100, whole=True)] = 4
+    tab_width: Annotated[float, Quantity("length", 0, 100, above=True)] | None = None
+    tab_height: Annotated[float, Quantity("length", 0, 50, above=True)] = 1.0
     lead_margin: Annotated[float, Quantity("degrees", 0, 5)] = 0.05

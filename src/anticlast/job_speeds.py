@@ -26,6 +26,8 @@ def cutter_of(table: CutterTable) -> Cutter:
         shank_radius_mm=shank / 2.0,
         stickout_mm=table.stickout,
         holder=tuple((diameter / 2.0, length) for diameter, length in table.holder),
+        plunge=table.plunge,
+        ramp_angle_rad=math.radians(table.ramp_angle),
     )
 
 

@@ -168,10 +168,15 @@ class Operation:
     feed direction, ``lean_rad`` sideways, positive to the left of it. ``fixed_axis`` is a unit vector in part coordinates
     when the axis does not follow the surface, else None. ``lead_margin_rad`` is the tilt error of the machine under which a
     *matched* pass must not gouge beyond the tolerance; in that pattern ``lead_rad`` is the least lead.
+
+    To rough and to cut the outline: ``depth_of_cut_mm`` along the axis and ``width_of_cut_mm`` square to the path, None for the
+    cutter's defaults; ``slotting`` allows the full width. ``reach_mm`` is how far outside the part's outline is roughed, None
+    for the whole blank. ``depth_mm`` is how far under the blank's top the outline is cut, None for the blank's bottom less
+    ``skin_mm``; ``tabs`` of a width and of a height over the blank's bottom stay.
     """
 
     index: int
-    does: Literal["rough", "semi-finish", "finish"]
+    does: Literal["rough", "semi-finish", "finish", "outline"]
     cutter: Cutter
     pattern: str
     direction_rad: float
@@ -186,6 +191,15 @@ class Operation:
     tolerance_mm: float
     way: Literal["both", "one-way"]
     lead_margin_rad: float = math.radians(0.05)
+    depth_of_cut_mm: float | None = None
+    width_of_cut_mm: float | None = None
+    slotting: bool = False
+    reach_mm: float | None = None
+    depth_mm: float | None = None
+    tabs: int = 4
+    tab_width_mm: float | None = None
+    tab_height_mm: float = 1.0
+    skin_mm: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)

@@ -16,6 +16,9 @@ CHORD_SHARE_OF_SCALLOP: Final = 0.02
 # A rotary axis whose axis direction is this near to the cutter axis (radians) cannot turn it: the pole.
 POLE_RAD: Final = 1e-7
 
+# The same for matched strips, which grow with the fourth root of the height: 5 % costs 1.3 % of cut length and halves the blocks.
+CHORD_SHARE_OF_STRIP: Final = 0.05
+
 # Two unit vectors are the same direction below this angle (radians); round-off of float64 cross products is 1e-16.
 SAME_DIRECTION_RAD: Final = 1e-9
 

@@ -9,6 +9,9 @@ Every function sees arrays and floats only. The machine comes as two arrays:
 
 With m <= 2 and words in degrees, the cutter axis in part coordinates is u = Rot(first) Rot(second) z, "first" being the
 rotary axis next to the part. Derivations: docs/theory-machine.md.
+
+One long file, and two long functions, because compiled code is cached by the text of its own file only: a helper in another
+file could change without its callers noticing.
 """
 
 from __future__ import annotations
@@ -412,11 +415,23 @@ def choose_branches(
         for j in range(m):
             lane_turns[lane, j] = wrap_low[j] + rest % wraps[j]
             rest //= wraps[j]
+    beside = np.zeros(lanes, dtype=np.int64)
+    neighbour = np.zeros((lanes, 9), dtype=np.int64)
+    for lane in range(lanes):
+        for other in range(lanes):
+            far = 0.0
+            for j in range(m):
+                far = max(far, abs(lane_turns[lane, j] - lane_turns[other, j]))
+            if far <= 1.0:
+                neighbour[lane, beside[lane]] = other
+                beside[lane] += 1
     for i in range(count):
         for s in range(states):
             branch, lane = s // lanes, s % lanes
             best, best_from = math.inf, 0
-            for before in range(states if i > 0 else 1):
+            for step in range(branches * beside[lane] if i > 0 else 1):
+                # No step is longer than half a turn, so whole turns change by one at most.
+                before = (step // beside[lane]) * lanes + neighbour[lane, step % beside[lane]] if i > 0 else 0
                 total = (cost[before] if i > 0 else 0.0) + outside[i, branch]
                 if total >= best:
                     continue

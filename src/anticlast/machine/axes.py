@@ -21,6 +21,7 @@ from anticlast.records import AxisPath, CutterPath, Floats, Job, Operation, Purp
 from anticlast.tolerances import (
     AXIS_STRAY_RAD,
     CHORD_SHARE_OF_SCALLOP,
+    CHORD_SHARE_OF_STRIP,
     LINEAR_FLOOR_MM,
     POLE_RAD,
     SAME_POINT_MM,
@@ -58,7 +59,8 @@ def budget_of(operation: Operation) -> Budget:
     """
     point = operation.tolerance_mm / 2.0
     if operation.scallop_mm is not None:
-        point = min(point, CHORD_SHARE_OF_SCALLOP * operation.scallop_mm / 2.0)
+        share = CHORD_SHARE_OF_STRIP if operation.pattern == "matched" else CHORD_SHARE_OF_SCALLOP
+        point = min(point, share * operation.scallop_mm / 2.0)
     point = max(point, LINEAR_FLOOR_MM)
     lever = operation.cutter.radius_mm - operation.cutter.corner_radius_mm
     # Half of the budget may go into the axis, so that the point keeps the other half.

@@ -156,7 +156,11 @@ def _crossing(height: Floats, aside: Floats, limit_mm: float) -> tuple[Floats, F
     rows = np.arange(len(height))
     last = np.maximum(after - 1, 0)
     step = aside[1] - aside[0]
-    h0, h1, h2 = height[rows, np.maximum(last - 1, 0)], height[rows, last], np.minimum(height[rows, after], _FAR_MM)
+    h0, h1, h2 = (
+        height[rows, np.maximum(last - 1, 0)],
+        height[rows, last],
+        np.minimum(height[rows, after], _FAR_MM),
+    )
     straight = np.clip((limit_mm - h1) / np.where(h2 > h1, h2 - h1, np.inf), 0.0, 1.0)
     bend, slope = 0.5 * (h0 + h2) - h1, 0.5 * (h2 - h0)
     root = slope + np.sqrt(np.maximum(slope * slope - 4.0 * bend * (h1 - limit_mm), 0.0))
@@ -232,7 +236,13 @@ def reaches_all(sweep: Sweep, u_mm: Floats, v_mm: Floats) -> bool:
 
 
 def fit(
-    sweep: Sweep, u_nodes: Floats, v_nodes: Floats, ways: tuple[int, ...], family: Family, demand: Demand, relative: bool
+    sweep: Sweep,
+    u_nodes: Floats,
+    v_nodes: Floats,
+    ways: tuple[int, ...],
+    family: Family,
+    demand: Demand,
+    relative: bool,
 ) -> Fit:
     """Return the leads of widest strips at all stations.
 
@@ -262,7 +272,9 @@ def fit(
         )
         angles = np.clip(start[:, None] * _SHARES, least, _MOST_LEAD_RAD)
     else:
-        angles = np.broadcast_to(np.geomspace(least, max(_MOST_LEAD_RAD, 1.01 * least), _LEADS_ASKED), (u.size, _LEADS_ASKED))
+        angles = np.broadcast_to(
+            np.geomspace(least, max(_MOST_LEAD_RAD, 1.01 * least), _LEADS_ASKED), (u.size, _LEADS_ASKED)
+        )
     worth = np.stack([ask(np.ascontiguousarray(column)).worth for column in angles.T], axis=1)
     best = np.argmax(worth, axis=1)
     rows = np.arange(u.size)
@@ -292,4 +304,3 @@ def _sectioned(ask, low: Floats, high: Floats, best: Floats, worth: Floats) -> F
         value = ask(fresh).worth
         at_b, at_c = np.where(down, value, at_c), np.where(down, at_b, value)
     return best
-

@@ -184,14 +184,14 @@ class PassFrame:
         height = np.full_like(u, np.inf)
         for _ in range(_ROUNDS):
             c, c1, c2 = self.centre(at, line, one, none)
-            height, step = _deepest_step(c - point, c1, c2, n, self.radius_mm)
+            height, step = deepest_step(c - point, c1, c2, n, self.radius_mm)
             at = at - step
             if not np.any(np.abs(step[np.isfinite(height)]) > SAME_POINT_MM):
                 return height
         raise NotConverged("height left by one pass", float(np.nanmax(np.abs(step))), SAME_POINT_MM)
 
 
-def _deepest_step(d: Floats, d1: Floats, d2: Floats, n: Floats, radius_mm: float) -> tuple[Floats, Floats]:
+def deepest_step(d: Floats, d1: Floats, d2: Floats, n: Floats, radius_mm: float) -> tuple[Floats, Floats]:
     """Return where a ball cuts the normal, and the Newton step (to subtract) to its lowest along the pass."""
     a, a1, a2 = (np.einsum("...i,...i->...", x, n) for x in (d, d1, d2))
     dd = np.einsum("...i,...i->...", d, d)

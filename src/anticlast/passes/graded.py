@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import numpy as np
 
-from anticlast.outline import Outline
 from anticlast.passes.cover import Samples
 from anticlast.passes.frame import PassFrame
 from anticlast.passes.raster import evenly
@@ -16,7 +15,7 @@ _EVEN_SHARE = 0.01
 _ROUNDS = 12
 
 
-def lines_for_scallop(frame: PassFrame, outline: Outline, samples: Samples, height_mm: float) -> Floats:
+def lines_for_scallop(frame: PassFrame, samples: Samples, height_mm: float) -> Floats:
     """Return v of the passes (n,), ascending [mm], that leave ``height_mm`` and come out even at both edges.
 
     The first pass lies as far inside as the edge allows, each next one as far as the tightest point between

@@ -23,7 +23,7 @@ from anticlast.passes.profile import Nearest, Sweep, Track
 from anticlast.passes.scallop import second_order_step
 from anticlast.records import CutterPath, Floats, Job, Operation, Purpose
 from anticlast.saddle import Saddle
-from anticlast.tolerances import CHORD_SHARE_OF_SCALLOP
+from anticlast.tolerances import CHORD_SHARE_OF_STRIP
 
 # Stations lie no further apart than this share of the surface's tightest radius: curvature changes by 1 % of itself then.
 _STATION_SHARE = 0.15
@@ -38,6 +38,8 @@ _LOOK_ASIDE = 8
 _ROUNDS = 8
 # The height is lowered until the passes come out at a whole number within this share of one.
 _EVEN_SHARE = 0.05
+# Of the machine stage's half of the budget, what the highest of many ridges is usually raised by.
+_LINEAR_SHARE = 0.5
 # Links take no longer than this at feed.
 _LINK_SECONDS = 1.0
 
@@ -81,7 +83,7 @@ def plan_matched(job: Job, operation: Operation, nearest: Nearest, rise_mm: floa
     saddle, outline = Saddle.of(job.part), job.part.outline
     frame = PassFrame(saddle, operation.direction_rad, operation.cutter.radius_mm, operation.allowance_mm)
     sweep = Sweep(saddle, operation.direction_rad, operation.cutter, operation.allowance_mm, nearest)
-    budget = min(operation.tolerance_mm, CHORD_SHARE_OF_SCALLOP * operation.scallop_mm)
+    budget = _budget_mm(operation)
     design = operation.scallop_mm - budget
     stations, full = _stations(sweep, outline)
     best, refused = _best_family(frame, sweep, outline, operation, stations, full, design)
@@ -98,7 +100,7 @@ def plan_matched(job: Job, operation: Operation, nearest: Nearest, rise_mm: floa
         passes=len(laid.order),
         cut_length_mm=float(saddle.line_length_mm(legs.start_mm[cut], legs.end_mm[cut]).sum()),
         stepover_mm=_stepover(frame, outline, laid.lines_mm),
-        scallop_predicted_mm=laid.highest_mm + sag,
+        scallop_predicted_mm=laid.highest_mm + sag + _LINEAR_SHARE * 0.5 * budget,
         chord_mm=chords.outward_mm,
         notes=_notes(frame, sweep, operation, outline, laid, full, len(stretches), design, stations),
     )
@@ -151,12 +153,13 @@ def _families(operation: Operation, full: bool) -> list[Family]:
 
 
 def _demand(operation: Operation, height_mm: float) -> Demand:
-    assert operation.scallop_mm is not None, "checked"
-    budget = min(operation.tolerance_mm, CHORD_SHARE_OF_SCALLOP * operation.scallop_mm)
-    return Demand(
-        height_mm, operation.lead_margin_rad, operation.tolerance_mm - 0.5 * min(budget, operation.tolerance_mm),
-        max(operation.lead_rad, 0.0),
-    )  # fmt: skip
+    allowed = operation.tolerance_mm - 0.5 * _budget_mm(operation)
+    return Demand(height_mm, operation.lead_margin_rad, allowed, max(operation.lead_rad, 0.0))
+
+
+def _budget_mm(operation: Operation) -> float:
+    """Return what chords and linearisation together may add to the scallop."""
+    return min(operation.tolerance_mm, CHORD_SHARE_OF_STRIP * (operation.scallop_mm or 0.0))
 
 
 def _ways(operation: Operation) -> tuple[int, ...]:
@@ -216,7 +219,9 @@ def _lay(
             tried = strips.lay_lines(frame, outline, other)
             if isinstance(tried, strips.Lines) and tried.v_mm.size == count:
                 found, lines, height = other, tried, lower
-        laid = _as_cut(frame, sweep, outline, operation, found, strips.closed_up(lines, outline, frame.direction_rad))
+        laid = _as_cut(
+            frame, sweep, outline, operation, found, strips.closed_up(lines, outline, frame.direction_rad)
+        )
         if laid.highest_mm <= design_mm:
             return laid
         height *= (1.0 - 1e-3) * design_mm / laid.highest_mm
@@ -249,7 +254,9 @@ def _as_cut(
     for cut in order:
         sign[pieces.line[cut.piece]] = cut.sign
     low, high = float(u0.min()) - sweep.reach_mm, float(u1.max()) + sweep.reach_mm
-    tracks = [track_of(sweep, found, float(v), int(way), low, high) for v, way in zip(lines_mm, sign, strict=True)]
+    tracks = [
+        track_of(sweep, found, float(v), int(way), low, high) for v, way in zip(lines_mm, sign, strict=True)
+    ]
     height = _looked_at(frame, sweep, outline, tracks, lines_mm, found)
     return Laid(found, lines_mm, pieces, order, float(height.max()), float(height.min()), 0.0)
 
@@ -406,4 +413,6 @@ def _turned_note(
         return f"with the part turned 90 degrees on the table this machine could not cut matched strips; as it is they take {now} passes"
     then = best[1].v_mm.size
     change = "no fewer" if then >= now else f"{100.0 * (1.0 - then / now):.0f} % fewer"
-    return f"with the part turned 90 degrees on the table it would take {then} passes instead of {now}, {change}"
+    return (
+        f"with the part turned 90 degrees on the table it would take {then} passes instead of {now}, {change}"
+    )

@@ -80,7 +80,13 @@ def clearance_mm(saddle: Saddle, sweep: Sweep, point: Floats, axis: Floats) -> F
 
 
 def stretches_of(
-    frame: PassFrame, sweep: Sweep, operation: Operation, laid: Laid, legs: Legs, chords: Chords, rise_mm: float
+    frame: PassFrame,
+    sweep: Sweep,
+    operation: Operation,
+    laid: Laid,
+    legs: Legs,
+    chords: Chords,
+    rise_mm: float,
 ) -> tuple[tuple[Stretch, ...], float]:
     """Return the stretches, and what chords add to the highest scallop at most [mm]; below 0 where they lower it."""
     parts: list[_Run] = []
@@ -176,7 +182,9 @@ def _link(saddle: Saddle, sweep: Sweep, before: _Run, after: _Run) -> _Run | Non
     return None
 
 
-def _stretch(saddle: Saddle, sweep: Sweep, operation: Operation, parts: list[_Run], rise_mm: float) -> Stretch:
+def _stretch(
+    saddle: Saddle, sweep: Sweep, operation: Operation, parts: list[_Run], rise_mm: float
+) -> Stretch:
     """Return a stretch of runs with its entry and exit; the contact stands still on both."""
     point, axis, contact, normal, purpose, owner = (
         np.concatenate([getattr(part, name) for part in parts]) for name in _Run.__slots__

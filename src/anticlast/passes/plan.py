@@ -6,56 +6,46 @@ docs/theory-passes.md.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
 
-from anticlast.errors import CannotPlan, NotConverged
+from anticlast.errors import CannotPlan
 from anticlast.outline import Outline
-from anticlast.passes import entry, graded, raster
-from anticlast.passes.cover import Samples, pieces_of, sample
+from anticlast.passes import entry
+from anticlast.passes.courses import Course
+from anticlast.passes.cover import pieces_of, spread
 from anticlast.passes.cusp import require_fit
+from anticlast.passes.even import even_layout
 from anticlast.passes.frame import PassFrame
+from anticlast.passes.layout import Layout, graded_layout, raster_layout
 from anticlast.passes.legs import Legs, legs_of, linked
 from anticlast.passes.matched import plan_matched
 from anticlast.passes.order import cutting_order
-from anticlast.passes.rows import Chords, Nearest, Rows, Tilt, rows_of, sag_density
-from anticlast.passes.spacing import Left, left_behind
+from anticlast.passes.rows import Nearest, Rows, Tilt, rows_of, sag_density, strays
 from anticlast.passes.tilt import tip_from_contact
-from anticlast.records import CutterPath, Floats, Job, Operation, Purpose, Stretch, frozen_array
+from anticlast.records import CutterPath, Job, Operation, Purpose, Stretch, frozen_array
 from anticlast.saddle import Saddle
-from anticlast.tolerances import CHORD_SHARE_OF_SCALLOP, SIDEWAYS_SHARE_OF_STEP
 
-LinesForScallop = Callable[[PassFrame, Outline, Samples, float], Floats]
-
-# Pattern name, as in the job file, to the lines it lays for a scallop limit.
-PATTERNS: dict[str, LinesForScallop] = {
-    "graded": graded.lines_for_scallop,
-    "raster": raster.lines_for_scallop,
+# Pattern name, as in the job file, to what lays its passes.
+PATTERNS: dict[str, Callable[[Saddle, Outline, Operation], Layout]] = {
+    "even": even_layout,
+    "graded": graded_layout,
+    "raster": raster_layout,
 }
 
-# Cusps are asked at places; where one between them comes out higher than designed, the design is lowered.
-# Once is the rule.
-_ROUNDS = 8
 # Ground within this many overruns of the outline is passes' own: a strip's pass may end half a step and an
 # overrun outside.
 _GROUND_OVERRUNS = 2.0
 # The cutter stays down on a link that takes no longer than this (seconds at feed): a lift, a rapid and an
 # entry take more.
 _LINK_SECONDS = 1.0
+# Length is integrated over runs of at most this much, 5 points each: the slope changes by less than 0.5 over one.
+_RUN_MM = 4.0
+_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(5)
 # Curvature changes little over this much of a surface that a ball of some millimetres all but fills.
 _FIT_MM = 0.5
-
-
-@dataclass(frozen=True, slots=True)
-class _Laid:
-    """Pass lines (v, ascending), what they leave, and how far chords may stray."""
-
-    lines_mm: Floats
-    left: Left
-    chords: Chords
 
 
 def plan_operation(job: Job, operation: Operation, nearest_axis: Nearest) -> CutterPath:
@@ -88,32 +78,31 @@ def plan_operation(job: Job, operation: Operation, nearest_axis: Nearest) -> Cut
         return plan_matched(job, operation, nearest_axis, _rise_mm(job, operation))
     saddle, outline = Saddle.of(job.part), job.part.outline
     _require_fit(saddle, outline, operation)
-    frame = PassFrame(saddle, operation.direction_rad, operation.cutter.radius_mm, operation.allowance_mm)
-    laid = _lay(frame, outline, operation)
-    overrun = _overrun(frame, outline, laid.lines_mm)
-    bridge = (2.0 * _GROUND_OVERRUNS - 2.0) * overrun
-    pieces = pieces_of(frame, outline, laid.lines_mm, overrun, bridge)
+    laid = PATTERNS[operation.pattern](saddle, outline, operation)
+    bridge = (2.0 * _GROUND_OVERRUNS - 2.0) * laid.overrun_mm
+    pieces = pieces_of(laid.frame, laid.outline, laid.lines_mm, laid.overrun_mm, bridge)
     order = cutting_order(pieces, operation.way)
     stays = linked(
-        frame,
+        laid.course,
         pieces,
         order,
-        outline.grown(_GROUND_OVERRUNS * overrun),
+        outline.grown(_GROUND_OVERRUNS * laid.reach_mm),
         _LINK_SECONDS * operation.feed_mm_min / 60.0,
         operation.way == "one-way",
     )
-    legs = legs_of(frame, pieces, order, stays)
+    legs = legs_of(laid.course, pieces, order, stays)
     tilt = Tilt(operation.lead_rad, operation.lean_rad, operation.fixed_axis, nearest_axis)
-    rows = rows_of(frame, legs, laid.chords, tilt)
-    stretches = _stretches(frame, operation, rows, _rise_mm(job, operation))
+    ball = PassFrame(saddle, 0.0, operation.cutter.radius_mm, operation.allowance_mm)
+    rows = rows_of(ball, laid.course, legs, laid.chords, tilt)
+    stretches = _stretches(ball, operation, rows, _rise_mm(job, operation))
     notes = (f"the cutter lifts {len(stretches) - 1} times between passes",) if len(stretches) > 1 else ()
     return CutterPath(
         operation=operation,
         stretches=stretches,
         passes=len(order),
-        cut_length_mm=_cut_length(saddle, legs),
+        cut_length_mm=_cut_length(saddle, laid.course, legs),
         stepover_mm=laid.left.stepover_mm,
-        scallop_predicted_mm=_predicted(frame, laid),
+        scallop_predicted_mm=_predicted(ball, laid),
         chord_mm=laid.chords.outward_mm,
         notes=notes,
     )
@@ -144,72 +133,31 @@ def _require_fit(saddle: Saddle, outline: Outline, operation: Operation) -> None
     require_fit(saddle, operation.cutter.radius_mm, places, operation.allowance_mm)
 
 
-def _lay(frame: PassFrame, outline: Outline, operation: Operation) -> _Laid:
-    """Return the pass lines: by the scallop limit less what chords may add, or by the stepover."""
-    if operation.scallop_mm is None:
-        if operation.stepover_mm is None or operation.pattern != "raster":
-            raise CannotPlan(
-                "stepover", f"operation {operation.index}: a stepover can be given for pattern 'raster' only"
-            )
-        height = operation.stepover_mm**2 / (8.0 * frame.radius_mm)
-        samples = sample(frame, outline, height)
-        lines = raster.lines_for_stepover(frame, outline, samples, operation.stepover_mm)
-        left = left_behind(frame, outline, lines)
-        return _Laid(lines, left, _chords(operation, left.highest_mm, left))
-    design = operation.scallop_mm - _budget(operation, operation.scallop_mm)
-    height = design
-    samples = sample(frame, outline, height)
-    for _ in range(_ROUNDS):
-        lines = PATTERNS[operation.pattern](frame, outline, samples, height)
-        left = left_behind(frame, outline, lines)
-        if left.highest_mm <= design:
-            return _Laid(lines, left, _chords(operation, operation.scallop_mm, left))
-        height *= (1.0 - 1e-4) * design / left.highest_mm
-    raise NotConverged("spacing of the passes", left.highest_mm - design, 0.0)
-
-
-def _budget(operation: Operation, height_mm: float) -> float:
-    """Return what chords and linearisation together may add to a scallop, mm."""
-    return min(operation.tolerance_mm, CHORD_SHARE_OF_SCALLOP * height_mm)
-
-
-def _chords(operation: Operation, height_mm: float, left: Left) -> Chords:
-    """Return the planner's half of the budget; inward, where chords take stock off, it may be twice that."""
-    outward = 0.5 * _budget(operation, height_mm)
-    sideways = SIDEWAYS_SHARE_OF_STEP * (left.stepover_mm[0] or operation.cutter.radius_mm)
-    return Chords(
-        outward, min(2.0 * outward, 0.5 * operation.tolerance_mm), min(sideways, operation.tolerance_mm)
-    )
-
-
-def _overrun(frame: PassFrame, outline: Outline, lines_mm: Floats) -> float:
-    """Return how far passes run past the outline: a step, and as far as the deepest cut runs ahead in it."""
-    low, high = outline.v_range(frame.direction_rad)
-    gap = float(np.diff(lines_mm).max()) if lines_mm.size > 1 else 0.0
-    gap = max(gap, 2.0 * (float(lines_mm[0]) - low), 2.0 * (high - float(lines_mm[-1])))
-    u, v = frame.uv(outline.boundary_points(1.0))
-    return gap * (1.0 + float(np.abs(frame.shear(u, v)).max()))
-
-
-def _predicted(frame: PassFrame, laid: _Laid) -> float:
+def _predicted(ball: PassFrame, laid: Layout) -> float:
     """Return the highest scallop to expect: the exact cusp, and the whole chord's sag where the feed is concave.
 
     Chord ends of neighbouring passes do not line up, so of many cusps some stand on the middles of two chords that lie
     off the part, and some on the ends of two that cut into it. docs/theory-passes.md#budget.
     """
     left = laid.left
-    xy = frame.xy(left.u_mm, left.v_mm)
-    along = np.broadcast_to(frame.xy(np.ones(1), np.zeros(1)), xy.shape)
-    density = sag_density(frame, xy, along, laid.chords)
-    _, _, bend = frame.centre(left.u_mm, left.v_mm, np.ones(1), np.zeros(1))
-    up = np.einsum("ni,ni->n", bend, frame.normal_uv(left.u_mm, left.v_mm))
-    sag = np.maximum(up, 0.0) / (8.0 * np.maximum(density, np.finfo(float).tiny) ** 2)
-    return float((left.height_mm + np.where(up > 0.0, sag, 0.0)).max())
+    outward, aside = strays(ball, left.xy_mm, left.along, np.zeros(len(left.xy_mm)))
+    density = sag_density(outward, aside, laid.chords)
+    sag = np.maximum(outward, 0.0) / (8.0 * np.maximum(density, np.finfo(float).tiny) ** 2)
+    return float((left.height_mm + np.where(outward > 0.0, sag, 0.0)).max())
 
 
-def _cut_length(saddle: Saddle, legs: Legs) -> float:
-    cut = legs.purpose == Purpose.CUT
-    return float(saddle.line_length_mm(legs.start_mm[cut], legs.end_mm[cut]).sum())
+def _cut_length(saddle: Saddle, course: Course, legs: Legs) -> float:
+    """Return the length on the surface of all cutting legs: Gauss-Legendre in u, some runs a leg."""
+    cut = np.flatnonzero(legs.purpose == Purpose.CUT)
+    owner, edge = spread(np.zeros(cut.size), np.abs(legs.u1_mm[cut] - legs.u0_mm[cut]), _RUN_MM)
+    inner = owner[1:] == owner[:-1]
+    first, last, leg = edge[:-1][inner], edge[1:][inner], cut[owner[1:][inner]]
+    low = np.minimum(legs.u0_mm, legs.u1_mm)[leg]
+    u = low + 0.5 * (first + last) + 0.5 * (last - first) * _NODES[:, None]
+    at, rate, _ = course.at(np.tile(legs.line[leg], len(_NODES)), u.ravel())
+    zx, zy = saddle.gradient(at[:, 0], at[:, 1])
+    speed = np.sqrt((rate**2).sum(axis=1) + (zx * rate[:, 0] + zy * rate[:, 1]) ** 2).reshape(u.shape)
+    return float((0.5 * (last - first) * (_WEIGHTS @ speed)).sum())
 
 
 def _rise_mm(job: Job, operation: Operation) -> float:

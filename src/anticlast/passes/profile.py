@@ -68,10 +68,18 @@ class Sweep:
     @property
     def reach_mm(self) -> float:
         """How far along the feed, before or behind its contact, the cutter's bottom can meet the surface."""
-        return 2.0 * self.disc_mm + (1.0 + _PAST_REAR) * max(self.cutter.corner_radius_mm, _PAST_REAR * self.cutter.radius_mm)
+        return 2.0 * self.disc_mm + (1.0 + _PAST_REAR) * max(
+            self.cutter.corner_radius_mm, _PAST_REAR * self.cutter.radius_mm
+        )
 
     def poses(
-        self, u_mm: Floats, v_mm: Floats, way: npt.ArrayLike, lead_rad: Floats, lean_rad: npt.ArrayLike, lift_mm: npt.ArrayLike
+        self,
+        u_mm: Floats,
+        v_mm: Floats,
+        way: npt.ArrayLike,
+        lead_rad: Floats,
+        lean_rad: npt.ArrayLike,
+        lift_mm: npt.ArrayLike,
     ) -> tuple[Floats, Floats]:
         """Return reference point [mm] and unit axis (n, 3) in part coordinates at contacts (u, v).
 
@@ -111,7 +119,13 @@ class Sweep:
         return np.array([self.disc_mm, self.cutter.corner_radius_mm, float(rounds)])
 
     def profiles(
-        self, u_mm: Floats, v_mm: Floats, way: npt.ArrayLike, lead_rad: Floats, lean_rad: Floats, aside_mm: Floats
+        self,
+        u_mm: Floats,
+        v_mm: Floats,
+        way: npt.ArrayLike,
+        lead_rad: Floats,
+        lean_rad: Floats,
+        aside_mm: Floats,
     ) -> tuple[Floats, Floats]:
         """Return what passes leave beside their lines, and how far ahead of the place it is cut, (n, m) [mm].
 
@@ -141,7 +155,15 @@ class Sweep:
 
         def run(part: slice) -> None:
             kernels.profiles(
-                form, tool, u_mm[part], v_mm[part], aside_mm, tables[part], self.step_mm, height[part], shift[part]
+                form,
+                tool,
+                u_mm[part],
+                v_mm[part],
+                aside_mm,
+                tables[part],
+                self.step_mm,
+                height[part],
+                shift[part],
             )
 
         _in_bands(run, u_mm.size)
@@ -154,7 +176,15 @@ class Sweep:
 
         def run(part: slice) -> None:
             kernels.heights(
-                form, tool, u_mm[part], v_mm[part], track.table, track.start_mm, self.step_mm, self.reach_mm, height[part]
+                form,
+                tool,
+                u_mm[part],
+                v_mm[part],
+                track.table,
+                track.start_mm,
+                self.step_mm,
+                self.reach_mm,
+                height[part],
             )
 
         _in_bands(run, u_mm.size)

@@ -28,7 +28,7 @@ def evenly(low_mm: float, high_mm: float, edges_mm: tuple[float, float], step_mm
     return low_mm + shrink * (edges_mm[0] + step_mm * np.arange(count, dtype=np.float64))
 
 
-def lines_for_scallop(frame: PassFrame, outline: Outline, samples: Samples, height_mm: float) -> Floats:
+def lines_for_scallop(frame: PassFrame, samples: Samples, height_mm: float) -> Floats:
     """Return v of the passes (n,) [mm], ascending: the fewest at one step that keep to ``height_mm``."""
     step = widest_constant_step(frame, samples, height_mm)
     return evenly(samples.v_low_mm, samples.v_high_mm, edge_distances(frame, samples, height_mm), step)

@@ -12,9 +12,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from anticlast.passes.courses import Course
 from anticlast.passes.cover import spread
 from anticlast.passes.frame import PassFrame
-from anticlast.passes.legs import Legs
+from anticlast.passes.legs import Legs, walk
 from anticlast.passes.tilt import angle_between, turned_between, wished_axis
 from anticlast.records import Bytes, Floats, Ints, Purpose
 from anticlast.tolerances import AXIS_TURN_RAD
@@ -59,53 +60,63 @@ class Rows:
     stretch: Ints
 
 
-def sag_density(frame: PassFrame, xy: Floats, along: Floats, chords: Chords) -> Floats:
-    """Return how many rows per plan millimetre (n,) a move along unit plan directions needs at xy (n, 2).
+def strays(frame: PassFrame, xy: Floats, along: Floats, bend_per_mm: Floats) -> tuple[Floats, Floats]:
+    """Return C''.n and |C'' square to n and C'| (n,) [1/mm] per plan millimetre of motion: outward and sideways.
 
-    A chord of length l under curvature k sags l^2 k / 8. C'' splits into its part along the normal, outward
-    where positive (concave feed), and the part along the surface square to C'.
+    C'' of the ball's centre along a plan path with unit direction d that bends to its left by k is that along a
+    straight path plus k times the centre's rate along the left.
+
+    Parameters
+    ----------
+    xy, along : (n, 2)
+        Plan place, and unit direction of motion there.
+    bend_per_mm : (n,)
+        Plan curvature of the path, positive to the left.
     """
     u, v = frame.uv(xy)
     du, dv = frame.uv(along)
     _, rate, bend = frame.centre(u, v, du, dv)
+    bend = bend + bend_per_mm[:, None] * frame.centre(u, v, -dv, du)[1]
     normal = frame.normal_uv(u, v)
-    up = np.einsum("ni,ni->n", bend, normal)
     side = np.cross(normal, rate)
     aside = np.abs(np.einsum("ni,ni->n", bend, side)) / np.linalg.norm(side, axis=1)
-    limit = np.where(up > 0.0, up / chords.outward_mm, -up / chords.inward_mm)
+    return np.einsum("ni,ni->n", bend, normal), aside
+
+
+def sag_density(outward: Floats, aside: Floats, chords: Chords) -> Floats:
+    """Return how many rows per plan millimetre (n,) chords ask for: one of length l sags by l^2 / 8 of `strays`."""
+    limit = np.where(outward > 0.0, outward / chords.outward_mm, -outward / chords.inward_mm)
     return np.sqrt(np.maximum(limit, aside / chords.sideways_mm) / 8.0)
 
 
-def rows_of(frame: PassFrame, legs: Legs, chords: Chords, tilt: Tilt) -> Rows:
+def rows_of(frame: PassFrame, course: Course, legs: Legs, chords: Chords, tilt: Tilt) -> Rows:
     """Return the rows of all legs: both ends of each, and as many between as chords and axis turn ask for."""
-    step = legs.end_mm - legs.start_mm
-    length = np.linalg.norm(step, axis=1)
-    along = step / length[:, None]
-    link_ends = _link_axes(frame, legs, along, tilt)
-    leg, share = _probes(legs, length)
-    xy = legs.start_mm[leg] + share[:, None] * step[leg]
-    axis, _, _ = _axes(frame, xy, along[leg], leg, share, legs, link_ends, tilt)
-    density = sag_density(frame, xy, along[leg], chords)
+    link_ends = _link_axes(frame, course, legs, tilt)
+    leg, share = _probes(legs)
+    xy, along, bend = walk(course, legs, leg, share)
+    axis, _, _ = _axes(frame, xy, along, leg, share, legs, link_ends, tilt)
+    density = sag_density(*strays(frame, xy, along, bend), chords)
     inner = leg[1:] == leg[:-1]
-    run = np.diff(share) * length[leg[1:]]
+    run = np.linalg.norm(np.diff(xy, axis=0), axis=1)
     turn = angle_between(axis[:-1], axis[1:]) / AXIS_TURN_RAD
     need = np.where(inner, np.maximum(np.maximum(density[:-1], density[1:]) * run, turn), 0.0)
-    leg_of_row, share = _even_shares(leg, share, need, legs)
-    xy = legs.start_mm[leg_of_row] + share[:, None] * step[leg_of_row]
-    axis, normal, tangent = _axes(frame, xy, along[leg_of_row], leg_of_row, share, legs, link_ends, tilt)
+    leg, share = _even_shares(leg, share, need, legs)
+    xy, along, _ = walk(course, legs, leg, share)
+    axis, normal, tangent = _axes(frame, xy, along, leg, share, legs, link_ends, tilt)
     return Rows(
         frame.saddle.point(xy),
         normal,
         tangent,
         axis,
-        legs.purpose[leg_of_row],
-        legs.pass_index[leg_of_row],
-        legs.stretch[leg_of_row],
+        legs.purpose[leg],
+        legs.pass_index[leg],
+        legs.stretch[leg],
     )
 
 
-def _probes(legs: Legs, length: Floats) -> tuple[Ints, Floats]:
+def _probes(legs: Legs) -> tuple[Ints, Floats]:
     """Return leg and share along it of the places where curvature and axis are asked."""
+    length = np.linalg.norm(legs.end_mm - legs.start_mm, axis=1)
     fine = np.where(legs.purpose == Purpose.LINK, length / (_PROBES_ON_LINK - 1), length)
     spans = np.maximum(length / np.minimum(fine, _PROBE_MM), 1.0)
     leg, place = spread(np.zeros_like(length), spans, 1.0)
@@ -137,16 +148,15 @@ def _even_shares(leg: Ints, share: Floats, need: Floats, legs: Legs) -> tuple[In
     return owner, at
 
 
-def _link_axes(frame: PassFrame, legs: Legs, along: Floats, tilt: Tilt) -> tuple[Floats, Floats]:
+def _link_axes(frame: PassFrame, course: Course, legs: Legs, tilt: Tilt) -> tuple[Floats, Floats]:
     """Return the wished axes (n, 3) at both ends of every leg; on a link those of the passes it joins."""
     link = legs.purpose == Purpose.LINK
     n = np.arange(link.size)
     before = np.where(link, np.maximum(n - 1, 0), n)
     after = np.where(link, np.minimum(n + 1, link.size - 1), n)
-    return (
-        _wished(frame, legs.start_mm, along[before], tilt)[0],
-        _wished(frame, legs.end_mm, along[after], tilt)[0],
-    )
+    leaving = walk(course, legs, before, link.astype(np.float64))[1]
+    arriving = walk(course, legs, after, (~link).astype(np.float64))[1]
+    return _wished(frame, legs.start_mm, leaving, tilt)[0], _wished(frame, legs.end_mm, arriving, tilt)[0]
 
 
 def _wished(frame: PassFrame, xy: Floats, along: Floats, tilt: Tilt) -> tuple[Floats, Floats, Floats]:

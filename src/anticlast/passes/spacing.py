@@ -92,21 +92,23 @@ def edge_distances(frame: PassFrame, samples: Samples, height_mm: float) -> tupl
 
 @dataclass(frozen=True, slots=True)
 class Left:
-    """What a set of pass lines leaves inside the outline.
+    """What a set of passes leaves inside the outline, chords not counted.
 
     Attributes
     ----------
     highest_mm : float
-        Highest cusp, the outline's rim included; chords not counted.
-    u_mm, v_mm, height_mm : (n,)
-        The places that were asked exactly, and the height there.
+        Highest cusp, the outline's rim included.
+    xy_mm, along : (n, 2)
+        Plan of the places that were asked exactly, part coordinates, and the unit plan direction of the passes there.
+    height_mm : (n,)
+        What is left there.
     stepover_mm : (float, float)
         Smallest and largest distance on the surface between neighbouring passes; (0, 0) for a single pass.
     """
 
     highest_mm: float
-    u_mm: Floats
-    v_mm: Floats
+    xy_mm: Floats
+    along: Floats
     height_mm: Floats
     stepover_mm: tuple[float, float]
 
@@ -137,7 +139,8 @@ def left_behind(frame: PassFrame, outline: Outline, lines_mm: Floats) -> Left:
             places.append((u[at], middle[strip[at]], height))
     places.append(_on_rim(frame, outline, lines_mm))
     u, v, height = (np.concatenate(column) for column in zip(*places, strict=True))
-    return Left(float(height.max()), u, v, height, stepover)
+    feed = np.repeat(frame.xy(np.ones(1), np.zeros(1)), u.size, axis=0)
+    return Left(float(height.max()), frame.xy(u, v), feed, height, stepover)
 
 
 def _on_rim(frame: PassFrame, outline: Outline, lines_mm: Floats) -> tuple[Floats, Floats, Floats]:

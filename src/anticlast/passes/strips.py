@@ -61,7 +61,10 @@ def lay_lines(frame: PassFrame, outline: Outline, fit: Fit) -> Lines | NoStrip:
             return _barest(frame, outline, fit, low, high)
         lines.append(lines[-1] + step)
     if len(lines) == 1:
-        return Lines(np.array([0.5 * (low + high) if end < first else first]), max(1.0 - (first - end) / (high - low), 0.5))
+        return Lines(
+            np.array([0.5 * (low + high) if end < first else first]),
+            max(1.0 - (first - end) / (high - low), 0.5),
+        )
     return Lines(np.array(lines), len(lines) - (lines[-1] - end) / (lines[-1] - lines[-2]))
 
 
@@ -83,7 +86,9 @@ def _over(frame: PassFrame, outline: Outline, low: float, high: float) -> Floats
     return spread(first, last, _SAMPLE_MM)[1]
 
 
-def _edge(frame: PassFrame, outline: Outline, fit: Fit, edge: float, widest: float, side: int) -> float | None:
+def _edge(
+    frame: PassFrame, outline: Outline, fit: Fit, edge: float, widest: float, side: int
+) -> float | None:
     """Return the line whose strip just reaches an edge of the outline, at ``side`` +1 from the low one."""
     at = edge
     for _ in range(_ROUNDS):

@@ -374,6 +374,9 @@ def sweep(
 _OWNERS = 8
 _DEEPEST = 12
 _STEEP = 0.84
+# Most pieces joined to each side, and the sag allowed as a share of edge^2 / radius: below what the chord plane is off by.
+_LINKS = 8
+_SAG_SHARE = 0.05
 
 
 @njit(cache=True, nogil=True)
@@ -441,8 +444,21 @@ def lower_of_two(first: np.ndarray, second: np.ndarray, weights: np.ndarray) -> 
 
 
 @njit(cache=True, nogil=True)
-def chain(pieces: tuple, k: int, length: float, ends: np.ndarray) -> float:
-    """Join the neighbours of a ball's piece to a stretch that reaches about a length to each side.
+def _chord_sag(c0: np.ndarray, c1: np.ndarray, first: int, last: int) -> float:
+    """Return how far the ends of pieces between lie from the chord over pieces first to last [mm], squared."""
+    dx, dy, dz = c1[last, 0] - c0[first, 0], c1[last, 1] - c0[first, 1], c1[last, 2] - c0[first, 2]
+    dd = dx * dx + dy * dy + dz * dz
+    furthest = 0.0
+    for j in range(first, last):
+        wx, wy, wz = c1[j, 0] - c0[first, 0], c1[j, 1] - c0[first, 1], c1[j, 2] - c0[first, 2]
+        s = min(max((wx * dx + wy * dy + wz * dz) / dd, 0.0), 1.0) if dd > 0.0 else 0.0
+        furthest = max(furthest, (wx - s * dx) ** 2 + (wy - s * dy) ** 2 + (wz - s * dz) ** 2)
+    return furthest
+
+
+@njit(cache=True, nogil=True)
+def chain(pieces: tuple, k: int, length: float, most: float, ends: np.ndarray) -> float:
+    """Join a ball's piece with its neighbours to a nearly straight stretch about a length to each side.
 
     A ball about any point of the chord has its centre within the sag of some centre on the pieces, so what the chord
     leaves is at most the sag over the cosine higher than what the pieces leave: docs/theory-proof.md#bound.
@@ -451,7 +467,8 @@ def chain(pieces: tuple, k: int, length: float, ends: np.ndarray) -> float:
     ----------
     pieces, k
         As in `entry`.
-    length : float [mm]
+    length, most : float [mm]
+        How far to reach, and the largest sag allowed.
     ends : (2, 3) [mm]
         Gets the ends of the chord.
 
@@ -461,37 +478,27 @@ def chain(pieces: tuple, k: int, length: float, ends: np.ndarray) -> float:
         Sag: furthest that an end of a piece between lies from the chord.
     """
     c0, c1, _, _, size, state = pieces
-    first, last = k, k
+    first, last, sag2 = k, k, 0.0
     for side in range(2):
         gone = 0.0
-        while gone < length:
+        for _ in range(_LINKS):
             j = first - 1 if side == 0 else last + 1
-            if j < 0 or j >= c0.shape[0] or state[j] == 0 or size[j, 0] != 0.0 or size[j, 1] != size[k, 1]:
+            if gone >= length or j < 0 or j >= c0.shape[0]:
+                break
+            if state[j] == 0 or size[j, 0] != 0.0 or size[j, 1] != size[k, 1]:
                 break
             a, b = (j, first) if side == 0 else (last, j)
             if c1[a, 0] != c0[b, 0] or c1[a, 1] != c0[b, 1] or c1[a, 2] != c0[b, 2]:
                 break
+            now = _chord_sag(c0, c1, min(first, j), max(last, j))
+            if now > most * most:
+                break
+            sag2 = now
             gone += math.sqrt((c1[j, 0] - c0[j, 0]) ** 2 + (c1[j, 1] - c0[j, 1]) ** 2 + (c1[j, 2] - c0[j, 2]) ** 2)
-            if side == 0:
-                first = j
-            else:
-                last = j
-    dd = 0.0
+            first, last = min(first, j), max(last, j)
     for i in range(3):
         ends[0, i], ends[1, i] = c0[first, i], c1[last, i]
-        dd += (ends[1, i] - ends[0, i]) ** 2
-    furthest = 0.0
-    for j in range(first, last):
-        wd, ww = 0.0, 0.0
-        for i in range(3):
-            w = c1[j, i] - ends[0, i]
-            wd += w * (ends[1, i] - ends[0, i])
-            ww += w * w
-        if wd <= 0.0 or wd >= dd:
-            furthest = max(furthest, ww if wd <= 0.0 else ww - 2.0 * wd + dd)
-        else:
-            furthest = max(furthest, ww - wd * wd / dd)
-    return math.sqrt(max(0.0, furthest))
+    return math.sqrt(sag2)
 
 
 @njit(cache=True, nogil=True)
@@ -526,7 +533,7 @@ def triangle_bound(
         k = owners[o]
         ball = size[k, 0] == 0.0 and size[k, 1] > 0.0
         if ball:
-            sags[o] = chain(pieces, k, math.sqrt(edge2), ends)
+            sags[o] = chain(pieces, k, math.sqrt(edge2), _SAG_SHARE * edge2 / size[k, 1], ends)
         for i in range(3):
             q, n = surface_at(a, b, corners[i, 0], corners[i, 1])
             if ball:

@@ -1,0 +1,72 @@
+"""How deep and how wide a roughing or outline operation cuts, and what it leaves: the job's keys or their defaults."""
+
+from __future__ import annotations
+
+import math
+from typing import Final
+
+from anticlast.cutter import Cutter
+from anticlast.records import Operation
+
+# Of the diameter, where the job does not say: layers and width of a roughing cut on bench-top machines, and the
+# shallower layers of an outline's groove, which is cut over the full width (common practice).
+DEPTH_SHARE: Final = 0.25
+WIDTH_SHARE: Final = 0.25
+GROOVE_DEPTH_SHARE: Final = 0.15
+
+
+def cut_depth_mm(operation: Operation) -> float:
+    """Return the largest depth of cut along the axis, mm: `depth_of_cut`, or a share of the diameter."""
+    if operation.depth_of_cut_mm is not None:
+        return operation.depth_of_cut_mm
+    share = GROOVE_DEPTH_SHARE if operation.does == "outline" else DEPTH_SHARE
+    return min(share * 2.0 * operation.cutter.radius_mm, operation.cutter.flute_length_mm)
+
+
+def radius_at_mm(cutter: Cutter, height_mm: float) -> float:
+    """Return the cutter's radius this much above its tip, mm: the corner arc, then the full radius."""
+    corner = cutter.corner_radius_mm
+    if height_mm >= corner:
+        return cutter.radius_mm
+    return cutter.radius_mm - corner + math.sqrt(height_mm * (2.0 * corner - height_mm))
+
+
+def cut_radius_mm(operation: Operation) -> float:
+    """Return the cutter's radius at the top of a layer of the full depth of cut, mm."""
+    return radius_at_mm(operation.cutter, cut_depth_mm(operation))
+
+
+def cut_width_mm(operation: Operation) -> float:
+    """Return the width of cut, mm: `width_of_cut`, or a share of the diameter.
+
+    Never more than the radius at the top of a layer unless slotting is asked for: on a straight run the cutter is
+    then engaged over a quarter turn at most.
+    """
+    radius = cut_radius_mm(operation)
+    wanted = operation.width_of_cut_mm
+    if wanted is None:
+        wanted = WIDTH_SHARE * 2.0 * operation.cutter.radius_mm
+    return min(wanted, (1.95 if operation.slotting else 1.0) * radius)
+
+
+def cusp_mm(operation: Operation) -> float:
+    """Return the height of the cusps that neighbouring passes leave on a layer's floor, mm; 0 for a flat bottom.
+
+    Two corner arcs of radius r whose flat bottoms leave a gap g meet r - sqrt(r^2 - g^2 / 4) above the floor.
+    """
+    cutter = operation.cutter
+    corner = cutter.corner_radius_mm
+    gap = cut_width_mm(operation) - 2.0 * (cutter.radius_mm - corner)
+    if gap <= 0.0:
+        return 0.0
+    return corner - math.sqrt(max(corner * corner - 0.25 * gap * gap, 0.0))
+
+
+def left_mm(operation: Operation) -> float:
+    """Return a bound on the stock over the finished surface after an operation, along the normal, mm.
+
+    Roughing leaves its allowance, and on it steps as high as a layer; other operations their allowance.
+    """
+    if operation.does == "rough":
+        return operation.allowance_mm + cut_depth_mm(operation) + cusp_mm(operation)
+    return operation.allowance_mm
