@@ -73,15 +73,39 @@ def distance_to_line(points, corners):
     return least
 
 
+def weighted_distance(points, corners, normals, side):
+    """Distance of points (n, 3) from a polyline (m, 3) whose corners have normals, by brute force; across them times side.
+
+    Between corners the line bows as its normals turn: an arc of length L whose normals turn by w bows by L w / 8.
+    """
+    least = np.full(len(points), np.inf)
+    bows = np.einsum("ij,ij->i", np.diff(normals, axis=0), np.diff(corners, axis=0)) / 8.0
+    for start, step, up, bow in zip(
+        corners[:-1], np.diff(corners, axis=0), normals[:-1] + normals[1:], bows, strict=True
+    ):
+        square = max(float(step @ step), 1e-30)
+        share = np.clip((points - start) @ step / square, 0.0, 1.0)
+        up = up / np.linalg.norm(up)
+        away = points - start - share[:, None] * step - (4 * bow * share * (1 - share))[:, None] * up
+        deep = away @ up
+        wide = np.maximum((away**2).sum(axis=1) - deep**2, 0.0)
+        least = np.minimum(least, np.sqrt(deep**2 + side**2 * wide))
+    return least
+
+
 def worst_off_path(job, path, stretch):
-    """Largest distance of the reference point from the intended line, and of the axis from its wish, between blocks."""
+    """Largest distance of the reference point from the intended line, and of the axis from its wish, between blocks.
+
+    What lies across the surface normal counts by the ratio of the two budgets.
+    """
     kin = Kinematics(job.machine, job.part_origin_mm, path.operation.cutter.gauge_length_mm)
     cutting = np.flatnonzero(path.purpose == Purpose.CUT)
     probes = between(path.words, path.start)[cutting].reshape(-1, path.words.shape[1])
     tip, axis = kin.forward(probes)
     height = path.operation.cutter.reference_height_mm
     line = stretch.tip_mm + height * stretch.axis
-    off = distance_to_line(tip + height * axis, line).max()
+    budget = budget_of(path.operation)
+    off = weighted_distance(tip + height * axis, line, stretch.normal, budget.point_mm / budget.sideways_mm).max()
     # The axes that were wished for, densely, along the way
     share = np.linspace(0, 1, 21)
     wish = stretch.axis[:-1, None, :] * (1 - share)[:, None] + stretch.axis[1:, None, :] * share[:, None]
@@ -145,7 +169,9 @@ def test_flat_bottomed_cutters_get_a_tighter_axis(make_job):
     assert ball.axis_rad == pytest.approx(math.radians(0.05))
     assert tight.lever_mm == pytest.approx(2.0)
     assert tight.axis_rad * tight.lever_mm <= 0.5 * tight.point_mm * (1 + 1e-12)
-    assert ball.point_mm == pytest.approx(0.02 * 0.01 / 2)
+    # 0.03 of the scallop is for chords and joint moves together, less 4 times the sideways share.
+    assert ball.point_mm == pytest.approx((0.03 - 4e-3) * 0.01)
+    assert ball.sideways_mm == pytest.approx(1e-3 * math.sqrt(8 * 3.0 * 0.01))
 
 
 class TestBranches:
@@ -519,7 +545,7 @@ def test_deviation_is_a_bound(seed, name):
     theta = math.acos(min(1.0, float(axis[0] @ axis[1])))
     off, turned, _ = _kernels.deviation(
         kin.chain, kin.base, height, point[0], point[1], axis[0], axis[1], theta, 0.0, ends[0, 3:], ends[0, :3], 1.0,
-        ends[1, 3:], ends[1, :3], np.zeros(2),
+        ends[1, 3:], ends[1, :3], np.zeros(2), np.zeros(3), 1.0, 0.0,
     )  # fmt: skip
     share = np.linspace(0, 1, 201)[:, None]
     tips, axes = kin.forward(ends[0] + share * (ends[1] - ends[0]))
@@ -547,8 +573,8 @@ def test_interpreted_kernels_agree(make_job):
     assert not fast[1].any()
     point = stretch.tip_mm + 3.0 * stretch.axis
     args = (
-        kin.chain, kin.base, 3.0, 0.0, point, stretch.axis, np.round(fast[0], 4), np.full(2, 3600.0), 1e4, 1e-3, 1e-3,
-        2e-6, 1e-7, 1000,
+        kin.chain, kin.base, 3.0, 0.0, point, stretch.axis, np.round(fast[0], 4), np.full(2, 3600.0), 1e4, stretch.normal, 0.3,
+        True, np.full(7, 1e-3), 1e-3, 2e-6, 1e-7, 1000,
     )  # fmt: skip
     fast, plain = _kernels.subdivide(*args), _kernels.subdivide.py_func(*args)
     assert fast[0].tolist() == plain[0].tolist()

@@ -258,6 +258,15 @@ def test_good_file_in_mm_and_radians() -> None:
         "tolerance_mm": 0.002,
         "way": "both",
         "lead_margin_rad": pytest.approx(math.radians(0.05)),
+        "depth_of_cut_mm": None,
+        "width_of_cut_mm": None,
+        "slotting": False,
+        "reach_mm": None,
+        "depth_mm": None,
+        "tabs": 4,
+        "tab_width_mm": None,
+        "tab_height_mm": 1.0,
+        "skin_mm": 0.0,
     }
 
 

@@ -28,9 +28,13 @@ from anticlast.passes.scallop import length_floor_mm, second_order_step
 from anticlast.passes.tilt import angle_between, lead_and_lean
 from anticlast.records import Control, CutterPath, Job, Machine, Operation, Part, Purpose, Spindle, Stock
 from anticlast.saddle import Saddle
+from anticlast.tolerances import CHORD_SHARE_OF_SCALLOP
 
 MICRON = 1e-3
 NANOMETRE = 1e-6
+# Chords that cut into the part may lower every cusp in sight by two thirds of the budget, docs/theory-passes.md#budget; the
+# places looked at by brute force miss the very highest by some tenths of a percent.
+LOWERED = 1.0 - CHORD_SHARE_OF_SCALLOP * 2.0 / 3.0 - 0.005
 CONTROL = Control("inverse", "G64", 4, 4, 3, 500, False, "M2")
 MACHINE = Machine("m", "m", "mm", 0.0, (), Spindle(2000, 24000, 0.35), CONTROL, Path("m.toml"))
 
@@ -261,8 +265,7 @@ def test_leading_order_step_is_the_known_one():
 def test_predicted_scallop_is_what_brute_force_finds_and_keeps_the_limit(pattern, shape, wish):
     job, path = plan(SHAPES[shape], pattern=pattern, **wish)
     found = highest_scallop(job, path)
-    # Chords that cut into the part may lower every cusp in sight by up to 1.3 %, docs/theory-passes.md#budget.
-    assert 0.985 * path.scallop_predicted_mm <= found <= 1.001 * path.scallop_predicted_mm
+    assert LOWERED * path.scallop_predicted_mm <= found <= 1.001 * path.scallop_predicted_mm
     assert found <= path.operation.scallop_mm
     assert path.scallop_predicted_mm <= path.operation.scallop_mm
 
@@ -306,8 +309,12 @@ def test_cut_lengths_against_the_leading_order_table(a, radius, height, steps, l
                 pattern=pattern,
                 direction_rad=turn * math.pi / 2,
             )
-            # The chord budget takes 2 % of the height, 1 % of length; whole passes take up to one more.
-            assert expected * 0.999 < path.cut_length_mm < expected * (1.012 + 1.0 / path.passes)
+            # The chord budget takes height, and so length; whole passes take up to one more.
+            assert (
+                expected * 0.999
+                < path.cut_length_mm
+                < expected * (1.002 / math.sqrt(1.0 - CHORD_SHARE_OF_SCALLOP) + 1.0 / path.passes)
+            )
 
 
 # Straight parallel passes alone cost 8.7 % over the floor for a = 0.015 on 100 mm: there the floor is out of
@@ -336,7 +343,7 @@ def test_graded_steps_follow_the_tightest_point_between_two_passes():
     job, path = plan(SQUARE, a=0.03, pattern="graded", direction_rad=0.3)
     left = np.array([-math.sin(0.3), math.cos(0.3)])
     lines = np.unique(np.round(rows(path, "contact_mm")[rows(path, "purpose") == Purpose.CUT, :2] @ left, 8))
-    design = 0.01 * 0.98
+    design = 0.01 * (1.0 - CHORD_SHARE_OF_SCALLOP)
     cusps = []
     for low, high in itertools.pairwise(lines):
         (span,) = SQUARE.clip_line(0.3, 0.5 * (low + high))
@@ -363,7 +370,7 @@ def test_stepover_given_is_the_largest_distance_on_the_surface(shape):
     job, path = plan(SHAPES[shape], a=0.03, scallop_mm=None, stepover_mm=0.37, direction_rad=0.9)
     assert path.stepover_mm[1] == pytest.approx(0.37, abs=10 * NANOMETRE)
     found = highest_scallop(job, path)
-    assert 0.975 * path.scallop_predicted_mm <= found <= 1.001 * path.scallop_predicted_mm
+    assert LOWERED * path.scallop_predicted_mm <= found <= 1.001 * path.scallop_predicted_mm
     # Outside truth: distances from surface points of one pass to the nearest pass beside it, shapely-free.
     d = path.operation.direction_rad
     left = np.array([-math.sin(d), math.cos(d)])
@@ -489,7 +496,7 @@ def test_straight_moves_of_the_centre_stay_within_the_chord_error_on_both_sides(
     assert outward <= path.chord_mm * 1.02 + NANOMETRE
     # Not needlessly fine: somewhere one of the two is used up.
     assert max(inward / (2.0 * path.chord_mm), outward / path.chord_mm) > 0.8
-    assert path.chord_mm == pytest.approx(0.5 * 0.02 * 0.01)
+    assert path.chord_mm == pytest.approx(0.5 * CHORD_SHARE_OF_SCALLOP * 0.01)
 
 
 def test_a_tight_tolerance_binds_instead_of_the_share_of_the_scallop():

@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from anticlast import job_checks as checks
+from anticlast import job_cuts as cuts
 from anticlast import job_speeds as speeds
 from anticlast import outline as outlines
 from anticlast.cutter import Cutter
@@ -102,6 +103,7 @@ def _job_from(source: Source, path: Path) -> Job:
     checks.check_numbers(draft.cutters)
     for operation in draft.operations:
         checks.check_operation(operation, draft.cutters, machine, draft.units)
+        cuts.check_cut(operation, draft.cutters, draft.stock, draft.units)
     if machine is not None:
         speeds.check_speeds(draft.stock, draft.cutters, draft.operations, machine)
     faults = sorted(source.faults, key=lambda fault: fault.line) + machine_faults
@@ -299,7 +301,17 @@ def _operations(draft: _Draft, cutters: Mapping[int, Cutter], machine: Machine) 
                 tolerance_mm=table.tolerance,
                 way=table.way,
                 lead_margin_rad=math.radians(table.lead_margin),
+                depth_of_cut_mm=table.depth_of_cut,
+                width_of_cut_mm=table.width_of_cut,
+                slotting=table.slotting,
+                reach_mm=table.reach,
+                depth_mm=table.depth,
+                tabs=table.tabs,
+                tab_width_mm=table.tab_width,
+                tab_height_mm=table.tab_height,
+                skin_mm=table.skin,
             )
         )
-        left_before = table.allowance
+        if table.does != "outline":
+            left_before = table.allowance
     return tuple(made)

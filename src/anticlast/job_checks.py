@@ -23,6 +23,7 @@ from anticlast.file_schema import (
 from anticlast.job_schema import (
     FINISH_PATTERNS,
     OUTLINE_KEYS,
+    OUTLINE_PATTERNS,
     ROUGH_PATTERNS,
     CutterTable,
     Direction,
@@ -186,17 +187,17 @@ def _exactly_one(operation: Checked[OperationTable], first: str, second: str) ->
 
 
 def pattern_of(operation: Checked[OperationTable]) -> str | None:
-    """Pattern of an operation, or the default for what it does: layers to rough, else raster; None if bad."""
+    """Pattern of an operation, or the default for what it does: layers, profile, else raster; None if bad."""
     if "pattern" in operation.given or operation.get("does") is None:
         return operation.get("pattern")
-    return "layers" if operation.get("does") == "rough" else "raster"
+    return {"rough": "layers", "outline": "profile"}.get(operation.get("does"), "raster")
 
 
 def _check_pattern(operation: Checked[OperationTable], cutter: Checked[CutterTable] | None) -> None:
     does, pattern = operation.get("does"), operation.get("pattern")
     if does is None or pattern is None:
         return
-    allowed = ROUGH_PATTERNS if does == "rough" else FINISH_PATTERNS
+    allowed = {"rough": ROUGH_PATTERNS, "outline": OUTLINE_PATTERNS}.get(does, FINISH_PATTERNS)
     if pattern not in allowed:
         needed = needed_option(allowed)
         operation.fault("pattern", f'found "{pattern}"; an operation that does "{does}" needs {needed}')

@@ -134,6 +134,7 @@ class OperationTable(FileTable):
     fixed: Direction | None = None
     tolerance: Annotated[float, Quantity("length", 0.0001, 0.1)] = 0.002
     way: Literal["both", "one-way"] = "both"
+    lead_margin: Annotated[float, Quantity("degrees", 0, 5)] = 0.05
     depth_of_cut: Annotated[float, Quantity("length", 0.01, 100)] | None = None
     width_of_cut: Annotated[float, Quantity("length", 0.01, 100)] | None = None
     slotting: bool = False
@@ -143,4 +144,3 @@ class OperationTable(FileTable):
     tabs: Annotated[int, Quantity("", 0, 100, whole=True)] = 4
     tab_width: Annotated[float, Quantity("length", 0, 100, above=True)] | None = None
     tab_height: Annotated[float, Quantity("length", 0, 50, above=True)] = 1.0
-    lead_margin: Annotated[float, Quantity("degrees", 0, 5)] = 0.05

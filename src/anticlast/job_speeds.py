@@ -77,7 +77,8 @@ def check_speeds(
             and not operation.get("spindle")
         ):
             _check_speed(operation, cutter_of(cutter), machine, left_before_mm)
-        left_before_mm = operation.get("allowance")
+        if operation.get("does") != "outline":
+            left_before_mm = operation.get("allowance")
 
 
 def _check_speed(

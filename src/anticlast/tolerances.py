@@ -10,8 +10,9 @@ SAME_POINT_MM: Final = 1e-5
 # Uncertainty claimed for a height measured by the virtual cut. The checks allow this much over a limit, no more.
 MEASURE_MM: Final = 2e-4
 
-# Share of the scallop limit that path chords may add to the scallop. Costs 1 % of cut length (length goes with 1/sqrt(h)).
-CHORD_SHARE_OF_SCALLOP: Final = 0.02
+# Share of the scallop limit that chords and straight joint moves may add to the scallop. Costs 1.5 % of cut length (length goes
+# with 1/sqrt(h)); half of it would cost a third more blocks.
+CHORD_SHARE_OF_SCALLOP: Final = 0.03
 
 # A rotary axis whose axis direction is this near to the cutter axis (radians) cannot turn it: the pole.
 POLE_RAD: Final = 1e-7
@@ -68,9 +69,9 @@ UNCUT_MM: Final = 0.5
 # Corners of neighbouring triangles within this are one vertex of a mesh. Round-off of clipping at 100 mm is 1e-13.
 WELD_MM: Final = 1e-7
 
-# Read-back motion is split into pieces until the tip is nearer than this to a straight line within each. A tenth of the
-# uncertainty claimed for a measured height, so that the pieces do not show in it.
-PIECE_MM: Final = 2e-5
+# Read-back motion is split into pieces until the tip is nearer than this to a straight line within each. A quarter of the
+# uncertainty claimed for a measured height, and most of it lies along the surface, where a height does not feel it.
+PIECE_MM: Final = 5e-5
 
 # Largest turn of all rotary axes together within one piece of read-back motion (radians, 0.5 degrees): between rows a holder is
 # taken to go straight, and 0.5 degrees bend the path of a point 100 mm away by 1 micrometre.
@@ -109,3 +110,6 @@ HELD_BACK_SHARE: Final = 0.01
 # cutting end, and at a point 60 mm up the axis what a clearance is told to.
 STOCK_CHORD_MM: Final = 0.003
 STOCK_REACH_MM: Final = 0.02
+
+# Share of the stepover by which straight joint moves may shift a pass sideways. A cusp rises by at most four times this share.
+LINEAR_SIDEWAYS_SHARE: Final = 1e-3

@@ -558,8 +558,13 @@ def deviation(
     rot_b: np.ndarray,
     xyz_b: np.ndarray,
     work: np.ndarray,
+    normal: np.ndarray,
+    side: float,
+    sag: float,
 ) -> tuple[float, float, float]:
     """How far a straight joint move from a to b strays from the intended path from row p to row q.
+
+    The intended path is the line p q, bowed along ``normal`` by ``sag`` in its middle.
 
     Sampled at the quarters of the block, plus what the samples can miss: between samples a quarter apart a curve with
     second derivative M leaves its chord by no more than M/128 (docs/theory-machine.md, "Straight moves of the joints").
@@ -567,7 +572,8 @@ def deviation(
     Returns
     -------
     off_mm : float
-        Bound on the distance of the point ``height`` above the tip from the straight line p q.
+        Bound on the distance of the point ``height`` above the tip from the path, what lies across the unit
+        vector ``normal`` counted ``side`` times: across the surface normal a pass may shift further than along it.
     turned_rad : float
         Bound on the angle between the axis and the even turn from axis_p to axis_q.
     sampled_rad : float
@@ -598,7 +604,11 @@ def deviation(
         if square > 0.0:
             along = min(1.0, max(0.0, (g0 * d0 + g1 * d1 + g2 * d2) / square))
         g0, g1, g2 = g0 - along * d0, g1 - along * d1, g2 - along * d2
-        off = max(off, math.sqrt(g0 * g0 + g1 * g1 + g2 * g2))
+        bow = 4.0 * sag * along * (1.0 - along)
+        g0, g1, g2 = g0 - bow * normal[0], g1 - bow * normal[1], g2 - bow * normal[2]
+        deep = normal[0] * g0 + normal[1] * g1 + normal[2] * g2
+        wide = max(0.0, g0 * g0 + g1 * g1 + g2 * g2 - deep * deep)
+        off = max(off, math.sqrt(deep * deep + side * side * wide))
         t = t_a + share * (t_b - t_a)
         w0, w1, w2 = _slerp(axis_p[0], axis_p[1], axis_p[2], axis_q[0], axis_q[1], axis_q[2], theta, t)
         sampled = max(sampled, _angle(a0, a1, a2, w0, w1, w2))
@@ -609,6 +619,7 @@ def deviation(
     outer += speed
     inner += speed + table * outer
     bend = arm * head * head + 2.0 * table * speed + table * table * max(outer, inner)
+    bend += 8.0 * abs(sag) * (t_b - t_a) * (t_b - t_a)
     turn = table + head
     arc = theta * (t_b - t_a)
     return off + bend / 128.0, sampled + (turn * turn + arc * arc) / 128.0, sampled
@@ -665,7 +676,10 @@ def subdivide(
     rot: np.ndarray,
     rate: np.ndarray,
     angle_digits: float,
-    budget: float,
+    normal: np.ndarray,
+    side: float,
+    bowed: bool,
+    budgets: np.ndarray,
     axis_tol: float,
     axis_slack: float,
     pole_rad: float,
@@ -678,15 +692,24 @@ def subdivide(
     height : float
         Height above the tip (mm) of the point that goes straight between rows.
     lever : float
-        Distance (mm) from the cutter axis at which a turned axis moves the cut; its share counts against ``budget``.
+        Distance (mm) from the cutter axis at which a turned axis moves the cut; its share counts against ``budgets``.
     point, axis : (n, 3)
         That point, and the cutter axis, at each row.
     rot : (n, m)
         Rotary words at each row, rounded.
     angle_digits : float
         10 to the number of digits of a rotary word.
-    budget, axis_tol, axis_slack : float
-        Allowed distance (mm), allowed angle (radians), and what of the angle is rounding and not counted by ``lever``.
+    normal : (n, 3)
+        Surface normal at each row.
+    side : float
+        Weight of what a block strays across the normal.
+    bowed : bool
+        The point keeps a fixed distance from the surface (a ball's centre), so that its path is normal to ``normal`` and bows
+        between rows as the normals turn; else it is to go straight.
+    budgets : (n,)
+        Allowed distance (mm) on the move to each row.
+    axis_tol, axis_slack : float
+        Allowed angle (radians), and what of the angle is rounding and not counted by ``lever``.
     cap : int
         Most blocks that one move may be split into.
 
@@ -712,11 +735,20 @@ def subdivide(
     t_stack = np.zeros(deep + 1)
     rot_stack = np.zeros((deep + 1, m))
     xyz_stack = np.zeros((deep + 1, 3))
-    rot_a, xyz_a, work = np.zeros(m), np.zeros(3), np.zeros(m)
+    rot_a, xyz_a, work, upright = np.zeros(m), np.zeros(3), np.zeros(m), np.zeros(3)
     solved, loose = np.zeros((2, m)), np.zeros((2, m), dtype=np.uint8)
     worst_mm, worst_rad = 0.0, 0.0
     for i in range(1, count):
         p, q, e, f = point[i - 1], point[i], axis[i - 1], axis[i]
+        budget = budgets[i]
+        up0, up1, up2 = normal[i - 1, 0] + normal[i, 0], normal[i - 1, 1] + normal[i, 1], normal[i - 1, 2] + normal[i, 2]
+        size = math.sqrt(up0 * up0 + up1 * up1 + up2 * up2)
+        upright[0], upright[1], upright[2] = up0 / size, up1 / size, up2 / size
+        sag = 0.0
+        if bowed:
+            # An arc of length L whose normals turn by w bows by L w / 8; w = (n_q - n_p) . d / |d|.
+            for j in range(3):
+                sag += 0.125 * (normal[i, j] - normal[i - 1, j]) * (q[j] - p[j])
         theta = _angle(e[0], e[1], e[2], f[0], f[1], f[2])
         t_a = 0.0
         for j in range(m):
@@ -732,7 +764,7 @@ def subdivide(
             t_b = t_stack[top]
             rot_b, xyz_b = rot_stack[top], xyz_stack[top]
             off, turned, sampled = deviation(
-                chain, base, height, p, q, e, f, theta, t_a, rot_a, xyz_a, t_b, rot_b, xyz_b, work
+                chain, base, height, p, q, e, f, theta, t_a, rot_a, xyz_a, t_b, rot_b, xyz_b, work, upright, side, sag
             )
             if turned <= axis_tol and off + lever * max(0.0, turned - axis_slack) <= budget:
                 worst_mm, worst_rad = max(worst_mm, off), max(worst_rad, turned)
@@ -761,9 +793,10 @@ def subdivide(
             t_stack[top] = t
             for j in range(m):
                 rot_stack[top, j] = math.floor(work[j] * angle_digits + 0.5) / angle_digits
-            x = p[0] + t * (q[0] - p[0])
-            y = p[1] + t * (q[1] - p[1])
-            z = p[2] + t * (q[2] - p[2])
+            bow = 4.0 * sag * t * (1.0 - t)
+            x = p[0] + t * (q[0] - p[0]) + bow * upright[0]
+            y = p[1] + t * (q[1] - p[1]) + bow * upright[1]
+            z = p[2] + t * (q[2] - p[2]) + bow * upright[2]
             x, y, z = _to_words(chain, base, rot_stack[top], height, x, y, z)
             xyz_stack[top, 0], xyz_stack[top, 1], xyz_stack[top, 2] = x, y, z
     return row[:made], share[:made], words[:made], -1, worst_mm, worst_rad

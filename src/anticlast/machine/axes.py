@@ -23,6 +23,7 @@ from anticlast.tolerances import (
     CHORD_SHARE_OF_SCALLOP,
     CHORD_SHARE_OF_STRIP,
     LINEAR_FLOOR_MM,
+    LINEAR_SIDEWAYS_SHARE,
     POLE_RAD,
     SAME_POINT_MM,
     SUBDIVISION_CAP,
@@ -44,28 +45,41 @@ class Budget:
         For the cutter axis.
     lever_mm : float
         Distance from the cutter axis to the generating corner arc: 0 for a ball.
+    sideways_mm : float
+        For the reference point across the surface normal, where a shift hardly changes the scallop; >= ``point_mm``.
+    link_mm : float
+        For the reference point on links, entries and exits, which leave no scallop.
     """
 
     point_mm: float
     axis_rad: float
     lever_mm: float
+    sideways_mm: float
+    link_mm: float
 
 
 def budget_of(operation: Operation) -> Budget:
     """Return what an operation leaves for straight joint moves.
 
-    Half the tolerance, the other half being for chords; and half of what chords and linearisation together may add to
-    the scallop.
+    Half the tolerance, the other half being for chords; and what chords and joint moves together may add to the scallop.
+    A pass that shifts sideways by a share e of its stepover raises a cusp by 4 e at most, since the cusp goes with the
+    square of the distance between two passes that both shift; the rest is for height. A ball's blocks are held against
+    the curve its centre is to follow, so chords are in that figure; for other cutters half is left to chords.
     """
-    point = operation.tolerance_mm / 2.0
+    half = operation.tolerance_mm / 2.0
+    point = sideways = half
     if operation.scallop_mm is not None:
         share = CHORD_SHARE_OF_STRIP if operation.pattern == "matched" else CHORD_SHARE_OF_SCALLOP
-        point = min(point, share * operation.scallop_mm / 2.0)
+        step = math.sqrt(8.0 * operation.cutter.radius_mm * operation.scallop_mm)
+        share = share if operation.cutter.shape == "ball" else share / 2.0
+        point = min(half, (share - 4.0 * LINEAR_SIDEWAYS_SHARE) * operation.scallop_mm)
+        sideways = min(half, LINEAR_SIDEWAYS_SHARE * step)
     point = max(point, LINEAR_FLOOR_MM)
+    sideways = max(point, sideways)
     lever = operation.cutter.radius_mm - operation.cutter.corner_radius_mm
     # Half of the budget may go into the axis, so that the point keeps the other half.
     axis = AXIS_STRAY_RAD if lever <= 0.0 else min(AXIS_STRAY_RAD, 0.5 * point / lever)
-    return Budget(point, axis, max(lever, 0.0))
+    return Budget(point, axis, max(lever, 0.0), sideways, max(point, half))
 
 
 def axis_path(
@@ -174,9 +188,12 @@ def stretch_blocks(
     # Rounding turns the axis by up to half a digit of each word whatever is done.
     slack = math.radians(0.5 * digits.angle_step_deg) * kinematics.rotary_count
     rate = np.array([a.feed for a in job.machine.rotary], dtype=np.float64)
+    leaves_scallop = np.asarray(stretch.purpose) <= Purpose.OVERRUN
+    budgets = np.where(leaves_scallop, budget.point_mm, budget.link_mm)
+    normal = np.ascontiguousarray(stretch.normal)
     row, share, words, failed, off, turned = _kernels.subdivide(
         kinematics.chain, kinematics.base, height, budget.lever_mm, point, axis, rot, rate, 1.0 / digits.angle_step_deg,
-        budget.point_mm, budget.axis_rad + slack, slack, POLE_RAD, SUBDIVISION_CAP,
+        normal, budget.point_mm / budget.sideways_mm, budget.lever_mm == 0.0, budgets, budget.axis_rad + slack, slack, POLE_RAD, SUBDIVISION_CAP,
     )  # fmt: skip
     if failed >= 0:
         raise _too_many(stretch, failed, off, turned, budget)

@@ -38,7 +38,7 @@ def even_layout(saddle: Saddle, outline: Outline, operation: Operation) -> Layou
     fine = Outline(shapely.segmentize(outline.polygon, _EDGE_MM), outline.flattening_mm)
     chart, u, v = parallels(frame, fine)
     rim = np.column_stack((u, v))
-    charted = Outline(shapely.set_coordinates(shapely.from_wkb(shapely.to_wkb(fine.polygon)), rim))
+    charted = Outline(shapely.transform(fine.polygon, lambda _: rim))
 
     def lay(height_mm: float) -> tuple[Floats, Left]:
         step = float(np.sqrt(8.0 * height_mm / chart.crowding))
@@ -87,7 +87,8 @@ def _on_rim(
     at = np.argsort(-near)[:_MOST_PLACES]
     xy, by_u, _ = chart.place(rim[at, 0], rim[at, 1])
     height = np.minimum(
-        left_over(ball, course, before[at], rim[at, 0], xy), left_over(ball, course, after[at], rim[at, 0], xy)
+        left_over(ball, course, before[at], rim[at, 0], xy),
+        left_over(ball, course, after[at], rim[at, 0], xy),
     )
     return xy, _unit(by_u), height
 

@@ -19,10 +19,13 @@ from anticlast.passes.frame import PassFrame
 from anticlast.records import Floats, Ints
 from anticlast.tolerances import SAME_POINT_MM
 
-# Spacing of the table of geodesics, across and along them (mm where the line is asked). The metric changes over tens of
-# millimetres; six-point interpolation then errs by less than 1e-8 mm.
-_ACROSS_MM = 1.0
-_ALONG_MM = 0.5
+# Spacing of the table of geodesics, across and along them: at most so much, and this share of the tightest radius of
+# curvature 1/(2a) or 1/(2b), over which the metric changes. Six-point interpolation and Runge-Kutta then err by less than
+# 1e-6 mm.
+_WIDEST_MM = 1.0
+_SHARE_OF_RADIUS = 0.03
+# Every so many nodes one is a start for Newton: some millimetres off, far less than the radius of any geodesic.
+_ROUGH = 6
 # Central differences of the metric at this distance (mm) err by 1e-9 of it, from round-off and curvature alike.
 _PROBE_MM = 1e-3
 # Six nodes -2 .. 3 about the cell [0, 1]: row k holds the coefficients of node k's polynomial, constant term first.
@@ -38,8 +41,8 @@ def _weights(at: Floats, order: int) -> Floats:
     factor = np.ones(6)
     for k in range(order):
         factor = factor * np.maximum(_POWERS - k, 0)
-    powers = np.maximum(_POWERS - order, 0)
-    return (at[:, None] ** powers * factor) @ _BASIS.T
+    powers = np.vander(at, 6, increasing=True)[:, np.maximum(_POWERS - order, 0)]
+    return powers @ (_BASIS * factor).T
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,8 +69,8 @@ class Parallels:
     Attributes
     ----------
     table : (rows, nodes, 2)
-        Plan points at v = low_mm + i * _ALONG_MM, u = first_mm + j * _ACROSS_MM.
-    first_mm, low_mm : float
+        Plan points at v = low_mm + i * step_mm, u = first_mm + j * step_mm.
+    first_mm, low_mm, step_mm : float
     crowding : float
         1/mm; passes a step p of v apart leave h = p^2 / 8 of it, to leading order, everywhere.
     """
@@ -75,31 +78,32 @@ class Parallels:
     table: Floats
     first_mm: float
     low_mm: float
+    step_mm: float
     crowding: float
 
     def place(self, u_mm: Floats, v_mm: Floats) -> tuple[Floats, Floats, Floats]:
         """Return plan points (n, 2) [mm] in part coordinates, and their derivatives by u and by v."""
-        i, s = self._cell(v_mm, self.low_mm, _ALONG_MM, 0)
-        j, t = self._cell(u_mm, self.first_mm, _ACROSS_MM, 1)
+        i, s = self._cell(v_mm, self.low_mm, 0)
+        j, t = self._cell(u_mm, self.first_mm, 1)
         near = np.arange(-2, 4)
         points = self.table[i[:, None, None] + near[:, None], j[:, None, None] + near]
         across, along = _weights(t, 0), _weights(s, 0)
         on_row = np.einsum("nl,nklc->nkc", across, points)
         xy = np.einsum("nk,nkc->nc", along, on_row)
-        by_u = np.einsum("nk,nl,nklc->nc", along, _weights(t, 1), points) / _ACROSS_MM
-        by_v = np.einsum("nk,nkc->nc", _weights(s, 1), on_row) / _ALONG_MM
+        by_u = np.einsum("nk,nl,nklc->nc", along, _weights(t, 1), points) / self.step_mm
+        by_v = np.einsum("nk,nkc->nc", _weights(s, 1), on_row) / self.step_mm
         return xy, by_u, by_v
 
-    def _cell(self, at: Floats, first: float, step: float, axis: int) -> tuple[Ints, Floats]:
-        place = (np.asarray(at, dtype=np.float64) - first) / step
+    def _cell(self, at: Floats, first_mm: float, axis: int) -> tuple[Ints, Floats]:
+        place = (np.asarray(at, dtype=np.float64) - first_mm) / self.step_mm
         cell = np.clip(np.floor(place).astype(np.int64), 2, self.table.shape[axis] - 4)
         return cell, place - cell
 
     def bundle(self, lines_mm: Floats) -> Bundle:
         """Return the passes v = ``lines_mm`` (n,) as a course."""
-        i, s = self._cell(lines_mm, self.low_mm, _ALONG_MM, 0)
+        i, s = self._cell(lines_mm, self.low_mm, 0)
         rows = self.table[i[:, None] + np.arange(-2, 4)]
-        return Bundle(np.einsum("nk,nkjc->njc", _weights(s, 0), rows), self.first_mm, _ACROSS_MM)
+        return Bundle(np.einsum("nk,nkjc->njc", _weights(s, 0), rows), self.first_mm, self.step_mm)
 
     def coordinates(self, xy_mm: Floats) -> tuple[Floats, Floats]:
         """Return (u, v) (n,) of plan points (n, 2): nearest node, then Newton.
@@ -109,16 +113,17 @@ class Parallels:
         NotConverged
             If a point lies outside the table.
         """
-        rough = self.table[::4, ::4]
+        rough = self.table[::_ROUGH, ::_ROUGH]
         nodes = rough.reshape(-1, 2)
+        size = (nodes**2).sum(axis=1)
         nearest = np.concatenate(
             [
-                np.argmin(((part[:, None, :] - nodes) ** 2).sum(axis=2), axis=1)
+                np.argmin(size - 2.0 * part @ nodes.T, axis=1)
                 for part in np.array_split(xy_mm, max(1, len(xy_mm) // 1000))
             ]
         )
-        v = self.low_mm + 4 * _ALONG_MM * (nearest // rough.shape[1])
-        u = self.first_mm + 4 * _ACROSS_MM * (nearest % rough.shape[1])
+        v = self.low_mm + _ROUGH * self.step_mm * (nearest // rough.shape[1])
+        u = self.first_mm + _ROUGH * self.step_mm * (nearest % rough.shape[1])
         miss = np.inf
         for _ in range(_ROUNDS):
             xy, by_u, by_v = self.place(u, v)
@@ -126,8 +131,8 @@ class Parallels:
             det = by_u[:, 0] * by_v[:, 1] - by_u[:, 1] * by_v[:, 0]
             u = u + (off[:, 0] * by_v[:, 1] - off[:, 1] * by_v[:, 0]) / det
             v = v + (by_u[:, 0] * off[:, 1] - by_u[:, 1] * off[:, 0]) / det
-            u = np.clip(u, self.first_mm, self.first_mm + _ACROSS_MM * (self.table.shape[1] - 1))
-            v = np.clip(v, self.low_mm, self.low_mm + _ALONG_MM * (self.table.shape[0] - 1))
+            u = np.clip(u, self.first_mm, self.first_mm + self.step_mm * (self.table.shape[1] - 1))
+            v = np.clip(v, self.low_mm, self.low_mm + self.step_mm * (self.table.shape[0] - 1))
             miss = float(np.abs(off).max(initial=0.0))
             if miss <= 1e-3 * SAME_POINT_MM:
                 return u, v
@@ -170,15 +175,20 @@ def parallels(frame: PassFrame, outline: Outline) -> tuple[Parallels, Floats, Fl
             return chart, u, v
     raise CannotPlan(
         "passes cross",
-        "passes that leave the same scallop everywhere cross each other over this outline when they start along "
-        f"{math.degrees(frame.direction_rad):g} degrees; choose another direction or pattern 'graded'",
+        "passes that leave the same scallop everywhere, started along "
+        f"{math.degrees(frame.direction_rad):g} degrees, do not cover this outline without crossing each other; "
+        "choose another direction or pattern 'graded'",
     )
 
 
-def _chart(frame: PassFrame, ends: tuple[float, float], start_v: float, rim: tuple[Floats, Floats]) -> Parallels:
+def _chart(
+    frame: PassFrame, ends: tuple[float, float], start_v: float, rim: tuple[Floats, Floats]
+) -> Parallels:
     """Return the table of geodesics from the line v = ``start_v``, u within ``ends``, far enough to pass the rim."""
-    nodes = math.ceil((ends[1] - ends[0]) / _ACROSS_MM) + 6
-    u = ends[0] + _ACROSS_MM * np.arange(nodes)
+    saddle = frame.saddle
+    step = min(_WIDEST_MM, _SHARE_OF_RADIUS / (2.0 * max(saddle.a_per_mm, saddle.b_per_mm)))
+    nodes = math.ceil((ends[1] - ends[0]) / step) + 6
+    u = ends[0] + step * np.arange(nodes)
     scale = float(frame.crowding(np.array([0.5 * (ends[0] + ends[1])]), np.array([start_v]))[0])
     sides = []
     for side in (-1.0, 1.0):
@@ -187,14 +197,16 @@ def _chart(frame: PassFrame, ends: tuple[float, float], start_v: float, rim: tup
         q_vv = frame.cusp_form(rim[0], start_v + share * (rim[1] - start_v))[2]
         length = np.sqrt(q_vv / scale).mean(axis=0) * np.abs(rim[1] - start_v)
         far = float(length[side * (rim[1] - start_v) >= 0.0].max(initial=0.0))
-        sides.append(_geodesics(frame, u, start_v, scale, side, math.ceil(far / _ALONG_MM) + 4))
+        sides.append(_geodesics(frame, u, start_v, scale, side, step, math.ceil(far / step) + 4))
     rows = np.concatenate((sides[0][:0:-1], sides[1]))
     table = np.stack([frame.xy(row[0], row[1]) for row in rows])
-    return Parallels(table, float(u[0]), -_ALONG_MM * (len(sides[0]) - 1), scale)
+    return Parallels(table, float(u[0]), -step * (len(sides[0]) - 1), step, scale)
 
 
-def _geodesics(frame: PassFrame, u: Floats, start_v: float, scale: float, side: float, steps: int) -> Floats:
-    """Return (steps + 1, 2, n) plan (u, v) every ``_ALONG_MM`` of metric length, by the classical Runge-Kutta method.
+def _geodesics(
+    frame: PassFrame, u: Floats, start_v: float, scale: float, side: float, step_mm: float, steps: int
+) -> Floats:
+    """Return (steps + 1, 2, n) plan (u, v) every ``step_mm`` of metric length, by the classical Runge-Kutta method.
 
     Hamilton's equations of g^ij p_i p_j / 2: x' = g^-1 p, p'_k = (dg_ij/dx_k) x'_i x'_j / 2.
     """
@@ -203,7 +215,7 @@ def _geodesics(frame: PassFrame, u: Floats, start_v: float, scale: float, side: 
     lift = side * np.sqrt((form[0] * form[2] - form[1] ** 2) / form[0])
     state = np.array([u, np.full_like(u, start_v), np.zeros_like(u), lift])
     found = [state[:2]]
-    h = _ALONG_MM
+    h = step_mm
     for _ in range(steps):
         k1 = _flow(frame, state, scale)
         k2 = _flow(frame, state + 0.5 * h * k1, scale)
@@ -222,6 +234,8 @@ def _flow(frame: PassFrame, state: Floats, scale: float) -> Floats:
     e = _PROBE_MM
     slopes = []
     for ahead, behind in (((x + e, y), (x - e, y)), ((x, y + e), (x, y - e))):
-        da, db, dc = (np.array(frame.cusp_form(*ahead)) - np.array(frame.cusp_form(*behind))) / (2.0 * e * scale)
+        da, db, dc = (np.array(frame.cusp_form(*ahead)) - np.array(frame.cusp_form(*behind))) / (
+            2.0 * e * scale
+        )
         slopes.append(0.5 * (da * dx * dx + 2.0 * db * dx * dy + dc * dy * dy))
     return np.array([dx, dy, *slopes])

@@ -505,14 +505,14 @@ def chain(pieces: tuple, k: int, length: float, most: float, ends: np.ndarray) -
 def triangle_bound(
     surface: tuple, corners: np.ndarray, owners: np.ndarray, count: int, pieces: tuple, cap: float,
     value: np.ndarray, weights: np.ndarray,
-) -> float:  # fmt: skip
-    """Return an upper bound [mm] of the residual over one triangle from a few pieces.
+) -> tuple[float, int]:  # fmt: skip
+    """Return an upper bound [mm] of the residual over one triangle from a few pieces, and how many of those matter.
 
     Parameters
     ----------
     corners : (3, 2) [mm]
     owners : (>= count,) int32
-        Pieces to use; any choice gives a bound, good ones a tight one.
+        Pieces to use; any choice gives a bound, good ones a tight one. Those that matter are moved to the front.
     cap : float [mm]
         No residual is higher: the stock that was there before.
     value : (>= count, 3)
@@ -521,7 +521,7 @@ def triangle_bound(
         Gets the barycentric place where the bound is reached.
     """
     a, b, _ = surface
-    c0, c1, a0, a1, size, _ = pieces
+    size = pieces[4]
     edge2 = 0.0
     for i in range(3):
         j = (i + 1) % 3
@@ -543,36 +543,55 @@ def triangle_bound(
             value[o, i] = h
             cosines[o] = min(cosines[o], cosine)
             least[o], most[o] = min(least[o], share), max(most[o], share)
-    bound = cap
+    bound, least_top = cap, math.inf
     weights[:] = 1.0 / 3.0
     place = np.empty(3)
     for o in range(count):
-        if math.isinf(value[o, 0]) or math.isinf(value[o, 1]) or math.isinf(value[o, 2]):
-            continue
-        k = owners[o]
-        spread, turn, bend_radius = 0.0, 0.0, size[k, 1]
-        if size[k, 0] > 0.0:
-            length = math.sqrt((c1[k, 0] - c0[k, 0]) ** 2 + (c1[k, 1] - c0[k, 1]) ** 2 + (c1[k, 2] - c0[k, 2]) ** 2)
-            spread = (most[o] - least[o]) * length
-            turned = math.sqrt((a1[k, 0] - a0[k, 0]) ** 2 + (a1[k, 1] - a0[k, 1]) ** 2 + (a1[k, 2] - a0[k, 2]) ** 2)
-            turn = 1.1 * turned / max(length, 1e-9)
-            # A flat end has no corner arc: along its rim the normal turns with the rim itself.
-            bend_radius = size[k, 1] if size[k, 1] > 0.0 else size[k, 0]
-        high = max(abs(value[o, 0]), abs(value[o, 1]), abs(value[o, 2]))
-        over = sag(surface, edge2, high, cosines[o], bend_radius, spread, turn)
+        over = _over(surface, edge2, value[o], cosines[o], most[o] - least[o], pieces, owners[o])
+        # At the angles allowed the cosine is at least cos(0.84) = 0.667.
+        over += 1.5 * sags[o]
         if math.isinf(over):
             continue
-        # At the angles allowed here the cosine is at least cos(0.84) = 0.667.
-        over += 1.5 * sags[o]
         for i in range(3):
             value[usable, i] = value[o, i] + over
-        for p in range(usable + 1):
-            found = lower_of_two(value[p], value[usable], place)
+        owners[usable] = owners[o]
+        least_top = min(least_top, max(value[usable, 0], value[usable, 1], value[usable, 2]))
+        usable += 1
+    # A piece that is nowhere lower than another's highest place tells nothing here.
+    kept = 0
+    for o in range(usable):
+        if min(value[o, 0], value[o, 1], value[o, 2]) > least_top:
+            continue
+        value[kept] = value[o]
+        owners[kept] = owners[o]
+        for p in range(kept + 1):
+            found = lower_of_two(value[p], value[kept], place)
             if found < bound:
                 bound = found
                 weights[:] = place
-        usable += 1
-    return bound
+        kept += 1
+    return bound, kept
+
+
+@njit(cache=True, nogil=True)
+def _over(
+    surface: tuple, edge2: float, heights: np.ndarray, cosine: float, spread: float, pieces: tuple, k: int
+) -> float:  # fmt: skip
+    """Return `sag` for piece k with its heights at the corners; inf if it misses one of them."""
+    if math.isinf(heights[0]) or math.isinf(heights[1]) or math.isinf(heights[2]):
+        return math.inf
+    c0, c1, a0, a1, size, _ = pieces
+    high = max(abs(heights[0]), abs(heights[1]), abs(heights[2]))
+    if size[k, 0] == 0.0 and size[k, 1] > 0.0:
+        return sag(surface, edge2, high, cosine, size[k, 1], 0.0, 0.0)
+    length, turned = 0.0, 0.0
+    for i in range(3):
+        length += (c1[k, i] - c0[k, i]) ** 2
+        turned += (a1[k, i] - a0[k, i]) ** 2
+    length = math.sqrt(length)
+    # A flat end has no corner arc: along its rim the normal turns with the rim itself.
+    bend_radius = size[k, 1] if size[k, 1] > 0.0 else size[k, 0]
+    return sag(surface, edge2, high, cosine, bend_radius, spread * length, 1.1 * math.sqrt(turned) / max(length, 1e-9))
 
 
 @njit(cache=True, nogil=True)
@@ -641,11 +660,13 @@ def refine(
             owners[:] = known[top]
             count, level = counts[top], depth[top]
             top -= 1
-            found = triangle_bound(surface, corners, owners, count, pieces, cap, value, weights)
+            found, kept = triangle_bound(surface, corners, owners, count, pieces, cap, value, weights)
             if found <= best[0] + slack or level >= _DEEPEST or budget <= 0:
                 bound = max(bound, found)
                 continue
             budget -= 1
+            if kept > 0:
+                count = kept
             px = weights[0] * corners[0, 0] + weights[1] * corners[1, 0] + weights[2] * corners[2, 0]
             py = weights[0] * corners[0, 1] + weights[1] * corners[1, 1] + weights[2] * corners[2, 1]
             u = min(max(int(math.floor((px - x_low) / tile)), 0), nx - 1)

@@ -426,6 +426,8 @@ def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, grid: tuple, r
         Grid rows (first, after last) that this band answers for.
     hits : (rings, angles) uint8
         Angle m is (m + 1/2) / angles of a turn from ``across`` towards the feed.
+    ahead_mm : float
+        How far ahead along the feed level ground is looked for; walls three times as far.
     """
     cx, cy, cz = stations[k, 0], stations[k, 1], stations[k, 2]
     ax, ay, az = stations[k, 3], stations[k, 4], stations[k, 5]
@@ -439,7 +441,7 @@ def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, grid: tuple, r
     angles = hits.shape[1]
     for ring in range(rings.shape[0]):
         h, radius, radial, axial = rings[ring, 0], rings[ring, 1], rings[ring, 2], rings[ring, 3]
-        if cz + h * az - radius * sine + min(0.0, ahead_mm * fz) > highest:
+        if cz + h * az - radius * sine + min(0.0, 3.0 * ahead_mm * fz) > highest:
             continue
         for m in range(angles):
             angle = 2.0 * math.pi * (m + 0.5) / angles
@@ -450,12 +452,15 @@ def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, grid: tuple, r
             vx, vy, vz = fx + h * bx - turned * ax, fy + h * by - turned * ay, fz + h * bz - turned * az
             if vx * nx + vy * ny + vz * nz < least:
                 continue
-            u = cx + h * ax + radius * rx + ahead_mm * fx
-            v = cy + h * ay + radius * ry + ahead_mm * fy
+            # Flat ground is read between columns to far less than a cell, a wall only to the nearest column.
+            steep = 1.0 - nz * nz
+            ahead = ahead_mm * (1.0 + 2.0 * steep * steep)
+            u = cx + h * ax + radius * rx + ahead * fx
+            v = cy + h * ay + radius * ry + ahead * fy
             row = int(math.floor((v - v0) / g))
             if row < rows[0] or row >= rows[1]:
                 continue
-            z = cz + h * az + radius * rz + ahead_mm * fz
+            z = cz + h * az + radius * rz + ahead * fz
             if in_material(u, v, z, grid, row - first, high, low, count):
                 hits[ring, m] = 1
 

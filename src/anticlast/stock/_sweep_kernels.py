@@ -1,8 +1,6 @@
-"""Compiled loops that join pieces of motion into segments and count stations along them."""
+"""Compiled loops that join pieces of motion into segments and mark stations along them."""
 
 from __future__ import annotations
-
-import math
 
 import numpy as np
 from numba import njit
@@ -51,17 +49,16 @@ def join_rows(
 
 
 @njit(cache=True, nogil=True)
-def count_stations(
-    ends: np.ndarray, shape: np.ndarray, rapid: np.ndarray, length_mm: np.ndarray, spacing_mm: float, longest_mm: float,
-    least_cosine: float, number: np.ndarray,
+def mark_stations(
+    ends: np.ndarray, shape: np.ndarray, rapid: np.ndarray, length_mm: np.ndarray, spacing_mm: float, least_cosine: float,
+    number: np.ndarray,
 ) -> None:  # fmt: skip
-    """Count the stations of each segment; see ``sweep.lay_stations``."""
+    """Set 1 for segments that get a station; see ``sweep.lay_stations``."""
     travelled = spacing_mm
     for k in range(len(shape)):
+        if rapid[k]:
+            travelled = spacing_mm
         if rapid[k] or length_mm[k] <= 0.0:
-            number[k] = 0
-            if rapid[k]:
-                travelled = spacing_mm
             continue
         fresh = travelled >= spacing_mm or k == 0 or shape[k] != shape[k - 1]
         if not fresh and length_mm[k - 1] > 0.0:
@@ -70,8 +67,6 @@ def count_stations(
                 dot += (ends[k, 6 + i] - ends[k, i]) * (ends[k - 1, 6 + i] - ends[k - 1, i])
             fresh = dot < least_cosine * length_mm[k] * length_mm[k - 1]
         if fresh:
-            number[k] = max(1, int(math.ceil(length_mm[k] / longest_mm)))
+            number[k] = 1
             travelled = 0.0
-        else:
-            number[k] = 0
-        travelled += length_mm[k] / max(1, number[k])
+        travelled += length_mm[k]

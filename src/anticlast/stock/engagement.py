@@ -27,8 +27,9 @@ if TYPE_CHECKING:
     from anticlast.saddle import Saddle
     from anticlast.stock.watch import Watch
 
-# Stations: one when half a cell was travelled, and within long segments every so many cells.
-_STATION_CELLS, _LONGEST_CELLS = 0.5, 4.0
+# A station once half a cell was travelled; segments no longer than so many cells.
+_STATION_CELLS: Final = 0.5
+LONGEST_CELLS: Final = 4.0
 # What columns lose is spread over this much path to either side, in cells: a column beside a wall goes all at once.
 _WINDOW_CELLS = 5.0
 # The front's own section and what the columns lost agree within this factor, or the front was not seen well enough.
@@ -105,7 +106,7 @@ def follow(
     field : StockField
         Is cut.
     segments : Segments
-        Made from ``cutters``.
+        Made from ``cutters``, none longer than ``LONGEST_CELLS`` of the field's spacing.
     saddle : Saddle
         Finished surface.
     seconds : (k,)
@@ -121,7 +122,7 @@ def follow(
     watch : Watch, optional
     """
     spacing = field.grid.spacing_mm
-    stations = lay_stations(segments, _STATION_CELLS * spacing, _LONGEST_CELLS * spacing)
+    stations = lay_stations(segments, _STATION_CELLS * spacing)
     rings = [rings_of(cutter) for cutter in cutters]
     tables = tuple(
         np.array([getattr(ring, name) for ring in rings]).reshape(len(rings), -1)

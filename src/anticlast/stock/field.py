@@ -30,11 +30,11 @@ PIECES: Final = 4  # of material that a column can hold
 _LEAST_BAND_ROWS, _BANDS = 12, 16
 # Segments, and stations, worked through at a time: bounds the memory of what a run returns.
 _RUN_SEGMENTS, _RUN_STATIONS = 20_000, 12_000
-# A point of the cutter's front counts as cutting when the feed is within 87 degrees of its normal: nearer to square the
-# chip is thinner than 1/20 of the feed per tooth, and a groove read between columns would look like material.
-LEAST_COSINE: Final = 0.05
-# The front is looked at this share of the grid spacing ahead of where it is.
-_AHEAD_SHARE = 0.75
+# A point of the cutter's front counts as cutting when the feed is within 87.7 degrees of its normal: nearer to square the
+# chip is thinner than 1/25 of the feed per tooth, and a groove read between columns would look like material.
+LEAST_COSINE: Final = 0.04
+# The front is looked at this share of the grid spacing ahead of where it is; three times as far before a wall.
+_AHEAD_SHARE = 0.25
 # Gap between a low end found between sub-poses and its bound, as a share of the grid spacing.
 _CLOSE_SHARE = 0.01
 

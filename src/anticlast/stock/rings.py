@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     from anticlast.records import Floats
 
 ANGLES: Final = 72  # points round a ring: 5 degrees
-_BOTTOM, _CORNER, _SIDE = 4, 12, 10
+_BOTTOM, _CORNER, _SIDE = 4, 18, 10
 RINGS: Final = _BOTTOM + _CORNER + _SIDE
 
 

@@ -42,10 +42,7 @@ def windowed_extremes(path: Floats, low: Floats, high: Floats, reach_mm: float) 
 
 
 def carried(table: Floats, first: Ints, rapid: np.ndarray) -> Floats:
-    """Return station values (n, c) for each segment, (k, c): its stations' largest, or those of the station before it.
-
-    Arc and extremes are the largest among a segment's stations; the least speed is the smallest.
-    """
+    """Return station values (n, c) for each segment, (k, c): its own, or those of the last station before it."""
     out = np.zeros((len(first) - 1, table.shape[1]))
     kernels.carry(table, first, rapid, out)
     return out

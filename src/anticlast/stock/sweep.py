@@ -8,7 +8,6 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-import numpy.typing as npt
 
 from anticlast.stock import _sweep_kernels as kernels
 from anticlast.stock.grid import turned_points
@@ -21,6 +20,8 @@ if TYPE_CHECKING:
 # The shank end of the flutes is held too when pieces are joined, and a point as far up as a holder usually is.
 _REACH_MM = 60.0
 _MOST_JOINED = 64
+# Turn of the feed direction that calls for a station of its own.
+_SHARP_RAD = 0.1745
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,8 +36,8 @@ class Segments:
         Which cutter of the sequence they were made from.
     row : (k,) int64
         Row of the part motion at the end.
-    before : (k,) int64
-        Row of the part motion at the start.
+    share : (k, 2)
+        How far along its motion the segment starts and ends, 0 to 1.
     rapid : (k,) bool
     length_mm : (k,)
         Travel of the reference point.
@@ -45,7 +46,7 @@ class Segments:
     ends: Floats
     shape: Ints
     row: Ints
-    before: Ints
+    share: Floats
     rapid: Bools
     length_mm: Floats
 
@@ -54,12 +55,13 @@ class Segments:
 
 
 def take_segments(
-    motion: PartMotion, cutters: Sequence[Cutter], moving: Bools | None = None, chord_mm: float = STOCK_CHORD_MM
-) -> Segments:
+    motion: PartMotion, cutters: Sequence[Cutter], moving: Bools | None = None, *,
+    chord_mm: float = STOCK_CHORD_MM, longest_mm: float = math.inf,
+) -> Segments:  # fmt: skip
     """Join pieces of part motion into segments, as few as stay near them.
 
     Pieces are joined only within one motion, as long as the reference point stays within ``chord_mm`` of where it was and a
-    point 60 mm up the axis within ``STOCK_REACH_MM``.
+    point 60 mm up the axis within ``STOCK_REACH_MM``. Feed segments longer than ``longest_mm`` are split again.
 
     Parameters
     ----------
@@ -68,7 +70,7 @@ def take_segments(
         Motion with any other tool is left out.
     moving : (m,) bool, optional
         Rows to use; all that move if not given.
-    chord_mm : float
+    chord_mm, longest_mm : float
     """
     count = len(motion.tip_mm)
     numbers = np.array([cutter.number for cutter in cutters], np.int64)
@@ -90,14 +92,36 @@ def take_segments(
     before, row = pairs[:, 0], pairs[:, 1]
     up = height[row][:, None]
     ends = np.hstack((tip[before] + up * axis[before], axis[before], tip[row] + up * axis[row], axis[row]))
+    begun = np.where(motion.motion[before] == motion.motion[row], motion.fraction[before], 0.0)
+    share = np.column_stack((begun, motion.fraction[row]))
+    length = np.linalg.norm(ends[:, 6:9] - ends[:, :3], axis=1)
+    rapid = np.asarray(motion.rapid[row])
+    parts = np.where(rapid, 1, np.maximum(1, np.ceil(length / longest_mm))).astype(np.int64)
+    of, low, high = _split(parts)
     return Segments(
-        ends=np.ascontiguousarray(ends),
-        shape=shape[row],
-        row=row,
-        before=before,
-        rapid=np.asarray(motion.rapid[row]),
-        length_mm=np.linalg.norm(ends[:, 6:9] - ends[:, :3], axis=1),
+        ends=np.ascontiguousarray(np.hstack((_between(ends[of], low), _between(ends[of], high)))),
+        shape=shape[row][of],
+        row=row[of],
+        share=np.column_stack([share[of, 0] + part * (share[of, 1] - share[of, 0]) for part in (low, high)]),
+        rapid=rapid[of],
+        length_mm=length[of] / parts[of],
     )
+
+
+def _split(parts: Ints) -> tuple[Ints, Floats, Floats]:
+    """Return which segment each part comes of, and the shares of it where the part starts and ends."""
+    of = np.repeat(np.arange(len(parts)), parts)
+    place = np.arange(len(of)) - (np.cumsum(parts) - parts)[of]
+    return of, place / parts[of], (place + 1) / parts[of]
+
+
+def _between(ends: Floats, share: Floats) -> Floats:
+    """Return point and unit axis (n, 6) at shares of segments (n, 12)."""
+    part = share[:, None]
+    # The far end is taken as it is, so that parts join without a gap.
+    pose = np.where(part == 1.0, ends[:, 6:], ends[:, :6] + part * (ends[:, 6:] - ends[:, :6]))
+    pose[:, 3:] /= np.linalg.norm(pose[:, 3:], axis=1, keepdims=True)
+    return pose
 
 
 def shape_table(cutters: Sequence[Cutter]) -> Floats:
@@ -115,12 +139,12 @@ def shape_table(cutters: Sequence[Cutter]) -> Floats:
 
 @dataclass(frozen=True, slots=True)
 class Stations:
-    """Places along feed segments where the cutter's front is looked at.
+    """Starts of feed segments where the cutter's front is looked at.
 
     Attributes
     ----------
     first : (k + 1,) int64
-        Station rows of segment k: first[k] to first[k + 1].
+        Station rows of segment k: first[k] to first[k + 1], none or one.
     segment : (n,) int64
     frame : (n, 15)
         Reference point [mm], axis, across (unit, 90 degrees left of the feed, square to the axis), feed direction (unit),
@@ -135,41 +159,34 @@ class Stations:
         return len(self.segment)
 
 
-def lay_stations(segments: Segments, spacing_mm: float, longest_mm: float) -> Stations:
-    """Lay stations: at the start of a segment once ``spacing_mm`` were travelled, and every ``longest_mm`` within it.
+def lay_stations(segments: Segments, spacing_mm: float) -> Stations:
+    """Lay a station at the start of each feed segment, but where less than ``spacing_mm`` was travelled since the last.
 
-    A segment that turns off the one before, or follows a rapid or another cutter, gets one in any case.
+    A segment that turns off the one before by ten degrees, or follows a rapid or another cutter, gets one in any case.
     """
-    count = len(segments)
-    number = np.zeros(count, np.int64)
-    kernels.count_stations(
-        segments.ends, segments.shape, segments.rapid, segments.length_mm, spacing_mm, longest_mm, math.cos(0.17), number
+    number = np.zeros(len(segments), np.int64)
+    kernels.mark_stations(
+        segments.ends, segments.shape, segments.rapid, segments.length_mm, spacing_mm, math.cos(_SHARP_RAD), number
     )
-    first = np.concatenate(([0], np.cumsum(number)))
-    segment = np.repeat(np.arange(count), number)
-    share = (np.arange(len(segment)) - first[segment]) / np.maximum(1, number[segment])
-    return Stations(first, segment, _frames(segments, segment, share))
+    segment = np.flatnonzero(number)
+    return Stations(np.concatenate(([0], np.cumsum(number))), segment, _frames(segments, segment))
 
 
-def _frames(segments: Segments, segment: Ints, share: Floats) -> Floats:
-    ends, length = segments.ends[segment], segments.length_mm[segment]
-    point = ends[:, :3] + share[:, None] * (ends[:, 6:9] - ends[:, :3])
-    axis = ends[:, 3:6] + share[:, None] * (ends[:, 9:12] - ends[:, 3:6])
-    axis /= np.linalg.norm(axis, axis=1, keepdims=True)
-    step = np.maximum(length, 1e-9)[:, None]
+def _frames(segments: Segments, segment: Ints) -> Floats:
+    ends = segments.ends[segment]
+    point, axis = ends[:, :3], ends[:, 3:6]
+    step = segments.length_mm[segment][:, None]
     feed = (ends[:, 6:9] - ends[:, :3]) / step
     turn = (ends[:, 9:12] - ends[:, 3:6]) / step
     across = np.cross(axis, feed)
-    size = np.linalg.norm(across, axis=1)
     # Plunging: any direction square to the axis serves.
-    plunge = size < 1e-6
+    plunge = np.linalg.norm(across, axis=1) < 1e-6
     least = np.eye(3)[np.argmin(np.abs(axis), axis=1)]
     across[plunge] = np.cross(axis, least)[plunge]
     across /= np.linalg.norm(across, axis=1, keepdims=True)
     return np.ascontiguousarray(np.hstack((point, axis, across, feed, turn)))
 
 
-def seconds_of(segments: Segments, motion: PartMotion, seconds: npt.NDArray[np.float64]) -> Floats:
+def seconds_of(segments: Segments, motion: PartMotion, seconds: Floats) -> Floats:
     """Return the time of each segment [s] from the time of each motion (nan where none is known)."""
-    start = np.where(motion.motion[segments.before] == motion.motion[segments.row], motion.fraction[segments.before], 0.0)
-    return np.asarray(seconds[motion.motion[segments.row]] * (motion.fraction[segments.row] - start))
+    return np.asarray(seconds[motion.motion[segments.row]] * (segments.share[:, 1] - segments.share[:, 0]))

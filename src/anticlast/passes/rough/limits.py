@@ -37,13 +37,13 @@ def cut_radius_mm(operation: Operation) -> float:
 
 
 def cut_width_mm(operation: Operation) -> float:
-    """Return the width of cut, mm: `width_of_cut`, or a share of the diameter.
+    """Return the width of cut, mm: `width_of_cut`, else `stepover`, else a share of the diameter.
 
     Never more than the radius at the top of a layer unless slotting is asked for: on a straight run the cutter is
     then engaged over a quarter turn at most.
     """
     radius = cut_radius_mm(operation)
-    wanted = operation.width_of_cut_mm
+    wanted = operation.width_of_cut_mm or operation.stepover_mm
     if wanted is None:
         wanted = WIDTH_SHARE * 2.0 * operation.cutter.radius_mm
     return min(wanted, (1.95 if operation.slotting else 1.0) * radius)

@@ -29,6 +29,7 @@ class Walk:
     """
 
     def __init__(self, room: BaseGeometry, stock: BaseGeometry, radius_mm: float) -> None:
+        self._exact_room = room
         self.room = shapely.buffer(room, _ROUND_OFF_MM, quad_segs=1)
         shapely.prepare(self.room)
         self.stock = stock
@@ -44,7 +45,7 @@ class Walk:
     def air(self) -> BaseGeometry:
         """Where the centre can stand without cutting."""
         if self._air is None:
-            self._air = shapely.difference(self.room, grown(self.stock, self.radius_mm - GRAZE_MM))
+            self._air = shapely.difference(self._exact_room, grown(self.stock, self.radius_mm - GRAZE_MM))
         return self._air
 
     def is_clear(self, xy: Floats) -> bool:
