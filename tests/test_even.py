@@ -102,7 +102,7 @@ def test_chart_coordinates_come_back():
 
 
 def test_height_left_by_a_curved_pass_against_scipy():
-    chart, u, v = parallels(PassFrame(Saddle(0.03, 0.02, 0.0), 1.2, 3.0, 0.2), SQUARE)
+    chart, _, _ = parallels(PassFrame(Saddle(0.03, 0.02, 0.0), 1.2, 3.0, 0.2), SQUARE)
     ball = PassFrame(Saddle(0.03, 0.02, 0.0), 0.0, 3.0, 0.2)
     course = chart.bundle(np.array([7.0]))
     xy, _, _ = chart.place(np.array([2.0, -6.0]), np.array([7.2, 6.8]))
@@ -127,7 +127,7 @@ def test_height_left_is_the_same_for_a_straight_course():
     u, v = np.array([3.0, -8.0, 11.0]), np.array([1.0, 2.0, -5.0])
     course = Straight(frame, v + 0.2)
     straight = frame.left_over(u, v, v + 0.2)
-    assert left_over(ball, course, np.arange(3), u, frame.xy(u, v)) == pytest.approx(straight, abs=1e-12)
+    assert left_over(ball, course, np.arange(3), u, frame.xy(u, v)) == pytest.approx(straight, abs=1e-10)
 
 
 @pytest.mark.parametrize("name", sorted(CASES))
@@ -226,7 +226,7 @@ def test_feed_starts_along_the_direction_asked_for():
 
 
 def test_a_start_from_which_passes_cross_is_refused():
-    job, operation = job_of(outlines.circle(36.0), a=0.1, b=0.08, direction_rad=0.3)
+    job, operation = job_of(outlines.circle(30.0), a=0.1, radius=4.5, direction_rad=0.4)
     with pytest.raises(CannotPlan, match="crossing each other") as raised:
         even_layout(Saddle.of(job.part), job.part.outline, operation)
     assert raised.value.check == "passes cross"

@@ -306,7 +306,7 @@ def _operations(draft: _Draft, cutters: Mapping[int, Cutter], machine: Machine) 
                 slotting=table.slotting,
                 reach_mm=table.reach,
                 depth_mm=table.depth,
-                tabs=table.tabs,
+                tabs=0 if table.skin > 0.0 and "tabs" not in checked.given else table.tabs,
                 tab_width_mm=table.tab_width,
                 tab_height_mm=table.tab_height,
                 skin_mm=table.skin,

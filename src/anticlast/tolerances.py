@@ -113,3 +113,7 @@ STOCK_REACH_MM: Final = 0.02
 
 # Share of the stepover by which straight joint moves may shift a pass sideways. A cusp rises by at most four times this share.
 LINEAR_SIDEWAYS_SHARE: Final = 1e-3
+
+# The best feed direction is found to this (radians, 0.03 degrees): length goes with the square of the miss, so it is
+# shortest to within a millionth, and job files have tenths of a degree.
+SAME_FEED_DIRECTION_RAD: Final = 5e-4

@@ -5,6 +5,7 @@ All in the plan coordinates (u, v) of a `PassFrame`. docs/theory-passes.md#cover
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -163,7 +164,11 @@ def merged(group: Ints, first: Floats, last: Floats, bridge_mm: float) -> tuple[
 
 
 def pieces_of(
-    frame: PassFrame, outline: Outline, lines_mm: Floats, overrun_mm: float, bridge_mm: float
+    frame: PassFrame,
+    outline: Outline,
+    lines_mm: Floats,
+    overrun_mm: float | Callable[[Ints, Floats], Floats],
+    bridge_mm: float,
 ) -> Pieces:
     """Return the pieces of every pass: its strip's shadow, an overrun longer at each end.
 
@@ -174,7 +179,8 @@ def pieces_of(
     ----------
     lines_mm : (n,)
         v of the passes, ascending.
-    overrun_mm : float
+    overrun_mm : float or callable
+        The same everywhere, or from line and u (n,) to the difference of u.
     bridge_mm : float
         Gaps between pieces of one pass that are crossed with the cutter down.
     """
@@ -185,7 +191,11 @@ def pieces_of(
         (np.concatenate(([low], middle - overlap)), np.concatenate((middle + overlap, [high])))
     )
     strip, u0, u1 = strip_extents(frame, outline, bounds)
-    line, start, end = merged(strip, u0 - overrun_mm, u1 + overrun_mm, bridge_mm)
+    if callable(overrun_mm):
+        u0, u1 = u0 - overrun_mm(strip, u0), u1 + overrun_mm(strip, u1)
+    else:
+        u0, u1 = u0 - overrun_mm, u1 + overrun_mm
+    line, start, end = merged(strip, u0, u1, bridge_mm)
     index, in0, in1 = outline.clip_lines(frame.direction_rad, lines_mm)
     inside = []
     cuts = np.searchsorted(index, np.arange(lines_mm.size + 1))

@@ -13,7 +13,7 @@ from anticlast.passes.layout import Layout, chords_of, settled
 from anticlast.passes.parallels import Bundle, Parallels, parallels
 from anticlast.passes.raster import evenly
 from anticlast.passes.spacing import Left
-from anticlast.records import Floats, Operation
+from anticlast.records import Floats, Ints, Operation
 from anticlast.saddle import Saddle
 from anticlast.tolerances import SAME_POINT_MM
 
@@ -49,9 +49,14 @@ def even_layout(saddle: Saddle, outline: Outline, operation: Operation) -> Layou
     _, by_u, by_v = chart.place(u, v)
     gap = float(np.diff(lines).max()) if lines.size > 1 else float(np.ptp(v))
     reach = gap * float(np.linalg.norm(by_v, axis=1).max())
-    overrun = reach / float(np.linalg.norm(by_u, axis=1).min())
+    course = chart.bundle(lines)
+
+    def overrun(line: Ints, u_mm: Floats) -> Floats:
+        return reach / np.linalg.norm(course.at(line, u_mm)[1], axis=1)
+
+    bridge = 2.0 * reach / float(np.linalg.norm(by_u, axis=1).max())
     chords = chords_of(operation, operation.scallop_mm or 0.0, left)
-    return Layout(chart.bundle(lines), ball, charted, lines, left, chords, overrun, reach)
+    return Layout(course, ball, charted, lines, left, chords, reach, overrun, bridge)
 
 
 def _left(ball: PassFrame, chart: Parallels, charted: Outline, lines_mm: Floats, rim: Floats) -> Left:

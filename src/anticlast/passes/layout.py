@@ -19,7 +19,7 @@ from anticlast.passes.cover import Samples, sample
 from anticlast.passes.frame import PassFrame
 from anticlast.passes.rows import Chords
 from anticlast.passes.spacing import Left, left_behind
-from anticlast.records import Floats, Operation
+from anticlast.records import Floats, Ints, Operation
 from anticlast.saddle import Saddle
 from anticlast.tolerances import CHORD_SHARE_OF_SCALLOP, SIDEWAYS_SHARE_OF_STEP
 
@@ -44,8 +44,12 @@ class Layout:
         Ascending.
     left : Left
     chords : Chords
-    overrun_mm, reach_mm : float
-        How far passes run past the outline, as a difference of u and as a length.
+    reach_mm : float
+        How far passes run past the outline.
+    overrun_mm : float or callable
+        The same as a difference of u; a callable takes line and u (n,).
+    bridge_mm : float
+        Difference of u that is no more than twice ``reach_mm`` anywhere.
     """
 
     course: Course
@@ -54,8 +58,9 @@ class Layout:
     lines_mm: Floats
     left: Left
     chords: Chords
-    overrun_mm: float
     reach_mm: float
+    overrun_mm: float | Callable[[Ints, Floats], Floats]
+    bridge_mm: float
 
 
 def budget_mm(operation: Operation, height_mm: float) -> float:
@@ -149,4 +154,6 @@ def _layout(frame: PassFrame, outline: Outline, lines: Floats, left: Left, chord
     gap = max(gap, 2.0 * (float(lines[0]) - low), 2.0 * (high - float(lines[-1])))
     u, v = frame.uv(outline.boundary_points(1.0))
     overrun = gap * (1.0 + float(np.abs(frame.shear(u, v)).max()))
-    return Layout(Straight(frame, lines), frame, outline, lines, left, chords, overrun, overrun)
+    return Layout(
+        Straight(frame, lines), frame, outline, lines, left, chords, overrun, overrun, 2.0 * overrun
+    )

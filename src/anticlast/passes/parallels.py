@@ -165,6 +165,8 @@ def parallels(frame: PassFrame, outline: Outline) -> tuple[Parallels, Floats, Fl
     for margin in _MARGINS:
         reach = margin * max(width, high - low)
         chart = _chart(frame, (float(rim[0].min()) - reach, float(rim[0].max()) + reach), start_v, rim)
+        if _folds(chart, outline):
+            break
         try:
             u, v = chart.coordinates(vertices)
         except NotConverged:
@@ -181,6 +183,14 @@ def parallels(frame: PassFrame, outline: Outline) -> tuple[Parallels, Floats, Fl
     )
 
 
+def _folds(chart: Parallels, outline: Outline) -> bool:
+    """Tell whether geodesics meet at a node inside the outline: cells turned over, or fronts that blew up."""
+    across, along = np.diff(chart.table, axis=1)[:-1], np.diff(chart.table, axis=0)[:, :-1]
+    turned = across[..., 0] * along[..., 1] - across[..., 1] * along[..., 0]
+    suspect = chart.table[:-1, :-1][~(turned > 0.0)]
+    return bool(outline.contains(suspect[np.isfinite(suspect).all(axis=1)]).any())
+
+
 def _chart(
     frame: PassFrame, ends: tuple[float, float], start_v: float, rim: tuple[Floats, Floats]
 ) -> Parallels:
@@ -188,7 +198,7 @@ def _chart(
     saddle = frame.saddle
     step = min(_WIDEST_MM, _SHARE_OF_RADIUS / (2.0 * max(saddle.a_per_mm, saddle.b_per_mm)))
     nodes = math.ceil((ends[1] - ends[0]) / step) + 6
-    u = ends[0] + step * np.arange(nodes)
+    u = ends[0] + step * np.arange(nodes, dtype=np.float64)
     scale = float(frame.crowding(np.array([0.5 * (ends[0] + ends[1])]), np.array([start_v]))[0])
     sides = []
     for side in (-1.0, 1.0):

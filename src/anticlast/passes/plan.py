@@ -13,16 +13,19 @@ import numpy.typing as npt
 
 from anticlast.errors import CannotPlan
 from anticlast.outline import Outline
-from anticlast.passes import entry
+from anticlast.passes import entry, semi
 from anticlast.passes.courses import Course
 from anticlast.passes.cover import pieces_of, spread
 from anticlast.passes.cusp import require_fit
 from anticlast.passes.even import even_layout
 from anticlast.passes.frame import PassFrame
+from anticlast.passes.layers import plan_layers
 from anticlast.passes.layout import Layout, graded_layout, raster_layout
 from anticlast.passes.legs import Legs, legs_of, linked
 from anticlast.passes.matched import plan_matched
 from anticlast.passes.order import cutting_order
+from anticlast.passes.profile_cut import plan_outline
+from anticlast.passes.rough.limits import left_mm
 from anticlast.passes.rows import Nearest, Rows, Tilt, rows_of, sag_density, strays
 from anticlast.passes.tilt import tip_from_contact
 from anticlast.records import CutterPath, Job, Operation, Purpose, Stretch, frozen_array
@@ -35,8 +38,14 @@ PATTERNS: dict[str, Callable[[Saddle, Outline, Operation], Layout]] = {
     "raster": raster_layout,
 }
 
+# Patterns that do not sweep the surface, to what plans all of their operation.
+SHAPING: dict[str, Callable[[Job, Operation, Nearest], CutterPath]] = {
+    "layers": plan_layers,
+    "profile": plan_outline,
+}
+
 # Ground within this many overruns of the outline is passes' own: a strip's pass may end half a step and an
-# overrun outside.
+# overrun outside, and gaps of two overruns more are bridged.
 _GROUND_OVERRUNS = 2.0
 # The cutter stays down on a link that takes no longer than this (seconds at feed): a lift, a rapid and an
 # entry take more.
@@ -49,7 +58,7 @@ _FIT_MM = 0.5
 
 
 def plan_operation(job: Job, operation: Operation, nearest_axis: Nearest) -> CutterPath:
-    """Plan the passes of a finishing operation, links, entries and exits included.
+    """Plan the passes of an operation, links, entries and exits included.
 
     Parameters
     ----------
@@ -73,14 +82,15 @@ def plan_operation(job: Job, operation: Operation, nearest_axis: Nearest) -> Cut
     NotConverged
         If no spacing of the passes settles.
     """
+    if operation.pattern in SHAPING:
+        return SHAPING[operation.pattern](job, operation, nearest_axis)
     require_pattern(operation)
     if operation.pattern == "matched":
         return plan_matched(job, operation, nearest_axis, _rise_mm(job, operation))
     saddle, outline = Saddle.of(job.part), job.part.outline
     _require_fit(saddle, outline, operation)
     laid = PATTERNS[operation.pattern](saddle, outline, operation)
-    bridge = (2.0 * _GROUND_OVERRUNS - 2.0) * laid.overrun_mm
-    pieces = pieces_of(laid.frame, laid.outline, laid.lines_mm, laid.overrun_mm, bridge)
+    pieces = pieces_of(laid.frame, laid.outline, laid.lines_mm, laid.overrun_mm, laid.bridge_mm)
     order = cutting_order(pieces, operation.way)
     stays = linked(
         laid.course,
@@ -96,15 +106,16 @@ def plan_operation(job: Job, operation: Operation, nearest_axis: Nearest) -> Cut
     rows = rows_of(ball, laid.course, legs, laid.chords, tilt)
     stretches = _stretches(ball, operation, rows, _rise_mm(job, operation))
     notes = (f"the cutter lifts {len(stretches) - 1} times between passes",) if len(stretches) > 1 else ()
+    predicted = _predicted(ball, laid)
     return CutterPath(
         operation=operation,
         stretches=stretches,
         passes=len(order),
         cut_length_mm=_cut_length(saddle, laid.course, legs),
         stepover_mm=laid.left.stepover_mm,
-        scallop_predicted_mm=_predicted(ball, laid),
+        scallop_predicted_mm=predicted,
         chord_mm=laid.chords.outward_mm,
-        notes=notes,
+        notes=(*notes, *semi.notes_of(operation, predicted)),
     )
 
 
@@ -162,7 +173,7 @@ def _cut_length(saddle: Saddle, course: Course, legs: Legs) -> float:
 
 def _rise_mm(job: Job, operation: Operation) -> float:
     """Return how far above its pass the ball starts an entry: clear of what earlier operations left."""
-    earlier = [other.allowance_mm for other in job.operations if other.index < operation.index]
+    earlier = [left_mm(o) for o in job.operations if o.index < operation.index and o.does != "outline"]
     before = max([job.stock.allowance_mm or 0.0, *earlier])
     return max(before - operation.allowance_mm, 0.0) + entry.ABOVE_STOCK_MM
 

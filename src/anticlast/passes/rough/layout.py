@@ -20,7 +20,7 @@ from anticlast.passes.rough.field import TipField
 from anticlast.passes.rough.opening import opening
 from anticlast.passes.rough.peel import Bite, Piece, grown, peel, thick_parts
 from anticlast.passes.rough.terraces import Terraces
-from anticlast.records import Operation, Part, Stock
+from anticlast.records import Job, Operation, Part, Stock
 from anticlast.saddle import Saddle
 from anticlast.tolerances import SAME_POINT_MM
 
@@ -66,7 +66,7 @@ def layout(part: Part, stock: Stock, operations: tuple[Operation, ...], gap_mm: 
     """
     operation = operations[-1]
     site = _Site(part, stock, operation, gap_mm)
-    before = layout(part, stock, operations[:-1], gap_mm).after if operations[:-1] else site.untouched()
+    before = layout(part, stock, operations[:-1], gap_mm).after if operations[:-1] else untouched(part, stock)
     terraces, layers, closed = before, [], 0.0
     above = stock.top_mm
     for z in site.levels():
@@ -82,6 +82,33 @@ def layout(part: Part, stock: Stock, operations: tuple[Operation, ...], gap_mm: 
         terraces = terraces.with_cleared(z + limits.cusp_mm(operation), clear)
         above = z
     return Layout(tuple(layers), terraces, closed)
+
+
+def stock_before(job: Job, operation: Operation) -> Terraces:
+    """Return the stock that an operation meets after the roughing operations before it.
+
+    What semi-finishing and finishing take off is not counted: the stock stands no higher than this.
+    """
+    earlier = tuple(other for other in job.operations if other.does == "rough" and other.index < operation.index)
+    if earlier:
+        return layout(job.part, job.stock, earlier, job.clearance_mm).after
+    return untouched(job.part, job.stock)
+
+
+def untouched(part: Part, stock: Stock) -> Terraces:
+    """Return the blank before any roughing."""
+    blank, allowance = stock.outline.polygon, stock.allowance_mm
+    if allowance is None:
+        return Terraces(blank, stock.top_mm)
+    # The surface moved out by m along its normal lies where the centre of a rolling ball of radius m is.
+    field = TipField(Saddle.of(part), 0.0, allowance, allowance)
+    x0, y0, x1, y1 = blank.bounds
+    box = (x0 - 1.0, y0 - 1.0, x1 + 1.0, y1 + 1.0)
+    return Terraces(blank, stock.top_mm, Grid.over(box, _spacing_mm(box), field.height_and_slope))
+
+
+def _spacing_mm(box: tuple[float, float, float, float]) -> float:
+    return min(max(max(box[2] - box[0], box[3] - box[1]) / _CELLS, _FINEST_MM), _COARSEST_MM)
 
 
 def _removable(room: BaseGeometry, standing: BaseGeometry, radius_mm: float) -> BaseGeometry:
@@ -130,8 +157,7 @@ class _Site:
         x0, y0, x1, y1 = self.blank.bounds
         self.box = (x0 - reach, y0 - reach, x1 + reach, y1 + reach)
         self.near = shapely.box(*self.box)
-        side = max(self.box[2] - self.box[0], self.box[3] - self.box[1])
-        self.spacing_mm = min(max(side / _CELLS, _FINEST_MM), _COARSEST_MM)
+        self.spacing_mm = _spacing_mm(self.box)
         self.grid = self._grid(TipField.of_cutter(self.saddle, cutter, operation.allowance_mm))
         self.bodies = self._bodies()
 
@@ -166,14 +192,6 @@ class _Site:
             grid = self._grid(TipField(self.saddle, body.radius_mm, 0.0, left - body.low_mm))
             found.append((body.radius_mm, body.low_mm, grid))
         return tuple(found)
-
-    def untouched(self) -> Terraces:
-        """Return the blank before any roughing."""
-        allowance = self.stock.allowance_mm
-        if allowance is None:
-            return Terraces(self.blank, self.stock.top_mm)
-        # The surface moved out by m along its normal lies where the centre of a rolling ball of radius m is.
-        return Terraces(self.blank, self.stock.top_mm, self._grid(TipField(self.saddle, 0.0, allowance, allowance)))
 
     def levels(self) -> list[float]:
         """Return the z of the layers' floors, from the top down, evenly no more than the depth of cut apart.

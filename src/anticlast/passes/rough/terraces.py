@@ -43,6 +43,13 @@ class Terraces:
         down = [area for z, area in self.cleared if z <= level_mm + 1e-9]
         return thick_parts(shapely.difference(stock, shapely.union_all(down))) if down else stock
 
+    def top_over(self, place: BaseGeometry) -> float:
+        """Return a height that no stock over a plan area exceeds."""
+        for level in sorted({z for z, _ in self.cleared}):
+            if not shapely.intersects(self.standing(level), place):
+                return level
+        return self.top_mm
+
     def with_cleared(self, level_mm: float, area: BaseGeometry) -> Terraces:
         """Return the stock after one more layer."""
         return Terraces(self.blank, self.top_mm, self.offset, (*self.cleared, (level_mm, area)))
