@@ -43,7 +43,7 @@ VARIED = {
     "3-axis slot one way": {"machine": "mill-3", "outline": SLOT, "way": "one-way", "pattern": "graded"},
     "3-axis given stepover": {"machine": "mill-3", "limit": "stepover = 0.35"},
     "3-axis far from the saddle point": {"machine": "mill-3", "outline": OFF_CENTRE, "top": 12.0, "a": 0.008},
-    "3-axis steep": {"machine": "mill-3", "a": 0.03, "b": 0.02, "top": 9.0},
+    "3-axis steep": {"machine": "mill-3", "a": 0.03, "extra_part": "b = 0.02", "top": 9.0},
     "3-axis small ball": {"machine": "mill-3", "diameter": 3.0, "outline": ROUNDED},
     "3-axis rotated unequal": {"machine": "mill-3", "extra_part": "b = 0.009\nrotate = 30.0", "direction": 10.0},
     "4-axis straight": {"machine": "rotary-a", "direction": 0.0},

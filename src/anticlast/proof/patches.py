@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 # How far a patch may stand off the curved surface: small against the clearance tolerance.
 _SAG_MM = 0.004
 _SMALLEST_MM, _LARGEST_MM = 0.5, 4.0
+_WALL_MM = 1.5
 # Cells that the boundary cuts are split this fine each way; patches reach over the outline by no more than that.
 _EDGE_SPLIT = 4
 _LEAF = 4
@@ -138,20 +139,26 @@ def blank_patches(job: Job) -> PatchTree:
     ring = [shapely.get_coordinates(part) for part in _rings(outline)]
     ends = [np.stack((points[:-1], points[1:]), axis=1) for points in ring]
     wall = np.concatenate(ends)
+    both = wall.reshape(-1, 2)
+    bend = 0.0
     if stock.allowance_mm is None:
-        high = np.full(len(wall), stock.top_mm)
+        tops = np.full((len(wall), 2), stock.top_mm)
     else:
-        # The normal offset stands at most allowance / cos(slope) over the surface; the highest end decides.
-        both = wall.reshape(-1, 2)
+        # The normal offset stands at most allowance / cos(slope) over the surface.
         z = saddle.height(both[:, 0], both[:, 1]) + stock.allowance_mm * saddle.stretch(both)
-        high = np.minimum(stock.top_mm, z.reshape(-1, 2).max(axis=1))
+        tops = np.minimum(stock.top_mm, z).reshape(-1, 2)
+        bend = 2.0 * max(saddle.a_per_mm, saddle.b_per_mm) * (1.0 + stock.allowance_mm)
+    # A wall is a parallelogram: its upper edge goes straight from end to end, its foot with it, near the bottom.
     middle, half = 0.5 * (wall[:, 0] + wall[:, 1]), 0.5 * (wall[:, 1] - wall[:, 0])
     none = np.zeros(len(wall))
-    half_z, middle_z = 0.5 * (high - stock.bottom_mm), 0.5 * (high + stock.bottom_mm)
-    walls = np.column_stack((middle, middle_z, half, none, none, none, half_z, none))
+    high = tops.mean(axis=1)
+    half_z = 0.5 * (high - stock.bottom_mm)
+    slant = 0.5 * (tops[:, 1] - tops[:, 0])
+    sag = 0.5 * bend * np.sum(half**2, axis=1)
+    walls = np.column_stack((middle, high - half_z, half, slant, none, none, half_z, sag))
     return plant(np.concatenate((top, walls)))
 
 
 def _rings(outline: Outline) -> list[shapely.LinearRing]:
-    split = shapely.segmentize(outline.polygon, _LARGEST_MM)
+    split = shapely.segmentize(outline.polygon, _WALL_MM)
     return [ring for part in shapely.get_parts(split) for ring in (part.exterior, *part.interiors)]
