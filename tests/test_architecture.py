@@ -21,7 +21,7 @@ LAYERS = (
     {"solid", "passes", "machine", "posting", "readback", "proof", "stock"},
     {"job", "job_schema", "job_checks", "job_cuts", "job_speeds", "reach", "survey"},
     {"report"},
-    {"pipeline"},
+    {"pipeline", "compare"},
     {"cli"},
 )
 LOWER_HALF = {"readback", "proof"}

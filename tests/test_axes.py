@@ -566,11 +566,13 @@ def test_interpreted_kernels_agree(make_job):
     choices = kin.rotary(stretch.axis)
     args = (
         kin.chain, stretch.axis, choices.words, choices.free, np.zeros((7, 2)), kin.low, kin.high, np.full(2, 3600.0),
-        np.zeros(2), np.array([-1, 0]), np.array([3, 1]), 1e-3, 1e-4,
+        np.zeros(2), np.array([-1, 0]), np.array([3, 1]), np.full(7, 1e-3), 1e-4,
+        np.array([1, 0, 0, 0, 1, 0, 0], dtype=np.uint8), np.where(np.arange(7) == 2, 1e-6, np.inf),
     )  # fmt: skip
     fast, plain = _kernels.choose_branches(*args), _kernels.choose_branches.py_func(*args)
-    assert fast[0] == pytest.approx(plain[0], abs=1e-9)
-    assert not fast[1].any()
+    for one, other in zip(fast, plain, strict=True):
+        assert one == pytest.approx(other, abs=1e-9)
+    assert not fast[3].any()
     point = stretch.tip_mm + 3.0 * stretch.axis
     args = (
         kin.chain, kin.base, 3.0, 0.0, point, stretch.axis, np.round(fast[0], 4), np.full(2, 3600.0), 1e4, stretch.normal, 0.3,

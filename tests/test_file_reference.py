@@ -32,6 +32,7 @@ TABLES: list[tuple[str, str, type[FileTable]]] = [
     ("machine-file.md", "## `[spindle]`", file_tables.SpindleTable),
     ("machine-file.md", "## `[control]`", file_tables.ControlTable),
     ("machine-file.md", "### `decimals`", file_tables.DecimalsTable),
+    ("machine-file.md", "## `[times]`", file_tables.TimesTable),
 ]  # fmt: skip
 
 

@@ -267,6 +267,7 @@ def test_good_file_in_mm_and_radians() -> None:
         "tab_width_mm": None,
         "tab_height_mm": 1.0,
         "skin_mm": 0.0,
+        "arcs": False,
     }
 
 

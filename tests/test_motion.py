@@ -11,7 +11,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from anticlast.machine import _motion_kernels as kernels
+from anticlast.machine import _motion_kernels as bends
 from anticlast.machine.motion import estimate
 from anticlast.records import Motions, Shape
 from anticlast.tolerances import CORNER_DEG, CORNER_MM
@@ -116,11 +116,12 @@ class TestCorner:
         assert CORNER_MM == 0.005
         angle = math.radians(angle_deg)
         way = np.array([[1.0, 0, 0], [math.cos(angle), math.sin(angle), 0]])
-        found = kernels.corner_speeds(
-            way, way, 900.0 * way, np.full(2, 900.0), np.full(2, 300.0), np.array([True, False]), 0, np.ones(3), np.ones(3),
-            CORNER_MM, CORNER_DEG, 500.0, 1e-3,
+        kind, found, _, _ = bends.bends(
+            way, np.full(2, 900.0), np.full(2, 300.0), np.array([True, False]), 0, np.ones(3), np.ones(3),
+            CORNER_MM, CORNER_DEG, 500.0, np.full(3, math.inf), 1e-3,
         )  # fmt: skip
         radius = 0.005 / (1 / math.cos(angle / 2) - 1)
+        assert kind[1] == bends.CORNER
         assert found[1] == pytest.approx(math.sqrt(500 * radius), rel=1e-9)
         assert found[1] == pytest.approx(speed, rel=5e-5)
 

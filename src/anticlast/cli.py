@@ -255,6 +255,86 @@ def prove(
     raise typer.Exit(0 if made.released else 1)
 
 
+@contextlib.contextmanager
+def _counting() -> Iterator[Callable[[str, int, int], None]]:
+    """Show how much of long work is done on a terminal; print nothing when piped."""
+    if not sys.stderr.isatty():
+        yield lambda text, done, total: None
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeElapsedColumn
+
+    columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeElapsedColumn())
+    with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task("starting", total=None)
+        yield lambda text, done, total: bar.update(task, description=text, completed=done, total=total)
+
+
+@app.command(epilog="Example: anticlast compare samples/press-pad/job.toml --cores 1 --picture compare.png")
+def compare(
+    job: JobArgument,
+    operation: Annotated[
+        int | None,
+        typer.Option("--operation", metavar="N", help="Only this operation; all that finish if not given."),
+    ] = None,
+    every: Annotated[bool, typer.Option("--all", help="Try every combination, however long it takes.")] = False,
+    front: Annotated[
+        bool, typer.Option("--front", help="Try every cutter and pattern at half and twice the scallop too.")
+    ] = False,
+    prove: Annotated[
+        int, typer.Option("--prove", metavar="K", min=0, max=100, help="Prove the K best cases in full.")
+    ] = 1,
+    grid: Annotated[
+        float | None,
+        typer.Option("--grid", metavar="MM", min=0.01, max=5.0, help="Spacing of the proof's grid, mm."),
+    ] = None,
+    picture: Annotated[
+        Path | None,
+        typer.Option("--picture", metavar="FILE", help="Also draw time against scallop: .png or .svg. Implies --front."),
+    ] = None,
+    cores: Annotated[
+        int | None,
+        typer.Option("--cores", metavar="N", min=1, max=1024, help="Worker processes; all cores if not given."),
+    ] = None,
+    dask: Annotated[
+        str | None,
+        typer.Option("--dask", metavar="ADDRESS", help="Run the cases on the Dask cluster of this scheduler."),
+    ] = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Try cutters, patterns, directions and tilts that meet the limits and rank them by time.
+
+    Every case is planned, posted, read back and timed like the job itself; the best is proven. Exits 1 if no case can be cut.
+    """
+    from anticlast import pipeline
+    from anticlast.compare.answer import as_json as compared_json
+    from anticlast.compare.search import compare as compare_job
+
+    with _errors(), _counting() as progress:
+        if picture is not None:
+            from anticlast.report.picture_sheet import check_suffix
+
+            check_suffix(picture)
+        loaded = pipeline.load_job(job)
+        found = compare_job(
+            loaded, operation=operation, every=every, front=front or picture is not None, prove=prove, grid_mm=grid,
+            cores=cores, dask=dask, progress=progress,
+        )  # fmt: skip
+        if picture is not None:
+            from anticlast.report.picture_compare import compare_picture
+
+            compare_picture(loaded, found, picture)
+    if as_json:
+        _print_json(compared_json(found))
+    else:
+        for one in found:
+            for line in one.lines():
+                typer.echo(line)
+        if picture is not None:
+            typer.echo(f"picture: {picture}")
+    raise typer.Exit(0 if all(one.best is not None for one in found) else 1)
+
+
 @app.callback(invoke_without_command=True)
 def _root(
     version: Annotated[bool, typer.Option("--version", help="Print the version.")] = False,

@@ -52,9 +52,11 @@ class Cutter:
     holder : tuple of (radius_mm, length_mm)
         Steps of the holder from its face upwards.
     plunge : bool or None
-        Cuts to its centre and may go straight down into stock; None: a ball can, bull and flat cannot.
+        Cuts to its centre, so that it can go down into stock where there is little room; None: a ball does, bull and flat do not.
     ramp_angle_rad : float
         Steepest way down into stock on a ramp or helix, > 0.
+    max_force_n, max_deflection_mm : float or None
+        Limits of the job: peak cutting force, and how far the tip may bend aside under it.
     """
 
     number: int
@@ -68,6 +70,8 @@ class Cutter:
     holder: tuple[tuple[float, float], ...] = ()
     plunge: bool | None = None
     ramp_angle_rad: float = math.radians(3.0)
+    max_force_n: float | None = None
+    max_deflection_mm: float | None = None
 
     @property
     def gauge_length_mm(self) -> float:
@@ -76,7 +80,7 @@ class Cutter:
 
     @property
     def can_plunge(self) -> bool:
-        """Whether it may go straight down into stock."""
+        """Whether it cuts to its centre."""
         return self.shape == "ball" if self.plunge is None else self.plunge
 
     @property

@@ -97,6 +97,7 @@ def _job_from(source: Source, path: Path) -> Job:
     surface = _surface(draft, part_outline)
     checks.check_stock(draft.stock, surface, draft.units)
     _check_material(draft.stock)
+    checks.check_stock_files(draft.stock, draft.folder)
     _check_part_origin(draft, machine)
     for cutter in draft.cutters:
         checks.check_cutter(cutter, draft.units)
@@ -264,7 +265,16 @@ def _build(draft: _Draft, path: Path, machine: Machine, outline: Outline, blank:
         units=head.units,
         source=path,
         part=Part(part.a, part.a if part.b is None else part.b, math.radians(part.rotate), outline),
-        stock=Stock(materials.material(stock.material).name, stock.top, stock.bottom, blank, stock.allowance),
+        stock=Stock(
+            materials.material(stock.material).name,
+            stock.top,
+            stock.bottom,
+            blank,
+            stock.allowance,
+            None if stock.mesh is None else draft.folder / stock.mesh,
+            None if stock.heights is None else draft.folder / stock.heights,
+            stock.specific_force,
+        ),
         machine=machine,
         part_origin_mm=where.part_origin or (0.0, 0.0, 0.0),
         clearance_mm=where.clearance,
@@ -310,6 +320,7 @@ def _operations(draft: _Draft, cutters: Mapping[int, Cutter], machine: Machine) 
                 tab_width_mm=table.tab_width,
                 tab_height_mm=table.tab_height,
                 skin_mm=table.skin,
+                arcs=table.arcs,
             )
         )
         if table.does != "outline":

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import unicodedata
+from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
@@ -345,6 +346,24 @@ def check_stock(stock: Checked[StockTable], surface: tuple[Floats, Floats] | Non
             "bottom",
             f"found {length_text(bottom, units)}; needs less than the lowest surface, {_height(low, units)}",
         )
+
+
+def check_stock_files(stock: Checked[StockTable], folder: Path) -> None:
+    """At most one of allowance, mesh and heights, and the file has to be there; what is in it is checked when it is read."""
+    given = [key for key in ("allowance", "mesh", "heights") if key in stock.given]
+    for key in given[1:]:
+        stock.fault(key, f"given besides {given[0]}; needs one of allowance, mesh and heights")
+    for key, suffix in (("mesh", ".stl"), ("heights", ".csv")):
+        name = stock.get(key)
+        if name is None:
+            continue
+        if not name.lower().endswith(suffix):
+            stock.fault(key, f"found {found_text(name)}; needs the path of a {suffix} file")
+        elif not (folder / name).is_file():
+            stock.fault(key, f"found {found_text(name)}; there is no such file; a path starts from the folder of this file")
+    force = stock.get("specific_force")
+    if force is not None and force[0] > force[1]:
+        stock.fault("specific_force", f"found {found_text(force)}; needs the lower value first")
 
 
 def _height(point: Floats, units: Units) -> str:

@@ -50,7 +50,13 @@ def _check_sizes(operation: Checked[OperationTable], cutter: Checked[CutterTable
         operation.fault(
             "depth_of_cut", f"found {length_text(depth, units)}; needs at most the flute length of the cutter, {limit}"
         )
-    width, diameter = operation.get("width_of_cut"), cutter.get("diameter")
+    width, diameter, reach = operation.get("width_of_cut"), cutter.get("diameter"), operation.get("reach")
+    if reach is not None and diameter is not None and reach < diameter:
+        operation.fault(
+            "reach",
+            f"found {length_text(reach, units)}; needs at least the diameter of the cutter, {length_text(diameter, units)}, "
+            "so that it gets down to the surface at the edge of the outline",
+        )
     if width is not None and "stepover" in operation.given:
         operation.fault("width_of_cut", "given besides stepover; needs one of the two, not both")
     if width is None or diameter is None:

@@ -15,6 +15,7 @@ Place = Annotated[float, Quantity("length", -1000, 1000)]
 Degrees = Annotated[float, Quantity("degrees", -360, 360)]
 Tilt = Annotated[float, Quantity("degrees", -60, 60)]
 Curvature = Annotated[float, Quantity("curvature", 1e-6, 1)]
+SpecificForce = Annotated[float, Quantity("N/mm^2", 0, 20000, above=True)]
 HolderStep = Annotated[
     tuple[
         Annotated[float, Quantity("length", 0, 300, above=True)],
@@ -88,6 +89,11 @@ class StockTable(FileTable):
     margin: Annotated[float, Quantity("length", 0, 200)] = 0.0
     outline: Annotated[Any, Says("a table [stock.outline] with the key shape")] = None
     allowance: Annotated[float, Quantity("length", 0, 10)] | None = None
+    mesh: Annotated[str, Says("the path of an .stl file, in quotes")] | None = None
+    heights: Annotated[str, Says("the path of a .csv file, in quotes")] | None = None
+    specific_force: (
+        Annotated[tuple[SpecificForce, SpecificForce], Says("[lowest, highest], two numbers above 0")] | None
+    ) = None
 
 
 class MachineTable(FileTable):
@@ -112,6 +118,8 @@ class CutterTable(FileTable):
     holder: Annotated[tuple[HolderStep, ...], Says("a list of steps, each [diameter, length]")] = ()
     plunge: bool | None = None
     ramp_angle: Annotated[float, Quantity("degrees", 0.1, 45)] = 3.0
+    max_force: Annotated[float, Quantity("N", 0, 100000, above=True)] | None = None
+    max_deflection: Annotated[float, Quantity("length", 0, 5, above=True)] | None = None
 
 
 class OperationTable(FileTable):
@@ -144,3 +152,4 @@ class OperationTable(FileTable):
     tabs: Annotated[int, Quantity("", 0, 100, whole=True)] = 4
     tab_width: Annotated[float, Quantity("length", 0, 100, above=True)] | None = None
     tab_height: Annotated[float, Quantity("length", 0, 50, above=True)] = 1.0
+    arcs: bool = False

@@ -28,6 +28,8 @@ def cutter_of(table: CutterTable) -> Cutter:
         holder=tuple((diameter / 2.0, length) for diameter, length in table.holder),
         plunge=table.plunge,
         ramp_angle_rad=math.radians(table.ramp_angle),
+        max_force_n=table.max_force,
+        max_deflection_mm=table.max_deflection,
     )
 
 

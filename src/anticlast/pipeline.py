@@ -110,21 +110,25 @@ def plan(job: Job, progress: Progress = _quiet) -> tuple[tuple[CutterPath, ...],
     CannotPlan
         When no safe path exists: the cutter does not fit the surface, or a pattern cannot be cut with it.
     """
-    from anticlast.machine.axes import axis_path
+    from anticlast.machine.axes import axis_path, choose_rotary
     from anticlast.machine.kinematics import Kinematics
     from anticlast.passes.plan import plan_operation
 
     cutter_paths: list[CutterPath] = []
-    axis_paths: list[AxisPath] = []
-    stand = None
     for operation in job.operations:
         progress(f"operation {operation.index}: {operation.does}, {operation.pattern}: passes")
         kinematics = Kinematics(job.machine, job.part_origin_mm, operation.cutter.gauge_length_mm)
-        path = plan_operation(job, operation, kinematics.nearest_axis)
+        cutter_paths.append(plan_operation(job, operation, kinematics.nearest_axis))
+    # Which way the rotary axes take is decided over the whole program: what is short now may run into a limit later.
+    progress("ways of the rotary axes")
+    chosen = choose_rotary(job, cutter_paths)
+    axis_paths: list[AxisPath] = []
+    stand = None
+    for path, words in zip(cutter_paths, chosen, strict=True):
+        operation = path.operation
         progress(f"operation {operation.index}: {operation.does}, {operation.pattern}: axis motion")
-        axes = axis_path(job, path, stand, last=operation is job.operations[-1])
+        axes = axis_path(job, path, stand, last=operation is job.operations[-1], chosen=words)
         stand = axes.words[-1]
-        cutter_paths.append(path)
         axis_paths.append(axes)
     return tuple(cutter_paths), tuple(axis_paths)
 

@@ -101,6 +101,15 @@ class Control:
 
 
 @dataclass(frozen=True, slots=True)
+class Times:
+    """Seconds in which the machine does not move: for a cutter change, until the spindle turns, until coolant flows."""
+
+    tool_change_s: float = 0.0
+    spindle_start_s: float = 0.0
+    coolant_s: float = 0.0
+
+
+@dataclass(frozen=True, slots=True)
 class Machine:
     """One machine and the dialect its control reads.
 
@@ -116,6 +125,7 @@ class Machine:
     spindle: Spindle
     control: Control
     source: Path
+    times: Times = Times()
 
     @property
     def letters(self) -> tuple[str, ...]:
@@ -150,7 +160,9 @@ class Part:
 class Stock:
     """The blank: a flat prism from ``bottom_mm`` to ``top_mm`` (part Z) inside ``outline``.
 
-    With ``allowance_mm`` given, only what lies below the finished surface moved out along its normal by that much.
+    With ``allowance_mm`` given, only what lies below the finished surface moved out along its normal by that much. With
+    ``mesh`` or ``heights`` given, what that file holds: an STL solid, or measured heights of the top over the bottom; both in
+    the job's units, inside the prism. ``specific_force_n_mm2``, lowest and highest, stands instead of the material's.
     """
 
     material: str
@@ -158,6 +170,9 @@ class Stock:
     bottom_mm: float
     outline: Outline
     allowance_mm: float | None
+    mesh: Path | None = None
+    heights: Path | None = None
+    specific_force_n_mm2: tuple[float, float] | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -173,6 +188,8 @@ class Operation:
     cutter's defaults; ``slotting`` allows the full width. ``reach_mm`` is how far outside the part's outline is roughed, None
     for the whole blank. ``depth_mm`` is how far under the blank's top the outline is cut, None for the blank's bottom less
     ``skin_mm``; ``tabs`` of a width and of a height over the blank's bottom stay.
+
+    ``arcs``: passes are posted as arcs where no rotary axis moves and an axis plane and the tolerance allow.
     """
 
     index: int
@@ -200,6 +217,7 @@ class Operation:
     tab_width_mm: float | None = None
     tab_height_mm: float = 1.0
     skin_mm: float = 0.0
+    arcs: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -301,6 +319,9 @@ class AxisPath:
         -1 on rapids.
     start : (k,)
         Words where the machine stands before row 0 (end of the operation before; for the first, all rotary words 0).
+    arcs : (n, 5) or None
+        Plane of an arc (17, 18, 19; 0 = straight move), angle turned (radians, counterclockwise positive), centre from the
+        start of the block (mm, X Y Z). None: no arcs.
     """
 
     operation: Operation
@@ -312,6 +333,7 @@ class AxisPath:
     pass_index: Ints
     start: Floats
     notes: tuple[str, ...] = ()
+    arcs: Floats | None = None
 
 
 # ------------------------------------------------------------------------------------------------ read-back half
@@ -476,6 +498,19 @@ class Proof:
 
 
 @dataclass(frozen=True, slots=True)
+class Wait:
+    """Time in which a program does not move: ``what`` is "tool change", "spindle start", "coolant" or "dwell".
+
+    ``before`` is the row of ``Motions`` that comes next; their number if none does.
+    """
+
+    line: int
+    what: str
+    seconds: float
+    before: int
+
+
+@dataclass(frozen=True, slots=True)
 class MotionTimes:
     """Cycle time of a program's motions under the machine's limits.
 
@@ -487,11 +522,27 @@ class MotionTimes:
         Time that F alone asks for; for rapids, slowest axis at its rapid rate, no acceleration.
     held_back_by : (n,) uint8
         What kept the motion from its feed: 0 nothing, 1 axis speed, 2 acceleration or corner, 3 block rate.
+    axis : (n,) int8, or None
+        Place in ``Machine.axes`` of the axis that held it back; -1 where none did. None if not known.
+    waits : tuple of Wait
+        What comes on top of ``seconds``, in program order.
     """
 
     seconds: Floats
     feed_only_s: Floats
     held_back_by: Bytes
+    axis: npt.NDArray[np.int8] | None = None
+    waits: tuple[Wait, ...] = ()
+
+    @property
+    def waiting_s(self) -> float:
+        """Time of all waits."""
+        return sum(wait.seconds for wait in self.waits)
+
+    @property
+    def total_s(self) -> float:
+        """Time of the whole program."""
+        return float(self.seconds.sum()) + self.waiting_s
 
 
 @dataclass(frozen=True, slots=True)

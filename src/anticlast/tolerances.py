@@ -103,6 +103,13 @@ CORNER_DEG: Final = 0.005
 # Exact path (G61) stops at a corner sharper than this (radians, 0.1 degrees); less is one smooth line in posted digits.
 EXACT_PATH_RAD: Final = 0.00175
 
+# Arcs are timed in straight pieces of at most this turn (radians, 3 degrees): each axis's share is then off by 3 % at most.
+ARC_PIECE_RAD: Final = 0.05236
+
+# Share of the acceleration that the time model leaves unused on curves: what its windows and short straight pieces blunt, so
+# that no estimate is below the time-optimal one. Costs half of that share in time.
+CURVE_RESERVE: Final = 0.004
+
 # A motion that takes no more than this share longer than its feed asks for is not called held back.
 HELD_BACK_SHARE: Final = 0.01
 
@@ -117,3 +124,13 @@ LINEAR_SIDEWAYS_SHARE: Final = 1e-3
 # The best feed direction is found to this (radians, 0.03 degrees): length goes with the square of the miss, so it is
 # shortest to within a millionth, and job files have tenths of a degree.
 SAME_FEED_DIRECTION_RAD: Final = 5e-4
+
+# Error of a stopwatch reading (s, standard deviation): two presses and the doubt when a program begins and ends (common practice).
+STOPWATCH_S: Final = 0.5
+
+# Share of a reading by which the time model itself may miss a machine that it fits (standard deviation): what corner
+# distances, filters and servo lag of other controls make of the same blocks, beyond acceleration, jerk and block rate.
+READING_SHARE: Final = 0.003
+
+# Logarithm of a fitted scale is settled below this: a tenth of a percent, far below what stopwatches tell.
+CALIBRATION_STEP: Final = 1e-3

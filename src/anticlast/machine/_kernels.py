@@ -368,6 +368,53 @@ def _stray(
 
 
 @numba.njit(cache=True, nogil=True)
+def _turn_into(
+    found: np.ndarray,
+    free: np.ndarray,
+    low: np.ndarray,
+    turns: np.ndarray,
+    turns_before: np.ndarray,
+    old: np.ndarray,
+    hop: bool,
+    slack_deg: float,
+    turn: np.ndarray,
+) -> bool:
+    """Set ``turn`` (m,) from the words ``old`` to a state's words; True if an axis would have to jump in the cut.
+
+    A free word stays. An axis without limits takes the short way. With the cutter off the part (``hop``) any turn will do.
+    """
+    blocked = False
+    for j in range(turn.size):
+        if free[j] == 1:
+            turn[j] = 0.0
+            if turns_before[j] != turns[j]:
+                blocked = True
+        elif low[j] == -math.inf:
+            turn[j] = _fold(found[j] - old[j])
+        else:
+            turn[j] = found[j] + 360.0 * turns[j] - old[j]
+            if not hop and abs(turn[j]) > 180.0 + slack_deg:
+                blocked = True
+    return blocked
+
+
+@numba.njit(cache=True, nogil=True)
+def _turn_cost(
+    old: np.ndarray, turn: np.ndarray, low: np.ndarray, high: np.ndarray, rate: np.ndarray, slack_deg: float
+) -> float:
+    """Cost of a turn: minutes at the fastest feed; words past a limit a thousandfold, and ten minutes each."""
+    total = 0.0
+    for j in range(turn.size):
+        total += abs(turn[j]) / rate[j]
+        if low[j] != -math.inf:
+            now = old[j] + turn[j]
+            past = max(low[j] - now, now - high[j]) - slack_deg
+            if past > 0.0:
+                total += 10.0 + 1000.0 * past / rate[j]
+    return total
+
+
+@numba.njit(cache=True, nogil=True)
 def choose_branches(
     chain: np.ndarray,
     axis: np.ndarray,
@@ -380,20 +427,25 @@ def choose_branches(
     start: np.ndarray,
     wrap_low: np.ndarray,
     wraps: np.ndarray,
-    cross_rad: float,
+    cross_rad: np.ndarray,
     slack_deg: float,
-) -> tuple[np.ndarray, np.ndarray]:
+    hop: np.ndarray,
+    pause: np.ndarray,
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
     """Branch and whole turns for each row so that the rotary axes travel least and stay inside their limits.
 
-    Dynamic programming (Bellman) over the rows. A state is a branch together with whole turns for each axis that has
-    limits; an axis without limits always takes the short way. From a row to the next an axis turns by half a turn at most.
-    Changing branch is allowed where the even joint move keeps the axis within ``cross_rad`` of its wish: at the pole, or
-    where both branches meet. Words outside the limits cost a thousand times their travel, so they are a last resort;
-    ``outside`` (n, branches) is what each choice costs for the linear axes' limits.
+    Shortest path by dynamic programming (Bellman) over all rows of a program. A state is a branch together with whole
+    turns for each axis that has limits; an axis without limits always takes the short way. From a row to the next an axis
+    turns by half a turn at most, and the branch changes only where the even joint move keeps the axis within ``cross_rad``
+    (n,) of its wish: at the pole, or where both branches meet. Where ``hop`` (n,) is 1 the cutter is off the part on its
+    way to the row, and any state may follow any other. On a row with a finite ``pause`` (n,) it may be drawn off at that
+    cost and put back in another state. Words past the limits cost a thousandfold, so they are a last resort; ``outside``
+    (n, branches) is what each choice costs for the linear axes' limits.
 
     Returns
     -------
-    rot : (n, m) words, degrees, continuous.
+    arrive, leave : (n, m) words, degrees: with which the row is reached and left; they differ where the cutter is drawn off.
+    split : (n,) uint8, 1 there.
     forced : (n,) uint8, 1 where no allowed change led to the row.
     """
     count, branches, m = found.shape
@@ -402,75 +454,91 @@ def choose_branches(
         lanes *= wraps[j]
     states = branches * lanes
     wall = 1e9
-    cost = np.zeros(states)
-    cost_new = np.zeros(states)
-    word = np.zeros((states, m))
-    word_new = np.zeros((states, m))
+    cost, cost_new = np.zeros(states), np.zeros(states)
+    word, word_new = np.zeros((states, m)), np.zeros((states, m))
+    cost_split, word_split = np.zeros(states), np.zeros((states, m))
     back = np.zeros((count, states), dtype=np.int32)
-    turn = np.zeros(m)
-    work = np.zeros(m)
-    lane_turns = np.zeros((lanes, m))
+    apart = np.zeros((count, states), dtype=np.int32)
+    turn, work = np.zeros(m), np.zeros(m)
+    turns = np.zeros((lanes, m))
     for lane in range(lanes):
         rest = lane
         for j in range(m):
-            lane_turns[lane, j] = wrap_low[j] + rest % wraps[j]
+            turns[lane, j] = wrap_low[j] + rest % wraps[j]
             rest //= wraps[j]
+    # No step in the cut is longer than half a turn, so there whole turns change by one at most.
     beside = np.zeros(lanes, dtype=np.int64)
     neighbour = np.zeros((lanes, 9), dtype=np.int64)
     for lane in range(lanes):
         for other in range(lanes):
             far = 0.0
             for j in range(m):
-                far = max(far, abs(lane_turns[lane, j] - lane_turns[other, j]))
+                far = max(far, abs(turns[lane, j] - turns[other, j]))
             if far <= 1.0:
                 neighbour[lane, beside[lane]] = other
                 beside[lane] += 1
     for i in range(count):
+        off = i == 0 or hop[i] == 1
         for s in range(states):
             branch, lane = s // lanes, s % lanes
             best, best_from = math.inf, 0
-            for step in range(branches * beside[lane] if i > 0 else 1):
-                # No step is longer than half a turn, so whole turns change by one at most.
-                before = (step // beside[lane]) * lanes + neighbour[lane, step % beside[lane]] if i > 0 else 0
+            steps = 1 if i == 0 else states if off else branches * beside[lane]
+            for step in range(steps):
+                before = step
+                if not off:
+                    before = (step // beside[lane]) * lanes + neighbour[lane, step % beside[lane]]
                 total = (cost[before] if i > 0 else 0.0) + outside[i, branch]
                 if total >= best:
                     continue
-                blocked = False
-                for j in range(m):
-                    old = word[before, j] if i > 0 else start[j]
-                    if free[i, branch, j] == 1:
-                        turn[j] = 0.0
-                        if i > 0 and lane_turns[before % lanes, j] != lane_turns[lane, j]:
-                            blocked = True
-                    elif low[j] == -math.inf:
-                        turn[j] = _fold(found[i, branch, j] - old)
-                    else:
-                        turn[j] = found[i, branch, j] + 360.0 * lane_turns[lane, j] - old
-                        if i > 0 and abs(turn[j]) > 180.0 + slack_deg:
-                            blocked = True
-                    total += abs(turn[j]) / rate[j]
-                    now = old + turn[j]
-                    if low[j] != -math.inf:
-                        total += 1000.0 * max(0.0, max(low[j] - now, now - high[j]) - slack_deg) / rate[j]
+                old = word[before] if i > 0 else start
+                lane_before = before % lanes if i > 0 else lane
+                blocked = _turn_into(
+                    found[i, branch], free[i, branch], low, turns[lane], turns[lane_before], old, off, slack_deg, turn
+                )
+                total += _turn_cost(old, turn, low, high, rate, slack_deg)
                 if total >= best:
                     continue
-                if i > 0 and not blocked and before // lanes != branch:
-                    blocked = _stray(chain, axis[i - 1], axis[i], word[before], turn, work) > cross_rad
+                if not off and not blocked and before // lanes != branch:
+                    blocked = _stray(chain, axis[i - 1], axis[i], old, turn, work) > cross_rad[i]
                 if blocked:
                     total += wall
                 if total < best:
                     best, best_from = total, before
                     for j in range(m):
-                        word_new[s, j] = (word[before, j] if i > 0 else start[j]) + turn[j]
+                        word_new[s, j] = old[j] + turn[j]
             cost_new[s] = best
             back[i, s] = best_from
+            apart[i, s] = s
+        if pause[i] < math.inf:
+            for s in range(states):
+                branch, lane = s // lanes, s % lanes
+                cost_split[s] = cost_new[s]
+                for j in range(m):
+                    word_split[s, j] = word_new[s, j]
+                for other in range(states):
+                    total = cost_new[other] + pause[i] + outside[i, branch]
+                    if total >= cost_split[s] or _turn_into(
+                        found[i, branch], free[i, branch], low, turns[lane], turns[other % lanes], word_new[other], True,
+                        slack_deg, turn,
+                    ):  # fmt: skip
+                        continue
+                    total += _turn_cost(word_new[other], turn, low, high, rate, slack_deg)
+                    if total < cost_split[s]:
+                        cost_split[s] = total
+                        apart[i, s] = other
+                        for j in range(m):
+                            word_split[s, j] = word_new[other, j] + turn[j]
+            cost_new, cost_split = cost_split, cost_new
+            word_new, word_split = word_split, word_new
         cost, cost_new = cost_new, cost
         word, word_new = word_new, word
-    picked = np.zeros(count, dtype=np.int32)
-    picked[count - 1] = np.argmin(cost)
-    for i in range(count - 1, 0, -1):
-        picked[i - 1] = back[i, picked[i]]
-    return _unwrap(chain, axis, found, free, low, start, lane_turns, picked, lanes, cross_rad, slack_deg)
+    picked = np.zeros((count, 2), dtype=np.int32)
+    state = np.argmin(cost)
+    for i in range(count - 1, -1, -1):
+        picked[i, 1] = state
+        picked[i, 0] = apart[i, state]
+        state = back[i, picked[i, 0]]
+    return _unwrap(chain, axis, found, free, low, start, turns, picked, cross_rad, slack_deg, hop)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -481,38 +549,40 @@ def _unwrap(
     free: np.ndarray,
     low: np.ndarray,
     start: np.ndarray,
-    lane_turns: np.ndarray,
+    turns: np.ndarray,
     picked: np.ndarray,
-    lanes: int,
-    cross_rad: float,
+    cross_rad: np.ndarray,
     slack_deg: float,
-) -> tuple[np.ndarray, np.ndarray]:
-    """Words (n, m) along a chain of states, and where a change between states was not an allowed one (n,)."""
+    hop: np.ndarray,
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Words along a chain of states, where the cutter is drawn off, and where a change was not an allowed one."""
     count, _, m = found.shape
-    rot = np.zeros((count, m))
+    lanes = turns.shape[0]
+    arrive, leave = np.zeros((count, m)), np.zeros((count, m))
+    split = np.zeros(count, dtype=np.uint8)
     forced = np.zeros(count, dtype=np.uint8)
-    turn = np.zeros(m)
-    work = np.zeros(m)
+    turn, work = np.zeros(m), np.zeros(m)
     for i in range(count):
-        branch, lane = picked[i] // lanes, picked[i] % lanes
+        branch, lane = picked[i, 0] // lanes, picked[i, 0] % lanes
+        off = i == 0 or hop[i] == 1
+        old = leave[i - 1] if i > 0 else start
+        lane_before = picked[i - 1, 1] % lanes if i > 0 else lane
+        blocked = _turn_into(
+            found[i, branch], free[i, branch], low, turns[lane], turns[lane_before], old, off, slack_deg, turn
+        )
+        if not off and picked[i - 1, 1] // lanes != branch:
+            blocked = blocked or _stray(chain, axis[i - 1], axis[i], old, turn, work) > cross_rad[i]
+        forced[i] = 1 if blocked and not off else 0
         for j in range(m):
-            old = rot[i - 1, j] if i > 0 else start[j]
-            if free[i, branch, j] == 1:
-                turn[j] = 0.0
-            elif low[j] == -math.inf:
-                turn[j] = _fold(found[i, branch, j] - old)
-            else:
-                turn[j] = found[i, branch, j] + 360.0 * lane_turns[lane, j] - old
-                if i > 0 and abs(turn[j]) > 180.0 + slack_deg:
-                    forced[i] = 1
-            rot[i, j] = old + turn[j]
-        if (
-            i > 0
-            and picked[i - 1] // lanes != branch
-            and _stray(chain, axis[i - 1], axis[i], rot[i - 1], turn, work) > cross_rad
-        ):
-            forced[i] = 1
-    return rot, forced
+            arrive[i, j] = old[j] + turn[j]
+            leave[i, j] = arrive[i, j]
+        if picked[i, 1] != picked[i, 0]:
+            split[i] = 1
+            branch, lane = picked[i, 1] // lanes, picked[i, 1] % lanes
+            _turn_into(found[i, branch], free[i, branch], low, turns[lane], turns[lane], arrive[i], True, slack_deg, turn)
+            for j in range(m):
+                leave[i, j] = arrive[i, j] + turn[j]
+    return arrive, leave, split, forced
 
 
 # ---------------------------------------------------------------------------------------- subdivision

@@ -1,4 +1,4 @@
-"""Compiled kernels of the time model: corner speeds, look-ahead, and the time of each block.
+"""Compiled kernels of the time model: how sharply the path bends where blocks meet, and what that allows.
 
 All vectors here are in scaled joint space: each axis's coordinate is multiplied by (reference acceleration / its own), so
 that one acceleration holds for every axis and mm and degrees can stand in one vector. docs/theory-machine.md, "Time".
@@ -11,18 +11,25 @@ import math
 import numba
 import numpy as np
 
+STOP = 0  # the control stands still here
+CORNER = 1  # passed at one speed, or no corner at all
+SMOOTH = 2  # part of a curve in short blocks, bent all along
+
+# Rounding arcs that take less than this share of a block are passed as points, between straight blocks.
+_POINT_SHARE = 0.125
 # A window of path looked at on either side of a corner holds at most this many blocks.
 _WINDOW_BLOCKS = 64
+# Rounds in which the window and the radius found in it are brought together; each changes the window less.
+_WINDOW_ROUNDS = 4
 
 
 @numba.njit(cache=True, nogil=True)
 def _corner_angle(a: np.ndarray, b: np.ndarray) -> float:
     """Angle (radians) between two vectors, exact for small angles; 0 if one has no length."""
-    aa, bb, ab = 0.0, 0.0, 0.0
+    aa, bb = 0.0, 0.0
     for j in range(a.size):
         aa += a[j] * a[j]
         bb += b[j] * b[j]
-        ab += a[j] * b[j]
     if aa == 0.0 or bb == 0.0:
         return 0.0
     aa, bb = math.sqrt(aa), math.sqrt(bb)
@@ -34,15 +41,8 @@ def _corner_angle(a: np.ndarray, b: np.ndarray) -> float:
 
 
 @numba.njit(cache=True, nogil=True)
-def _blend_radius(length: float, angle: float) -> float:
-    """Radius of the arc that a corner takes when it may use half of ``length`` on either side."""
-    half = math.tan(0.5 * angle)
-    return length / (2.0 * half) if half > 0.0 else math.inf
-
-
-@numba.njit(cache=True, nogil=True)
 def _chord(
-    steps: np.ndarray, length: np.ndarray, i: int, way: int, reach: float, stop: np.ndarray, out: np.ndarray
+    unit: np.ndarray, length: np.ndarray, i: int, way: int, reach: float, stop: np.ndarray, out: np.ndarray
 ) -> float:
     """Sum of blocks from i on in direction ``way`` until ``reach`` is spanned or a full stop comes; returns their length."""
     total = 0.0
@@ -50,7 +50,7 @@ def _chord(
         out[j] = 0.0
     for _ in range(_WINDOW_BLOCKS):
         for j in range(out.size):
-            out[j] += steps[i, j]
+            out[j] += unit[i, j] * length[i]
         total += length[i]
         # stop[i] belongs to the start of block i
         ahead = i + 1 if way > 0 else i
@@ -61,10 +61,64 @@ def _chord(
 
 
 @numba.njit(cache=True, nogil=True)
-def corner_speeds(
-    leaving: np.ndarray,
-    entering: np.ndarray,
-    steps: np.ndarray,
+def _aside(unit: np.ndarray, i: int, scale: np.ndarray, lin: np.ndarray, dev_lin: float, dev_rot: float) -> float:
+    """How far the path may leave corner i along its bisector, in scaled length, until X Y Z or a rotary axis is off by d."""
+    norm, straight, part = 0.0, 0.0, 0.0
+    for j in range(scale.size):
+        norm += (unit[i, j] - unit[i - 1, j]) ** 2
+    norm = math.sqrt(norm)
+    for j in range(scale.size):
+        share = abs(unit[i, j] - unit[i - 1, j]) / (norm * scale[j])
+        if lin[j] == 1.0:
+            straight += share * share
+        else:
+            part = max(part, share)
+    aside = math.inf
+    if straight > 0.0:
+        aside = dev_lin / math.sqrt(straight)
+    if part > 0.0:
+        aside = min(aside, dev_rot / part)
+    return aside
+
+
+@numba.njit(cache=True, nogil=True)
+def _pull(unit: np.ndarray, i: int, angle: float) -> float:
+    """Largest share that one axis has in the pull towards the centre, anywhere on the arc that rounds corner i."""
+    most = 0.0
+    sine, cosine = math.sin(0.5 * angle), math.cos(0.5 * angle)
+    for j in range(unit.shape[1]):
+        before, after = unit[i - 1, j], unit[i, j]
+        across = (after - before) / (2.0 * sine)
+        along = (after + before) / (2.0 * cosine) if cosine > 0.0 else 0.0
+        # Half way round the normal is `across`; turned by phi its part is across cos(phi) - along sin(phi).
+        if abs(along) * cosine <= abs(across) * sine:
+            share = math.hypot(across, along)
+        else:
+            share = abs(across) * cosine + abs(along) * sine
+        most = max(most, share)
+    return most
+
+
+@numba.njit(cache=True, nogil=True)
+def _corner_speed(
+    unit: np.ndarray, i: int, angle: float, aside: float, accel: float, jerk: np.ndarray
+) -> float:
+    """Speed through the arc that passes the corner at distance ``aside``, each axis inside its acceleration and jerk."""
+    secant = 1.0 / max(math.cos(0.5 * angle), 1e-12) - 1.0
+    if secant <= 0.0:
+        return math.inf
+    speed = math.sqrt(accel * aside / secant / _pull(unit, i, angle))
+    turn = 2.0 * math.sin(0.5 * angle)
+    for j in range(jerk.size):
+        change = abs(unit[i, j] - unit[i - 1, j])
+        if change > 0.0 and jerk[j] < math.inf:
+            speed = min(speed, (36.0 * jerk[j] * aside * aside / (change * turn * turn)) ** (1.0 / 3.0))
+    return speed
+
+
+@numba.njit(cache=True, nogil=True)
+def bends(
+    unit: np.ndarray,
     length: np.ndarray,
     cap: np.ndarray,
     stop: np.ndarray,
@@ -74,23 +128,23 @@ def corner_speeds(
     dev_lin: float,
     dev_rot: float,
     accel: float,
+    jerk: np.ndarray,
     exact_rad: float,
-) -> np.ndarray:
-    """Highest speed at the start of each block (n,), and 0 where the control stops there.
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """What happens at the start of each block: kind, highest speed, curvature and reach of the bend there.
 
     A corner of angle th is rounded by an arc that passes it at distance d: r = d / (1/cos(th/2) - 1), and v = sqrt(A r).
-    A smooth line in many short blocks is bounded by the arc that fits a stretch of it instead: as long a stretch as an arc
-    run at full speed needs to move aside by d, so that rounding of the posted digits does not count as corners.
+    Where a stretch of the path bends more than that, the corner is part of a curve: its curvature is the change of
+    direction between the chords of two windows over the distance of their middles. The windows are as long as an
+    arc of the radius found needs to move aside by d, so that rounding of the posted digits does not count as bending.
 
     Parameters
     ----------
-    leaving, entering : (n, k)
-        Unit directions at the end and at the start of each block.
-    steps : (n, k)
-        Chord of each block.
-    length, cap : (n,)
+    unit : (m, k)
+        Directions of the blocks.
+    length, cap : (m,)
         Path length and highest speed of each block.
-    stop : (n,) bool
+    stop : (m,) bool
         The control stops before this block.
     exact : int
         0: continuous (G64). 1: exact path (G61), a stop at every corner. 2: exact stop (G61.1).
@@ -100,110 +154,114 @@ def corner_speeds(
         Allowed deviation at a corner, mm and degrees.
     accel : float
         Reference acceleration.
+    jerk : (k,)
+        Jerk of each axis, scaled.
     exact_rad : float
         Corners below this angle are none under exact path.
+
+    Returns
+    -------
+    kind : (m,) int64
+        ``STOP``, ``CORNER`` or ``SMOOTH``.
+    limit : (m,)
+        Highest speed through it, infinite where nothing but the bend itself limits.
+    curve : (m, k)
+        Curvature of the path: change of its direction over its length.
+    zone : (m,)
+        How far to either side that holds; infinite: to the middle of the blocks.
     """
-    count, k = leaving.shape
-    speed = np.zeros(count)
+    count, k = unit.shape
+    zone = np.zeros(count)
+    kind = np.zeros(count, dtype=np.int64)
+    limit = np.zeros(count)
+    curve = np.zeros((count, k))
     behind, before = np.zeros(k), np.zeros(k)
     for i in range(1, count):
         if stop[i] or exact == 2:
             continue
-        angle = _corner_angle(leaving[i - 1], entering[i])
-        if exact == 1:
-            speed[i] = 0.0 if angle > exact_rad else math.inf
+        angle = _corner_angle(unit[i - 1], unit[i])
+        if exact == 1 and angle > exact_rad:
+            continue
+        kind[i], limit[i] = CORNER, math.inf
+        if angle < 1e-12:
+            continue
+        aside = _aside(unit, i, scale, lin, dev_lin, dev_rot) if exact == 0 else 0.0
+        fastest = min(cap[i - 1], cap[i])
+        gentle = fastest * fastest / accel  # radius that the path may have at full speed
+        reach = math.sqrt(2.0 * aside * gentle)
+        bend = 0.0
+        for _ in range(_WINDOW_ROUNDS):
+            back = _chord(unit, length, i - 1, -1, reach, stop, behind)
+            ahead = _chord(unit, length, i, 1, reach, stop, before)
+            turned = _corner_angle(behind, before)
+            bend = 4.0 * math.sin(0.5 * turned) / (back + ahead)
+            if bend * gentle <= 1.0:
+                break
+            shorter = math.sqrt(2.0 * aside / bend)
+            if abs(shorter - reach) <= 0.05 * reach:
+                break
+            reach = shorter
+        secant = 1.0 / max(math.cos(0.5 * angle), 1e-12) - 1.0
+        if exact == 0 and secant >= aside * bend:
+            limit[i] = _corner_speed(unit, i, angle, aside, accel, jerk)
+            tangent = math.tan(0.5 * angle) * aside / secant
+            if tangent > _POINT_SHARE * min(length[i - 1], length[i]):
+                zone[i] = tangent
+                for j in range(k):
+                    curve[i, j] = (unit[i, j] - unit[i - 1, j]) * secant / (2.0 * math.sin(0.5 * angle) * aside)
+            continue
+        kind[i], zone[i] = SMOOTH, math.inf
+        nb, na = math.sqrt((behind * behind).sum()), math.sqrt((before * before).sum())
+        if nb > 0.0 and na > 0.0:
+            for j in range(k):
+                curve[i, j] = (before[j] / na - behind[j] / nb) * 2.0 / (back + ahead)
+    return kind, limit, curve, zone
+
+
+@numba.njit(cache=True, nogil=True)
+def jerk_limits(
+    unit: np.ndarray,
+    length: np.ndarray,
+    cap: np.ndarray,
+    kind: np.ndarray,
+    limit: np.ndarray,
+    curve: np.ndarray,
+    scale: np.ndarray,
+    lin: np.ndarray,
+    dev_lin: float,
+    dev_rot: float,
+    accel: float,
+    jerk: np.ndarray,
+) -> None:
+    """Lower ``limit`` (m,) on curves until the pull of no axis changes faster than its jerk allows.
+
+    On a curve run at v the pull changes by (change of curvature) v^2 in the time (distance) / v, so v^3 <= J s / |dc|. What
+    changes faster than the allowed deviation can be felt does not count: smoothing over a time tau moves an accelerated
+    path by a tau^2 / 24, hence s >= v sqrt(24 d / A). Arguments as in ``bends``; ``kind``, ``limit``, ``curve`` its results.
+    """
+    count, k = curve.shape
+    for i in range(1, count):
+        if kind[i] != SMOOTH:
             continue
         fastest = min(cap[i - 1], cap[i])
-        allowed = math.inf
-        if angle > 0.0:
-            # d in scaled space: what the arc leaves of the corner points along the bisector.
-            straight, part = 0.0, 0.0
-            norm = 0.0
-            for j in range(k):
-                norm += (entering[i, j] - leaving[i - 1, j]) ** 2
-            norm = math.sqrt(norm)
-            for j in range(k):
-                share = abs(entering[i, j] - leaving[i - 1, j]) / (norm * scale[j])
-                if lin[j] == 1.0:
-                    straight += share * share
-                else:
-                    part = max(part, share)
-            aside = math.inf
-            if straight > 0.0:
-                aside = dev_lin / math.sqrt(straight)
-            if part > 0.0:
-                aside = min(aside, dev_rot / part)
-            secant = 1.0 / max(math.cos(0.5 * angle), 1e-12) - 1.0
-            if secant > 0.0:
-                allowed = math.sqrt(accel * aside / secant)
-            reach = math.sqrt(2.0 * aside * fastest * fastest / accel)
-            back = _chord(steps, length, i - 1, -1, reach, stop, behind)
-            ahead = _chord(steps, length, i, 1, reach, stop, before)
-            bend = _corner_angle(behind, before)
-            allowed = min(allowed, math.sqrt(accel * _blend_radius(min(back, ahead), bend)))
-        speed[i] = allowed
-    return speed
-
-
-@numba.njit(cache=True, nogil=True)
-def _s_curve(length: float, cap: float, accel: float, jerk: float) -> float:
-    """Time of one move from rest to rest with speed, acceleration and jerk bounded (the symmetric seven-phase profile)."""
-    if length <= 0.0:
-        return 0.0
-    if jerk == math.inf:
-        return length / cap + cap / accel if length >= cap * cap / accel else 2.0 * math.sqrt(length / accel)
-    if cap * jerk >= accel * accel:
-        if length >= cap * cap / accel + cap * accel / jerk:
-            return length / cap + cap / accel + accel / jerk
-    elif length >= 2.0 * cap * math.sqrt(cap / jerk):
-        return length / cap + 2.0 * math.sqrt(cap / jerk)
-    if length >= 2.0 * accel**3 / jerk**2:
-        return accel / jerk + math.sqrt((accel / jerk) ** 2 + 4.0 * length / accel)
-    return 4.0 * (length / (2.0 * jerk)) ** (1.0 / 3.0)
-
-
-@numba.njit(cache=True, nogil=True)
-def _jerk_loss(speed: float, accel: float, jerk: float) -> float:
-    """What bounded jerk adds to the time of a run up to (or down from) ``speed``, against bounded acceleration alone."""
-    if jerk == math.inf:
-        return 0.0
-    if speed * jerk >= accel * accel:
-        return 0.5 * accel / jerk
-    return math.sqrt(speed / jerk) - 0.5 * speed / accel
-
-
-@numba.njit(cache=True, nogil=True)
-def block_times(
-    length: np.ndarray, cap: np.ndarray, accel: np.ndarray, jerk: np.ndarray, corner: np.ndarray
-) -> np.ndarray:
-    """Time of each block (n,), with look-ahead over all of them: from rest, through the corners, to rest.
-
-    Backwards, no block may be entered faster than it can be braked from; forwards, none left faster than it can be run up
-    to. In between each block has a trapezoid (or triangle) of speed. Jerk is exact for a block from rest to rest, and where
-    a run of blocks starts or ends at rest it adds the loss of that ramp.
-    """
-    count = length.size
-    speed = np.zeros(count + 1)
-    for i in range(1, count):
-        speed[i] = min(corner[i], cap[i - 1], cap[i])
-    for i in range(count - 1, -1, -1):
-        speed[i] = min(speed[i], math.sqrt(speed[i + 1] ** 2 + 2.0 * accel[i] * length[i]))
-    times = np.zeros(count)
-    for i in range(count):
-        speed[i + 1] = min(speed[i + 1], math.sqrt(speed[i] ** 2 + 2.0 * accel[i] * length[i]))
-        low, high = speed[i], speed[i + 1]
-        if length[i] <= 0.0:
+        aside = _aside(unit, i, scale, lin, dev_lin, dev_rot)
+        if aside == math.inf:
+            aside = dev_lin
+        wanted = fastest * math.sqrt(24.0 * aside / accel)
+        low, high, span = i, i, 0.0
+        for _ in range(_WINDOW_BLOCKS):
+            more_below, more_above = kind[low - 1] == SMOOTH, high + 1 < count and kind[high + 1] == SMOOTH
+            if span >= wanted or not (more_below or more_above):
+                break
+            if more_below:
+                low -= 1
+                span += length[low]
+            if more_above:
+                span += length[high]
+                high += 1
+        if span <= 0.0:
             continue
-        if low == 0.0 and high == 0.0:
-            times[i] = _s_curve(length[i], cap[i], accel[i], jerk[i])
-            continue
-        peak = math.sqrt(0.5 * (low * low + high * high) + accel[i] * length[i])
-        if peak <= cap[i]:
-            times[i] = (2.0 * peak - low - high) / accel[i]
-        else:
-            top = cap[i]
-            ramps = (2.0 * top * top - low * low - high * high) / (2.0 * accel[i])
-            times[i] = (2.0 * top - low - high) / accel[i] + max(0.0, length[i] - ramps) / top
-        if low == 0.0 or high == 0.0:
-            times[i] += _jerk_loss(min(peak, cap[i]), accel[i], jerk[i])
-    return times
+        for j in range(k):
+            change = abs(curve[high, j] - curve[low, j])
+            if change > 0.0 and jerk[j] < math.inf:
+                limit[i] = min(limit[i], (jerk[j] * span / change) ** (1.0 / 3.0))

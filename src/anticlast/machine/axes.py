@@ -8,15 +8,18 @@ meant, checked by forward kinematics. docs/theory-machine.md, "Straight moves of
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
 from anticlast.errors import CannotPlan
-from anticlast.machine import _kernels, branches
+from anticlast.machine import _kernels
 from anticlast.machine.blocks import Blocks, Digits, joined, limit_notes, split_long, time_blocks
+from anticlast.machine.branches import Chosen, Run, Wish, choose_all
 from anticlast.machine.hops import Hops
 from anticlast.machine.kinematics import Kinematics
+from anticlast.posting.arcs import fit_arcs
 from anticlast.records import AxisPath, CutterPath, Floats, Job, Operation, Purpose, Stretch, frozen_array
 from anticlast.tolerances import (
     AXIS_STRAY_RAD,
@@ -25,12 +28,17 @@ from anticlast.tolerances import (
     LINEAR_FLOOR_MM,
     LINEAR_SIDEWAYS_SHARE,
     POLE_RAD,
+    SAME_DIRECTION_RAD,
     SAME_POINT_MM,
     SUBDIVISION_CAP,
 )
 
 # Share of the axis's allowance that a change of branch may use; the rest is for what happens between the rows.
 CROSS_SHARE = 0.8
+# Minutes of rotary travel that would have to be saved before the cutter is drawn off within a stretch: many more than a lift
+# takes, since each leaves a mark outside the outline; and where only one side of the row is outside.
+PAUSE_MIN = 1.0
+PAUSE_AT_EDGE_MIN = 4.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -82,8 +90,59 @@ def budget_of(operation: Operation) -> Budget:
     return Budget(point, axis, max(lever, 0.0), sideways, max(point, half))
 
 
+def choose_rotary(
+    job: Job, cutter_paths: Sequence[CutterPath], start_deg: Floats | None = None
+) -> tuple[tuple[Chosen, ...], ...]:
+    """Choose the rotary words of a whole program at once, and where the cutter is drawn off for an axis to turn back.
+
+    Parameters
+    ----------
+    job : Job
+    cutter_paths : sequence of CutterPath
+        All operations, or some that follow each other, in cutting order.
+    start_deg : (m,) or None
+        Rotary words before the first of them; None for 0.
+
+    Returns
+    -------
+    tuple of tuple of Chosen
+        For each operation one of each stretch.
+
+    Raises
+    ------
+    CannotPlan
+        A cutter axis is out of reach, or an axis would have to jump in the cut.
+    """
+    wishes: list[Wish] = []
+    for path in cutter_paths:
+        kinematics = Kinematics(job.machine, job.part_origin_mm, path.operation.cutter.gauge_length_mm)
+        allowed = budget_of(path.operation).axis_rad
+        wishes += [
+            Wish(kinematics, s.axis, s.tip_mm, CROSS_SHARE * allowed, allowed, _pauses(s)) for s in path.stretches
+        ]
+    if not wishes:
+        return tuple(() for _ in cutter_paths)
+    start = np.zeros(wishes[0].kinematics.rotary_count) if start_deg is None else start_deg
+    chosen = iter(choose_all(wishes, start))
+    return tuple(tuple(next(chosen) for _ in path.stretches) for path in cutter_paths)
+
+
+def _pauses(stretch: Stretch) -> Floats:
+    """What it costs (n,) to draw the cutter off on each row: never in the cut, rather not on the edge of the outline."""
+    outside = (stretch.purpose == Purpose.OVERRUN) | (stretch.purpose == Purpose.LINK)
+    after = np.append(outside[1:], False)
+    cost = np.where(outside & after, PAUSE_MIN, np.where(outside | after, PAUSE_AT_EDGE_MIN, np.inf))
+    cost[[0, -1]] = np.inf
+    return cost
+
+
 def axis_path(
-    job: Job, cutter_path: CutterPath, start_words: Floats | None = None, *, last: bool = False
+    job: Job,
+    cutter_path: CutterPath,
+    start_words: Floats | None = None,
+    *,
+    last: bool = False,
+    chosen: Sequence[Chosen] | None = None,
 ) -> AxisPath:
     """Turn an operation's cutter path into motion of the machine axes.
 
@@ -96,6 +155,9 @@ def axis_path(
         Words where the operation before ended, with that operation's cutter; None for the first operation.
     last : bool
         The program ends with this operation: the rotary axes return to 0 at the end.
+    chosen : sequence of Chosen, optional
+        Rotary words of each stretch, as `choose_rotary` gives them for a whole program; chosen for this operation alone
+        if not given.
 
     Returns
     -------
@@ -116,22 +178,21 @@ def axis_path(
     stand = None if start_words is None else _with_this_cutter(job, operation, start_words)
     parts: list[Blocks] = []
     notes: dict[str, None] = {}
-    rotary = np.zeros(kinematics.rotary_count) if stand is None else stand[3:]
     start = stand
-    for number, stretch in enumerate(cutter_path.stretches):
-        rotary_words = branches.choose(
-            kinematics, stretch.axis, rotary, CROSS_SHARE * budget.axis_rad, budget.axis_rad, stretch.tip_mm
-        )
-        notes.update(dict.fromkeys(rotary_words.notes))
-        cut, first = stretch_blocks(
-            job, operation, kinematics, digits, budget, stretch, rotary_words.rotary_deg
-        )
-        if stand is None:
-            stand = start = hops.first_stand(first)
-        lead_in = hops.first(stand, first) if number == 0 else hops.between(stand, first)
-        parts += [lead_in, cut]
-        stand = cut.words[-1] if len(cut.words) else first
-        rotary = stand[3:]
+    if chosen is None:
+        chosen = choose_rotary(job, [cutter_path], None if stand is None else stand[3:])[0]
+    for stretch, words in zip(cutter_path.stretches, chosen, strict=True):
+        notes.update(dict.fromkeys(words.notes))
+        for run in words.runs:
+            piece = _rows(stretch, run)
+            cut, first = stretch_blocks(job, operation, kinematics, digits, budget, piece, run.rotary_deg)
+            if stand is None:
+                stand = start = hops.first_stand(first)
+            parts += [hops.between(stand, first) if parts else hops.first(stand, first), cut]
+            stand = cut.words[-1] if len(cut.words) else first
+    rewinds = sum(len(words.runs) - 1 for words in chosen)
+    if rewinds:
+        notes[f"the cutter is lifted {rewinds} times more so that an axis can turn back inside its limits"] = None
     if stand is None or start is None:
         raise CannotPlan("cutter path", f"operation {operation.index} has no motion to post")
     parts.append(hops.leave(stand, home=last))
@@ -149,6 +210,23 @@ def axis_path(
         pass_index=frozen_array(blocks.pass_index, np.int64),
         start=frozen_array(start),
         notes=tuple(notes),
+        arcs=None if blocks.arcs is None else frozen_array(blocks.arcs),
+    )
+
+
+def _rows(stretch: Stretch, run: Run) -> Stretch:
+    """The rows of a stretch that are one run."""
+    if run.first == 0 and run.last == len(stretch.purpose) - 1:
+        return stretch
+    rows = slice(run.first, run.last + 1)
+    return Stretch(
+        tip_mm=stretch.tip_mm[rows],
+        axis=stretch.axis[rows],
+        contact_mm=stretch.contact_mm[rows],
+        normal=stretch.normal[rows],
+        purpose=stretch.purpose[rows],
+        pass_index=stretch.pass_index[rows],
+        feed_mm_min=stretch.feed_mm_min[rows],
     )
 
 
@@ -191,9 +269,12 @@ def stretch_blocks(
     leaves_scallop = np.asarray(stretch.purpose) <= Purpose.OVERRUN
     budgets = np.where(leaves_scallop, budget.point_mm, budget.link_mm)
     normal = np.ascontiguousarray(stretch.normal)
+    if operation.arcs and not np.ptp(rot, axis=0).any() and float(np.ptp(axis, axis=0).max()) < SAME_DIRECTION_RAD:
+        return _arc_blocks(kinematics, digits, budget, stretch, point, rot, budgets), first
     row, share, words, failed, off, turned = _kernels.subdivide(
         kinematics.chain, kinematics.base, height, budget.lever_mm, point, axis, rot, rate, 1.0 / digits.angle_step_deg,
-        normal, budget.point_mm / budget.sideways_mm, budget.lever_mm == 0.0, budgets, budget.axis_rad + slack, slack, POLE_RAD, SUBDIVISION_CAP,
+        normal, budget.point_mm / budget.sideways_mm, budget.lever_mm == 0.0, budgets, budget.axis_rad + slack, slack,
+        POLE_RAD, SUBDIVISION_CAP,
     )  # fmt: skip
     if failed >= 0:
         raise _too_many(stretch, failed, off, turned, budget)
@@ -209,6 +290,36 @@ def stretch_blocks(
         pass_index=np.asarray(stretch.pass_index)[row],
     )
     return made.moving(first), first
+
+
+def _arc_blocks(
+    kinematics: Kinematics,
+    digits: Digits,
+    budget: Budget,
+    stretch: Stretch,
+    point: Floats,
+    rot: Floats,
+    budgets: Floats,
+) -> Blocks:
+    """Blocks of a stretch on which no rotary axis moves, as arcs where they keep to the path of the reference point."""
+    height = float(np.linalg.norm(point[0] - stretch.tip_mm[0]))
+    places = kinematics.place(point, rot, height)
+    normal = kinematics.place(point + stretch.normal, rot, height)[:, :3] - places[:, :3]
+    words = digits.round_words(places)
+    row, arcs = fit_arcs(
+        places[:, :3], normal, words[:, :3], np.asarray(stretch.purpose), np.asarray(stretch.pass_index),
+        budgets + math.sqrt(0.75) * digits.length_step_mm, budget.point_mm / budget.sideways_mm, digits.length_step_mm,
+        bowed=budget.lever_mm == 0.0, inch=digits.unit_mm != 1.0,
+    )  # fmt: skip
+    spent = np.cumsum(row_minutes(stretch, point))
+    return Blocks(
+        words=words[row],
+        rapid=np.zeros(len(row), dtype=np.bool_),
+        minutes=np.diff(spent[row], prepend=0.0),
+        purpose=np.asarray(stretch.purpose)[row],
+        pass_index=np.asarray(stretch.pass_index)[row],
+        arcs=arcs,
+    ).moving(words[0])
 
 
 def row_minutes(stretch: Stretch, point: Floats) -> Floats:

@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from anticlast.machine.kinematics import Kinematics, limit_arrays
+from anticlast.posting.arcs import arc_length_mm
 from anticlast.records import Bools, Bytes, Floats, Ints, Job
 from anticlast.tolerances import LIMIT_MM
 
@@ -65,13 +66,22 @@ class Digits:
 
 @dataclass(frozen=True, slots=True)
 class Blocks:
-    """Blocks in order; fields as in ``records.AxisPath``. ``minutes`` is what the feed asks for, 0 on rapids."""
+    """Blocks in order; fields as in ``records.AxisPath``. ``minutes`` is what the feed asks for, 0 on rapids.
+
+    ``arcs`` None: every block is a straight move.
+    """
 
     words: Floats
     rapid: Bools
     minutes: Floats
     purpose: Bytes
     pass_index: Ints
+    arcs: Floats | None = None
+
+    @property
+    def arc_rows(self) -> Floats:
+        """``arcs``, or the (n, 5) zeros that stand for straight moves."""
+        return np.zeros((len(self.words), 5)) if self.arcs is None else self.arcs
 
     def moving(self, before: Floats | None) -> Blocks:
         """Leave out blocks that end where the one before ended; their time goes to the next block.
@@ -91,7 +101,8 @@ class Blocks:
             to = np.searchsorted(kept, np.arange(len(keep)))
             inside = to < len(kept)
             np.add.at(minutes, to[inside], self.minutes[inside])
-        return Blocks(self.words[keep], self.rapid[keep], minutes, self.purpose[keep], self.pass_index[keep])
+        arcs = None if self.arcs is None else self.arcs[keep]
+        return Blocks(self.words[keep], self.rapid[keep], minutes, self.purpose[keep], self.pass_index[keep], arcs)
 
 
 def joined(parts: Sequence[Blocks]) -> Blocks:
@@ -102,6 +113,7 @@ def joined(parts: Sequence[Blocks]) -> Blocks:
         np.concatenate([part.minutes for part in parts]),
         np.concatenate([part.purpose for part in parts]),
         np.concatenate([part.pass_index for part in parts]),
+        np.concatenate([part.arc_rows for part in parts]) if any(part.arcs is not None for part in parts) else None,
     ).moving(None)
 
 
@@ -124,13 +136,18 @@ def time_blocks(blocks: Blocks, start: Floats, job: Job) -> Blocks:
     """
     machine = job.machine
     step = np.abs(np.diff(blocks.words, axis=0, prepend=start[None, :]))
+    along = np.linalg.norm(step[:, :3], axis=1)
+    if blocks.arcs is not None:
+        along = arc_length_mm(blocks.arcs, step[:, :3])
+        # Somewhere on it each axis of an arc's plane may go as fast as the arc.
+        step[:, :3] = np.where(blocks.arcs[:, :1] > 0.0, along[:, None], step[:, :3])
     feed = np.array([axis.feed for axis in machine.axes])
     rapid = np.array([axis.rapid for axis in machine.axes])
     minutes = np.maximum(blocks.minutes, (step / feed).max(axis=1))
     if machine.control.block_rate > 0.0:
         minutes = np.maximum(minutes, 1.0 / (60.0 * machine.control.block_rate))
     if not _inverse(blocks, step, job):
-        along = np.linalg.norm(step[:, :3], axis=1) / Digits.of(job).unit_mm
+        along = along / Digits.of(job).unit_mm
         around = np.linalg.norm(step[:, 3:], axis=1)
         counted = np.where(along > 0.0, along, around)
         least = 10.0**-machine.control.feed_decimals
@@ -145,7 +162,8 @@ def split_long(blocks: Blocks, start: Floats, job: Job, digits: Digits) -> Block
     longest = 10.0**job.machine.control.feed_decimals
     if not _inverse(blocks, step, job):
         return blocks
-    parts = np.where(blocks.rapid, 1, np.ceil(blocks.minutes / longest)).astype(np.int64)
+    whole = blocks.rapid | (blocks.arc_rows[:, 0] > 0.0)
+    parts = np.where(whole, 1, np.ceil(blocks.minutes / longest)).astype(np.int64)
     if parts.max(initial=1) == 1:
         return blocks
     row = np.repeat(np.arange(len(parts)), parts)
@@ -157,6 +175,7 @@ def split_long(blocks: Blocks, start: Floats, job: Job, digits: Digits) -> Block
         blocks.minutes[row] / parts[row],
         blocks.purpose[row],
         blocks.pass_index[row],
+        None if blocks.arcs is None else blocks.arcs[row],
     )
 
 

@@ -25,12 +25,12 @@ from anticlast.file_schema import (
     needed_option,
     unknown_key,
 )
-from anticlast.records import Axis, Control, Machine, Spindle
+from anticlast.records import Axis, Control, Machine, Spindle, Times
 from anticlast.toml_lines import Source
 
 LINEAR: Final = ("X", "Y", "Z")
 _KINDS: Final = ("linear", "rotary")
-MACHINE_TABLES: Final = ("machine", "axis", "spindle", "control")
+MACHINE_TABLES: Final = ("machine", "axis", "spindle", "control", "times")
 
 Coordinate = Annotated[float, Quantity("length", -5000, 5000)]
 Angle = Annotated[float, Quantity("degrees", -36000, 36000)]
@@ -105,6 +105,14 @@ class ControlTable(FileTable):
     program_end: Literal["M2", "M30"] = "M2"
 
 
+class TimesTable(FileTable):
+    """``[times]``."""
+
+    tool_change: Annotated[float, Quantity("s", 0, 3600)] = 0.0
+    spindle_start: Annotated[float, Quantity("s", 0, 3600)] = 0.0
+    coolant: Annotated[float, Quantity("s", 0, 3600)] = 0.0
+
+
 def machine_from(source: Source, name: str, path: Path) -> Machine:
     """Check a machine file's data and make the record.
 
@@ -138,6 +146,7 @@ def machine_from(source: Source, name: str, path: Path) -> Machine:
     axes = _axes(source, units)
     spindle = _spindle(source, units)
     control, decimals = _control(source, units)
+    times = check_table(source, ("times",), source.data.get("times", {}), TimesTable, units)
     if source.faults:
         raise BadInput(sorted(source.faults, key=lambda fault: fault.line))
     assert head is not None, "a missing [machine] is a fault"
@@ -160,6 +169,7 @@ def machine_from(source: Source, name: str, path: Path) -> Machine:
             program_end=table.program_end,
         ),
         source=path,
+        times=Times(times.table.tool_change, times.table.spindle_start, times.table.coolant),
     )
 
 

@@ -71,7 +71,7 @@ def _entry(line, pose, disc, corner, below):
 @numba.njit(cache=True, nogil=True)
 def _pose(table, at, pose):
     """Fill pose (6,) with row ``at`` (a float) of a table (n, 6): cubic through the four rows about it."""
-    i = min(max(int(math.floor(at)) - 1, 0), table.shape[0] - 4)
+    i = min(max(math.floor(at) - 1, 0), table.shape[0] - 4)
     t = at - i
     a, b, c, d = t, t - 1.0, t - 2.0, t - 3.0
     w0, w1, w2, w3 = -b * c * d / 6.0, 0.5 * a * c * d, -0.5 * a * b * d, a * b * c / 6.0
@@ -82,18 +82,35 @@ def _pose(table, at, pose):
 
 
 @numba.njit(cache=True, nogil=True)
-def _left(line, table, low, high, tool, pose):
+def _lowered(line, pose, tool, below, at, tilt):
+    """Return the entry of one pose, less what a tilt error about its contact may lower the cutter there.
+
+    tilt (4,) is the error [rad], the row whose contact is abreast of the line, and the distances along the surface per row, and
+    across it. An error about the contact lowers a place by error times distance, in its worst direction.
+    """
+    if tilt[0] == 0.0:
+        return _entry(line, pose, tool[0], tool[1], below)
+    ahead = (at - tilt[1]) * tilt[2]
+    down = tilt[0] * math.sqrt(ahead * ahead + tilt[3] * tilt[3])
+    return _entry(line, pose, tool[0], tool[1], below + down) - down
+
+
+@numba.njit(cache=True, nogil=True)
+def _left(line, table, low, high, tool, pose, tilt):
     """Return (height, row) that a pass leaves on a line: the lowest entry over rows low to high of its table.
 
-    All whole rows first, for the front and the rear of the bottom may both come near; then a golden section about
-    the lowest, which a flat end mill's sharp edge (a kink) does not disturb.
+    All whole rows first, from the middle outwards, for the front and the rear of the bottom may both come near; then a golden
+    section about the lowest, which a flat end mill's sharp edge (a kink) does not disturb.
     """
-    disc, corner = tool[0], tool[1]
     best, row = np.inf, -1
-    for i in range(low, high + 1):
+    middle = (low + high) // 2
+    for n in range(2 * (high - low) + 2):
+        i = middle + (n // 2 + 1 if n % 2 == 0 else -(n // 2))
+        if i < low or i > high:
+            continue
         for k in range(6):
             pose[k] = table[i, k]
-        h = _entry(line, pose, disc, corner, best)
+        h = _lowered(line, pose, tool, best, float(i), tilt)
         if h < best:
             best, row = h, i
     if row < 0:
@@ -101,9 +118,9 @@ def _left(line, table, low, high, tool, pose):
     first, last = float(max(row - 1, low)), float(min(row + 1, high))
     b, c = last - _GOLDEN * (last - first), first + _GOLDEN * (last - first)
     _pose(table, b, pose)
-    hb = _entry(line, pose, disc, corner, np.inf)
+    hb = _lowered(line, pose, tool, np.inf, b, tilt)
     _pose(table, c, pose)
-    hc = _entry(line, pose, disc, corner, np.inf)
+    hc = _lowered(line, pose, tool, np.inf, c, tilt)
     at = float(row)
     for _ in range(int(tool[2])):
         if hb <= hc:
@@ -112,20 +129,22 @@ def _left(line, table, low, high, tool, pose):
             last, c, hc = c, b, hb
             b = last - _GOLDEN * (last - first)
             _pose(table, b, pose)
-            hb = _entry(line, pose, disc, corner, np.inf)
+            hb = _lowered(line, pose, tool, np.inf, b, tilt)
         else:
             if hc < best:
                 best, at = hc, c
             first, b, hb = b, c, hc
             c = first + _GOLDEN * (last - first)
             _pose(table, c, pose)
-            hc = _entry(line, pose, disc, corner, np.inf)
+            hc = _lowered(line, pose, tool, np.inf, c, tilt)
     return best, at
 
 
 @numba.njit(cache=True, nogil=True)
-def profiles(form, tool, u, v, aside, tables, step, height, shift):
-    """Fill height and shift (n, m) [mm]: what each pass leaves beside its line, and how far ahead it is cut.
+def profiles(form, tool, u, v, aside, tables, step, error, scale, height, shift, lowered):
+    """Fill height, shift and lowered (n, m) [mm]: what each pass leaves beside its line, and how far ahead it is cut.
+
+    ``lowered`` is what it leaves under a tilt error about the contact, in the worst direction for each place.
 
     Parameters
     ----------
@@ -138,15 +157,25 @@ def profiles(form, tool, u, v, aside, tables, step, height, shift):
     tables : (n, p, 6)
     step : float
         Plan distance between contacts of neighbouring rows.
+    error : float
+        Tilt error [rad].
+    scale : (n, 2)
+        Surface distance per plan distance, along the feed and across it.
     """
     line, pose = np.empty(6), np.empty(6)
+    tilt, upright = np.empty(4), np.zeros(4)
     last = tables.shape[1] - 1
     for k in range(len(u)):
+        tilt[0], tilt[1], tilt[2] = error, 0.5 * last, step * scale[k, 0]
         for j in range(len(aside)):
             _ground(form, u[k], v[k] + aside[j], line)
-            h, at = _left(line, tables[k], 0, last, tool, pose)
+            h, at = _left(line, tables[k], 0, last, tool, pose, upright)
             height[k, j] = h
             shift[k, j] = (at - 0.5 * last) * step
+            tilt[3] = aside[j] * scale[k, 1]
+            lowered[k, j] = h
+            if error > 0.0:
+                lowered[k, j], _ = _left(line, tables[k], 0, last, tool, pose, tilt)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -160,13 +189,13 @@ def heights(form, tool, u, v, table, start, step, reach, height):
     reach : float
         How far before and behind a point rows are looked at.
     """
-    line, pose = np.empty(6), np.empty(6)
+    line, pose, upright = np.empty(6), np.empty(6), np.zeros(4)
     last = table.shape[0] - 1
     for k in range(len(u)):
-        low = min(max(int(math.floor((u[k] - reach - start) / step)), 0), last - 3)
-        high = max(min(int(math.ceil((u[k] + reach - start) / step)), last), low + 3)
+        low = min(max(math.floor((u[k] - reach - start) / step), 0), last - 3)
+        high = max(min(math.ceil((u[k] + reach - start) / step), last), low + 3)
         _ground(form, u[k], v[k], line)
-        height[k], _ = _left(line, table, low, high, tool, pose)
+        height[k], _ = _left(line, table, low, high, tool, pose, upright)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -182,18 +211,18 @@ def ridges(form, tool, u, lower, upper, first, second, start, step, reach, round
     start : (2,)
         Where their contacts start.
     """
-    line, pose = np.empty(6), np.empty(6)
+    line, pose, upright = np.empty(6), np.empty(6), np.zeros(4)
     for k in range(len(u)):
         low, high = lower[k], upper[k]
         for _ in range(rounds):
             v = 0.5 * (low + high)
             _ground(form, u[k], v, line)
-            i0 = min(max(int(math.floor((u[k] - reach - start[0]) / step)), 0), first.shape[0] - 4)
-            i1 = max(min(int(math.ceil((u[k] + reach - start[0]) / step)), first.shape[0] - 1), i0 + 3)
-            j0 = min(max(int(math.floor((u[k] - reach - start[1]) / step)), 0), second.shape[0] - 4)
-            j1 = max(min(int(math.ceil((u[k] + reach - start[1]) / step)), second.shape[0] - 1), j0 + 3)
-            below, _ = _left(line, first, i0, i1, tool, pose)
-            above, _ = _left(line, second, j0, j1, tool, pose)
+            i0 = min(max(math.floor((u[k] - reach - start[0]) / step), 0), first.shape[0] - 4)
+            i1 = max(min(math.ceil((u[k] + reach - start[0]) / step), first.shape[0] - 1), i0 + 3)
+            j0 = min(max(math.floor((u[k] - reach - start[1]) / step), 0), second.shape[0] - 4)
+            j1 = max(min(math.ceil((u[k] + reach - start[1]) / step), second.shape[0] - 1), j0 + 3)
+            below, _ = _left(line, first, i0, i1, tool, pose, upright)
+            above, _ = _left(line, second, j0, j1, tool, pose, upright)
             if below < above:
                 low = v
             else:

@@ -169,7 +169,12 @@ def most_convex_direction_rad(saddle: Saddle, outline: Outline) -> float:
 
 
 def _ball_measure(
-    saddle: Saddle, outline: Outline, radius_mm: float, scallop_mm: float, spacing: Spacing, allowance_mm: float
+    saddle: Saddle,
+    outline: Outline,
+    radius_mm: float,
+    scallop_mm: float,
+    spacing: Spacing,
+    allowance_mm: float,
 ) -> Callable[[float], float]:
     """Return the cut length [mm] as a function of the direction [rad]."""
     if spacing not in get_args(Spacing):
@@ -205,7 +210,7 @@ def _by_pass(frame: PassFrame, outline: Outline, scallop_mm: float) -> float:
     """
     low, high = outline.v_range(frame.direction_rad)
     gap = (high - low) / _LEVELS
-    levels = low + gap * (np.arange(_LEVELS) + 0.5)
+    levels = np.linspace(low + 0.5 * gap, high - 0.5 * gap, _LEVELS)
     index, u0, u1 = outline.clip_lines(frame.direction_rad, levels)
     owner, u = spread(u0, u1, _SAMPLE_MM)
     crowding = frame.crowding(u, levels[index[owner]])

@@ -7,13 +7,14 @@ then stands no higher than the limit beside the line is the strip. The widest st
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Callable
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from anticlast.passes.cusp import plan_of
 from anticlast.passes.profile import Sweep, osculating_lead_rad
-from anticlast.records import Floats, Ints
+from anticlast.records import Bools, Floats, Ints
 
 # Below this lead the rear of a flat bottom stands so low that it rubs on chips: its height over a 6 mm bottom is 26 micrometres.
 LEAST_LEAD_RAD = math.radians(0.25)
@@ -26,11 +27,13 @@ _MOST_LEAD_RAD = math.radians(50.0)
 _MIDDLE_SHARE = 0.9
 # Leads asked first where the machine reaches every axis, as shares of the one that osculates; then between the best two.
 _SHARES = np.array([0.3, 0.45, 0.6, 0.8, 1.0, 1.3, 1.8, 3.0, 6.0, 12.0, 24.0])
-_LEADS_ASKED = 18
-_SECTIONS = 12
+_LEADS_ASKED = 14
+_SECTIONS = 11
 _GOLDEN = 0.6180339887498949
-# Profile samples to either side of the line.
-_SIDE = 20
+# Profile samples to either side of the line, dense beside it: a contact near the rim of the bottom leaves narrow strips.
+_SIDE = 22
+_CROWDING = 1.6
+_FURTHEST = 0.995
 _FAR_MM = 1e3
 # Where the sample past the limit stands higher than this many limits, a parabola through it says nothing.
 _STEEP = 50.0
@@ -95,14 +98,15 @@ class Strips:
     worth: Floats
 
 
-def strips_of(height: Floats, shift: Floats, aside_mm: Floats, across: Floats, demand: Demand) -> Strips:
-    """Return the strips of profiles (n, m), sampled at plan distances (m,) with the line in the middle.
-
-    A tilt error about the contact moves each place of the bottom along the normal by the error times its distance from the
-    contact, to first order in the error (the lowest pose stays lowest); the worst direction of the error is taken.
+def strips_of(
+    height: Floats, shift: Floats, lowered: Floats, aside_mm: Floats, across: Floats, demand: Demand
+) -> Strips:
+    """Return the strips of profiles (n, m), sampled at the plan distances (m,) of `sides`.
 
     Parameters
     ----------
+    height, shift, lowered : (n, m)
+        As `Sweep.profiles` has them.
     across : (n,)
         Surface distance per plan distance across the feed.
     """
@@ -111,8 +115,8 @@ def strips_of(height: Floats, shift: Floats, aside_mm: Floats, across: Floats, d
     lowest = _parabolic_lowest(height)
     lift = np.maximum(-lowest, 0.0)
     risen = height + lift[:, None]
-    left, last = _crossing(risen[:, middle:], aside_mm[middle:], demand.height_mm)
-    right, first = _crossing(risen[:, middle::-1], -aside_mm[middle::-1], demand.height_mm)
+    left, last = _crossing(risen[:, middle:], aside_mm[-1], demand.height_mm)
+    right, first = _crossing(risen[:, middle::-1], aside_mm[-1], demand.height_mm)
     places = np.arange(aside_mm.size)
     inside = (places >= middle - first[:, None]) & (places <= middle + last[:, None])
     low_left = middle + np.argmin(risen[:, middle:], axis=1)
@@ -121,18 +125,16 @@ def strips_of(height: Floats, shift: Floats, aside_mm: Floats, across: Floats, d
     bump = np.max(np.where(between, risen, 0.0), axis=1)
     arm = np.hypot(shift, aside_mm * across[:, None])
     near = np.abs(places - middle) <= np.maximum(first, last)[:, None] + 1
-    gouge = np.max(np.where(near, demand.margin_rad * arm - risen, 0.0), axis=1)
-    told = np.max(np.where(near, TOLD_ERROR_RAD * arm - risen, 0.0), axis=1)
-    shift_in = np.where(inside, shift, 0.0)
-    arm_in = np.max(np.where(inside, arm, 0.0), axis=1)
+    gouge = np.max(np.where(near, -lowered - lift[:, None], 0.0), axis=1)
     # Below 0: what is not kept, as a share; above: the width of the strip.
     over = np.maximum(bump / (_MIDDLE_SHARE * demand.height_mm), gouge / demand.gouge_mm)
     worth = np.where(over <= 1.0, left + right, -np.minimum(over, _FAR_MM))
     kept = worth > 0.0
-    return Strips(
-        lift, np.where(kept, left, 0.0), np.where(kept, right, 0.0), bump,
-        shift_in.max(axis=1), -shift_in.min(axis=1), arm_in, gouge, told, worth,
-    )  # fmt: skip
+    inside &= kept[:, None]
+    shift = np.where(inside, shift, 0.0)
+    arm = np.max(np.where(inside, arm, 0.0), axis=1)
+    left, right = np.where(kept, left, 0.0), np.where(kept, right, 0.0)
+    return Strips(lift, left, right, bump, shift.max(axis=1), -shift.min(axis=1), arm, gouge, gouge, worth)
 
 
 def _parabolic_lowest(height: Floats) -> Floats:
@@ -145,8 +147,14 @@ def _parabolic_lowest(height: Floats) -> Floats:
     return np.minimum(height.min(axis=1), b - np.minimum(dip, 0.25 * np.abs(bend)))
 
 
-def _crossing(height: Floats, aside: Floats, limit_mm: float) -> tuple[Floats, Floats]:
-    """Return where rows (n, m), from the line outwards, first pass the limit, and the last sample before.
+def sides(furthest_mm: float) -> Floats:
+    """Return plan distances (2 _SIDE + 1,) from the line at which profiles are sampled, up to the furthest either way."""
+    share = np.linspace(-1.0, 1.0, 2 * _SIDE + 1)
+    return furthest_mm * np.sign(share) * np.abs(share) ** _CROWDING
+
+
+def _crossing(height: Floats, furthest_mm: float, limit_mm: float) -> tuple[Floats, Ints]:
+    """Return where rows (n, _SIDE + 1), from the line outwards, first pass the limit, and the last sample before.
 
     Between samples by a parabola through the two before and the one after, which is exact enough where the profile turns up.
     """
@@ -155,7 +163,6 @@ def _crossing(height: Floats, aside: Floats, limit_mm: float) -> tuple[Floats, F
     after = np.argmax(over, axis=1)
     rows = np.arange(len(height))
     last = np.maximum(after - 1, 0)
-    step = aside[1] - aside[0]
     h0, h1, h2 = (
         height[rows, np.maximum(last - 1, 0)],
         height[rows, last],
@@ -166,7 +173,7 @@ def _crossing(height: Floats, aside: Floats, limit_mm: float) -> tuple[Floats, F
     root = slope + np.sqrt(np.maximum(slope * slope - 4.0 * bend * (h1 - limit_mm), 0.0))
     curved = (last > 0) & (root > 0.0) & (h2 < _STEEP * limit_mm)
     share = np.where(curved, np.clip(2.0 * (limit_mm - h1) / np.where(curved, root, 1.0), 0.0, 1.0), straight)
-    return np.where(after == 0, 0.0, aside[last] + share * step), last
+    return np.where(after == 0, 0.0, furthest_mm * ((last + share) / _SIDE) ** _CROWDING), last
 
 
 @dataclass(frozen=True, slots=True)
@@ -198,10 +205,10 @@ class Fit:
         lead, lean = self.family.wish(self.at(self.angle_rad[way], u_mm, v_mm))
         return lead, lean, np.maximum(self.at(self.strips.lift_mm[way], u_mm, v_mm), 0.0)
 
-    def reach(self, u_mm: Floats, v_mm: Floats) -> tuple[Floats, Floats]:
-        """Return how far strips reach to +v and to -v (n,) [mm], the lesser of the ways."""
-        left = [self.at(field, u_mm, v_mm) for field in self.strips.left_mm]
-        right = [self.at(field, u_mm, v_mm) for field in self.strips.right_mm]
+    def reach(self, ways: tuple[int, ...], u_mm: Floats, v_mm: Floats) -> tuple[Floats, Floats]:
+        """Return how far strips reach to +v and to -v (n,) [mm], the lesser of some ways (indices)."""
+        left = [self.at(self.strips.left_mm[way], u_mm, v_mm) for way in ways]
+        right = [self.at(self.strips.right_mm[way], u_mm, v_mm) for way in ways]
         return np.maximum(np.min(left, axis=0), 0.0), np.maximum(np.min(right, axis=0), 0.0)
 
     def at(self, field: Floats, u_mm: Floats, v_mm: Floats) -> Floats:
@@ -224,6 +231,13 @@ def _weights(nodes: Floats, at: Floats) -> tuple[Ints, Floats]:
     return i, np.stack((-b * c * d / 6.0, 0.5 * a * c * d, -0.5 * a * b * d, a * b * c / 6.0))
 
 
+def changes_axis(sweep: Sweep, u_mm: Floats, v_mm: Floats, family: Family) -> bool:
+    """Tell whether the sought angle of a family turns the machine's axis at stations (n,)."""
+    wishes = [family.wish(np.full(u_mm.size, math.radians(angle))) for angle in (5.0, 15.0)]
+    first, second = (sweep.poses(u_mm, v_mm, 1, lead, lean, 0.0)[1] for lead, lean in wishes)
+    return bool(np.max(np.abs(first - second)) > math.radians(0.5))
+
+
 def reaches_all(sweep: Sweep, u_mm: Floats, v_mm: Floats) -> bool:
     """Tell whether the machine reaches small leads and leans all over stations (n,)."""
     ones = np.ones(u_mm.size)
@@ -236,63 +250,70 @@ def reaches_all(sweep: Sweep, u_mm: Floats, v_mm: Floats) -> bool:
 
 
 def fit(
-    sweep: Sweep,
-    u_nodes: Floats,
-    v_nodes: Floats,
-    ways: tuple[int, ...],
-    family: Family,
-    demand: Demand,
-    relative: bool,
-) -> Fit:
+    sweep: Sweep, u_nodes: Floats, v_nodes: Floats, ways: tuple[int, ...], family: Family, demand: Demand,
+    counts: Bools, relative: bool,
+) -> Fit:  # fmt: skip
     """Return the leads of widest strips at all stations.
 
     Parameters
     ----------
     u_nodes, v_nodes : (nu,), (nv,)
     ways : tuple of +1, -1
+    counts : (nv, nu) bool
+        Stations that matter.
     relative : bool
-        Look for the lead about the one that osculates, rather than over the whole range.
+        True: each station has its own angle, looked for about the lead that osculates. False: one angle for every line of
+        stations along the feed, of all small and large ones the best at the line's worst station.
     """
     way = np.repeat(np.array(ways, dtype=np.float64), u_nodes.size * v_nodes.size)
     v, u = (np.tile(grid.ravel(), len(ways)) for grid in np.meshgrid(v_nodes, u_nodes, indexing="ij"))
     xy = plan_of(u, v, sweep.direction_rad)
-    k_t, k_b, tau, tangent, _ = sweep.saddle.along(xy, sweep.direction_rad)
+    k_t, k_b, _, tangent, _ = sweep.saddle.along(xy, sweep.direction_rad)
     across = sweep.saddle.stretch(xy) * np.linalg.norm(tangent[:, :2], axis=1)
-    aside = np.linspace(-1.0, 1.0, 2 * _SIDE + 1) * 0.995 * sweep.cutter.radius_mm / float(across.max())
+    aside = sides(_FURTHEST * sweep.cutter.radius_mm / float(across.max()))
+    shape = (len(ways), v_nodes.size, u_nodes.size)
+    members = 1 if relative else u_nodes.size
+    matter = np.tile(counts.ravel(), len(ways)).reshape(-1, members)
+    matter |= ~matter.any(axis=1, keepdims=True)
 
-    def ask(angle: Floats, rows: np.ndarray | slice = slice(None)) -> Strips:
-        lead, lean = family.wish(angle)
-        height, shift = sweep.profiles(u[rows], v[rows], way[rows], lead, lean, aside)
-        return strips_of(height, shift, aside, across[rows], demand)
+    def ask(angle: Floats, error_rad: float = demand.margin_rad) -> Strips:
+        lead, lean = family.wish(np.repeat(angle, members))
+        return strips_of(*sweep.profiles(u, v, way, lead, lean, aside, error_rad), aside, across, demand)
+
+    def worth(angle: Floats) -> Floats:
+        return np.where(matter, ask(angle).worth.reshape(-1, members), np.inf).min(axis=1)
 
     least = max(demand.least_rad, LEAST_LEAD_RAD)
     if relative:
+        curvature = np.maximum(k_b, k_t)
         start = np.maximum(
-            osculating_lead_rad(sweep.disc_mm, sweep.cutter.corner_radius_mm, np.maximum(k_b, k_t)), least
+            osculating_lead_rad(sweep.disc_mm, sweep.cutter.corner_radius_mm, curvature), least
         )
-        angles = np.clip(start[:, None] * _SHARES, least, _MOST_LEAD_RAD)
+        angles = np.clip(start[:, None] * _SHARES, least, max(_MOST_LEAD_RAD, least))
     else:
-        angles = np.broadcast_to(
-            np.geomspace(least, max(_MOST_LEAD_RAD, 1.01 * least), _LEADS_ASKED), (u.size, _LEADS_ASKED)
-        )
-    worth = np.stack([ask(np.ascontiguousarray(column)).worth for column in angles.T], axis=1)
-    best = np.argmax(worth, axis=1)
-    rows = np.arange(u.size)
+        asked = np.geomspace(least, max(_MOST_LEAD_RAD, least), _LEADS_ASKED)
+        angles = np.broadcast_to(asked, (len(matter), _LEADS_ASKED))
+    found = np.stack([worth(np.ascontiguousarray(column)) for column in angles.T], axis=1)
+    best = np.argmax(found, axis=1)
+    rows = np.arange(len(matter))
     low, high = angles[rows, np.maximum(best - 1, 0)], angles[rows, np.minimum(best + 1, angles.shape[1] - 1)]
-    chosen = _sectioned(ask, low, high, angles[rows, best], worth[rows, best])
+    chosen = _sectioned(worth, low, high, angles[rows, best], found[rows, best])
     strips = ask(chosen)
-    shape = (len(ways), v_nodes.size, u_nodes.size)
-    lead, lean = family.wish(chosen)
-    _, axis = sweep.poses(u, v, way, lead, lean, 0.0)
+    if demand.margin_rad != TOLD_ERROR_RAD:
+        strips = replace(strips, told_gouge_mm=ask(chosen, TOLD_ERROR_RAD).margin_gouge_mm)
+    angle = np.repeat(chosen, members)
+    _, axis = sweep.poses(u, v, way, *family.wish(angle), 0.0)
     reached = np.stack(sweep.reached(u, v, way, axis)).reshape(2, *shape)
     fields = {name: getattr(strips, name).reshape(shape) for name in Strips.__slots__}
-    return Fit(u_nodes, v_nodes, family, chosen.reshape(shape), Strips(**fields), reached)
+    return Fit(u_nodes, v_nodes, family, angle.reshape(shape), Strips(**fields), reached)
 
 
-def _sectioned(ask, low: Floats, high: Floats, best: Floats, worth: Floats) -> Floats:
+def _sectioned(
+    worth_of: Callable[[Floats], Floats], low: Floats, high: Floats, best: Floats, worth: Floats
+) -> Floats:
     """Return the angles (n,) of most worth between low and high, by golden section; the best asked is kept."""
     b, c = high - _GOLDEN * (high - low), low + _GOLDEN * (high - low)
-    at_b, at_c = ask(b).worth, ask(c).worth
+    at_b, at_c = worth_of(b), worth_of(c)
     for _ in range(_SECTIONS):
         for angle, value in ((b, at_b), (c, at_c)):
             better = value > worth
@@ -301,6 +322,6 @@ def _sectioned(ask, low: Floats, high: Floats, best: Floats, worth: Floats) -> F
         low, high = np.where(down, low, b), np.where(down, c, high)
         fresh = np.where(down, high - _GOLDEN * (high - low), low + _GOLDEN * (high - low))
         b, c = np.where(down, fresh, c), np.where(down, b, fresh)
-        value = ask(fresh).worth
+        value = worth_of(fresh)
         at_b, at_c = np.where(down, value, at_c), np.where(down, at_b, value)
     return best

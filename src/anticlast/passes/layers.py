@@ -16,7 +16,7 @@ from anticlast.errors import CannotPlan
 from anticlast.passes.rough import limits
 from anticlast.passes.rough.layout import Layer, layout
 from anticlast.passes.rough.peel import SIMPLER_MM, SLIVER_MM, Piece
-from anticlast.passes.rough.track import Track, link_feed_mm_min
+from anticlast.passes.rough.track import Track, track_for
 from anticlast.passes.rough.walk import Walk
 from anticlast.passes.rows import Nearest
 from anticlast.passes.tilt import angle_between
@@ -25,10 +25,8 @@ from anticlast.tolerances import REACH_RAD
 
 # Ways down into stock at half the feed: the bottom cuts as well as the sides (common practice).
 _DESCENT_FEED_SHARE = 0.5
-# More than the clearance, so that what the machine stage adds to the blank's outline does not eat into it (mm).
-_SPARE_MM = 0.3
 # Radii of an arc onto a closed pass, of the cutter's radius, the largest that fits; and places on the pass it is tried at.
-_LEAD_IN_RADII = (2.0, 1.0, 0.5)
+_LEAD_IN_RADII = (2.0, 1.5, 1.0, 0.75, 0.5, 0.35)
 _LEAD_IN_PLACES = 12
 
 
@@ -56,7 +54,7 @@ def plan_layers(job: Job, operation: Operation, nearest_axis: Nearest) -> Cutter
     axis = upright_axis(operation, nearest_axis)
     roughing = [other for other in job.operations if other.does == "rough" and other.index <= operation.index]
     found = layout(job.part, job.stock, tuple(roughing), job.clearance_mm)
-    track = Track(operation, axis, link_feed_mm_min(job, operation))
+    track = track_for(job, operation, axis)
     planner = _Planner(job, operation, track)
     for layer in found.layers:
         planner.cut(layer)
@@ -76,7 +74,7 @@ def plan_layers(job: Job, operation: Operation, nearest_axis: Nearest) -> Cutter
         stepover_mm=(width, width),
         scallop_predicted_mm=0.0,
         chord_mm=SIMPLER_MM,
-        notes=_notes(operation, len(found.layers), found.closed_mm2),
+        notes=_notes(job, operation, len(found.layers), found.closed_mm2),
     )
 
 
@@ -98,9 +96,9 @@ def upright_axis(operation: Operation, nearest_axis: Nearest) -> Floats:
     return wished[0]
 
 
-def _notes(operation: Operation, layers: int, closed_mm2: float) -> tuple[str, ...]:
+def _notes(job: Job, operation: Operation, layers: int, closed_mm2: float) -> tuple[str, ...]:
     """Return what the job should know of the stock that is left."""
-    least, most = operation.allowance_mm, limits.left_mm(operation)
+    least, most = operation.allowance_mm, limits.left_mm(operation, job.part)
     found = [f"{layers} layers; {least:.2f} to {most:.2f} mm are left over the surface, in steps"]
     if closed_mm2 > SLIVER_MM:
         found.append(
@@ -159,11 +157,15 @@ class _Planner:
         if piece.descent is not None:
             track.start(piece.descent[0], self.passes)
             track.cut(piece.descent[1:], self.passes, Purpose.ENTRY, _DESCENT_FEED_SHARE)
+            track.cut(_at(xy, z), self.passes, Purpose.ENTRY)
         else:
             if piece.closed:
                 xy = self._led_in(xy)
+            if not self.walk.is_clear(xy[[0, 0]]):
+                # No arc fits: straight in, no deeper than the width of cut.
+                xy = np.vstack((self._straight_in(xy[0]), xy))
             self._get_to(xy[0], z, above)
-        track.cut(_at(xy, z), self.passes)
+            track.cut(_at(xy, z), self.passes)
         self.walk.cut(piece.swept)
 
     def _led_in(self, ring: Floats) -> Floats:
@@ -194,12 +196,7 @@ class _Planner:
             if way is not None:
                 track.link(_at(way[1:], z), self.passes)
                 return
-        entry = self._entry(start)
-        way = self.walk.way(entry, start)
-        if way is None:
-            entry, way = start, np.array([start, start])
-        track.start([*entry, z], self.passes)
-        track.link(_at(way[1:], z), self.passes)
+        track.start([*start, z], self.passes)
 
     def _down(self, stands: Floats, z: float, above: Walk | None) -> Floats | None:
         """Go down in air to a level from the one above; None if there is no way."""
@@ -214,28 +211,26 @@ class _Planner:
         self.track.link(_at(way[-1:], z), self.passes)
         return np.array([*way[-1], z])
 
-    def _in_air(self, near: Floats) -> Floats | None:
-        """Return the place nearest to one from which the cutter touches nothing on this level."""
+    def _straight_in(self, start: Floats) -> Floats:
+        """Return the nearest place in air from which a straight way to a pass keeps off the surface."""
         assert self.walk is not None
-        air = shapely.buffer(self.walk.air, -2.0 * SLIVER_MM)
+        for place in (self._in_air(start), self._in_air(start, 0.0)):
+            if place is not None and shapely.covers(self.walk.room, shapely.linestrings([place, start])):
+                return place
+        raise CannotPlan(
+            "way to a pass",
+            f"operation {self.operation.index}: no way in air to the roughing pass at ({start[0]:.3f}, {start[1]:.3f}) was found; "
+            "change width_of_cut or depth_of_cut a little",
+        )
+
+    def _in_air(self, near: Floats, inside_mm: float = 2.0 * SLIVER_MM) -> Floats | None:
+        """Return the place nearest to one, well in air, at which the cutter touches nothing on this level."""
+        assert self.walk is not None
+        air = shapely.buffer(self.walk.air, -inside_mm) if inside_mm > 0.0 else self.walk.air
         if air.is_empty:
             return None
         line = shapely.shortest_line(air, shapely.points(near))
         return np.asarray(shapely.get_coordinates(line)[0])
-
-    def _entry(self, start: Floats) -> Floats:
-        """Return where to come down for a pass: as near as the clearance from the blank allows, if outside it."""
-        assert self.walk is not None
-        cutter = self.operation.cutter
-        off = cutter.radius_mm + self.job.clearance_mm + _SPARE_MM
-        for part in shapely.get_parts(self.walk.air):
-            if shapely.distance(part, shapely.points(start)) > SLIVER_MM:
-                continue
-            outside = shapely.difference(part, shapely.buffer(self.job.stock.outline.polygon, off))
-            if not outside.is_empty:
-                line = shapely.shortest_line(outside, shapely.points(start))
-                return np.asarray(shapely.get_coordinates(line)[0])
-        return start
 
 
 def _waits(pieces: tuple[Piece, ...], near_mm: float) -> list[set[int]]:

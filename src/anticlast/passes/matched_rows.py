@@ -8,23 +8,20 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
 
 import numpy as np
 
 from anticlast.errors import CannotPlan
 from anticlast.passes import entry
 from anticlast.passes.cusp import plan_of
-from anticlast.passes.frame import PassFrame
 from anticlast.passes.legs import Legs
+from anticlast.passes.matched_lines import Laid
+from anticlast.passes.matched_task import Task
 from anticlast.passes.profile import Sweep
 from anticlast.passes.tilt import angle_between, turned_between
-from anticlast.records import Bytes, Floats, Ints, Operation, Purpose, Stretch, frozen_array
+from anticlast.records import Bytes, Floats, Ints, Purpose, Stretch, frozen_array
 from anticlast.saddle import Saddle
 from anticlast.tolerances import AXIS_TURN_RAD, MEASURE_MM
-
-if TYPE_CHECKING:
-    from anticlast.passes.matched import Laid
 
 # Places along a pass where its bend is asked (mm), and the least rows on a link.
 _PROBE_MM = 1.0
@@ -33,7 +30,7 @@ _LINK_ROWS = 16
 _RAISES_MM = (0.02, 0.05, 0.1, 0.2, 0.4, 0.8, 1.6)
 # Entries slope at these angles in turn until the bottom is clear. Common practice is to ramp a bull or flat end mill in.
 _SLOPES_DEG = (12.0, 25.0, 50.0, 90.0)
-# The bottom is looked at on this many rings and directions; a place between is off by 0.1 % of the radius' square times curvature.
+# The bottom is looked at on this many rings and directions.
 _RINGS, _DIRECTIONS = 4, 48
 
 
@@ -60,7 +57,8 @@ class _Run:
 def clearance_mm(saddle: Saddle, sweep: Sweep, point: Floats, axis: Floats) -> Floats:
     """Return how far the nearest place of the bottom stands off the surface with its allowance, (n,) [mm]; below 0 inside it.
 
-    Height over the surface divided by its stretch: the distance along the normal to first order, exact at contact.
+    From each place of the disc the corner radius and the allowance are taken off along the normal at the foot, found in three
+    rounds; what is left is height over the surface divided by its stretch, exact at contact.
 
     Parameters
     ----------
@@ -74,19 +72,16 @@ def clearance_mm(saddle: Saddle, sweep: Sweep, point: Floats, axis: Floats) -> F
     rings = sweep.disc_mm * np.arange(_RINGS + 1) / _RINGS
     round_ = np.cos(turn)[:, None, None] * first + np.sin(turn)[:, None, None] * second
     places = (point + rings[:, None, None, None] * round_).reshape(-1, 3)
-    xy = places[:, :2]
-    gap = (places[:, 2] - saddle.height(xy[:, 0], xy[:, 1])) / saddle.stretch(xy)
-    return gap.reshape(-1, len(point)).min(axis=0) - sweep.cutter.corner_radius_mm - sweep.allowance_mm
+    reach = sweep.cutter.corner_radius_mm + sweep.allowance_mm
+    under = places
+    for _ in range(3 if reach > 0.0 else 1):
+        under = places - reach * saddle.normal(under[:, :2])
+    gap = (under[:, 2] - saddle.height(under[:, 0], under[:, 1])) / saddle.stretch(under[:, :2])
+    return gap.reshape(-1, len(point)).min(axis=0)
 
 
 def stretches_of(
-    frame: PassFrame,
-    sweep: Sweep,
-    operation: Operation,
-    laid: Laid,
-    legs: Legs,
-    chords: Chords,
-    rise_mm: float,
+    task: Task, laid: Laid, legs: Legs, chords: Chords, rise_mm: float
 ) -> tuple[tuple[Stretch, ...], float]:
     """Return the stretches, and what chords add to the highest scallop at most [mm]; below 0 where they lower it."""
     parts: list[_Run] = []
@@ -94,29 +89,28 @@ def stretches_of(
     sags: list[float] = []
     for number, purpose in enumerate(legs.purpose):
         if number and legs.stretch[number] != legs.stretch[number - 1]:
-            made.append(_stretch(frame.saddle, sweep, operation, parts, rise_mm))
+            made.append(_stretch(task, parts, rise_mm))
             parts = []
         if purpose == Purpose.LINK:
             continue
-        run, sag = _leg(frame, sweep, operation, laid, legs, number, chords)
+        run, sag = _leg(task, laid, legs, number, chords)
         sags.append(sag)
         if parts and legs.purpose[number - 1] == Purpose.LINK:
-            link = _link(frame.saddle, sweep, parts[-1], run)
+            link = _link(task.frame.saddle, task.sweep, parts[-1], run)
             if link is None:
-                made.append(_stretch(frame.saddle, sweep, operation, parts, rise_mm))
+                made.append(_stretch(task, parts, rise_mm))
                 parts = [run]
             else:
                 parts += [link, _without_first(run)]
         else:
             parts.append(_without_first(run) if parts else run)
-    made.append(_stretch(frame.saddle, sweep, operation, parts, rise_mm))
+    made.append(_stretch(task, parts, rise_mm))
     return tuple(made), max(sags)
 
 
-def _leg(
-    frame: PassFrame, sweep: Sweep, operation: Operation, laid: Laid, legs: Legs, number: int, chords: Chords
-) -> tuple[_Run, float]:
+def _leg(task: Task, laid: Laid, legs: Legs, number: int, chords: Chords) -> tuple[_Run, float]:
     """Return the rows of one straight leg, both ends among them, and what its chords do to the scallop."""
+    frame, sweep = task.frame, task.sweep
     start, end = (frame.uv(ends[number : number + 1]) for ends in (legs.start_mm, legs.end_mm))
     u0, u1, v = float(start[0][0]), float(end[0][0]), float(start[1][0])
     sign = int(laid.order[int(legs.pass_index[number])].sign)
@@ -126,7 +120,7 @@ def _leg(
         u = np.linspace(u0, u1, count + 1)
         line = np.full(count + 1, v)
         lead, lean, lift = laid.fit.wish(0 if sign > 0 else 1, u, line)
-        return u, *sweep.poses(u, line, sign, lead, lean, lift + laid.lift_mm)
+        return u, *sweep.poses(u, line, sign, lead, lean, lift)
 
     probes = max(4, math.ceil(length / _PROBE_MM))
     u, point, axis = at(probes)
@@ -182,10 +176,9 @@ def _link(saddle: Saddle, sweep: Sweep, before: _Run, after: _Run) -> _Run | Non
     return None
 
 
-def _stretch(
-    saddle: Saddle, sweep: Sweep, operation: Operation, parts: list[_Run], rise_mm: float
-) -> Stretch:
+def _stretch(task: Task, parts: list[_Run], rise_mm: float) -> Stretch:
     """Return a stretch of runs with its entry and exit; the contact stands still on both."""
+    saddle, sweep, operation = task.frame.saddle, task.sweep, task.operation
     point, axis, contact, normal, purpose, owner = (
         np.concatenate([getattr(part, name) for part in parts]) for name in _Run.__slots__
     )
@@ -242,7 +235,7 @@ def _ramp(
             return path
     raise CannotPlan(
         "entry clear of the surface",
-        f"no way onto the surface near ({point[0]:.3f}, {point[1]:.3f}) keeps the bottom of the cutter off it; use a smaller cutter",
+        f"no way onto the surface near ({point[0]:.3f}, {point[1]:.3f}) keeps the cutter off it; use a smaller one",
         -worst,
         0.0,
     )

@@ -158,10 +158,11 @@ def _turns(stretches: tuple[Stretch, ...]) -> bool:
 def _predicted(ball: PassFrame, laid: Layout, *, turning: bool) -> float:
     """Return the highest scallop to expect: the exact cusp, and what straight moves are likely to add.
 
-    With rotary axes turning, blocks are held against the curve of the ball's centre itself, within the whole budget; over
-    varied jobs they were seen to add two fifths of it, give or take as much. Without, the path goes in chords: the whole
-    sag counts where the feed is concave. Chord ends of neighbouring passes do not line up, so of many cusps some stand on the middles of two chords that lie
-    off the part, and some on the ends of two that cut into it. docs/theory-passes.md#budget.
+    With rotary axes turning, blocks are held against the curve of the ball's centre itself, within the whole
+    budget; over varied jobs they were seen to add two fifths of it, give or take as much. Without, the path goes in
+    chords: the whole sag counts where the feed is concave. Chord ends of neighbouring passes do not line up, so of
+    many cusps some stand on the middles of two chords that lie off the part, and some on the ends of two that cut
+    into it. docs/theory-passes.md#budget.
     """
     left = laid.left
     if turning:
@@ -188,7 +189,7 @@ def _cut_length(saddle: Saddle, course: Course, legs: Legs) -> float:
 
 def _rise_mm(job: Job, operation: Operation) -> float:
     """Return how far above its pass the ball starts an entry: clear of what earlier operations left."""
-    earlier = [left_mm(o) for o in job.operations if o.index < operation.index and o.does != "outline"]
+    earlier = [left_mm(o, job.part) for o in job.operations if o.index < operation.index and o.does != "outline"]
     before = max([job.stock.allowance_mm or 0.0, *earlier])
     return max(before - operation.allowance_mm, 0.0) + entry.ABOVE_STOCK_MM
 

@@ -30,7 +30,7 @@ _POSES_PER_DISC = 6.0
 _ROUNDS_ROUND, _ROUNDS_SHARP = 15, 24
 # Rows are looked at this far past the rear of the bottom, shares of the cutter radius.
 _PAST_REAR = 0.25
-_RIDGE_ROUNDS = 16
+_RIDGE_ROUNDS = 12
 
 
 @dataclass(frozen=True, slots=True)
@@ -126,16 +126,26 @@ class Sweep:
         lead_rad: Floats,
         lean_rad: Floats,
         aside_mm: Floats,
-    ) -> tuple[Floats, Floats]:
-        """Return what passes leave beside their lines, and how far ahead of the place it is cut, (n, m) [mm].
+        error_rad: float = 0.0,
+    ) -> tuple[Floats, Floats, Floats]:
+        """Return what passes leave beside their lines, how far ahead of the place it is cut, and what a tilt error leaves.
 
         Lead and lean stay as they are within the cutter's reach of each station (u, v) (n,). Above the line of the pass
-        the height is 0, or negative where the rear of the bottom gouges.
+        the height is 0, or negative where the rear of the bottom gouges. A tilt error about the contact moves each place of the
+        bottom along the normal by the error times its distance from the contact, to first order; the worst direction of the
+        error is taken place by place. docs/theory-matched.md#guard.
 
         Parameters
         ----------
         aside_mm : (m,)
             Plan distances to the left of the line.
+        error_rad : float
+            The tilt error.
+
+        Returns
+        -------
+        height, shift, lowered : (n, m) [mm]
+            ``shift`` is along +u.
         """
         half = math.ceil(self.reach_mm / self.step_mm)
         offsets = np.arange(-half, half + 1) * self.step_mm
@@ -150,7 +160,11 @@ class Sweep:
             0.0,
         )
         tables = self.table(point, axis).reshape(u_mm.size, many, 6)
-        height, shift = np.empty((u_mm.size, aside_mm.size)), np.empty((u_mm.size, aside_mm.size))
+        height, shift, lowered = np.empty((3, u_mm.size, aside_mm.size))
+        xy = plan_of(u_mm, v_mm, self.direction_rad)
+        tangent = self.saddle.tangent(xy, self.direction_rad)
+        along = 1.0 / np.linalg.norm(tangent[:, :2], axis=1)
+        scale = np.column_stack((along, self.saddle.stretch(xy) / along))
         form, tool = turned_form(self.saddle, self.direction_rad), self._tool()
 
         def run(part: slice) -> None:
@@ -162,12 +176,15 @@ class Sweep:
                 aside_mm,
                 tables[part],
                 self.step_mm,
+                error_rad,
+                scale[part],
                 height[part],
                 shift[part],
+                lowered[part],
             )
 
         _in_bands(run, u_mm.size)
-        return height - self.allowance_mm, shift
+        return height - self.allowance_mm, shift, lowered - self.allowance_mm
 
     def heights(self, u_mm: Floats, v_mm: Floats, track: Track) -> Floats:
         """Return what one whole pass leaves over plan points (n,) [mm]; inf where it does not reach."""

@@ -20,7 +20,7 @@ from anticlast.passes.loop import Loop
 from anticlast.passes.rough import limits
 from anticlast.passes.rough.layout import stock_before
 from anticlast.passes.rough.terraces import Terraces
-from anticlast.passes.rough.track import Track, link_feed_mm_min
+from anticlast.passes.rough.track import Track, track_for
 from anticlast.passes.rows import Nearest
 from anticlast.passes.tabs import lay_tabs
 from anticlast.records import Bools, CutterPath, Floats, Job, Operation, Purpose
@@ -32,8 +32,9 @@ _RAMP_FEED_SHARE = 0.5
 _ABOVE_MM = 0.2
 # Spacing of the places on a contour at which it is asked whether stock stands there, as a share of the radius.
 _SPACING_SHARE = 0.25
-# Radii of the arc from outside onto the contour, of the cutter's radius, and places it is tried at.
-_ARC_RADII = (1.0, 2.0, 3.0, 5.0)
+# Radii of the arc from outside onto the contour, of the cutter's radius, and places it is tried at. Longer ways through
+# the blank are not worth a ramp saved.
+_ARC_RADII = (1.0, 1.5, 2.0)
 _ARC_PLACES = 48
 # In air the cutter keeps this much off stock (mm).
 _OFF_MM = 0.05
@@ -87,7 +88,7 @@ def plan_outline(job: Job, operation: Operation, nearest_axis: Nearest) -> Cutte
     floor = floor_mm(job, operation)
     loops, lost = contours(job, operation)
     _check_walls(operation, stock, loops, floor)
-    track = Track(operation, axis, link_feed_mm_min(job, operation))
+    track = track_for(job, operation, axis)
     notes: dict[str, None] = {}
     if lost:
         notes[f"{lost} holes are too small for cutter {cutter.number} and are not cut"] = None
@@ -211,7 +212,7 @@ class _Contour:
         loop, track = self.loop, self.track
         first = int(np.argmax(cuts & ~np.roll(cuts, 1)))
         start = float(self.places[first - 1])
-        self._stand(start, z, _lifts=True)
+        self._stand(start, z)
         # Up to each change along the contour; the row after a change lies on its far side.
         order = np.roll(np.arange(len(cuts)), -first)
         places = np.concatenate((self.places[order], [start]))
@@ -248,7 +249,7 @@ class _Contour:
     def _by_ramp(self, z: float, above: float) -> None:
         """Down a ramp along the contour from the layer above, and once round on the floor."""
         loop, track = self.loop, self.track
-        start = self._place_of_tip() if track.stands is not None else 0.0
+        start = self._place_of_tip() or 0.0
         top = above + (_ABOVE_MM if above >= self.job.stock.top_mm else 0.0)
         self._stand(start, top)
         fall = math.tan(self.operation.cutter.ramp_angle_rad)
@@ -262,13 +263,14 @@ class _Contour:
     def _tabbed(self, z: float, above: float) -> None:
         """From tab to tab: down a ramp between two of them, back to its start, on to its end, up and over."""
         loop, track = self.loop, self.track
-        over = max(self.tab_top_mm, z)
-        down_from = min(above, over)
+        over = self.tab_top_mm
         for number, (_, start) in enumerate(self.tabs):
             end = self.tabs[(number + 1) % len(self.tabs)][0]
             end = start + (end - start) % loop.length_mm
             path = loop.between(start, end)
-            if number == 0:
+            # The first way down starts in the layer above, the others where the tip has come across a tab.
+            down_from = above if number == 0 else min(above, over)
+            if number == 0 and (track.stands is None or np.abs(track.stands[:2] - path[0]).max() > SAME_POINT_MM):
                 track.start([*path[0], max(over, above)], self.rounds)
             track.link(_level(path[:1], down_from), self.rounds)
             tips = ramp.along(path, down_from, z, self.operation.cutter.ramp_angle_rad)
@@ -289,23 +291,30 @@ class _Contour:
 
     # ------------------------------------------------------------------------------------------ places
 
-    def _stand(self, place: float, z: float, _lifts: bool = False) -> None:
-        """Bring the tip to a place on the contour at a level whose stock is gone there."""
+    def _stand(self, place: float, z: float) -> None:
+        """Bring the tip to a place on the contour at a level whose stock is gone there: along the layer above, or lifted."""
         track, loop = self.track, self.loop
         xy = loop.points(np.array([place]))[0]
-        stands = track.stands
-        if stands is None or _lifts:
+        here = self._place_of_tip()
+        if here is None:
             track.start([*xy, z], self.rounds)
             return
-        here = self._place_of_tip()
-        way = loop.between(here, here + (place - here) % loop.length_mm)
-        track.link(_level(way, stands[2]), self.rounds)
+        assert track.stands is not None
+        ahead = (place - here) % loop.length_mm
+        back = loop.length_mm - ahead
+        way = loop.between(here, here + ahead) if ahead <= back else loop.between(place, place + back)[::-1]
+        track.link(_level(way, track.stands[2]), self.rounds)
         track.link(np.array([[*xy, z]]), self.rounds)
 
-    def _place_of_tip(self) -> float:
+    def _place_of_tip(self) -> float | None:
+        """Return where on the contour the tip stands, None if it is elsewhere."""
         stands = self.track.stands
-        assert stands is not None
-        return float(shapely.line_locate_point(shapely.linestrings(self.loop.xy), shapely.points(stands[:2])))
+        if stands is None:
+            return None
+        line, here = shapely.linestrings(self.loop.xy), shapely.points(stands[:2])
+        if float(shapely.distance(line, here)) > SAME_POINT_MM:
+            return None
+        return float(shapely.line_locate_point(line, here))
 
     def _along(self, path: Floats, at: Floats) -> float:
         return float(shapely.line_locate_point(shapely.linestrings(path), shapely.points(at)))
@@ -322,7 +331,7 @@ class _Contour:
                 angle = np.linspace(0.5 * math.pi, 0.0, 13)[:, None]
                 arc = point + radius * ((1.0 - np.cos(angle)) * left - np.sin(angle) * along)
                 mirrored = point + radius * ((1.0 - np.cos(angle)) * left + np.sin(angle) * along)
-                if not (self._clear(arc[:1].repeat(2, axis=0), standing) and self._clear(mirrored[:1].repeat(2, axis=0), standing)):
+                if not all(self._clear(way[[0, 0]], standing) for way in (arc, mirrored)):
                     continue
                 both = shapely.linestrings(np.vstack((arc, mirrored[::-1])))
                 if float(shapely.distance(self.job.part.outline.polygon, both)) >= keep:

@@ -38,37 +38,66 @@ class NoStrip:
     v_mm: float
 
 
-def lay_lines(frame: PassFrame, outline: Outline, fit: Fit) -> Lines | NoStrip:
+@dataclass(frozen=True, slots=True)
+class Layer:
+    """What lines are laid by.
+
+    Attributes
+    ----------
+    frame : PassFrame
+    outline : Outline
+    fit : Fit
+    zigzag : bool
+        Passes alternate, the lowest fed along +u; else every pass has to do for every way of the fit.
+    """
+
+    frame: PassFrame
+    outline: Outline
+    fit: Fit
+    zigzag: bool
+
+    def ways(self, number: int) -> tuple[int, ...]:
+        """Return which ways of the fit a line may be fed, as indices."""
+        every = tuple(range(len(self.fit.angle_rad)))
+        return (number % 2,) if self.zigzag and len(every) > 1 else every
+
+
+def lay_lines(layer: Layer, begin_mm: Floats | None = None) -> Lines | NoStrip:
     """Return the fewest lines whose strips cover the outline, the first as far in as the low edge allows.
+
+    Parameters
+    ----------
+    layer : Layer
+    begin_mm : (n,), optional
+        Lines that stand already, ascending.
 
     Raises
     ------
     NotConverged
         If a step does not settle.
     """
-    low, high = outline.v_range(frame.direction_rad)
-    widest = float(np.maximum(fit.strips.left_mm, fit.strips.right_mm).max())
+    low, high = layer.outline.v_range(layer.frame.direction_rad)
+    strips = layer.fit.strips
+    widest = float(np.maximum(strips.left_mm, strips.right_mm).max())
     if widest <= 0.0:
-        return _barest(frame, outline, fit, low, high)
-    first = _edge(frame, outline, fit, low, widest, 1)
-    end = _edge(frame, outline, fit, high, widest, -1)
-    if first is None or end is None:
-        return _barest(frame, outline, fit, low, high)
-    lines = [first]
-    while lines[-1] < end:
-        step = _step(frame, outline, fit, lines[-1], min(2.0 * widest, high - lines[-1]))
+        return _barest(layer, low, high)
+    ends = [_edge(layer, number, high, widest, -1) for number in (0, 1)]
+    first = _edge(layer, 0, low, widest, 1)
+    if first is None or None in ends:
+        return _barest(layer, low, high)
+    lines = [first] if begin_mm is None else begin_mm.tolist()
+    while lines[-1] < ends[(len(lines) - 1) % 2]:
+        step = _step(layer, len(lines) - 1, lines[-1], min(2.0 * widest, high - lines[-1]))
         if step <= SAME_POINT_MM or len(lines) > _MOST_LINES:
-            return _barest(frame, outline, fit, low, high)
+            return _barest(layer, low, high)
         lines.append(lines[-1] + step)
+    over = lines[-1] - ends[(len(lines) - 1) % 2]
     if len(lines) == 1:
-        return Lines(
-            np.array([0.5 * (low + high) if end < first else first]),
-            max(1.0 - (first - end) / (high - low), 0.5),
-        )
-    return Lines(np.array(lines), len(lines) - (lines[-1] - end) / (lines[-1] - lines[-2]))
+        return Lines(np.array(lines) - 0.5 * over, max(1.0 - over / (high - low), 0.5))
+    return Lines(np.array(lines), len(lines) - min(over / (lines[-1] - lines[-2]), 1.0))
 
 
-def closed_up(lines: Lines, outline: Outline, direction_rad: float) -> Floats:
+def closed_up(lines: Lines) -> Floats:
     """Return the lines (n,) drawn together evenly, so that the last lies no further out than it need."""
     v = lines.v_mm
     if v.size < 2:
@@ -86,15 +115,13 @@ def _over(frame: PassFrame, outline: Outline, low: float, high: float) -> Floats
     return spread(first, last, _SAMPLE_MM)[1]
 
 
-def _edge(
-    frame: PassFrame, outline: Outline, fit: Fit, edge: float, widest: float, side: int
-) -> float | None:
+def _edge(layer: Layer, number: int, edge: float, widest: float, side: int) -> float | None:
     """Return the line whose strip just reaches an edge of the outline, at ``side`` +1 from the low one."""
     at = edge
+    inward = edge + side * widest
+    u = _over(layer.frame, layer.outline, min(edge, inward), max(edge, inward))
     for _ in range(_ROUNDS):
-        inward = edge + side * widest
-        u = _over(frame, outline, min(edge, inward), max(edge, inward))
-        left, right = fit.reach(u, np.full(u.size, at))
+        left, right = layer.fit.reach(layer.ways(number), u, np.full(u.size, at))
         reach = float((right if side > 0 else left).min())
         if reach <= SAME_POINT_MM:
             return None
@@ -105,28 +132,29 @@ def _edge(
     raise NotConverged("first and last pass", abs(moved - at), SAME_POINT_MM)
 
 
-def _step(frame: PassFrame, outline: Outline, fit: Fit, at: float, most: float) -> float:
+def _step(layer: Layer, number: int, at: float, most: float) -> float:
     """Return how far the next line lies: the strips of both just meet at the worst place between."""
-    u = _over(frame, outline, at, at + most)
+    u = _over(layer.frame, layer.outline, at, at + most)
     if not u.size:
         return most
-    left, _ = fit.reach(u, np.full(u.size, at))
+    left, _ = layer.fit.reach(layer.ways(number), u, np.full(u.size, at))
     step = float(left.min())
     for _ in range(_ROUNDS):
-        _, right = fit.reach(u, np.full(u.size, at + step))
+        _, right = layer.fit.reach(layer.ways(number + 1), u, np.full(u.size, at + step))
         found = float((left + right).min())
         if abs(found - step) <= SAME_POINT_MM:
             return found
         step = found
-    raise NotConverged("step to the next pass", abs(found - step), SAME_POINT_MM)
+    # Where leads change from station to station a step may swing about its place; the lower end is safe.
+    return min(found, step)
 
 
-def _barest(frame: PassFrame, outline: Outline, fit: Fit, low: float, high: float) -> NoStrip:
+def _barest(layer: Layer, low: float, high: float) -> NoStrip:
     """Return the place of the outline where the strip is narrowest."""
     levels = np.linspace(low + SAME_POINT_MM, high - SAME_POINT_MM, 41)
-    index, u0, u1 = outline.clip_lines(frame.direction_rad, levels)
+    index, u0, u1 = layer.outline.clip_lines(layer.frame.direction_rad, levels)
     owner, u = spread(u0, u1, _SAMPLE_MM)
     v = levels[index[owner]]
-    left, right = fit.reach(u, v)
+    left, right = layer.fit.reach(tuple(range(len(layer.fit.angle_rad))), u, v)
     worst = int(np.argmin(np.minimum(left, right)))
     return NoStrip(float(u[worst]), float(v[worst]))

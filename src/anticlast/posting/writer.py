@@ -11,6 +11,8 @@ from typing import IO
 
 import numpy as np
 
+from anticlast.cutter import Cutter
+from anticlast.posting.arcs import arc_length_mm
 from anticlast.records import AxisPath, Floats, Job, Purpose
 
 MM_PER_INCH = 25.4
@@ -149,10 +151,27 @@ def _per_minute(path: AxisPath, rows: slice, dialect: _Dialect) -> list[float]:
     steps = _steps(path, rows)
     linear = np.array([letter in "XYZ" for letter in path.letters])
     along = np.sqrt((steps[:, linear] ** 2).sum(axis=1)) * dialect.scale
+    if path.arcs is not None:  # along the helix itself (section 2.1.2.6)
+        along = arc_length_mm(path.arcs[rows], steps[:, :3]) * dialect.scale
     around = np.sqrt((steps[:, ~linear] ** 2).sum(axis=1))
     with np.errstate(invalid="ignore", divide="ignore"):
         asked: list[float] = (np.where(along > 0, along, around) / path.minutes[rows]).tolist()
     return asked
+
+
+def _arc_words(path: AxisPath, rows: slice, dialect: _Dialect) -> list[tuple[str, str, list[str]]]:
+    """For each block of a slice the plane code, G2 or G3, and the two centre words; empty texts on straight moves."""
+    if path.arcs is None:
+        return [("", "", [])] * len(path.rapid[rows])
+    found = []
+    for plane, turned, *centre in path.arcs[rows].tolist():
+        if plane == 0.0:
+            found.append(("", "", []))
+            continue
+        pair = {17: (0, 1), 18: (0, 2), 19: (1, 2)}[int(plane)]
+        words = ["IJK"[axis] + plain(centre[axis] * dialect.scale, dialect.length) for axis in pair]
+        found.append((f"G{int(plane)}", "G3" if turned > 0.0 else "G2", words))
+    return found
 
 
 def _chunks(path: AxisPath) -> Iterator[slice]:
@@ -167,7 +186,9 @@ def _moves(path: AxisPath, dialect: _Dialect, standing: list[str], inverse: bool
     last_feed = math.inf
     last_pass = -1
     height = path.letters.index("Z")
+    plane = "G17"
     for rows in _chunks(path):
+        arcs = _arc_words(path, rows, dialect)
         per_minute = [] if inverse else _per_minute(path, rows, dialect)
         columns = _columns(path, rows, dialect)
         rapids = path.rapid[rows].tolist()
@@ -188,10 +209,15 @@ def _moves(path: AxisPath, dialect: _Dialect, standing: list[str], inverse: bool
                 changed = [word for word in changed if word is not words[height]]
                 mode = "G0"
             standing[:] = words
-            code = "G0" if rapid else "G1"
+            plane_asked, code, centre = arcs[i]
+            code = code or ("G0" if rapid else "G1")
+            if plane_asked and plane_asked != plane:
+                plane = plane_asked
+                yield plane
             if code != mode:
                 changed.insert(0, code)
                 mode = code
+            changed += centre
             if not rapid and inverse:
                 changed.append("F" + plain(1.0 / minutes[i], dialect.feed))
             elif not rapid:
@@ -204,6 +230,8 @@ def _moves(path: AxisPath, dialect: _Dialect, standing: list[str], inverse: bool
                         feed_text = text
                         changed.append("F" + text)
             yield " ".join(changed)
+    if plane != "G17":
+        yield "G17"
 
 
 def _turns_at_feed(path: AxisPath) -> bool:
@@ -212,6 +240,13 @@ def _turns_at_feed(path: AxisPath) -> bool:
     if not rotary.any():
         return False
     return any(bool(np.any(_steps(path, rows)[~path.rapid[rows]][:, rotary] != 0)) for rows in _chunks(path))
+
+
+def _length_message(job: Job, cutter: Cutter) -> str:
+    """Message (section 3.3.4) with the length that X Y Z hold: shown to the operator, and compared when it is read back."""
+    inch = job.units == "inch"
+    length = plain(cutter.gauge_length_mm / MM_PER_INCH, 4) if inch else plain(cutter.gauge_length_mm, 3)
+    return f"(MSG, T{cutter.number} GAUGE LENGTH {length} {job.units.upper()})"
 
 
 def _operation(
@@ -225,6 +260,8 @@ def _operation(
     )
     if cutter.number != loaded:
         yield f"T{cutter.number} M6"
+        if any(axis.carries == "cutter" for axis in job.machine.rotary):
+            yield _length_message(job, cutter)
     yield f"S{plain(operation.spindle_rpm, 0)} M3"
     yield f"G43 H{cutter.number}"
     inverse = dialect.inverse and _turns_at_feed(path)

@@ -1,0 +1,1 @@
+"""The proof: a virtual cut from read-back motion, and the verdict on it."""

@@ -18,7 +18,9 @@ _RIM_MM = 1e-3
 
 
 @njit(cache=True, nogil=True)
-def ball_entry(q: tuple, n: tuple, c0: np.ndarray, c1: np.ndarray, radius: float) -> tuple[float, float, float]:
+def ball_entry(
+    q: tuple, n: tuple, c0: np.ndarray, c1: np.ndarray, radius: float
+) -> tuple[float, float, float]:
     """Return where the line q + h n, coming from below, enters a ball of ``radius`` swept from c0 to c1.
 
     The infinite cylinder about the segment first; where it is entered beyond an end, the sphere at that end;
@@ -120,10 +122,7 @@ def pose_entry(
     bb = wx * n[0] + wy * n[1] + wz * n[2] - z0 * nz
     ww = wx * wx + wy * wy + wz * wz
     cc = ww - z0 * z0
-    if nz > 0.1:
-        h = (-corner - z0) / nz
-    else:
-        h = -(math.sqrt(ww) + disc + corner + flutes + 1.0)
+    h = (-corner - z0) / nz if nz > 0.1 else -(math.sqrt(ww) + disc + corner + flutes + 1.0)
     gap, along, across = 0.0, 0.0, 0.0
     hit, low, high = False, h, math.inf
     for _ in range(_STEPS):
@@ -205,7 +204,14 @@ def entry_and_slope(
 
 @njit(cache=True, nogil=True)
 def mill_entry(
-    q: tuple, n: tuple, c0: np.ndarray, c1: np.ndarray, a0: np.ndarray, a1: np.ndarray, size: np.ndarray, below: float
+    q: tuple,
+    n: tuple,
+    c0: np.ndarray,
+    c1: np.ndarray,
+    a0: np.ndarray,
+    a1: np.ndarray,
+    size: np.ndarray,
+    below: float,
 ) -> tuple[float, float, float]:
     """Return where a line enters a bull or flat end mill along one piece; what is no lower than ``below`` is a miss.
 
@@ -222,7 +228,11 @@ def mill_entry(
     x, y, z = q[0] + top * n[0], q[1] + top * n[1], q[2] + top * n[2]
     first = (x - c0[0]) * a0[0] + (y - c0[1]) * a0[1] + (z - c0[2]) * a0[2]
     last = (x - c1[0]) * a1[0] + (y - c1[1]) * a1[1] + (z - c1[2]) * a1[2]
-    bow = (c1[0] - c0[0]) * (a1[0] - a0[0]) + (c1[1] - c0[1]) * (a1[1] - a0[1]) + (c1[2] - c0[2]) * (a1[2] - a0[2])
+    bow = (
+        (c1[0] - c0[0]) * (a1[0] - a0[0])
+        + (c1[1] - c0[1]) * (a1[1] - a0[1])
+        + (c1[2] - c0[2]) * (a1[2] - a0[2])
+    )
     if max(first, last) + 0.25 * abs(bow) < -size[1]:
         return math.inf, 0.0, 0.0
     out = np.empty(3)
@@ -373,14 +383,16 @@ def sweep(
 
 _OWNERS = 8
 _DEEPEST = 12
-_STEEP = 0.84
+_STEEP = 2.0 / 3.0
 # Most pieces joined to each side, and the sag allowed as a share of edge^2 / radius: below what the chord plane is off by.
 _LINKS = 8
 _SAG_SHARE = 0.05
 
 
 @njit(cache=True, nogil=True)
-def sag(surface: tuple, edge2: float, high: float, cosine: float, bend_radius: float, spread: float, turn: float) -> float:
+def sag(
+    surface: tuple, edge2: float, high: float, cosine: float, bend_radius: float, spread: float, turn: float
+) -> float:
     """Return how far one piece's residual can stand above its chord plane over a triangle [mm]; inf if too steep.
 
     h'' >= -(2a + 2k sin(T) |h'| + 3 k^2 |h| + 2 turn (W + 1) + turn^2 reach) / cos(T), k = 2 max(a, b), T the angle
@@ -407,10 +419,12 @@ def sag(surface: tuple, edge2: float, high: float, cosine: float, bend_radius: f
     a, b, w = surface
     k = 2.0 * max(a, b)
     reach = math.sqrt(edge2 / 3.0)
-    theta = math.acos(min(1.0, cosine)) + 1.5 * (w * reach + spread) / bend_radius + k * reach
-    if theta > _STEEP:
+    change = 1.5 * (w * reach + spread) / bend_radius + k * reach
+    # cos(T + d) >= cos(T) (1 - d^2 / 2) - d sin(T), sin(T + d) <= sin(T) + d cos(T).
+    sine = math.sqrt(max(0.0, 1.0 - cosine * cosine))
+    sine, cosine = sine + change * cosine, cosine * (1.0 - 0.5 * change * change) - change * sine
+    if cosine < _STEEP:
         return math.inf
-    sine, cosine = math.sin(theta), math.cos(theta)
     slope = ((w + 1.0) * sine + k * high) / cosine
     bend = 2.0 * a + 2.0 * k * sine * slope + 3.0 * k * k * high + 2.0 * turn * (w + 1.0)
     return bend / cosine * (edge2 / 6.0 + spread * spread / 8.0)
@@ -494,7 +508,9 @@ def chain(pieces: tuple, k: int, length: float, most: float, ends: np.ndarray) -
             if now > most * most:
                 break
             sag2 = now
-            gone += math.sqrt((c1[j, 0] - c0[j, 0]) ** 2 + (c1[j, 1] - c0[j, 1]) ** 2 + (c1[j, 2] - c0[j, 2]) ** 2)
+            gone += math.sqrt(
+                (c1[j, 0] - c0[j, 0]) ** 2 + (c1[j, 1] - c0[j, 1]) ** 2 + (c1[j, 2] - c0[j, 2]) ** 2
+            )
             first, last = min(first, j), max(last, j)
     for i in range(3):
         ends[0, i], ends[1, i] = c0[first, i], c1[last, i]
@@ -504,73 +520,93 @@ def chain(pieces: tuple, k: int, length: float, most: float, ends: np.ndarray) -
 @njit(cache=True, nogil=True)
 def triangle_bound(
     surface: tuple, corners: np.ndarray, owners: np.ndarray, count: int, pieces: tuple, cap: float,
-    value: np.ndarray, weights: np.ndarray,
+    value: np.ndarray, place: np.ndarray,
 ) -> tuple[float, int]:  # fmt: skip
     """Return an upper bound [mm] of the residual over one triangle from a few pieces, and how many of those matter.
 
     Parameters
     ----------
+    surface : (a, b, w)
     corners : (3, 2) [mm]
     owners : (>= count,) int32
         Pieces to use; any choice gives a bound, good ones a tight one. Those that matter are moved to the front.
+    pieces
+        As in `entry`.
     cap : float [mm]
         No residual is higher: the stock that was there before.
     value : (>= count, 3)
         Scratch: each piece's linear majorant at the corners.
-    weights : (3,)
-        Gets the barycentric place where the bound is reached.
+    place : (4, 3)
+        Row 0 gets the barycentric place where the bound is reached; the rest is scratch.
     """
-    a, b, _ = surface
-    size = pieces[4]
     edge2 = 0.0
     for i in range(3):
         j = (i + 1) % 3
         edge2 = max(edge2, (corners[i, 0] - corners[j, 0]) ** 2 + (corners[i, 1] - corners[j, 1]) ** 2)
+    usable = majorants(surface, corners, owners, count, pieces, edge2, value, place[2:])
+    least_top = math.inf
+    for o in range(usable):
+        least_top = min(least_top, max(value[o, 0], value[o, 1], value[o, 2]))
+    bound, kept = cap, 0
+    place[0] = 1.0 / 3.0
+    for o in range(usable):
+        # A piece that is nowhere lower than another's highest place tells nothing here.
+        if min(value[o, 0], value[o, 1], value[o, 2]) > least_top:
+            continue
+        owners[kept] = owners[o]
+        for i in range(3):
+            value[kept, i] = value[o, i]
+        for p in range(kept + 1):
+            found = lower_of_two(value[p], value[kept], place[1])
+            if found < bound:
+                bound = found
+                place[0] = place[1]
+        kept += 1
+    return bound, kept
+
+
+@njit(cache=True, nogil=True)
+def majorants(
+    surface: tuple, corners: np.ndarray, owners: np.ndarray, count: int, pieces: tuple, edge2: float,
+    value: np.ndarray, ends: np.ndarray,
+) -> int:  # fmt: skip
+    """Fill ``value`` with linear functions no lower than what each piece leaves over a triangle, at its corners.
+
+    Pieces that miss a corner or cut too steeply are dropped from ``owners``. Returns how many are left; the other
+    arguments are those of `triangle_bound`.
+    """
+    a, b, _ = surface
+    size = pieces[4]
+    lines = (
+        surface_at(a, b, corners[0, 0], corners[0, 1]),
+        surface_at(a, b, corners[1, 0], corners[1, 1]),
+        surface_at(a, b, corners[2, 0], corners[2, 1]),
+    )
     usable = 0
-    cosines, least, most = np.ones(_OWNERS), np.ones(_OWNERS), np.zeros(_OWNERS)
-    sags, ends = np.zeros(_OWNERS), np.empty((2, 3))
     for o in range(count):
         k = owners[o]
         ball = size[k, 0] == 0.0 and size[k, 1] > 0.0
+        over = 0.0
         if ball:
-            sags[o] = chain(pieces, k, math.sqrt(edge2), _SAG_SHARE * edge2 / size[k, 1], ends)
+            over = chain(pieces, k, math.sqrt(edge2), _SAG_SHARE * edge2 / size[k, 1], ends) / _STEEP
+        least_cosine, least, most = 1.0, 1.0, 0.0
         for i in range(3):
-            q, n = surface_at(a, b, corners[i, 0], corners[i, 1])
+            q, n = lines[i]
             if ball:
                 h, share, cosine = ball_entry(q, n, ends[0], ends[1], size[k, 1])
             else:
                 h, share, cosine = entry(q, n, pieces, k, math.inf)
-            value[o, i] = h
-            cosines[o] = min(cosines[o], cosine)
-            least[o], most[o] = min(least[o], share), max(most[o], share)
-    bound, least_top = cap, math.inf
-    weights[:] = 1.0 / 3.0
-    place = np.empty(3)
-    for o in range(count):
-        over = _over(surface, edge2, value[o], cosines[o], most[o] - least[o], pieces, owners[o])
-        # At the angles allowed the cosine is at least cos(0.84) = 0.667.
-        over += 1.5 * sags[o]
+            value[usable, i] = h
+            least_cosine = min(least_cosine, cosine)
+            least, most = min(least, share), max(most, share)
+        over += _over(surface, edge2, value[usable], least_cosine, most - least, pieces, k)
         if math.isinf(over):
             continue
         for i in range(3):
-            value[usable, i] = value[o, i] + over
-        owners[usable] = owners[o]
-        least_top = min(least_top, max(value[usable, 0], value[usable, 1], value[usable, 2]))
+            value[usable, i] += over
+        owners[usable] = k
         usable += 1
-    # A piece that is nowhere lower than another's highest place tells nothing here.
-    kept = 0
-    for o in range(usable):
-        if min(value[o, 0], value[o, 1], value[o, 2]) > least_top:
-            continue
-        value[kept] = value[o]
-        owners[kept] = owners[o]
-        for p in range(kept + 1):
-            found = lower_of_two(value[p], value[kept], place)
-            if found < bound:
-                bound = found
-                weights[:] = place
-        kept += 1
-    return bound, kept
+    return usable
 
 
 @njit(cache=True, nogil=True)
@@ -591,7 +627,15 @@ def _over(
     length = math.sqrt(length)
     # A flat end has no corner arc: along its rim the normal turns with the rim itself.
     bend_radius = size[k, 1] if size[k, 1] > 0.0 else size[k, 0]
-    return sag(surface, edge2, high, cosine, bend_radius, spread * length, 1.1 * math.sqrt(turned) / max(length, 1e-9))
+    return sag(
+        surface,
+        edge2,
+        high,
+        cosine,
+        bend_radius,
+        spread * length,
+        1.1 * math.sqrt(turned) / max(length, 1e-9),
+    )
 
 
 @njit(cache=True, nogil=True)
@@ -635,15 +679,12 @@ def refine(
     budget : int
         Most quarterings; once spent, bounds stand as they are.
     """
-    a, b, _ = surface
     x, y = nodes
-    start, listing = lists
-    x_low, y_low, tile, nx, ny = grid
     stack = np.empty((3 * _DEEPEST + 4, 3, 2))
     depth = np.empty(3 * _DEEPEST + 4, np.int32)
     known = np.empty((3 * _DEEPEST + 4, _OWNERS), np.int32)
     counts = np.empty(3 * _DEEPEST + 4, np.int32)
-    value, weights, middle = np.empty((_OWNERS, 3)), np.empty(3), np.empty((3, 2))
+    value, place = np.empty((_OWNERS, 3)), np.empty((4, 3))
     corners, owners = np.empty((3, 2)), np.empty(_OWNERS, np.int32)
     bound = -math.inf
     for m in range(triangles.shape[0]):
@@ -656,41 +697,60 @@ def refine(
         depth[0] = 0
         top = 0
         while top >= 0:
-            corners[:] = stack[top]
-            owners[:] = known[top]
+            for i in range(3):
+                corners[i, 0], corners[i, 1] = stack[top, i, 0], stack[top, i, 1]
             count, level = counts[top], depth[top]
+            for o in range(count):
+                owners[o] = known[top, o]
             top -= 1
-            found, kept = triangle_bound(surface, corners, owners, count, pieces, cap, value, weights)
+            found, kept = triangle_bound(surface, corners, owners, count, pieces, cap, value, place)
             if found <= best[0] + slack or level >= _DEEPEST or budget <= 0:
                 bound = max(bound, found)
                 continue
             budget -= 1
-            if kept > 0:
-                count = kept
-            px = weights[0] * corners[0, 0] + weights[1] * corners[1, 0] + weights[2] * corners[2, 0]
-            py = weights[0] * corners[0, 1] + weights[1] * corners[1, 1] + weights[2] * corners[2, 1]
-            u = min(max(int(math.floor((px - x_low) / tile)), 0), nx - 1)
-            v = min(max(int(math.floor((py - y_low) / tile)), 0), ny - 1)
-            t = v * nx + u
-            q, n = surface_at(a, b, px, py)
-            h, k = cut_node(q, n, cap, -1, listing[start[t] : start[t + 1]], pieces, -math.inf)
-            if h > best[0]:
-                best[0], best[1], best[2], best[3] = h, px, py, k
+            k = probe(surface, corners, place[0], found, grid, lists, pieces, best)
             if k >= 0:
-                count = add_owner(owners, count, k)
-            for i in range(3):
-                j = (i + 1) % 3
-                middle[i, 0] = 0.5 * (corners[i, 0] + corners[j, 0])
-                middle[i, 1] = 0.5 * (corners[i, 1] + corners[j, 1])
-            for child in range(4):
+                kept = add_owner(owners, kept, k)
+            quarter(corners, stack[top + 1 : top + 5])
+            for _ in range(4):
                 top += 1
-                if child < 3:
-                    stack[top, 0] = corners[child]
-                    stack[top, 1] = middle[child]
-                    stack[top, 2] = middle[(child + 2) % 3]
-                else:
-                    stack[top] = middle
-                depth[top] = level + 1
-                known[top] = owners
-                counts[top] = count
+                depth[top], counts[top] = level + 1, kept
+                for o in range(kept):
+                    known[top, o] = owners[o]
     return bound
+
+
+@njit(cache=True, nogil=True)
+def probe(
+    surface: tuple, corners: np.ndarray, weights: np.ndarray, below: float, grid: tuple, lists: tuple, pieces: tuple,
+    best: np.ndarray,
+) -> int:  # fmt: skip
+    """Measure the residual at one place of a triangle, where it is known to be no more than ``below``.
+
+    Keeps it in ``best`` if it is the highest so far; returns the piece that left it, -1 if none did.
+    """
+    a, b, _ = surface
+    x_low, y_low, tile, nx, ny = grid
+    start, listing = lists
+    x = weights[0] * corners[0, 0] + weights[1] * corners[1, 0] + weights[2] * corners[2, 0]
+    y = weights[0] * corners[0, 1] + weights[1] * corners[1, 1] + weights[2] * corners[2, 1]
+    u = min(max(math.floor((x - x_low) / tile), 0), nx - 1)
+    v = min(max(math.floor((y - y_low) / tile), 0), ny - 1)
+    listed = listing[start[v * nx + u] : start[v * nx + u + 1]]
+    q, n = surface_at(a, b, x, y)
+    height, owner = cut_node(q, n, below, -1, listed, pieces, -math.inf)
+    if height > best[0]:
+        best[0], best[1], best[2], best[3] = height, x, y, owner
+    return owner
+
+
+@njit(cache=True, nogil=True)
+def quarter(corners: np.ndarray, children: np.ndarray) -> None:
+    """Fill ``children`` (4, 3, 2) with the quarters of a triangle (3, 2), cut at the middles of its edges."""
+    for i in range(3):
+        j, k = (i + 1) % 3, (i + 2) % 3
+        for d in range(2):
+            children[i, 0, d] = corners[i, d]
+            children[i, 1, d] = 0.5 * (corners[i, d] + corners[j, d])
+            children[i, 2, d] = 0.5 * (corners[i, d] + corners[k, d])
+            children[3, i, d] = children[i, 1, d]

@@ -119,7 +119,13 @@ def rim_least(a: float, b: float, c: tuple, axis: tuple, disc: float) -> tuple[f
 
 @njit(cache=True, nogil=True)
 def rims(
-    a: float, b: float, centres: np.ndarray, axes: np.ndarray, disc: np.ndarray, distance: np.ndarray, plan: np.ndarray
+    a: float,
+    b: float,
+    centres: np.ndarray,
+    axes: np.ndarray,
+    disc: np.ndarray,
+    distance: np.ndarray,
+    plan: np.ndarray,
 ) -> None:
     """Fill ``distance`` (n,) and ``plan`` (n, 2) [mm] with `rim_least` of circles of radius ``disc`` (n,) [mm]."""
     for i in range(centres.shape[0]):
@@ -132,7 +138,9 @@ def rims(
 
 
 @njit(cache=True, nogil=True)
-def chunk_box(a: float, b: float, ends: tuple, size: tuple, high: float, slope: float, box: np.ndarray) -> int:
+def chunk_box(
+    a: float, b: float, ends: tuple, size: tuple, high: float, slope: float, box: np.ndarray
+) -> int:
     """Find the plan box of the nodes that a short chunk of a piece can cut below a residual height.
 
     Parameters
@@ -185,7 +193,9 @@ def chunk_box(a: float, b: float, ends: tuple, size: tuple, high: float, slope: 
             state = 2
         elif disc == 0.0:
             drop = max(0.0, low - high - bend * radius * radius / 2.0)
-            reach = math.sqrt(max(0.0, radius * radius - drop * drop)) + drop * max(bend, 2.0 * b) * length / 2.0
+            reach = (
+                math.sqrt(max(0.0, radius * radius - drop * drop)) + drop * max(bend, 2.0 * b) * length / 2.0
+            )
     else:
         state = 2
     reach += slope * (max(high, radius - low) + (2.0 * radius if state == 2 else 0.0))
@@ -230,7 +240,7 @@ def bin_pieces(
         if not active[k]:
             continue
         dx, dy, dz = c1[k, 0] - c0[k, 0], c1[k, 1] - c0[k, 1], c1[k, 2] - c0[k, 2]
-        chunks = int(math.ceil(math.sqrt(dx * dx + dy * dy + dz * dz) / (2.0 * tile) + 1e-9))
+        chunks = math.ceil(math.sqrt(dx * dx + dy * dy + dz * dz) / (2.0 * tile) + 1e-9)
         chunks = max(chunks, 1)
         for j in range(chunks):
             s, e = j / chunks, (j + 1) / chunks
@@ -242,8 +252,14 @@ def bin_pieces(
             if found == 0:
                 continue
             state[k] = max(state[k], found)
-            i0, i1 = max(0, math.floor((box[0] - x_low) / tile)), min(nx - 1, math.floor((box[1] - x_low) / tile))
-            j0, j1 = max(0, math.floor((box[2] - y_low) / tile)), min(ny - 1, math.floor((box[3] - y_low) / tile))
+            i0, i1 = (
+                max(0, math.floor((box[0] - x_low) / tile)),
+                min(nx - 1, math.floor((box[1] - x_low) / tile)),
+            )
+            j0, j1 = (
+                max(0, math.floor((box[2] - y_low) / tile)),
+                min(ny - 1, math.floor((box[3] - y_low) / tile)),
+            )
             for v in range(j0, j1 + 1):
                 for u in range(i0, i1 + 1):
                     t = v * nx + u

@@ -28,8 +28,9 @@ def _place(at_mm: tuple[float, ...]) -> str:
 
 
 def wanted_height_mm(job: Job) -> float:
-    """Return the height over the finished surface [mm] that the job's last operation is to leave."""
-    return job.operations[-1].allowance_mm if job.operations else 0.0
+    """Return the height over the finished surface [mm] that the job's last operation on it is to leave."""
+    sweeping = [operation for operation in job.operations if operation.does != "outline"]
+    return sweeping[-1].allowance_mm if sweeping else 0.0
 
 
 def scallop_limit_mm(job: Job) -> float | None:
@@ -80,7 +81,9 @@ def check_gouge(job: Job, gouge: Gouge, motion: PartMotion) -> Finding:
     else:
         found = f"the cutter goes {_um(gouge.deepest_mm)} below the finished surface {_place(gouge.at_mm)}"
     if ok:
-        return Finding("gouge", True, gouge.deepest_mm, limit, "mm", line, f"{found}; {_um(limit)} is allowed")
+        return Finding(
+            "gouge", True, gouge.deepest_mm, limit, "mm", line, f"{found}; {_um(limit)} is allowed"
+        )
     message = (
         f"{found}; {_um(limit)} is allowed. Shorten the moves there, take a smaller cutter where the surface is "
         f"hollow, or check the length offset and the part origin"
@@ -96,7 +99,9 @@ def check_uncut(job: Job, cut: Cut) -> Finding:
         return Finding("uncut area", True, 0.0, 0.0, "mm2", 0, "the cutter reached every part of the outline")
     message = f"{area:.2f} mm² of the outline were not cut down to the surface"
     if not finishing:
-        return Finding("uncut area", True, area, math.nan, "mm2", 0, f"{message}; the job has no finishing operation")
+        return Finding(
+            "uncut area", True, area, math.nan, "mm2", 0, f"{message}; the job has no finishing operation"
+        )
     message += "; let the passes reach over the edge of the outline, and check the direction and the pattern"
     return Finding("uncut area", False, area, 0.0, "mm2", 0, message)
 
@@ -139,7 +144,9 @@ def check_holder(found: Clearance, motion: PartMotion) -> Finding:
     """Shank and holder must stay clear of the finished surface."""
     line = _line(motion, found.piece)
     if found.piece < 0:
-        return Finding("holder", True, math.inf, 0.0, "mm", 0, "no shank or holder comes near the finished surface")
+        return Finding(
+            "holder", True, math.inf, 0.0, "mm", 0, "no shank or holder comes near the finished surface"
+        )
     where = f"{found.body} of cutter {found.cutter}"
     if found.bound_mm > 0.0:
         message = f"the nearest is the {where}, {found.distance_mm:.2f} mm from the finished surface"
@@ -163,10 +170,16 @@ def check_rapids(job: Job, cutting: Clearance, rigid: Clearance, motion: PartMot
         )
         return Finding("rapids", False, rigid.distance_mm, 0.0, "mm", _line(motion, rigid.piece), message)
     line = _line(motion, cutting.piece)
-    where = f"the cutter comes within {cutting.distance_mm:.3f} mm of the blank {_place(cutting.at_mm)} at rapid"
+    where = (
+        f"the cutter comes within {cutting.distance_mm:.3f} mm of the blank {_place(cutting.at_mm)} at rapid"
+    )
     if cutting.distance_mm >= limit - CLEARANCE_MM:
-        return Finding("rapids", True, cutting.distance_mm, limit, "mm", line, f"{where}; {limit:g} mm are asked for")
-    message = f"{where}; the job asks for a clearance of {limit:g} mm: lift higher or start the feed move earlier"
+        return Finding(
+            "rapids", True, cutting.distance_mm, limit, "mm", line, f"{where}; {limit:g} mm are asked for"
+        )
+    message = (
+        f"{where}; the job asks for a clearance of {limit:g} mm: lift higher or start the feed move earlier"
+    )
     return Finding("rapids", False, cutting.distance_mm, limit, "mm", line, message)
 
 
@@ -215,12 +228,16 @@ def _axis_travel(axis: Axis, limits: tuple[float, float], went: tuple[float, flo
         message = f"{axis.letter} goes from {low:.3f} to {high:.3f}{sign}; {limits[0]:g} to {limits[1]:g} can be reached"
         return Finding(check, True, worst, limit, unit, line, message)
     worst, limit, line, over = (
-        (low, limits[0], line_low, over_low) if over_low > over_high else (high, limits[1], line_high, over_high)
+        (low, limits[0], line_low, over_low)
+        if over_low > over_high
+        else (high, limits[1], line_high, over_high)
     )
-    advice = "move part_origin" if axis.kind == "linear" else "choose another lead, lean or direction, or another machine"
-    message = (
-        f"{axis.letter} would have to go to {worst:.3f}{sign}, {over:.3f}{sign} past its limit of {limit:g}{sign}; {advice}"
+    advice = (
+        "move part_origin"
+        if axis.kind == "linear"
+        else "choose another lead, lean or direction, or another machine"
     )
+    message = f"{axis.letter} would have to go to {worst:.3f}{sign}, {over:.3f}{sign} past its limit of {limit:g}{sign}; {advice}"
     return Finding(check, False, worst, limit, unit, line, message)
 
 
@@ -257,13 +274,19 @@ def check_feeds(job: Job, motions: Motions) -> list[Finding]:
         worst = int(np.argmax(excess))
         unit, sign = ("mm/min", " mm/min") if axis.kind == "linear" else ("deg/min", "°/min")
         fastest, line = float(speed[worst, column]), int(motions.line[worst])
-        message = f"{axis.letter} moves at {fastest:.0f}{sign} at most; its fastest feed is {axis.feed:g}{sign}"
+        message = (
+            f"{axis.letter} moves at {fastest:.0f}{sign} at most; its fastest feed is {axis.feed:g}{sign}"
+        )
         if excess[worst] > 1.0:
             message = (
                 f"F asks {axis.letter} for {fastest:.0f}{sign}, and its fastest feed is {axis.feed:g}{sign}; reduce the "
                 f"feed there"
             )
-        found.append(Finding(f"feed {axis.letter}", bool(excess[worst] <= 1.0), fastest, axis.feed, unit, line, message))
+        found.append(
+            Finding(
+                f"feed {axis.letter}", bool(excess[worst] <= 1.0), fastest, axis.feed, unit, line, message
+            )
+        )
     return found
 
 
@@ -280,7 +303,9 @@ def check_spindle(job: Job, motions: Motions) -> list[Finding]:
         message = "the cutter turns backwards (M4) while it cuts; use M3"
         first = backwards[0]
         worst = float(motions.spindle_rpm[first])
-        found.append(Finding("spindle direction", False, worst, 0.0, "rev/min", int(motions.line[first]), message))
+        found.append(
+            Finding("spindle direction", False, worst, 0.0, "rev/min", int(motions.line[first]), message)
+        )
     size = np.abs(speed)
     over = np.maximum(spindle.min_rpm - size, size - spindle.max_rpm)
     worst_row = int(np.argmax(over))
@@ -299,7 +324,9 @@ def check_units(job: Job, program: ReadProgram) -> Finding:
     ok = program.units == job.units
     code = {"mm": "G21", "inch": "G20"}[job.units]
     line = next((event.line for event in program.events if event.what == "units"), 0)
-    message = f"the program is in {program.units}" + ("" if ok else f", the job in {job.units}; post it with {code}")
+    message = f"the program is in {program.units}" + (
+        "" if ok else f", the job in {job.units}; post it with {code}"
+    )
     return Finding("units", ok, 0.0 if ok else 1.0, 0.0, "", line, message)
 
 
@@ -307,7 +334,11 @@ def check_cuts_at_all(program: ReadProgram) -> list[Finding]:
     """A program without feed motion proves nothing."""
     if np.any(program.motions.shape != Shape.RAPID):
         return []
-    return [Finding("feed motion", False, 0.0, 1.0, "motions", 0, "the program has no feed motion: nothing is cut")]
+    return [
+        Finding(
+            "feed motion", False, 0.0, 1.0, "motions", 0, "the program has no feed motion: nothing is cut"
+        )
+    ]
 
 
 def check_start_known(program: ReadProgram, motion: PartMotion, moving: Bools) -> list[Finding]:

@@ -14,18 +14,22 @@ import numpy as np
 from anticlast.proof import _collision_kernels as kernels
 from anticlast.proof.patches import PatchTree
 from anticlast.proof.threads import in_threads, spans
+from anticlast.tolerances import SAME_DIRECTION_RAD, SAME_POINT_MM
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
     from anticlast.cutter import Cutter
-    from anticlast.records import Bools, Floats, PartMotion
+    from anticlast.records import Bools, Floats, Ints, PartMotion
 
 # Distances this near [mm], or this share of the least one, are not told apart.
 _TOLERANCE_MM = 0.01
 _SHARE = 0.01
 # Path length of the spans that the search starts with.
 _SPAN_MM = 8.0
+_STRIDE = 16
+# What is shown to be further away than this on coarse patches is not looked at on fine ones.
+_FAR_MM = 1.0
 # Height above the corner arc of a bull or flat end up to which the virtual cut looks after the flutes.
 _RIM_MM = 0.5
 
@@ -96,6 +100,15 @@ def nearer(one: Clearance, two: Clearance) -> Clearance:
     return replace(least, bound_mm=min(one.bound_mm, two.bound_mm))
 
 
+def rigid_clearance(
+    coarse: PatchTree, fine: PatchTree, motion: PartMotion, pieces: Bools, cutter: Cutter
+) -> Clearance:
+    """Return the least distance of shank and holder from patches; fine ones are used only if coarse ones are near."""
+    bodies = rigid_bodies(cutter)
+    found = least_clearance(coarse, motion, pieces, cutter, bodies)
+    return found if found.bound_mm > _FAR_MM else least_clearance(fine, motion, pieces, cutter, bodies)
+
+
 def flute_clearance(
     tree: PatchTree, motion: PartMotion, pieces: Bools, cutter: Cutter, interest_mm: float
 ) -> Clearance:
@@ -110,6 +123,20 @@ def flute_clearance(
         if found.name == "flutes" and found.high_mm > found.low_mm + rim
     ]
     return least_clearance(tree, motion, pieces, cutter, flutes, interest_mm)
+
+
+def lifts(motion: PartMotion) -> Bools:
+    """Tell which pieces draw the cutter back along its own axis without turning it, (m,) bool.
+
+    Everything on the cutter is as wide or wider further up, so such a piece passes through nothing that was not clear of
+    the cutter already.
+    """
+    step = np.diff(motion.tip_mm, axis=0, prepend=motion.tip_mm[:1])
+    before = np.concatenate((motion.axis[:1], motion.axis[:-1]))
+    turned = np.linalg.norm(motion.axis - before, axis=1)
+    along = np.einsum("ni,ni->n", step, motion.axis)
+    across = np.linalg.norm(step - along[:, None] * motion.axis, axis=1)
+    return (along > 0.0) & (turned <= SAME_DIRECTION_RAD) & (across <= SAME_POINT_MM)
 
 
 def least_clearance(
@@ -133,12 +160,14 @@ def least_clearance(
     rows = rows[rows > 0]
     worst = Clearance(math.inf, math.inf)
     for body in bodies if rows.size else ():
-        worst = nearer(worst, _one_body(tree, motion, rows, cutter, body, min(interest_mm, worst.distance_mm)))
+        worst = nearer(
+            worst, _one_body(tree, motion, rows, cutter, body, min(interest_mm, worst.distance_mm))
+        )
     return worst
 
 
 def _one_body(
-    tree: PatchTree, motion: PartMotion, rows: np.ndarray, cutter: Cutter, body: Body, interest_mm: float
+    tree: PatchTree, motion: PartMotion, rows: Ints, cutter: Cutter, body: Body, interest_mm: float
 ) -> Clearance:
     """Return the least distance of one body; ``rows`` are the pieces, ascending."""
     poses = np.ascontiguousarray(
@@ -155,10 +184,15 @@ def _one_body(
     arguments = ((tree.spheres, tree.child, tree.patches), poses, cumulative)
     shape = (body.radius_mm, body.low_mm, body.high_mm, body.round_mm)
 
+    shared = np.array([interest_mm])
+    # Neighbouring spans go to different runs, so that all threads soon know a small distance.
+    order = np.argsort(np.arange(len(runs)) % _STRIDE, kind="stable")
+    runs = np.ascontiguousarray(runs[order])
+
     def search(span: tuple[int, int]) -> Floats:
         result = np.empty(6)
         some = runs[span[0] : span[1]]
-        kernels.motion_least(*arguments, some, shape, _TOLERANCE_MM, _SHARE, interest_mm, result)
+        kernels.motion_least(*arguments, some, shape, _TOLERANCE_MM, _SHARE, shared, result)
         return result
 
     found = in_threads(search, spans(len(runs)))
@@ -170,7 +204,7 @@ def _one_body(
     return Clearance(float(best[0]), bound, int(rows[int(best[5])]), at, body.name, cutter.number)
 
 
-def _runs(rows: np.ndarray, cumulative: Floats) -> Floats:
+def _runs(rows: Ints, cumulative: Floats) -> Floats:
     """Return spans (k, 2) of path length in which the motion is continuous, none much longer than a set length."""
     breaks = np.flatnonzero(np.diff(rows) > 1) + 1
     edges = np.concatenate(([0], breaks, [len(rows)]))

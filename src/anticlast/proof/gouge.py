@@ -127,7 +127,9 @@ def deepest_gouge(saddle: Saddle, outline: Outline, pieces: Pieces) -> Gouge:
     return _worst(saddle, outline, corner - distance, moved, plan, piece)
 
 
-def _worst(saddle: Saddle, outline: Outline, depth: Floats, moved: Floats, plan: Floats, piece: Ints) -> Gouge:
+def _worst(
+    saddle: Saddle, outline: Outline, depth: Floats, moved: Floats, plan: Floats, piece: Ints
+) -> Gouge:
     """Return the deepest of the measured depths whose feet lie inside, and the bound between neighbours."""
     part_xy = np.column_stack(saddle.plan(plan[:, 0], plan[:, 1]))
     worst = _first_inside(outline, part_xy, depth, 0.0)

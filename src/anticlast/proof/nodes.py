@@ -151,7 +151,12 @@ def _clipped(
 
 
 def _tiled(
-    xy: Floats, triangles: npt.NDArray[np.int64], at: npt.NDArray[np.int64], gx: Floats, gy: Floats, saddle: Saddle
+    xy: Floats,
+    triangles: npt.NDArray[np.int64],
+    at: npt.NDArray[np.int64],
+    gx: Floats,
+    gy: Floats,
+    saddle: Saddle,
 ) -> Nodes:
     """Sort nodes by tile and renumber what refers to them."""
     x, y = saddle.local(xy[:, 0], xy[:, 1])

@@ -16,8 +16,8 @@ if TYPE_CHECKING:
     from anticlast.outline import Outline
     from anticlast.records import Floats, Job
 
-# How far a patch may stand off the curved surface: small against the clearance tolerance.
-_SAG_MM = 0.004
+# How far a patch may stand off the curved surface: small against the clearance tolerance; for a first look, less fine.
+FINE_MM, COARSE_MM = 0.004, 0.05
 _SMALLEST_MM, _LARGEST_MM = 0.5, 4.0
 _WALL_MM = 1.5
 # Cells that the boundary cuts are split this fine each way; patches reach over the outline by no more than that.
@@ -101,13 +101,18 @@ def _boxes(left: Floats, right: Floats, low: Floats, high: Floats) -> tuple[Floa
 def _covered(outline: Outline, middle: Floats, half: Floats) -> npt.NDArray[np.bool_]:
     low, high = middle - half, middle + half
     shapely.prepare(outline.polygon)
-    return np.asarray(shapely.covers(outline.polygon, shapely.box(low[:, 0], low[:, 1], high[:, 0], high[:, 1])))
+    return np.asarray(
+        shapely.covers(outline.polygon, shapely.box(low[:, 0], low[:, 1], high[:, 0], high[:, 1]))
+    )
 
 
-def surface_patches(saddle: Saddle, outline: Outline, offset_mm: float) -> Floats:
-    """Return patches (n, 10) of the surface moved out along its normal, over an outline [mm]."""
+def surface_patches(saddle: Saddle, outline: Outline, offset_mm: float, sag_mm: float = FINE_MM) -> Floats:
+    """Return patches (n, 10) of the surface moved out along its normal, over an outline [mm].
+
+    ``sag_mm`` is how far the surface may stand off a patch, unless that takes patches under half a mm.
+    """
     bend = 2.0 * max(saddle.a_per_mm, saddle.b_per_mm)
-    size = float(np.clip(2.0 * np.sqrt(_SAG_MM / bend), _SMALLEST_MM, _LARGEST_MM))
+    size = float(np.clip(2.0 * np.sqrt(sag_mm / bend), _SMALLEST_MM, _LARGEST_MM))
     middle, half = cells(outline, size)
     ax = np.column_stack((half[:, 0], np.zeros(len(half))))
     ay = np.column_stack((np.zeros(len(half)), half[:, 1]))
@@ -119,9 +124,9 @@ def surface_patches(saddle: Saddle, outline: Outline, offset_mm: float) -> Float
     return np.column_stack((point, one, two, sag))
 
 
-def finished_patches(job: Job) -> PatchTree:
+def finished_patches(job: Job, sag_mm: float = FINE_MM) -> PatchTree:
     """Return the finished surface over the part's outline."""
-    return plant(surface_patches(Saddle.of(job.part), job.part.outline, 0.0))
+    return plant(surface_patches(Saddle.of(job.part), job.part.outline, 0.0, sag_mm))
 
 
 def blank_patches(job: Job) -> PatchTree:

@@ -8,18 +8,22 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from anticlast.proof import checks
+from anticlast.proof.beside import pieces_beside
 from anticlast.proof.collisions import (
     Clearance,
     cutting_body,
     flute_clearance,
     least_clearance,
+    lifts,
     nearer,
     rigid_bodies,
+    rigid_clearance,
 )
-from anticlast.proof.patches import blank_patches, finished_patches
+from anticlast.proof.patches import COARSE_MM, blank_patches, finished_patches
 from anticlast.proof.virtual_cut import measure, scallop_map
 from anticlast.readback.checks import check_axes, check_cutters, known_places
 from anticlast.readback.forward import axis_travel, part_motion
+from anticlast.readback.lengths import check_lengths
 from anticlast.records import SIX, Proof
 
 if TYPE_CHECKING:
@@ -59,16 +63,18 @@ def prove(job: Job, program: ReadProgram, grid_mm: float | None = None) -> tuple
     travel = axis_travel(program, job.machine, job.part_origin_mm, lengths)
     findings: list[Finding] = [*program.findings, *check_axes(program, job.machine)]
     findings += check_cutters(program, {cutter.number for cutter in job.cutters})
+    findings += check_lengths(program, job.machine, lengths)
     findings += checks.check_cuts_at_all(program)
     findings.append(checks.check_units(job, program))
     findings += checks.check_stock(job)
     moving = moving_pieces(job, program, motion)
     findings += checks.check_start_known(program, motion, moving)
-    cut = measure(job, motion, grid_mm, wanted_mm=checks.wanted_height_mm(job), moving=moving)
+    beside = pieces_beside(job, motion)
+    cut = measure(job, motion, grid_mm, wanted_mm=checks.wanted_height_mm(job), moving=moving & ~beside)
     findings.append(checks.check_scallop(job, cut, motion))
     findings.append(checks.check_gouge(job, cut.gouge, motion))
     findings.append(checks.check_uncut(job, cut))
-    holder, rapid = _collisions(job, motion, moving, findings)
+    holder, rapid = _collisions(job, motion, moving, beside, findings)
     findings += checks.check_travel(job, travel)
     findings += checks.check_feeds(job, program.motions)
     findings += checks.check_spindle(job, program.motions)
@@ -90,15 +96,20 @@ def prove(job: Job, program: ReadProgram, grid_mm: float | None = None) -> tuple
     return proof, motion
 
 
-def _collisions(job: Job, motion: PartMotion, moving: Bools, findings: list[Finding]) -> tuple[float, float]:
-    """Add the findings about collisions; return holder and rapid clearance [mm]."""
-    finished, blank = finished_patches(job), blank_patches(job)
+def _collisions(
+    job: Job, motion: PartMotion, moving: Bools, beside: Bools, findings: list[Finding]
+) -> tuple[float, float]:
+    """Add the findings about collisions; return holder and rapid clearance [mm].
+
+    ``beside`` are pieces whose flutes cannot touch the finished surface.
+    """
+    finished, coarse, blank = finished_patches(job), finished_patches(job, COARSE_MM), blank_patches(job)
+    at_rapid = moving & motion.rapid & ~lifts(motion)
     flutes = holder = cutting = rigid = in_stock = _NOTHING
     for cutter in job.cutters:
         bodies = rigid_bodies(cutter)
-        flutes = nearer(flutes, flute_clearance(finished, motion, moving, cutter, 0.0))
-        holder = nearer(holder, least_clearance(finished, motion, moving, cutter, bodies))
-        at_rapid = moving & motion.rapid
+        flutes = nearer(flutes, flute_clearance(finished, motion, moving & ~beside, cutter, 0.0))
+        holder = nearer(holder, rigid_clearance(coarse, finished, motion, moving, cutter))
         cutting = nearer(cutting, least_clearance(blank, motion, at_rapid, cutter, [cutting_body(cutter)]))
         rigid = nearer(rigid, least_clearance(blank, motion, at_rapid, cutter, bodies))
         if job.stock.allowance_mm is not None:

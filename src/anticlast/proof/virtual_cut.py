@@ -78,7 +78,12 @@ def choose_grid_mm(job: Job) -> float:
 
 
 def measure(
-    job: Job, motion: PartMotion, grid_mm: float | None = None, *, wanted_mm: float = 0.0, moving: Bools | None = None
+    job: Job,
+    motion: PartMotion,
+    grid_mm: float | None = None,
+    *,
+    wanted_mm: float = 0.0,
+    moving: Bools | None = None,
 ) -> Cut:
     """Cut the stock with read-back motion and measure what stands over the finished surface.
 
@@ -153,7 +158,15 @@ class _Field:
         pieces, tiles = self.pieces, len(self.nodes.tile_start) - 1
         start, none = np.zeros(tiles + 1, np.int64), np.empty(0, np.int32)
         self.state[:] = 0
-        arguments = (self.surface, pieces.c0, pieces.c1, pieces.size, pieces.active, high_mm, self.nodes.tiling)
+        arguments = (
+            self.surface,
+            pieces.c0,
+            pieces.c1,
+            pieces.size,
+            pieces.active,
+            high_mm,
+            self.nodes.tiling,
+        )
         _reach_kernels.bin_pieces(*arguments, start, none, self.state)
         start = np.cumsum(start)
         listing = np.empty(int(start[-1]), np.int32)
@@ -164,7 +177,9 @@ class _Field:
             self.floor = self._depths(np.arange(len(self.height)))
 
     def _depths(self, rows: npt.NDArray[np.int64]) -> Floats:
-        return part_depths_mm(self.nodes.xy[rows], self.job.part.outline, self.saddle, self.job.stock.bottom_mm)
+        return part_depths_mm(
+            self.nodes.xy[rows], self.job.part.outline, self.saddle, self.job.stock.bottom_mm
+        )
 
     def _kernel_pieces(self) -> tuple[npt.NDArray, ...]:
         own = self.pieces

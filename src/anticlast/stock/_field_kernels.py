@@ -28,6 +28,8 @@ _REFINES = 8
 _NEWTON = 16
 _NEWTON_MM = 1e-7
 _BISECTIONS = 24
+# Distances are told apart to this share of the least one.
+_TOLD = 0.01
 
 
 @njit(cache=True, nogil=True)
@@ -411,7 +413,7 @@ def in_material(u: float, v: float, z: float, grid: tuple, row: int, high: np.nd
 
 
 @njit(cache=True, nogil=True)
-def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, grid: tuple, rows: tuple, highest: float, ahead_mm: float,
+def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, circle: np.ndarray, grid: tuple, rows: tuple, highest: float, ahead_mm: float,
                  least: float, high: np.ndarray, low: np.ndarray, count: np.ndarray, hits: np.ndarray) -> None:  # fmt: skip
     """Mark the points of a cutter's surface that stand before material, at station k.
 
@@ -422,6 +424,8 @@ def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, grid: tuple, r
         how the axis changes along the feed [1/mm].
     rings : (rings, 4) [mm, mm, 1, 1]
         Height over the reference point, radius, radial and axial part of the outward normal.
+    circle : (angles, 2)
+        Cosine and sine of each angle.
     rows : (int, int)
         Grid rows (first, after last) that this band answers for.
     hits : (rings, angles) uint8
@@ -434,33 +438,46 @@ def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, grid: tuple, r
     ex, ey, ez = stations[k, 6], stations[k, 7], stations[k, 8]
     fx, fy, fz = stations[k, 9], stations[k, 10], stations[k, 11]
     bx, by, bz = stations[k, 12], stations[k, 13], stations[k, 14]
-    # Third direction: axis x across points against the feed; with the minus sign along it.
+    # Third direction, square to axis and across: along the feed.
     gx, gy, gz = ey * az - ez * ay, ez * ax - ex * az, ex * ay - ey * ax
+    fg, fa = fx * gx + fy * gy + fz * gz, fx * ax + fy * ay + fz * az
+    turns = bx != 0.0 or by != 0.0 or bz != 0.0
     u0, v0, g, first = grid
     sine = math.sqrt(max(0.0, 1.0 - az * az))
+    v_low, v_high = v0 + rows[0] * g - 3.0 * ahead_mm, v0 + rows[1] * g + 3.0 * ahead_mm
     angles = hits.shape[1]
     for ring in range(rings.shape[0]):
         h, radius, radial, axial = rings[ring, 0], rings[ring, 1], rings[ring, 2], rings[ring, 3]
         if cz + h * az - radius * sine + min(0.0, 3.0 * ahead_mm * fz) > highest:
             continue
+        middle = cy + h * ay
+        if middle + radius < v_low or middle - radius > v_high or radial == 0.0 and axial == 0.0:
+            continue
         for m in range(angles):
-            angle = 2.0 * math.pi * (m + 0.5) / angles
-            c, d = math.cos(angle), math.sin(angle)
-            rx, ry, rz = c * ex + d * gx, c * ey + d * gy, c * ez + d * gz
-            nx, ny, nz = radial * rx + axial * ax, radial * ry + axial * ay, radial * rz + axial * az
-            turned = radius * (rx * bx + ry * by + rz * bz)
-            vx, vy, vz = fx + h * bx - turned * ax, fy + h * by - turned * ay, fz + h * bz - turned * az
-            if vx * nx + vy * ny + vz * nz < least:
+            c, d = circle[m, 0], circle[m, 1]
+            along = radial * d * fg + axial * fa
+            if not turns and along < least:
                 continue
+            rx, ry, rz = c * ex + d * gx, c * ey + d * gy, c * ez + d * gz
+            v = middle + radius * ry
+            if v < v_low or v > v_high:
+                continue
+            if turns:
+                turned = radius * (rx * bx + ry * by + rz * bz)
+                along += (h * bx - turned * ax) * (radial * rx + axial * ax)
+                along += (h * by - turned * ay) * (radial * ry + axial * ay)
+                along += (h * bz - turned * az) * (radial * rz + axial * az)
+                if along < least:
+                    continue
             # Flat ground is read between columns to far less than a cell, a wall only to the nearest column.
+            nz = radial * rz + axial * az
             steep = 1.0 - nz * nz
             ahead = ahead_mm * (1.0 + 2.0 * steep * steep)
-            u = cx + h * ax + radius * rx + ahead * fx
-            v = cy + h * ay + radius * ry + ahead * fy
+            v += ahead * fy
             row = int(math.floor((v - v0) / g))
             if row < rows[0] or row >= rows[1]:
                 continue
-            z = cz + h * az + radius * rz + ahead * fz
+            u, z = cx + h * ax + radius * rx + ahead * fx, cz + h * az + radius * rz + ahead * fz
             if in_material(u, v, z, grid, row - first, high, low, count):
                 hits[ring, m] = 1
 
@@ -503,10 +520,21 @@ def band_distance(tip: tuple, axis: tuple, body: np.ndarray, limit: float, grid:
     best, best_tile, nearest = limit, -1, FAR
     half = 0.5 * g * math.sqrt(2.0) * (tile - 1)
     across = tops.shape[1]
-    for q in range(tops.size):
-        tj, ti = q // across, q % across
-        bounds[q] = FAR
-        if tops[tj, ti] > -FAR:
+    # Only tiles within the limit of the body's plan shadow can matter.
+    wide = body[0] + body[3] + limit
+    left = tip[0] + min(body[1] * axis[0], body[2] * axis[0]) - wide - u0
+    right = tip[0] + max(body[1] * axis[0], body[2] * axis[0]) + wide - u0
+    near = tip[1] + min(body[1] * axis[1], body[2] * axis[1]) - wide - v0
+    far = tip[1] + max(body[1] * axis[1], body[2] * axis[1]) + wide - v0
+    i0, i1 = max(0, int(math.floor(left / g)) // tile), min(across - 1, int(math.ceil(right / g)) // tile)
+    j0 = max(0, (int(math.floor(near / g)) - first) // tile)
+    j1 = min(tops.shape[0] - 1, (int(math.ceil(far / g)) - first) // tile)
+    for tj in range(j0, j1 + 1):
+        for ti in range(i0, i1 + 1):
+            q = tj * across + ti
+            bounds[q] = FAR
+            if tops[tj, ti] <= -FAR:
+                continue
             x = u0 + (ti * tile + 0.5 * (tile - 1)) * g - tip[0]
             y = v0 + (first + tj * tile + 0.5 * (tile - 1)) * g - tip[1]
             bounds[q] = line_distance(x, y, -FAR, tops[tj, ti] - tip[2], axis, body) - half
@@ -514,8 +542,9 @@ def band_distance(tip: tuple, axis: tuple, body: np.ndarray, limit: float, grid:
                 best_tile, nearest = q, bounds[q]
     if best_tile < 0 or nearest >= limit:
         return limit
-    for turn in range(-1, tops.size):
-        q = best_tile if turn < 0 else turn
+    width = i1 - i0 + 1
+    for turn in range(-1, width * (j1 - j0 + 1)):
+        q = best_tile if turn < 0 else (j0 + turn // width) * across + i0 + turn % width
         if bounds[q] >= best:
             continue
         bounds[q] = FAR
@@ -548,8 +577,8 @@ def tile_tops(high: np.ndarray, count: np.ndarray, rows: int, tile: int, tops: n
 
 
 @njit(cache=True, nogil=True)
-def watch_body(k: int, ends: np.ndarray, offset: float, body: np.ndarray, step_mm: float, horizon_mm: float, near: np.ndarray,
-               place: tuple, columns: tuple, found: np.ndarray) -> None:  # fmt: skip
+def watch_body(k: int, ends: np.ndarray, offset: float, body: np.ndarray, step_mm: float, horizon_mm: float, cap: float,
+               near: np.ndarray, place: tuple, columns: tuple, found: np.ndarray) -> None:  # fmt: skip
     """Carry one body along segment k and note its least distance from a band's material.
 
     A body at distance d cannot come nearer than d - x within x of its own travel, and material only goes: the pose is
@@ -557,6 +586,8 @@ def watch_body(k: int, ends: np.ndarray, offset: float, body: np.ndarray, step_m
 
     Parameters
     ----------
+    cap : float
+        Least distance known from elsewhere [mm]: what is not nearer by a hundredth need not be told apart.
     near : (1,)
         Distance known to be kept at the start of the segment; gets that at its end.
     found : (7,)
@@ -573,7 +604,9 @@ def watch_body(k: int, ends: np.ndarray, offset: float, body: np.ndarray, step_m
     at = np.empty(2)
     done = 0.0
     while True:
-        room = max(0.0, near[0] - found[0])
+        least = min(found[0], cap)
+        least -= _TOLD * max(0.0, least)
+        room = max(0.0, near[0] - least)
         if done + room >= length and not (room == 0.0 and length == 0.0):
             near[0] -= length - done
             return
@@ -589,13 +622,13 @@ def watch_body(k: int, ends: np.ndarray, offset: float, body: np.ndarray, step_m
             ends[k, 1] + t * (ends[k, 7] - ends[k, 1]) - offset * axis[1],
             ends[k, 2] + t * (ends[k, 8] - ends[k, 2]) - offset * axis[2],
         )
-        d = band_distance(tip, axis, body, found[0] + horizon_mm, grid, rows, tile, tops, bounds, columns, at)
+        d = band_distance(tip, axis, body, least + horizon_mm, grid, rows, tile, tops, bounds, columns, at)
         found[6] += 1.0
         if d < found[0]:
             found[0], found[1], found[2], found[3], found[4] = d, k, t, at[0], at[1]
         if found[5] < 0.0 and d < -0.1 * step_mm:
             found[5] = k
-        near[0] = max(d, found[0] + step_mm)
+        near[0] = max(d, min(found[0], cap) + step_mm)
 
 
 @njit(cache=True, nogil=True)
@@ -624,7 +657,7 @@ def run_band(
         Segments of this run.
     sampling : (first_station, stations, rings, ahead_mm, least, close_mm)
         Stations of segment k are ``first_station[k]`` to ``first_station[k + 1]``, less those of the run's first.
-    watching : (bodies, of_shape, only_rapid, rapid, offsets, step_mm, horizon_mm)
+    watching : (bodies, of_shape, only_rapid, rapid, offsets, step_mm, horizon_mm, caps)
         Bodies (b, 4) that belong to shape ``of_shape``; ``only_rapid`` ones are watched at rapid only.
     taken : (run, 4)
         Gets volume [mm^3], lowest and highest measure of what was taken [mm], volume that had to be left in.
@@ -637,7 +670,7 @@ def run_band(
     high, low, count = columns
     ends, shape_of, shapes, motion_row, cuts, along_normal = segments
     first_station, stations, rings, ahead_mm, least, close_mm = sampling
-    bodies, of_shape, only_rapid, rapid, offsets, step_mm, horizon_mm = watching
+    bodies, of_shape, only_rapid, rapid, offsets, step_mm, horizon_mm, caps = watching
     tile = 8
     tops = np.empty(((own + tile - 1) // tile, (count.shape[1] + tile - 1) // tile))
     bounds = np.empty(tops.size)
@@ -646,17 +679,21 @@ def run_band(
     place = (grid, own, tile, tops, bounds)
     s, box, out = np.empty(SCRATCH), np.empty(5), np.empty(3)
     station_base = first_station[span[0]]
+    circle = np.empty((hits.shape[2], 2))
+    for m in range(hits.shape[2]):
+        angle = 2.0 * math.pi * (m + 0.5) / hits.shape[2]
+        circle[m, 0], circle[m, 1] = math.cos(angle), math.sin(angle)
     local, nx = count.shape[0], count.shape[1]
     one = np.empty(1)
     for k in range(span[0], span[1]):
         if highest > -FAR:
             for station in range(first_station[k], first_station[k + 1]):
                 sample_front(
-                    station, stations, rings[shape_of[k]], grid, (row_first, row_after), highest, ahead_mm, least,
+                    station, stations, rings[shape_of[k]], circle, grid, (row_first, row_after), highest, ahead_mm, least,
                     high, low, count, hits[station - station_base],
                 )  # fmt: skip
         if rapid[k]:
-            _watch(k, ends, shape_of, bodies, of_shape, only_rapid, True, offsets, step_mm, horizon_mm, near, one, place,
+            _watch(k, ends, shape_of, bodies, of_shape, only_rapid, True, offsets, step_mm, horizon_mm, caps, near, one, place,
                    columns, found)  # fmt: skip
         if cuts[k] and highest > -FAR:
             load_segment(k, ends, shapes, shape_of, close_mm, s)
@@ -685,7 +722,7 @@ def run_band(
                         one_end, other = _measure(u, v, out[0], out[1], s, surface, along_normal[k])
                         row[1], row[2] = min(row[1], one_end), max(row[2], other)
         if not rapid[k]:
-            _watch(k, ends, shape_of, bodies, of_shape, only_rapid, False, offsets, step_mm, horizon_mm, near, one, place,
+            _watch(k, ends, shape_of, bodies, of_shape, only_rapid, False, offsets, step_mm, horizon_mm, caps, near, one, place,
                    columns, found)  # fmt: skip
 
 
@@ -701,7 +738,7 @@ def _row_top(high: np.ndarray, count: np.ndarray, first: int) -> float:
 
 @njit(cache=True, nogil=True)
 def _watch(k: int, ends: np.ndarray, shape_of: np.ndarray, bodies: np.ndarray, of_shape: np.ndarray, only_rapid: np.ndarray,
-           at_rapid: bool, offsets: np.ndarray, step_mm: float, horizon_mm: float, near: np.ndarray, one: np.ndarray,
+           at_rapid: bool, offsets: np.ndarray, step_mm: float, horizon_mm: float, caps: np.ndarray, near: np.ndarray, one: np.ndarray,
            place: tuple, columns: tuple, found: np.ndarray) -> None:  # fmt: skip
     for body in range(bodies.shape[0]):
         if of_shape[body] != shape_of[k] or (only_rapid[body] and not at_rapid):
@@ -710,7 +747,9 @@ def _watch(k: int, ends: np.ndarray, shape_of: np.ndarray, bodies: np.ndarray, o
         if k > 0 and not _joined(k, ends):
             near[body] = -FAR
         one[0] = near[body]
-        watch_body(k, ends, offsets[body], bodies[body], step_mm, horizon_mm, one, place, columns, found[body])
+        watch_body(
+            k, ends, offsets[body], bodies[body], step_mm, horizon_mm, caps[body], one, place, columns, found[body]
+        )  # fmt: skip
         near[body] = one[0]
 
 

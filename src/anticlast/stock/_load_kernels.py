@@ -11,6 +11,9 @@ from numba import njit
 (ENTRY, EXIT, ARC, AREA, CHIP_MEAN, CHIP_MAX, SLOW_MM, FAST_MM, MEAN_LOW, MEAN_HIGH, PEAK_LOW, PEAK_HIGH, TORQUE_LOW,
  TORQUE_HIGH, TORQUE_PEAK_LOW, TORQUE_PEAK_HIGH) = range(16)  # fmt: skip
 COLUMNS = 16
+# An angle belongs to the engaged arc when what a tooth takes there turns the spindle by more than this share of the most: the
+# few hundredths of a mm round a ball's axis, where a tooth never leaves the material, do not count.
+_ARC_SHARE = 0.03
 
 
 @njit(cache=True, nogil=True)
@@ -50,13 +53,16 @@ def station_loads(
     step = 2.0 * math.pi / angles
     low, high = np.empty(angles), np.empty(angles)
     turn_low, turn_high = np.empty(angles), np.empty(angles)
-    seen = np.empty(angles, np.uint8)
-    kc = np.empty(2)
+    seen, lever = np.empty(angles, np.uint8), np.empty(angles)
+    kc, sums = np.empty(2), np.empty(4)
+    circle = np.empty((angles, 2))
+    for m in range(angles):
+        circle[m, 0], circle[m, 1] = math.cos(step * (m + 0.5)), math.sin(step * (m + 0.5))
     for n in range(first, after):
         shape, row, f = shape_of[n], out[n], frames[n]
         row[:] = 0.0
         row[SLOW_MM] = 1e30
-        low[:], high[:], turn_low[:], turn_high[:], seen[:] = 0.0, 0.0, 0.0, 0.0, 0
+        low[:], high[:], turn_low[:], turn_high[:], lever[:] = 0.0, 0.0, 0.0, 0.0, 0.0
         ax, ay, az, ex, ey, ez = f[3], f[4], f[5], f[6], f[7], f[8]
         gx, gy, gz = ey * az - ez * ay, ez * ax - ex * az, ex * ay - ey * ax
         weight = chips = 0.0
@@ -65,8 +71,7 @@ def station_loads(
             for m in range(angles):
                 if hits[n, ring, m] == 0:
                     continue
-                angle = step * (m + 0.5)
-                c, d = math.cos(angle), math.sin(angle)
+                c, d = circle[m, 0], circle[m, 1]
                 rx, ry, rz = c * ex + d * gx, c * ey + d * gy, c * ez + d * gz
                 turned = radius * (rx * f[12] + ry * f[13] + rz * f[14])
                 ahead = (f[9] + h * f[12] - turned * ax) * (radial * rx + axial * ax)
@@ -74,7 +79,7 @@ def station_loads(
                 ahead += (f[11] + h * f[14] - turned * az) * (radial * rz + axial * az)
                 if ahead <= least:
                     continue
-                seen[m] = 1
+                lever[m] += ahead * edges[shape, ring] * radius
                 row[AREA] += ahead * radius * step * edges[shape, ring]
                 row[SLOW_MM] = min(row[SLOW_MM], inner[shape, ring])
                 row[FAST_MM] = max(row[FAST_MM], outer[shape, ring])
@@ -95,14 +100,19 @@ def station_loads(
             row[SLOW_MM] = 0.0
         if weight > 0.0:
             row[CHIP_MEAN] = chips / weight
+        most = lever.max()
+        for m in range(angles):
+            seen[m] = 1 if most > 0.0 and lever[m] > _ARC_SHARE * most else 0
         _arc(seen, step, row)
         teeth = flutes[shape]
+        if row[CHIP_MAX] <= 0.0 or laws.shape[0] == 0:
+            continue
         for m in range(angles):
             row[MEAN_LOW] += low[m] * teeth / angles
             row[MEAN_HIGH] += high[m] * teeth / angles
             row[TORQUE_LOW] += turn_low[m] * teeth / angles
             row[TORQUE_HIGH] += turn_high[m] * teeth / angles
-            sums = np.zeros(4)
+            sums[:] = 0.0
             for tooth in range(teeth):
                 at = (m + int(round(tooth * angles / teeth))) % angles
                 sums[0] += low[at]

@@ -27,8 +27,8 @@ if TYPE_CHECKING:
     from anticlast.saddle import Saddle
     from anticlast.stock.watch import Watch
 
-# A station once half a cell was travelled; segments no longer than so many cells.
-_STATION_CELLS: Final = 0.5
+# A station once a cell was travelled; segments no longer than so many cells.
+_STATION_CELLS: Final = 1.0
 LONGEST_CELLS: Final = 4.0
 # What columns lose is spread over this much path to either side, in cells: a column beside a wall goes all at once.
 _WINDOW_CELLS = 5.0
@@ -118,7 +118,7 @@ def follow(
     along_normal : (k,) bool, optional
         Segments whose depth counts along the surface normal.
     breaks : sequence of int
-        Segments at which ``at_break`` is called with the position among the breaks, before they cut.
+        Segments before which ``at_break`` is called, with the segment.
     watch : Watch, optional
     """
     spacing = field.grid.spacing_mm
@@ -135,10 +135,9 @@ def follow(
     tooth[segments.rapid] = np.nan
     table = np.zeros((len(stations), kernels.COLUMNS))
     volume, low, high = np.zeros(len(segments)), np.zeros(len(segments)), np.zeros(len(segments))
-    waiting = dict(zip((int(place) for place in breaks), range(len(breaks)), strict=True))
     for first, after in runs(segments, stations, breaks):
-        if at_break is not None and first in waiting:
-            at_break(waiting[first])
+        if at_break is not None and first in breaks:
+            at_break(first)
         taken = field.run(
             segments, cutters, saddle, (first, after), along_normal=along_normal, stations=stations, rings=places,
             angles=ANGLES, watch=watch,

@@ -29,7 +29,7 @@ if TYPE_CHECKING:
 PIECES: Final = 4  # of material that a column can hold
 _LEAST_BAND_ROWS, _BANDS = 12, 16
 # Segments, and stations, worked through at a time: bounds the memory of what a run returns.
-_RUN_SEGMENTS, _RUN_STATIONS = 20_000, 12_000
+_RUN_SEGMENTS, _RUN_STATIONS = 8_000, 8_000
 # A point of the cutter's front counts as cutting when the feed is within 87.7 degrees of its normal: nearer to square the
 # chip is thinner than 1/25 of the feed per tooth, and a groove read between columns would look like material.
 LEAST_COSINE: Final = 0.04
@@ -56,6 +56,8 @@ class StockField:
         Row of the part motion that lowered the column's top last, -1 where none did.
     left_in_mm3 : float
         Material that should have gone but had to be left, because a column held four pieces already.
+    bands : tuple of (int, int)
+        Rows (first, after) that are cut together.
     """
 
     grid: ColumnGrid
@@ -65,13 +67,13 @@ class StockField:
     area_mm2: Floats
     owner: Ints
     left_in_mm3: float = 0.0
-    _bands: tuple[tuple[int, int], ...] = field(init=False, default=())
+    bands: tuple[tuple[int, int], ...] = field(init=False, default=())
 
     def __post_init__(self) -> None:
         rows = self.grid.rows
         bands = max(1, min(_BANDS, rows // _LEAST_BAND_ROWS))
         edges = np.linspace(0, rows, bands + 1).astype(int).tolist()
-        self._bands = tuple(zip(edges[:-1], edges[1:], strict=True))
+        self.bands = tuple(zip(edges[:-1], edges[1:], strict=True))
 
     @classmethod
     def of_heights(cls, grid: ColumnGrid, area_mm2: Floats, bottom_mm: float, top_mm: Floats) -> StockField:
@@ -148,19 +150,19 @@ class StockField:
         rings = np.zeros((len(cutters), 1, 4)) if rings is None else rings
         looked = int(stations.first[after] - stations.first[first])
         hits = np.zeros((looked, rings.shape[1], angles), np.uint8)
-        taken = np.zeros((len(self._bands), number, 4))
+        taken = np.zeros((len(self.bands), number, 4))
         taken[:, :, 1], taken[:, :, 2] = np.inf, -np.inf
         table = (segments.ends, segments.shape, shape_table(cutters), segments.row, cuts, along_normal)
         spacing = self.grid.spacing_mm
         sampling = (stations.first, stations.frame, rings, _AHEAD_SHARE * spacing, LEAST_COSINE, _CLOSE_SHARE * spacing)
-        watching = (watch or Watch.nothing(len(self._bands))).arguments(segments.rapid, spacing)
+        watching = (watch or Watch.nothing(len(self.bands))).arguments(segments.rapid, spacing)
         surface = turned_surface(saddle)
 
         # Every band gets its copy before any starts: rows that two bands read must not change under one of them.
-        copies = [self._columns(band) for band in self._bands]
+        copies = [self._columns(band) for band in self.bands]
 
         def work(band: int) -> None:
-            low_row, after_row = self._bands[band]
+            low_row, after_row = self.bands[band]
             grid = (self.grid.u0_mm, self.grid.v0_mm, spacing, low_row)
             answers = (after_row - low_row, low_row if low_row else -1, after_row)
             near, found = watch.of_band(band) if watch else (np.empty(0), np.empty((0, 7)))
@@ -170,8 +172,8 @@ class StockField:
             )  # fmt: skip
 
         with ThreadPoolExecutor(_workers()) as pool:
-            list(pool.map(work, range(len(self._bands))))
-        for (low_row, after_row), (high, low, count) in zip(self._bands, copies, strict=True):
+            list(pool.map(work, range(len(self.bands))))
+        for (low_row, after_row), (high, low, count) in zip(self.bands, copies, strict=True):
             own = after_row - low_row
             self.high_mm[:, low_row:after_row], self.low_mm[:, low_row:after_row] = high[:, :own], low[:, :own]
             self.count[low_row:after_row] = count[:own]

@@ -15,7 +15,7 @@ if TYPE_CHECKING:
 # Poses are looked at no oftener than this share of the grid spacing along a body's travel.
 STEP_SHARE: Final = 0.5
 # Distances are told apart up to this much above the least one found so far; further off they only save looking.
-_HORIZON_MM = 25.0
+_HORIZON_MM = 4.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,4 +90,5 @@ class Watch:
         """Return what the kernel takes."""
         return (
             self.bodies, self.shape, self.only_rapid, rapid, self.offset_mm, STEP_SHARE * spacing_mm, _HORIZON_MM,
+            self.found[:, :, 0].min(axis=0, initial=np.inf),
         )  # fmt: skip

@@ -46,8 +46,16 @@ class Grid:
         """The rectangle that the grid covers."""
         return shapely.box(self.x_mm[0], self.y_mm[0], self.x_mm[-1], self.y_mm[-1])
 
+    @property
+    def inner(self) -> Polygon:
+        """The rectangle without its outermost cells, in which contours end inexactly."""
+        step = self.x_mm[1] - self.x_mm[0]
+        return shapely.box(
+            self.x_mm[0] + step, self.y_mm[0] + step, self.x_mm[-1] - step, self.y_mm[-1] - step
+        )
+
     def below(self, level_mm: float) -> BaseGeometry:
-        """Return the region of the grid's rectangle where the height is at most the level.
+        """Return the region of the grid's inner rectangle where the height is at most the level.
 
         Its rim is looked at four times a cell; where a chord stands over the level by more than `LEVEL_MM`, the level
         is lowered by that much and the region taken anew. A height that has no summit of its own, as those over a
@@ -63,7 +71,7 @@ class Grid:
             region = self._below(wanted)
             over = self._over(region, level_mm)
             if over <= LEVEL_MM:
-                return region
+                return shapely.intersection(region, self.inner)
             wanted -= 1.1 * over
         raise NotConverged(f"rim of the layer at z = {level_mm:.3f}", over, LEVEL_MM)
 

@@ -17,7 +17,7 @@ from shapely.geometry.base import BaseGeometry
 from anticlast.passes.rough import limits
 from anticlast.passes.rough.contour import Grid
 from anticlast.passes.rough.field import TipField
-from anticlast.passes.rough.opening import opening
+from anticlast.passes.rough.opening import SMALLEST, opening
 from anticlast.passes.rough.peel import Bite, Piece, grown, peel, thick_parts
 from anticlast.passes.rough.terraces import Terraces
 from anticlast.records import Job, Operation, Part, Stock
@@ -31,6 +31,8 @@ _CELLS, _FINEST_MM, _COARSEST_MM = 160, 0.35, 1.0
 # Nothing is claimed to be cleared within this of where passes really went (mm).
 _DOUBT_MM = 0.02
 _MOST_OPENINGS = 50
+# Rounds of a third of the width after an opening, until there is room for arcs onto the passes.
+_CAREFUL_ROUNDS = 5
 
 
 @dataclass(frozen=True, slots=True)
@@ -103,7 +105,8 @@ def untouched(part: Part, stock: Stock) -> Terraces:
     # The surface moved out by m along its normal lies where the centre of a rolling ball of radius m is.
     field = TipField(Saddle.of(part), 0.0, allowance, allowance)
     x0, y0, x1, y1 = blank.bounds
-    box = (x0 - 1.0, y0 - 1.0, x1 + 1.0, y1 + 1.0)
+    edge = 2.0 * _COARSEST_MM
+    box = (x0 - edge, y0 - edge, x1 + edge, y1 + edge)
     return Terraces(blank, stock.top_mm, Grid.over(box, _spacing_mm(box), field.height_and_slope))
 
 
@@ -128,15 +131,16 @@ def _cut(
         if found is None:
             break
         number = max((piece.round for piece in pieces), default=-1) + 1
-        first = opening(found, site.operation.cutter, site.bite.radius_mm, above_mm, z_mm, number)
-        standing = terraces.standing(above_mm)
-        if first is None or shapely.intersection(first.swept, standing).area > SAME_POINT_MM:
+        top = above_mm if above_mm >= site.stock.top_mm else above_mm + limits.cusp_mm(site.operation)
+        first = opening(found, site.operation.cutter, site.bite.radius_mm, top, z_mm, number)
+        if first is None or not site.is_open(first, terraces.standing(top)):
             barred.append(found)
             continue
         pieces.append(first)
         rest = thick_parts(shapely.difference(rest, first.swept))
-        more, rest = peel(room, rest, site.bite, number + 1)
-        pieces += more
+        for bite, rounds in ((site.careful, _CAREFUL_ROUNDS), (site.bite, None)):
+            more, rest = peel(room, rest, bite, 1 + max(piece.round for piece in pieces), rounds)
+            pieces += more
         barred.append(found)
     return pieces, rest
 
@@ -149,7 +153,9 @@ class _Site:
         self.saddle = Saddle.of(part)
         cutter = operation.cutter
         radius = limits.cut_radius_mm(operation)
-        self.bite = Bite(radius, limits.cut_width_mm(operation), _CORNER_SHARE * radius)
+        width = limits.cut_width_mm(operation)
+        self.bite = Bite(radius, width, _CORNER_SHARE * radius)
+        self.careful = Bite(radius, width / 3.0, SMALLEST * radius)
         self.clear_radius_mm = limits.radius_at_mm(cutter, limits.cusp_mm(operation))
         self.blank = stock.outline.polygon
         self.zone = self._zone()
@@ -181,9 +187,7 @@ class _Site:
         found = []
         x, y = np.array(self.box)[[0, 2, 0, 2]], np.array(self.box)[[1, 1, 3, 3]]
         steepest = float(np.hypot(*self.saddle.gradient(x, y)).max())
-        left = limits.left_mm(self.operation) * math.hypot(1.0, steepest)
-        # A flat bottom bridges a hollow: the surface lies this much lower in the middle of its disc.
-        left += max(self.saddle.a_per_mm, self.saddle.b_per_mm) * self.operation.cutter.radius_mm**2
+        left = limits.left_mm(self.operation, self.part) * math.hypot(1.0, steepest)
         for body in self.operation.cutter.bodies():
             if body.name == "flutes" or body.radius_mm <= self.bite.radius_mm:
                 continue
@@ -218,6 +222,11 @@ class _Site:
                 if self.zone is not None:
                     room = shapely.intersection(room, shapely.buffer(self.zone, -radius))
         return room
+
+    def is_open(self, piece: Piece, standing: BaseGeometry) -> bool:
+        """Tell whether a way down starts where the layer above is cleared."""
+        path = shapely.linestrings(piece.xy)
+        return bool(shapely.intersection(grown(path, self.clear_radius_mm - 2.0 * _DOUBT_MM), standing).area <= SAME_POINT_MM)
 
     def closed(self, room: BaseGeometry, rest: BaseGeometry, barred: list[BaseGeometry]) -> Polygon | None:
         """Return a part of the room from which stock can be cut that could not be reached from air, None if none."""

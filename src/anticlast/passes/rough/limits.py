@@ -6,7 +6,7 @@ import math
 from typing import Final
 
 from anticlast.cutter import Cutter
-from anticlast.records import Operation
+from anticlast.records import Operation, Part
 
 # Of the diameter, where the job does not say: layers and width of a roughing cut on bench-top machines, and the
 # shallower layers of an outline's groove, which is cut over the full width (common practice).
@@ -62,11 +62,24 @@ def cusp_mm(operation: Operation) -> float:
     return corner - math.sqrt(max(corner * corner - 0.25 * gap * gap, 0.0))
 
 
-def left_mm(operation: Operation) -> float:
+def left_mm(operation: Operation, part: Part) -> float:
     """Return a bound on the stock over the finished surface after an operation, along the normal, mm.
 
-    Roughing leaves its allowance, and on it steps as high as a layer; other operations their allowance.
+    Roughing leaves its allowance, on it steps as high as a layer, and where the surface is hollow what a flat bottom bridges;
+    other operations leave their allowance.
     """
     if operation.does == "rough":
-        return operation.allowance_mm + cut_depth_mm(operation) + cusp_mm(operation)
+        return operation.allowance_mm + cut_depth_mm(operation) + cusp_mm(operation) + _bridged_mm(operation, part)
     return operation.allowance_mm
+
+
+def _bridged_mm(operation: Operation, part: Part) -> float:
+    """Return how far a flat bottom stays above a hollow that it reaches over, mm; 0 for a ball.
+
+    A disc of radius R cuts lowest over the saddle point when that lies on its rim, towards the side that falls. On the rim
+    x^2 = 2 R y - y^2, and a x^2 - b y^2 is highest at y = a R / (a + b): a^2 R^2 / (a + b) over the saddle point (derived here).
+    """
+    cutter = operation.cutter
+    if cutter.shape == "ball":
+        return 0.0
+    return part.a_per_mm**2 * cutter.radius_mm**2 / (part.a_per_mm + part.b_per_mm)

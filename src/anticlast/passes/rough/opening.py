@@ -1,4 +1,4 @@
-"""The first cut into stock that is closed all round: down a helix, along a ramp, or straight down if the cutter can."""
+"""The first cut into stock that is closed all round: down a helix, or to and fro along a ramp."""
 
 from __future__ import annotations
 
@@ -15,8 +15,9 @@ from anticlast.passes.rough.peel import Piece, grown
 from anticlast.records import Floats
 
 # Radius of a helix as a share of the cutter's. Below the smallest, the middle of a bottom that does not cut to its
-# centre would ride on stock; above the largest, a core would stand in the middle.
-SMALLEST, WANTED = 0.35, 0.75
+# centre would ride on stock; a cutter that cuts to its centre needs but a little room. Above the largest, a core would
+# stand in the middle.
+SMALLEST, SMALLEST_PLUNGING, WANTED = 0.35, 0.1, 0.75
 # A straight ramp at least this many radii long lets the bottom's middle clear what stands under it.
 _RAMP_RADII = 1.0
 # Descents start this much above the floor of the layer before (mm).
@@ -42,16 +43,12 @@ def opening(
     """
     middle, radius = _widest(room)
     start = top_mm + ABOVE_MM
-    if radius >= SMALLEST * cutter.radius_mm:
+    if radius >= (SMALLEST_PLUNGING if cutter.can_plunge else SMALLEST) * cutter.radius_mm:
         radius = min(radius, WANTED * cutter.radius_mm)
         down = ramp.helix(middle, radius, start, floor_mm, cutter.ramp_angle_rad)
         last = math.atan2(down[-1, 1] - middle[1], down[-1, 0] - middle[0])
         round_ = ramp.circle(middle, radius, last)
         return Piece(round_, True, number, grown(shapely.polygons(round_), radius_mm), down)
-    if cutter.can_plunge:
-        here = np.array([middle, middle])
-        down = np.array([[*middle, start], [*middle, floor_mm]])
-        return Piece(here, False, number, grown(shapely.points(middle), radius_mm), down)
     line = _longest(room, middle)
     if line is None or line.length < _RAMP_RADII * cutter.radius_mm:
         return None

@@ -88,7 +88,9 @@ def _is_thick(part: Polygon) -> bool:
     return bool(part.area > 0.5 * SLIVER_MM * part.length and not shapely.buffer(part, -0.5 * SLIVER_MM).is_empty)
 
 
-def peel(room: BaseGeometry, stock: BaseGeometry, bite: Bite, first_round: int = 0) -> tuple[list[Piece], BaseGeometry]:
+def peel(
+    room: BaseGeometry, stock: BaseGeometry, bite: Bite, first_round: int = 0, rounds: int | None = None
+) -> tuple[list[Piece], BaseGeometry]:
     """Return the passes that clear stock from where there is air, and the stock that they cannot reach.
 
     Parameters
@@ -100,13 +102,15 @@ def peel(room: BaseGeometry, stock: BaseGeometry, bite: Bite, first_round: int =
     bite : Bite
     first_round : int
         Number of the first round.
+    rounds : int or None
+        Most rounds to make; None for as many as it takes.
     """
     pieces: list[Piece] = []
     number = first_round
     # Rounded corners first; narrow places, which the rounding shuts out, afterwards with smaller bites.
     for share, width in ((1.0, bite.width_mm), (0.3, bite.width_mm), (0.0, 0.5 * bite.width_mm)):
         corner = share * bite.corner_mm
-        while not stock.is_empty:
+        while not stock.is_empty and (rounds is None or number - first_round < rounds):
             found = list(_round(room, stock, bite, corner, width, number))
             if not found:
                 break

@@ -2,11 +2,16 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Sequence
+
 import numpy as np
-import numpy.typing as npt
 
 from anticlast.records import Floats, Job, Operation, Purpose, Stretch, frozen_array
 from anticlast.tolerances import SAME_POINT_MM
+
+# More than the machine stage adds to clearances itself (mm).
+_SPARE_MM = 0.1
 
 
 class Track:
@@ -19,12 +24,15 @@ class Track:
         Cutter axis, unit.
     link_feed_mm_min : float
         Feed of moves in air.
+    safe_mm : float
+        Z at which stretches start and end, over all stock; from there down to a start is air.
     """
 
-    def __init__(self, operation: Operation, axis: Floats, link_feed_mm_min: float) -> None:
+    def __init__(self, operation: Operation, axis: Floats, link_feed_mm_min: float, safe_mm: float) -> None:
         self.operation = operation
         self.axis = axis
         self.link_feed_mm_min = link_feed_mm_min
+        self.safe_mm = safe_mm
         self.stretches: list[Stretch] = []
         self.cut_length_mm = 0.0
         self._tip: list[Floats] = []
@@ -37,10 +45,11 @@ class Track:
         """Where the tip stands (3,), None if it is up in the air."""
         return self._tip[-1] if self._tip else None
 
-    def start(self, tip: npt.ArrayLike, owner: int) -> None:
+    def start(self, tip: Sequence[float] | Floats, owner: int) -> None:
         """Lift, and come down at a new place."""
         self.lift()
-        self._row(np.asarray(tip, dtype=np.float64), Purpose.LINK, owner, self.link_feed_mm_min)
+        x, y, z = (float(part) for part in tip)
+        self.link(np.array([[x, y, max(z, self.safe_mm)], [x, y, z]]), owner)
 
     def link(self, tips: Floats, owner: int) -> None:
         """Go along points (n, 3) in air."""
@@ -55,8 +64,10 @@ class Track:
                 self.cut_length_mm += float(np.linalg.norm(tip - before))
 
     def lift(self) -> None:
-        """End the stretch."""
+        """Go up and end the stretch."""
         if len(self._tip) > 1:
+            x, y, z = (float(part) for part in self._tip[-1])
+            self.link(np.array([[x, y, max(z, self.safe_mm)]]), self._owner[-1])
             tip = np.array(self._tip)
             count = len(tip)
             self.stretches.append(
@@ -81,6 +92,17 @@ class Track:
         self._owner.append(owner)
         self._feed.append(feed)
         return True
+
+
+def track_for(job: Job, operation: Operation, axis: Floats) -> Track:
+    """Return an empty track for an operation.
+
+    Stretches start at the height from which the machine stage need not lift the cutter any further: it takes a flat
+    bottom of radius e for part of a ball of radius sqrt(2) e about a point as high as the rim is wide.
+    """
+    rim = operation.cutter.radius_mm - operation.cutter.corner_radius_mm
+    safe = job.stock.top_mm + job.clearance_mm + (math.sqrt(2.0) - 1.0) * rim + _SPARE_MM
+    return Track(operation, axis, link_feed_mm_min(job, operation), safe)
 
 
 def link_feed_mm_min(job: Job, operation: Operation) -> float:

@@ -45,7 +45,8 @@ class Walk:
     def air(self) -> BaseGeometry:
         """Where the centre can stand without cutting."""
         if self._air is None:
-            self._air = shapely.difference(self._exact_room, grown(self.stock, self.radius_mm - GRAZE_MM))
+            # Chords of the rounding come nearer to the stock than its radius; the graze allows for that.
+            self._air = shapely.difference(self._exact_room, grown(self.stock, self.radius_mm - 0.25 * GRAZE_MM))
         return self._air
 
     def is_clear(self, xy: Floats) -> bool:
@@ -62,21 +63,18 @@ class Walk:
         """
         if np.linalg.norm(end - start) <= GRAZE_MM or self.is_clear(np.array([start, end])):
             return np.array([start, end])
-        around = self._around(start, end)
-        return None if around is None else self._shortened(around)
+        ways = [self._shortened(way) for way in self._around(start, end)]
+        return min(ways, key=lambda way: float(shapely.linestrings(way).length), default=None)
 
-    def _around(self, start: Floats, end: Floats) -> Floats | None:
+    def _around(self, start: Floats, end: Floats) -> list[Floats]:
+        """Return ways along the rims of the air that both points lie in."""
         ends = shapely.points(np.array([start, end]))
         for part in shapely.get_parts(self.air):
             if not isinstance(part, Polygon) or float(shapely.distance(part, ends).max()) > 2.0 * GRAZE_MM:
                 continue
-            rings = [part.exterior, *part.interiors]
-            near = np.array([shapely.distance(ring, ends) for ring in rings])
-            best = int(np.argmin(near.sum(axis=1)))
-            found = _along_ring(rings[best], start, end)
-            if self.is_clear(found):
-                return found
-        return None
+            ways = [_along_ring(ring, start, end) for ring in (part.exterior, *part.interiors)]
+            return [way for way in ways if self.is_clear(way)]
+        return []
 
     def _shortened(self, path: Floats) -> Floats:
         """Return the path with vertices left out wherever the straight way past them is clear."""
