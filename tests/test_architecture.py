@@ -19,7 +19,7 @@ LAYERS = (
     {"quadrature", "saddle", "outline", "outline_checks", "outline_cuts", "outline_files", "extremes"},
     {"toml_lines", "materials", "file_schema"},
     {"solid", "passes", "machine", "posting", "readback", "proof", "stock"},
-    {"job", "job_schema", "job_checks", "job_cuts", "job_speeds", "reach", "survey"},
+    {"job", "job_schema", "job_checks", "job_cuts", "job_speeds", "job_turn", "reach", "survey"},
     {"report"},
     {"pipeline", "compare"},
     {"cli"},

@@ -582,3 +582,16 @@ def test_interpreted_kernels_agree(make_job):
     assert fast[0].tolist() == plain[0].tolist()
     assert fast[2] == pytest.approx(plain[2], abs=1e-9)
     assert fast[3] == plain[3] == -1
+
+
+@pytest.mark.parametrize("v", [1e-4, 1e-2, 0.05, 0.3])
+def test_blocks_past_the_pole_are_bounded(make_job, v):
+    """Half a turn of C takes at most 2 pi sqrt(r / (7.2 budget)) blocks, derived in docs/theory-machine.md, "The pole"."""
+    job = with_machine(make_job(), SHIPPED["trunnion-ac"], (20.0, 5.0, 30.0))
+    rows = np.linspace(-9, 9, 38)
+    path = axis_path(job, path_of(job, stretch_along(job, v, rows)))
+    blocks = int((path.purpose == Purpose.CUT).sum())
+    # Furthest that the ball's centre comes from the C axis: the part's offset and half its length.
+    radius = math.hypot(20.0 + 9.0, 5.0)
+    bound = 2 * math.pi * math.sqrt(radius / (7.2 * budget_of(job.operations[0]).point_mm)) + 4 * len(rows)
+    assert len(rows) - 1 <= blocks <= bound

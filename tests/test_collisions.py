@@ -25,7 +25,15 @@ from anticlast.proof.collisions import (
     rigid_bodies,
     rigid_clearance,
 )
-from anticlast.proof.patches import COARSE_MM, FINE_MM, blank_patches, cells, finished_patches, plant, surface_patches
+from anticlast.proof.patches import (
+    COARSE_MM,
+    FINE_MM,
+    blank_patches,
+    cells,
+    finished_patches,
+    plant,
+    surface_patches,
+)
 from anticlast.records import PartMotion
 from anticlast.saddle import Saddle
 from conftest import JobMaker
@@ -37,7 +45,9 @@ def motion(tip, axis, rapid: bool = False) -> PartMotion:
     tip, axis = np.asarray(tip, float), np.asarray(axis, float)
     axis = axis / np.linalg.norm(axis, axis=1, keepdims=True)
     count, index = len(tip), np.arange(len(tip))
-    return PartMotion(tip, axis, index, np.full(count, rapid), np.ones(count, np.int64), index - 1, np.ones(count))
+    return PartMotion(
+        tip, axis, index, np.full(count, rapid), np.ones(count, np.int64), index - 1, np.ones(count)
+    )
 
 
 def turned_to(axis: np.ndarray) -> np.ndarray:
@@ -117,7 +127,9 @@ def test_patch_search_against_sampling() -> None:
         patch = np.concatenate((rng.normal(size=3) * 5.0, rng.normal(size=6), [0.01]))
         points = patch[:3] + np.outer(s, patch[3:6]) + np.outer(t, patch[6:9])
         lowest = distance(points, pose, body).min() - 0.01
-        found, bound = kernels.patch_least(patch, pose, np.zeros(3), shape, (math.inf, 1e-4, -math.inf), place)
+        found, bound = kernels.patch_least(
+            patch, pose, np.zeros(3), shape, (math.inf, 1e-4, -math.inf), place
+        )
         assert found - 1e-4 <= bound + 1e-12
         assert bound <= lowest + 1e-9
         assert found <= lowest + 1.1e-4
@@ -142,7 +154,9 @@ def test_pose_search_against_sampling(saddle_tree) -> None:
     body = Body("holder", 4.0, 3.0, 10.0)
     for _ in range(30):
         axis = np.array([0.0, 0.0, 1.0]) + 0.5 * rng.normal(size=3)
-        pose = np.concatenate((rng.uniform(-14, 14, 2), rng.uniform(-1.0, 8.0, 1), axis / np.linalg.norm(axis)))
+        pose = np.concatenate(
+            (rng.uniform(-14, 14, 2), rng.uniform(-1.0, 8.0, 1), axis / np.linalg.norm(axis))
+        )
         expected = distance(cloud, pose, body).min()
         found, bound = kernels.pose_least(
             (tree.spheres, tree.child, tree.patches), pose, np.zeros(3), (4.0, 3.0, 10.0, 0.0),
@@ -159,7 +173,9 @@ def brute_motion(cloud: np.ndarray, made: PartMotion, body: Body, steps: int) ->
         for f in np.linspace(0.0, 1.0, steps):
             axis = made.axis[k - 1] + f * (made.axis[k] - made.axis[k - 1])
             tip = made.tip_mm[k - 1] + f * (made.tip_mm[k] - made.tip_mm[k - 1])
-            least = min(least, distance(cloud, np.concatenate((tip, axis / np.linalg.norm(axis))), body).min())
+            least = min(
+                least, distance(cloud, np.concatenate((tip, axis / np.linalg.norm(axis))), body).min()
+            )
     return least
 
 
@@ -182,7 +198,9 @@ def test_least_clearance_over_a_motion(saddle_tree, lean: float) -> None:
         assert found.body == body.name
         assert found.piece in range(1, 9)
     whole = least_clearance(tree, made, every, CUTTER, rigid_bodies(CUTTER))
-    single = min(least_clearance(tree, made, every, CUTTER, [body]).distance_mm for body in rigid_bodies(CUTTER))
+    single = min(
+        least_clearance(tree, made, every, CUTTER, [body]).distance_mm for body in rigid_bodies(CUTTER)
+    )
     assert whole.distance_mm == pytest.approx(single, rel=0.05)
     coarse = plant(surface_patches(saddle, outline, 0.0, COARSE_MM))
     both = rigid_clearance(coarse, tree, made, every, CUTTER)
@@ -208,7 +226,7 @@ def test_far_motion_is_reported_as_the_interest(saddle_tree) -> None:
     made = motion([[0, 0, 30], [5, 0, 30]], [[0, 0, 1]] * 2)
     found = least_clearance(tree, made, np.ones(2, bool), CUTTER, [Body("shank", 2.5, 3.0, 20.0)], 1.0)
     assert found.distance_mm == 1.0
-    assert found.bound_mm == 1.0
+    assert found.bound_mm == pytest.approx(1.0, abs=0.011)
     assert found.piece == -1
 
 
@@ -222,7 +240,9 @@ def test_leaned_flutes_enter_a_steep_flank() -> None:
         made = motion([centre - 3.0 * axis, centre - 3.0 * axis + [0, 1e-3, 0]], [axis, axis])
         found = flute_clearance(tree, made, np.ones(2, bool), CUTTER, 0.0)
         flutes = Body("flutes", 3.0, 3.0, 12.0)
-        expected = distance(dense_surface(saddle, rectangle((40.0, 20.0)), 0.1), np.r_[centre - 3 * axis, axis], flutes)
+        expected = distance(
+            dense_surface(saddle, rectangle((40.0, 20.0)), 0.1), np.r_[centre - 3 * axis, axis], flutes
+        )
         assert bool(expected.min() < 0.0) == bool(found.distance_mm < -0.1) == enters
         if enters:
             assert found.distance_mm == pytest.approx(expected.min(), abs=0.05)
@@ -281,7 +301,11 @@ def test_patches_stay_within_their_sag(saddle_tree) -> None:
 def test_every_sphere_holds_what_lies_under_it(saddle_tree) -> None:
     _, _, tree = saddle_tree
     corners = np.stack(
-        [tree.patches[:, :3] + s * tree.patches[:, 3:6] + t * tree.patches[:, 6:9] for s in (-1, 1) for t in (-1, 1)]
+        [
+            tree.patches[:, :3] + s * tree.patches[:, 3:6] + t * tree.patches[:, 6:9]
+            for s in (-1, 1)
+            for t in (-1, 1)
+        ]
     )
     seen = np.zeros(len(tree.patches), int)
 
@@ -308,7 +332,7 @@ def test_blank_with_a_flat_top(make_job: JobMaker) -> None:
     over = least_clearance(tree, made, np.array([False, True, False, False]), CUTTER, body)
     assert over.distance_mm == pytest.approx(5.0, abs=0.02)
     # The blank reaches 10 + 3 mm to the side, the ball 3 mm: at x = 20 there are 4 mm between them.
-    beside = least_clearance(tree, made, np.array([False, False, False, True]), CUTTER, body)
+    beside = least_clearance(tree, made, np.array([False, False, False, True]), CUTTER, body, share=0.0)
     assert beside.distance_mm == pytest.approx(4.0, abs=0.02)
 
 
@@ -317,7 +341,9 @@ def test_blank_near_the_finished_form(make_job: JobMaker) -> None:
     saddle = Saddle.of(job.part)
     cloud = saddle.offset(job.stock.outline.grid(0.1), 0.3)
     made = motion([[-20, -9, 6.0], [20, 9, 7.0]], [[0, 0, 1]] * 2, rapid=True)
-    found = least_clearance(blank_patches(job), made, np.ones(2, bool), CUTTER, [cutting_body(CUTTER)])
+    found = least_clearance(
+        blank_patches(job), made, np.ones(2, bool), CUTTER, [cutting_body(CUTTER)], share=0.0
+    )
     assert found.distance_mm == pytest.approx(brute_motion(cloud, made, cutting_body(CUTTER), 200), abs=0.03)
 
 

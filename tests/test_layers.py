@@ -7,10 +7,8 @@ import math
 import numpy as np
 import pytest
 import shapely
-from conftest import job_text
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from raster_stock import NOTHING, RasterStock
 
 from anticlast import pipeline
 from anticlast.cutter import Cutter
@@ -26,6 +24,8 @@ from anticlast.passes.rough.peel import Bite, grown, peel
 from anticlast.passes.rough.walk import Walk
 from anticlast.records import CutterPath, Job, Purpose
 from anticlast.saddle import Saddle
+from conftest import job_text
+from raster_stock import NOTHING, RasterStock
 
 MICROMETRE = 1e-3
 
@@ -160,6 +160,18 @@ def test_region_of_a_layer_against_the_height_itself(level: float) -> None:
     assert field.height(rim[~on_box]).max() <= level + LEVEL_MM
 
 
+@pytest.mark.parametrize("sort", CUTTERS)
+@pytest.mark.parametrize(("a", "b"), [(0.01, 0.01), (0.002, 0.02), (0.02, 0.003)])
+def test_lowest_tip_height_has_neither_summit_nor_lowest_point(sort: str, a: float, b: float) -> None:
+    """So a region below a level is known by its rim, and reaches out of the blank."""
+    field = TipField.of_cutter(Saddle(a, b, 0.0), CUTTERS[sort], 0.3)  # its valley along the grid, lest nodes miss it
+    z = Grid.over((-25.0, -25.0, 25.0, 25.0), 0.5, field.height_and_slope).z_mm
+    around = np.stack([np.roll(np.roll(z, i, 0), j, 1) for i in (-1, 0, 1) for j in (-1, 0, 1) if i or j])
+    inner = (slice(1, -1), slice(1, -1))
+    assert not np.any((z < around.min(axis=0))[inner])
+    assert not np.any((z > around.max(axis=0))[inner])
+
+
 # ------------------------------------------------------------------------------------ the whole operation
 
 
@@ -176,7 +188,7 @@ def test_no_point_of_the_cutter_comes_nearer_than_the_allowance(outline: str, cu
     assert distance.min() >= operation.allowance_mm - 0.2 * MICROMETRE
 
 
-def cut_raster(job: Job, path: CutterPath, stock: RasterStock | None = None):  # noqa: ANN201
+def cut_raster(job: Job, path: CutterPath, stock: RasterStock | None = None):
     stock = RasterStock(job.stock.outline, job.stock.top_mm) if stock is None else stock
     return stock, *stock.run(path, limits.cut_radius_mm(path.operation))
 
@@ -459,7 +471,7 @@ tolerance = 0.005
 """
 
 
-def test_rough_semi_finish_and_finish_are_released(tmp_path) -> None:  # noqa: ANN001
+def test_rough_semi_finish_and_finish_are_released(tmp_path) -> None:
     job_file = tmp_path / "job.toml"
     text = ROUGH.format(
         outline='shape = "rectangle"\nsize = [24.0, 18.0]', cutter=SORTS["flat"], more=WHOLE, margin=3.0, stock=""

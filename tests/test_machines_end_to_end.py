@@ -349,7 +349,7 @@ def test_a_fixed_axis_is_positioned_once(machine: str, fixed: tuple[float, float
 
 # What a job or machine file holds in lengths, lengths a minute, a second squared and cubed.
 LENGTHS = (
-    "size", "diameter", "points", "holes", "top", "bottom", "margin", "allowance", "part_origin", "clearance", "flute_length",
+    "size", "diameter", "corner_radius", "points", "holes", "top", "bottom", "margin", "allowance", "part_origin", "clearance", "flute_length",
     "shank_diameter", "stickout", "holder", "scallop", "tolerance", "feed", "limits", "rapid", "acceleration", "jerk", "through",
 )  # fmt: skip
 

@@ -7,7 +7,6 @@ import math
 import numpy as np
 import pytest
 import shapely
-from raster_stock import NOTHING, RasterStock
 
 from anticlast import pipeline
 from anticlast.errors import BadInput, CannotPlan
@@ -17,6 +16,7 @@ from anticlast.passes.loop import Loop
 from anticlast.passes.profile_cut import plan_outline
 from anticlast.passes.tabs import lay_tabs
 from anticlast.records import CutterPath, Job, Purpose
+from raster_stock import NOTHING, RasterStock
 
 MICROMETRE = 1e-3
 
@@ -286,7 +286,7 @@ def test_inch_job_is_the_same_path() -> None:
     ("machine", "outline", "margin", "more"),
     [("mill-3", "rounded", 3.0, ""), ("trunnion-ac", "circle", 12.0, ""), ("head-b-table-c", "holed", 9.0, "skin = 0.3")],
 )
-def test_rough_and_outline_are_released(machine: str, outline: str, margin: float, more: str, tmp_path) -> None:  # noqa: ANN001
+def test_rough_and_outline_are_released(machine: str, outline: str, margin: float, more: str, tmp_path) -> None:
     text = OUTLINE.format(
         outline=SHAPES[outline], more=more, margin=margin, rough=ROUGH, flutes=20.0, machine=machine
     )

@@ -94,7 +94,7 @@ def _report(made: Made, out: Path) -> None:
     for finding in sorted(made.findings, key=lambda item: (item.ok, item.warning)):
         typer.echo(_finding_line(finding))
     if made.times is not None:
-        typer.echo(f"cycle time {_clock(float(made.times.seconds.sum()))}, estimated")
+        typer.echo(f"cycle time {_clock(made.times.total_s)}, estimated")
     if made.released:
         typer.echo(f"RELEASED: {out / (job.slug + '.ngc')}")
     else:
@@ -133,17 +133,33 @@ def make(
 
 
 @app.command(epilog="Example: anticlast survey samples/formwork-tile/job.toml")
-def survey(job: JobArgument, as_json: JsonOption = False) -> None:
-    """Say what the surface asks of cutter and machine: slopes, curvatures, largest ball, travel."""
+def survey(
+    job: JobArgument,
+    picture: Annotated[
+        Path | None,
+        typer.Option(
+            "--picture", metavar="FILE", help="Also draw the margin left on each axis: .png or .svg."
+        ),
+    ] = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Say what the surface asks of cutter and machine: slopes, curvatures, largest ball, travel, best place on the table."""
     from anticlast import pipeline
 
     with _errors():
-        found = pipeline.survey(pipeline.load_job(job))
+        loaded = pipeline.load_job(job)
+        found = pipeline.survey(loaded)
+        if picture is not None:
+            from anticlast.report.picture_placement import placement_picture
+
+            placement_picture(loaded, found.placement, picture)
     if as_json:
         _print_json(found.as_json())
         return
     for line in found.lines():
         typer.echo(line)
+    if picture is not None:
+        typer.echo(f"picture: {picture}")
 
 
 def _ball_operation(operations: tuple[Operation, ...], job: Path) -> Operation:
@@ -333,6 +349,124 @@ def compare(
         if picture is not None:
             typer.echo(f"picture: {picture}")
     raise typer.Exit(0 if all(one.best is not None for one in found) else 1)
+
+
+@app.command(epilog="Example: anticlast stock samples/press-pad/job.toml --picture stock.png")
+def stock(
+    job: JobArgument,
+    before: Annotated[
+        int | None,
+        typer.Option("--before", metavar="N", min=1, help="Stock before operation N, and its passes only."),
+    ] = None,
+    grid: Annotated[
+        float | None,
+        typer.Option("--grid", metavar="MM", min=0.05, max=5.0, help="Spacing of the stock's columns, mm."),
+    ] = None,
+    picture: Annotated[
+        Path | None,
+        typer.Option("--picture", metavar="FILE", help="Also draw what remains, and sections: .png or .svg."),
+    ] = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Preview the stock before an operation and what each pass will meet, before any cutting.
+
+    Without --before: the blank, and the passes of all operations. Exits 1 if a check failed.
+    """
+    from anticlast import pipeline
+
+    with _errors(), _progress() as progress:
+        if picture is not None:
+            from anticlast.report.picture_sheet import check_suffix
+
+            check_suffix(picture)
+        loaded = pipeline.load_job(job)
+        found = pipeline.stock(loaded, before, spacing_mm=grid, progress=progress)
+        if picture is not None:
+            from anticlast.report.picture_stock import stock_picture
+
+            stock_picture(found, picture)
+    if as_json:
+        _print_json(found.as_json(only=before))
+    else:
+        for line in found.lines(only=before):
+            typer.echo(line)
+        if picture is not None:
+            typer.echo(f"picture: {picture}")
+    raise typer.Exit(0 if all(finding.ok or finding.warning for finding in found.findings) else 1)
+
+
+@app.command(
+    epilog="Example: anticlast time out/formwork-tile.ngc --job samples/formwork-tile/job.toml --measured 7:35"
+)
+def time(
+    program: Annotated[Path, typer.Argument(metavar="PROGRAM", help="RS-274 program.", show_default=False)],
+    job: Annotated[
+        Path, typer.Option("--job", metavar="JOB", help="Job file it is for.", show_default=False)
+    ],
+    measured: Annotated[
+        str | None,
+        typer.Option(
+            "--measured", metavar="TIME|FILE",
+            help="What a stopwatch said: seconds or M:SS, or a .csv file with the columns program, seconds.",
+        ),
+    ] = None,
+    error: Annotated[
+        float | None,
+        typer.Option("--error", metavar="S", min=0.01, max=3600.0, help="Error of a reading, seconds; 0.5 if not given."),
+    ] = None,
+    picture: Annotated[
+        Path | None,
+        typer.Option("--picture", metavar="FILE", help="Also draw the feed reached and what holds it back: .png or .svg."),
+    ] = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Say how long a program takes, per operation and pass, and what holds the feed back.
+
+    With --measured: fit acceleration, jerk and block rate to what was measured, say how sure that is, and print the
+    lines for the machine file, which is not changed. Exits 1 if no values explain the readings.
+    """
+    from anticlast import pipeline
+    from anticlast.tolerances import STOPWATCH_S
+
+    fitted = None
+    with _errors(), _progress() as progress:
+        if picture is not None:
+            from anticlast.report.picture_sheet import check_suffix
+
+            check_suffix(picture)
+        readings = _readings(program, measured)
+        loaded = pipeline.load_job(job)
+        timed, read, times = pipeline.time(program, loaded)
+        if picture is not None:
+            from anticlast.report.picture_time import time_picture
+
+            time_picture(loaded, timed, read.motions, times, pipeline.in_part(read, loaded), picture)
+        if readings:
+            fitted = pipeline.calibrate(readings, loaded, error_s=error or STOPWATCH_S, progress=progress)
+    if as_json:
+        _print_json({**timed.as_json(), "calibration": fitted.as_json() if fitted else None})
+    else:
+        for line in (*timed.lines(), *(fitted.lines() if fitted else ())):
+            typer.echo(line)
+        if picture is not None:
+            typer.echo(f"picture: {picture}")
+    raise typer.Exit(0 if fitted is None or fitted.explained else 1)
+
+
+def _readings(program: Path, measured: str | None) -> list[tuple[Path, float]]:
+    """Programs and seconds from what stands after ``--measured``."""
+    from anticlast.errors import BadInput, Fault
+    from anticlast.machine.measured import read_measured, seconds_of
+
+    if measured is None:
+        return []
+    if measured.lower().endswith(".csv"):
+        return [(item.program, item.seconds) for item in read_measured(Path(measured))]
+    seconds = seconds_of(measured)
+    if seconds is None:
+        message = f"found {measured!r}; give seconds, minutes and seconds such as 7:35, or a .csv file"
+        raise BadInput(Fault("command line", 0, "--measured", message))
+    return [(program, seconds)]
 
 
 @app.callback(invoke_without_command=True)

@@ -34,6 +34,7 @@ from anticlast.job_schema import (
     PartTable,
     StockTable,
 )
+from anticlast.job_turn import turned_job
 from anticlast.machine.definition import load_machine
 from anticlast.outline import Outline
 from anticlast.records import Floats, Job, Machine, Operation, Part, Stock
@@ -99,6 +100,7 @@ def _job_from(source: Source, path: Path) -> Job:
     _check_material(draft.stock)
     checks.check_stock_files(draft.stock, draft.folder)
     _check_part_origin(draft, machine)
+    _check_turn(draft)
     for cutter in draft.cutters:
         checks.check_cutter(cutter, draft.units)
     checks.check_numbers(draft.cutters)
@@ -113,7 +115,8 @@ def _job_from(source: Source, path: Path) -> Job:
     assert machine is not None, "no fault was found"
     assert part_outline is not None, "no fault was found"
     assert blank is not None, "no fault was found"
-    return _build(draft, path, machine, part_outline, blank)
+    built = _build(draft, path, machine, part_outline, blank)
+    return turned_job(built, math.radians(draft.machine.table.turn))
 
 
 # ------------------------------------------------------------------------------------------ tables
@@ -182,6 +185,14 @@ def _check_part_origin(draft: _Draft, machine: Machine | None) -> None:
             "part_origin",
             f"missing; {machine.name} has rotary axes: needs [x, y, z], the part origin from where they meet",
         )
+
+
+def _check_turn(draft: _Draft) -> None:
+    """A measured blank stands as it was measured."""
+    if draft.machine.get("turn"):
+        for key in ("mesh", "heights"):
+            if draft.stock.get(key) is not None:
+                draft.machine.fault("turn", f"has no place beside {key} in [stock]: measure the blank as it is set, without turn")
 
 
 def _check_material(stock: Checked[StockTable]) -> None:

@@ -102,6 +102,7 @@ class MachineTable(FileTable):
     file: Annotated[str, Says("the name of a machine or the path of a machine file, in quotes")]
     part_origin: Annotated[tuple[Place, Place, Place], Says("[x, y, z], three numbers")] | None = None
     clearance: Annotated[float, Quantity("length", 0.1, 200)] = 5.0
+    turn: Degrees = 0.0
 
 
 class CutterTable(FileTable):

@@ -9,15 +9,15 @@ from __future__ import annotations
 import hashlib
 import json
 import math
-from collections.abc import Callable
-from dataclasses import asdict
+from collections.abc import Callable, Sequence
+from dataclasses import asdict, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from anticlast import files
-from anticlast.errors import CannotPlan
+from anticlast.errors import BadInput, CannotPlan, Fault
 from anticlast.records import (
     AxisPath,
     CutterPath,
@@ -27,12 +27,16 @@ from anticlast.records import (
     MotionTimes,
     Operation,
     OperationResult,
+    PartMotion,
     Purpose,
     ReadProgram,
 )
 
 if TYPE_CHECKING:
+    from anticlast.machine.calibrate import Calibration
+    from anticlast.machine.timing import ProgramTime
     from anticlast.passes.scallop import ScallopAnswer
+    from anticlast.stock.preview import StockPreview
     from anticlast.survey import Survey
 
 SCHEMA = 1
@@ -59,10 +63,11 @@ def load_job(path: str | Path) -> Job:
 
 
 def survey(job: Job) -> Survey:
-    """Say what the job's surface asks of cutter and machine."""
+    """Say what the job's surface asks of cutter and machine, and where on the table the part should sit."""
+    from anticlast.survey import placement, steady
     from anticlast.survey import survey as look
 
-    return look(job)
+    return replace(look(job), placement=placement(job), steady=steady(job))
 
 
 def scallop(
@@ -205,10 +210,15 @@ def _share_times(
     times: MotionTimes, program: ReadProgram, starts: tuple[int, ...]
 ) -> list[tuple[float, float]]:
     """Split the program's time over its operations, given the line on which each starts."""
-    bounds = np.searchsorted(program.motions.line, np.array([*starts, np.iinfo(np.int64).max]))
+    lines = np.array([*starts, np.iinfo(np.int64).max])
+    bounds = np.searchsorted(program.motions.line, lines)
+    waits = [
+        sum(wait.seconds for wait in times.waits if first <= wait.line < last)
+        for first, last in zip(lines[:-1], lines[1:], strict=True)
+    ]
     return [
-        (float(times.seconds[low:high].sum()), float(times.feed_only_s[low:high].sum()))
-        for low, high in zip(bounds[:-1], bounds[1:], strict=True)
+        (float(times.seconds[low:high].sum()) + waiting, float(times.feed_only_s[low:high].sum()))
+        for low, high, waiting in zip(bounds[:-1], bounds[1:], waits, strict=True)
     ]
 
 
@@ -326,7 +336,8 @@ def _run(job: Job, program_path: Path, grid_mm: float | None, progress: Progress
         program = read_back(job, temporary)
         progress("proving")
         proof, part_motion = prove(job, program, grid_mm)
-        times = estimate(program.motions, job.machine)
+        loads = _load_findings(job, program, part_motion, progress)
+        times = estimate(program.motions, job.machine, program.events)
     except BaseException:
         files.discard(temporary)
         raise
@@ -336,7 +347,7 @@ def _run(job: Job, program_path: Path, grid_mm: float | None, progress: Progress
         _result(path, axes, floor, share)
         for path, axes, floor, share in zip(cutter_paths, axis_paths, floors, shares, strict=True)
     )
-    findings = (*fits, *proof.findings)
+    findings = (*fits, *proof.findings, *loads)
     released = all(finding.ok or finding.warning for finding in findings)
     made = Made(
         job=job, released=released, cutter_paths=cutter_paths, axis_paths=axis_paths, program=program,
@@ -373,13 +384,116 @@ def prove(
     read = read_back(job, path)
     progress("proving")
     proof, part_motion = judge(job, read, grid_mm)
-    times = estimate(read.motions, job.machine)
+    findings = (*proof.findings, *_load_findings(job, read, part_motion, progress))
+    times = estimate(read.motions, job.machine, read.events)
+    released = all(finding.ok or finding.warning for finding in findings)
     return Made(
-        job=job, released=proof.released, cutter_paths=(), axis_paths=(), program=read, program_text=path,
+        job=job, released=released, cutter_paths=(), axis_paths=(), program=read, program_text=path,
         program_sha256=_sha256(path), part_motion=part_motion, proof=proof, times=times, operations=(),
-        findings=proof.findings, cautions=cautions(job),
-        advice=tuple(finding.message for finding in proof.findings if not finding.ok),
+        findings=findings, cautions=cautions(job),
+        advice=tuple(finding.message for finding in findings if not finding.ok),
     )  # fmt: skip
+
+
+def stock(
+    job: Job, before: int | None = None, *, spacing_mm: float | None = None, progress: Progress = _quiet
+) -> StockPreview:
+    """Preview the stock before an operation and what every pass will meet. Writes nothing that stays.
+
+    Parameters
+    ----------
+    job : Job
+    before : int, optional
+        Operation, counted from 1, whose stock is asked for; the first if not given.
+    spacing_mm : float, optional
+        Spacing of the stock's columns; chosen from the job if not given.
+
+    Raises
+    ------
+    BadInput
+        There is no such operation, or the blank's mesh or measured heights cannot be used.
+    CannotPlan
+        No safe path exists.
+    """
+    import tempfile
+
+    from anticlast.readback.forward import part_motion
+    from anticlast.stock.preview import stock_preview
+
+    if before is not None and not 1 <= before <= len(job.operations):
+        message = f"found {before}; needs the number of an operation, 1 to {len(job.operations)}"
+        raise BadInput(Fault("command line", 0, "--before", message))
+    for finding in fit_findings(job):
+        if not finding.ok:
+            raise CannotPlan(finding.check, finding.message, finding.worst, finding.limit, finding.unit)
+    _, axis_paths = plan(job, progress)
+    with tempfile.TemporaryDirectory() as folder:
+        progress("posting and reading back")
+        temporary, _ = post(job, axis_paths, Path(folder) / f"{job.slug}.ngc")
+        program = read_back(job, temporary)
+        lengths = {cutter.number: cutter.gauge_length_mm for cutter in job.cutters}
+        motion = part_motion(program, job.machine, job.part_origin_mm, lengths)
+        return stock_preview(job, program, motion, before, spacing_mm=spacing_mm, progress=progress)
+
+
+def _load_findings(
+    job: Job, program: ReadProgram, motion: PartMotion | None, progress: Progress
+) -> tuple[Finding, ...]:
+    """Hold a program against the limits that the job sets on its cutters; nothing is worked out if it sets none."""
+    if motion is None or all(cutter.max_force_n is None and cutter.max_deflection_mm is None for cutter in job.cutters):
+        return ()
+    from anticlast.stock.preview import stock_preview
+
+    progress("loads")
+    found = stock_preview(job, program, motion).findings
+    return tuple(finding for finding in found if finding.check.startswith(("force", "bending")))
+
+
+def time(program: str | Path, job: Job) -> tuple[ProgramTime, ReadProgram, MotionTimes]:
+    """Estimate the time of any program on a job's machine: its time, and what it was worked out from. Writes nothing.
+
+    Raises
+    ------
+    BadInput
+        When the program cannot be read to its end.
+    """
+    from anticlast.machine.motion import estimate
+    from anticlast.machine.timing import marks_of, program_time
+    from anticlast.readback.reader import read_program
+
+    path = Path(program)
+    # Times do not depend on where the part stands, so no length offsets are needed, nor all cutters be the job's.
+    read = read_program(path)
+    broken = [Fault(str(path), item.line, "", item.message) for item in read.findings if item.check == "language"]
+    if broken:
+        raise BadInput(broken)
+    times = estimate(read.motions, job.machine, read.events)
+    answer = program_time(path.name, read.blocks, read.motions, times, job.machine, marks_of(path.read_bytes()))
+    return answer, read, times
+
+
+def in_part(program: ReadProgram, job: Job) -> PartMotion:
+    """Return a program's motion in part coordinates, by forward kinematics of what was read."""
+    from anticlast.readback.forward import part_motion
+
+    lengths = {cutter.number: cutter.gauge_length_mm for cutter in job.cutters}
+    return part_motion(program, job.machine, job.part_origin_mm, lengths)
+
+
+def calibrate(
+    readings: Sequence[tuple[str | Path, float]], job: Job, *, error_s: float, progress: Progress = _quiet
+) -> Calibration:
+    """Fit the job's machine to programs and the seconds each took. Writes nothing, the machine file least of all."""
+    from anticlast.machine.calibrate import Reading
+    from anticlast.machine.calibrate import calibrate as fit
+
+    taken = []
+    for program, seconds in readings:
+        progress(f"reading {program}")
+        _, read, _ = time(program, job)
+        taken.append(Reading(Path(program).name, read.motions, read.events, seconds))
+    progress("fitting")
+    return fit(taken, job.machine, error_s)
 
 
 def cautions(job: Job) -> tuple[str, ...]:
@@ -427,7 +541,7 @@ def summary(made: Made) -> dict[str, Any]:
             axis: [float(low), float(high)] for axis, (low, high) in proof.travel.items()
         }
     rapid = program.motions.shape == 0 if program else np.zeros(0, bool)
-    total = float(times.seconds.sum()) if times else 0.0
+    total, waiting = (times.total_s, times.waiting_s) if times else (0.0, 0.0)
     rapid_s = float(times.seconds[rapid].sum()) if times else 0.0
     return {
         "schema": SCHEMA,
@@ -445,8 +559,9 @@ def summary(made: Made) -> dict[str, Any]:
         "proof": proof_entry,
         "time": {
             "total_s": total,
-            "cutting_s": total - rapid_s,
+            "cutting_s": total - waiting - rapid_s,
             "rapid_s": rapid_s,
+            "waiting_s": waiting,
             "feed_only_s": float(times.feed_only_s.sum()) if times else 0.0,
         },
     }

@@ -222,7 +222,10 @@ class Operation:
 
 @dataclass(frozen=True, slots=True)
 class Job:
-    """A job file, loaded, checked and converted to mm and radians. ``units`` are the file's and the program's."""
+    """A job file, loaded, checked and converted to mm and radians. ``units`` are the file's and the program's.
+
+    ``turn_rad``: how far the part is set turned about Z from how the file describes it; applied to all other fields already.
+    """
 
     name: str
     slug: str
@@ -235,6 +238,7 @@ class Job:
     clearance_mm: float
     cutters: tuple[Cutter, ...]
     operations: tuple[Operation, ...]
+    turn_rad: float = 0.0
 
 
 # ------------------------------------------------------------------------------------------------ planning half

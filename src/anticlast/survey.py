@@ -16,10 +16,13 @@ import shapely
 from anticlast.errors import CannotPlan
 from anticlast.extremes import Place, extremes, inside, sample
 from anticlast.passes.scallop import length_floor_mm, scallop_answer
+from anticlast.passes.tilt import tip_from_contact, wished_axis
 from anticlast.reach import Reach, reach
 from anticlast.saddle import Saddle
 
 if TYPE_CHECKING:
+    from anticlast.machine.placement import Placement, Sweep
+    from anticlast.machine.positioning import SteadyAxis
     from anticlast.outline import Outline
     from anticlast.records import Floats, Job, Operation
 
@@ -28,6 +31,9 @@ _PAIR_SAMPLES = 24
 _PAIR_ZOOMS = 40
 _PAIR_ZOOM = 0.7
 _MM_PER_INCH = 25.4
+# Passes and points a pass at which the machine's motion is sampled to compare places on the table.
+_SWEEP_LINES = 8
+_SWEEP_POINTS = 9
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,6 +62,10 @@ class Survey:
         Cutters fit the surface and the travel fits the machine.
     advice : tuple of str
         What is wrong or tight, and what to change.
+    placement : Placement or None
+        Where on the table the axes would move least; None if it was not asked for.
+    steady : SteadyAxis or None
+        An axis that serves the first finishing ball that follows the surface; None if none does, or none was asked for.
     """
 
     units: str
@@ -69,6 +79,8 @@ class Survey:
     travel: dict[str, tuple[float, float]]
     fits: bool
     advice: tuple[str, ...]
+    placement: Placement | None = None
+    steady: SteadyAxis | None = None
 
     def as_json(self) -> dict[str, Any]:
         """Return the survey as plain data, lengths in mm."""
@@ -87,6 +99,8 @@ class Survey:
             "operations": [found.as_json() for found in self.reaches],
             "fits": self.fits,
             "advice": list(self.advice),
+            "placement": None if self.placement is None else self.placement.as_json(),
+            "positioning": None if self.steady is None else self.steady.as_json(),
         }
 
     def lines(self) -> list[str]:
@@ -112,6 +126,10 @@ class Survey:
         ]
         for found in self.reaches:
             out += found.lines(scale, self.units)
+        if self.placement is not None:
+            out += _placement_lines(self.placement, scale, self.units)
+        if self.steady is not None:
+            out.append(self.steady.line())
         out.append("fits: yes" if self.fits else "fits: NO")
         return out + [f"- {text}" for text in self.advice]
 
@@ -154,6 +172,97 @@ def survey(job: Job) -> Survey:
         fits=not too_large and all(found.fits for found in reaches),
         advice=tuple(dict.fromkeys(advice)),
     )
+
+
+def placement(job: Job) -> Placement | None:
+    """Propose where on the table, and turned how far about Z, the part moves the machine's axes least.
+
+    Returns
+    -------
+    Placement or None
+        None for a job without an operation that follows the surface.
+    """
+    from anticlast.machine.placement import propose
+
+    sweeps = [_sweep(job, operation) for operation in job.operations if operation.does in ("semi-finish", "finish")]
+    if not sweeps:
+        return None
+    hull = shapely.get_coordinates(job.stock.outline.polygon.convex_hull)
+    heights = (job.stock.top_mm, job.stock.bottom_mm)
+    corners = np.concatenate([np.column_stack((hull, np.full(len(hull), z))) for z in heights])
+    return propose(
+        job.machine,
+        job.part_origin_mm,
+        sweeps,
+        corners,
+        job.clearance_mm,
+        turn_now_deg=math.degrees(job.turn_rad),
+    )
+
+
+def steady(job: Job) -> SteadyAxis | None:
+    """Find one cutter axis for the first finishing ball that follows the surface on a machine with rotary axes."""
+    from anticlast.machine.kinematics import Kinematics
+    from anticlast.machine.positioning import steady_axis
+
+    for operation in job.operations:
+        if operation.does == "finish" and operation.cutter.shape == "ball" and operation.fixed_axis is None:
+            kinematics = Kinematics(job.machine, job.part_origin_mm, operation.cutter.gauge_length_mm)
+            if kinematics.rotary_count == 0:
+                return None
+            return steady_axis(kinematics, Saddle.of(job.part).normal(sample(job.part.outline)[0]), operation.index)
+    return None
+
+
+def _sweep(job: Job, operation: Operation) -> Sweep:
+    """Return some passes of an operation, evenly across the outline, in its feed direction."""
+    from anticlast.machine.placement import Sweep
+
+    saddle, outline, along = Saddle.of(job.part), job.part.outline, operation.direction_rad
+    corners = shapely.get_coordinates(outline.polygon)
+    across = corners @ np.array([-math.sin(along), math.cos(along)])
+    lines = across.min() + (np.arange(_SWEEP_LINES) + 0.5) / _SWEEP_LINES * np.ptp(across)
+    number, first, last = outline.clip_lines(along, lines)
+    back = (np.arange(len(number)) % 2 == 1) & (operation.way == "both")
+    first, last = np.where(back, last, first), np.where(back, first, last)
+    share = np.linspace(0.0, 1.0, _SWEEP_POINTS)
+    u = (first[:, None] + share * (last - first)[:, None]).ravel()
+    v = np.repeat(lines[number], _SWEEP_POINTS)
+    xy = np.column_stack((u * math.cos(along) - v * math.sin(along), u * math.sin(along) + v * math.cos(along)))
+    heading = along + np.repeat(np.where(back, math.pi, 0.0), _SWEEP_POINTS)
+    normal, contact = saddle.normal(xy), saddle.point(xy)
+    if operation.fixed_axis is None:
+        wished = wished_axis(normal, saddle.tangent(xy, heading), operation.lead_rad, operation.lean_rad)
+    else:
+        wished = np.tile(np.asarray(operation.fixed_axis, dtype=np.float64), (len(xy), 1))
+
+    def tip_of(axis: Floats) -> Floats:
+        return tip_from_contact(contact, normal, axis, operation.cutter, operation.allowance_mm)
+
+    line = np.repeat(np.arange(len(number)), _SWEEP_POINTS)
+    return Sweep(line, wished, tip_of, operation.cutter.gauge_length_mm)
+
+
+def _placement_lines(found: Placement, scale: float, units: str) -> list[str]:
+    """Return what to read about a placement: the proposal, and the margin left on each axis."""
+    now, best = found.now, found.best
+    if found.moves:
+        place = ", ".join(f"{value * scale:.4g}" for value in best.part_origin_mm)
+        turned = f", turn = {best.turn_deg:g}" if best.turn_deg != now.turn_deg else ""
+        share = best.motion_min / now.motion_min if now.motion_min > 0.0 else 1.0
+        out = [f"placement           part_origin = [{place}]{turned}: the axes move {100 * share:.0f} % of what they do now"]
+        if best.off_wish_deg < now.off_wish_deg - 0.5:
+            out.append(f"  for that the cutter axis is off its wish by {best.off_wish_deg:.1f} deg at most, now {now.off_wish_deg:.1f}")
+    else:
+        out = ["placement           no other place on the table would move the axes notably less"]
+    for letter, (low, high) in best.margin.items():
+        factor, unit = (scale, units) if letter in "XYZ" else (1.0, "deg")
+        if not math.isfinite(low) and not math.isfinite(high):
+            out.append(f"  {letter} margin   endless")
+            continue
+        was = f"   now {now.margin[letter][0] * factor:.1f} and {now.margin[letter][1] * factor:.1f}" if found.moves else ""
+        out.append(f"  {letter} margin{low * factor:>10.1f} and{high * factor:>8.1f} {unit}{was}")
+    return out
 
 
 def steepest_slope_deg(saddle: Saddle, outline: Outline) -> Place:

@@ -104,17 +104,22 @@ def _processes(count: int) -> Iterator[RunAll]:
 @contextlib.contextmanager
 def _cluster(address: str) -> Iterator[RunAll]:
     client = _client(address)
+    from distributed import KilledWorker, as_completed
+    from distributed.comm import CommClosedError
 
     def run(setup: Setup, cases: Sequence[Case], told: Told) -> list[Outcome]:
-        from distributed import as_completed
-
         futures = client.map(partial(try_case, setup), cases, pure=False)
-        for _ in as_completed(futures):
+        for _ in as_completed(futures, loop=client.loop):
             told(1)
         return list(client.gather(futures))
 
     try:
         yield run
+    except (KilledWorker, CommClosedError) as error:
+        raise WorkerLost(f"the cluster at {address} lost a worker or went away; start it again") from error
+    except ModuleNotFoundError as error:
+        message = f"a worker of the cluster at {address} lacks {error.name}; install the same version of Anticlast there"
+        raise WorkerLost(message) from error
     finally:
         client.close()
 

@@ -15,6 +15,9 @@ STOP = 0  # the control stands still here
 CORNER = 1  # passed at one speed, or no corner at all
 SMOOTH = 2  # part of a curve in short blocks, bent all along
 
+# Cosine of half the angle below which a corner turns straight back.
+_BACK = 1e-6
+_SAME = 1e-12  # radians: one direction
 # Rounding arcs that take less than this share of a block are passed as points, between straight blocks.
 _POINT_SHARE = 0.125
 # A window of path looked at on either side of a corner holds at most this many blocks.
@@ -66,6 +69,8 @@ def _aside(unit: np.ndarray, i: int, scale: np.ndarray, lin: np.ndarray, dev_lin
     norm, straight, part = 0.0, 0.0, 0.0
     for j in range(scale.size):
         norm += (unit[i, j] - unit[i - 1, j]) ** 2
+    if norm == 0.0:
+        return math.inf
     norm = math.sqrt(norm)
     for j in range(scale.size):
         share = abs(unit[i, j] - unit[i - 1, j]) / (norm * scale[j])
@@ -104,7 +109,7 @@ def _corner_speed(
     unit: np.ndarray, i: int, angle: float, aside: float, accel: float, jerk: np.ndarray
 ) -> float:
     """Speed through the arc that passes the corner at distance ``aside``, each axis inside its acceleration and jerk."""
-    secant = 1.0 / max(math.cos(0.5 * angle), 1e-12) - 1.0
+    secant = 1.0 / math.cos(0.5 * angle) - 1.0
     if secant <= 0.0:
         return math.inf
     speed = math.sqrt(accel * aside / secant / _pull(unit, i, angle))
@@ -176,6 +181,7 @@ def bends(
     limit = np.zeros(count)
     curve = np.zeros((count, k))
     behind, before = np.zeros(k), np.zeros(k)
+    aside = dev_lin if exact == 0 else 0.0
     for i in range(1, count):
         if stop[i] or exact == 2:
             continue
@@ -183,13 +189,16 @@ def bends(
         if exact == 1 and angle > exact_rad:
             continue
         kind[i], limit[i] = CORNER, math.inf
-        if angle < 1e-12:
+        if exact == 0 and math.cos(0.5 * angle) < _BACK:
+            limit[i] = 0.0
             continue
-        aside = _aside(unit, i, scale, lin, dev_lin, dev_rot) if exact == 0 else 0.0
+        # Rounded words may go straight on in the middle of a curve: the deviation allowed is then the last one's.
+        if exact == 0 and angle > _SAME:
+            aside = _aside(unit, i, scale, lin, dev_lin, dev_rot)
         fastest = min(cap[i - 1], cap[i])
         gentle = fastest * fastest / accel  # radius that the path may have at full speed
         reach = math.sqrt(2.0 * aside * gentle)
-        bend = 0.0
+        bend, turned, back, ahead = 0.0, 0.0, 0.0, 0.0
         for _ in range(_WINDOW_ROUNDS):
             back = _chord(unit, length, i - 1, -1, reach, stop, behind)
             ahead = _chord(unit, length, i, 1, reach, stop, before)
@@ -201,7 +210,9 @@ def bends(
             if abs(shorter - reach) <= 0.05 * reach:
                 break
             reach = shorter
-        secant = 1.0 / max(math.cos(0.5 * angle), 1e-12) - 1.0
+        if angle <= _SAME and turned <= _SAME:
+            continue
+        secant = 1.0 / math.cos(0.5 * angle) - 1.0
         if exact == 0 and secant >= aside * bend:
             limit[i] = _corner_speed(unit, i, angle, aside, accel, jerk)
             tangent = math.tan(0.5 * angle) * aside / secant

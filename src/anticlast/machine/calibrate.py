@@ -24,7 +24,7 @@ _LOW = np.log(np.array([0.05, 0.01, 5.0]))
 _HIGH = np.log(np.array([20.0, 100.0, 1e5]))
 # 95 % of a chi-square distribution with one degree of freedom: a reading's cost may rise by this within its error.
 _QUANTILE = 3.841458820694124
-_SCAN = 13  # starts tried over a range, for times do not feel a rate that is not reached
+_SCAN = 9  # starts tried over a range
 _ROUNDS = 60
 
 
@@ -117,6 +117,8 @@ class Calibration:
                 " program is the one that ran.",
             ]
         said += [_told_line(item) for item in self.told]
+        if not all(item.fitted for item in self.told):
+            said.append("The ranges allow for what was left as it is being off by half or double.")
         if len(self.measured_s) == 1:
             said.append("One reading tells one number; measure programs of other kinds to tell the others.")
         return [*said, "For the machine file (it is not changed):", *("  " + line for line in self.file_lines())]
@@ -207,16 +209,11 @@ class _Fit:
         return cost
 
     def best_along(self, logs: Floats, which: int) -> Floats:
-        """Move one parameter to its best: a scan of its range, then golden section about the best of it."""
+        """Move one parameter to the best of a scan of its range, since times do not feel a rate that is not reached."""
         cost = self.along(logs, which)
         grid = np.unique(np.append(np.linspace(_LOW[which], _HIGH[which], _SCAN), logs[which]))
-        costs = np.array([cost(float(value)) for value in grid])
-        at = int(costs.argmin())
-        low, high = grid[max(at - 1, 0)], grid[min(at + 1, len(grid) - 1)]
         moved = logs.copy()
-        moved[which] = golden(cost, float(low), float(high), CALIBRATION_STEP)
-        if costs[at] <= self.cost(moved):
-            moved[which] = grid[at]
+        moved[which] = grid[int(np.argmin([cost(float(value)) for value in grid]))]
         return moved
 
     def slopes(self, logs: Floats, free: Sequence[int]) -> Floats:
@@ -253,23 +250,6 @@ class _Fit:
         raise NotConverged("the fit to the readings", step, CALIBRATION_STEP)
 
 
-def golden(function: Callable[[float], float], low: float, high: float, tolerance: float) -> float:
-    """Find where a function of one number is least between two others, by golden section (Kiefer, Proc. AMS 4 (1953))."""
-    share = 0.5 * (math.sqrt(5.0) - 1.0)
-    a, b = high - share * (high - low), low + share * (high - low)
-    fa, fb = function(a), function(b)
-    while high - low > tolerance:
-        if fa <= fb:
-            high, b, fb = b, a, fa
-            a = high - share * (high - low)
-            fa = function(a)
-        else:
-            low, a, fa = a, b, fb
-            b = low + share * (high - low)
-            fb = function(b)
-    return 0.5 * (low + high)
-
-
 def calibrate(readings: Sequence[Reading], machine: Machine, error_s: float) -> Calibration:
     """Fit what the readings can tell, one number after the other, as long as each explains more than their error.
 
@@ -291,12 +271,13 @@ def calibrate(readings: Sequence[Reading], machine: Machine, error_s: float) -> 
     errors = np.hypot(error_s, READING_SHARE * measured)
     fit = _Fit(readings, machine, errors)
     logs, free = fit.start.copy(), []
-    while len(free) < len(readings):
+    while len(free) < min(len(readings), len(NAMES)):
         tried = [which for which in range(len(NAMES)) if which not in free]
         ends = [_with(fit, logs, free, which) for which in tried]
         costs = np.array([fit.cost(end) for end in ends])
-        # Among those that explain the readings alike the first counts: acceleration before jerk before block rate.
-        best = int(np.flatnonzero(costs <= costs.min() + 1.0)[0])
+        # Among those that explain the readings alike, the one that has to move least from the file's value.
+        moves = np.array([abs(end[which] - fit.start[which]) for end, which in zip(ends, tried, strict=True)])
+        best = int(np.where(costs <= costs.min() + 1.0, moves, math.inf).argmin())
         if free and fit.cost(logs) - costs[best] <= _QUANTILE:
             break
         free.append(tried[best])
@@ -316,24 +297,45 @@ def calibrate(readings: Sequence[Reading], machine: Machine, error_s: float) -> 
 
 def _with(fit: _Fit, logs: Floats, free: list[int], which: int) -> Floats:
     """Best parameters with one more of them free."""
-    moved = fit.best_along(logs, which)
-    return fit.settle(moved, [*free, which]) if free else moved
+    return fit.settle(fit.best_along(logs, which), [*free, which])
 
 
 def _told(fit: _Fit, logs: Floats, free: list[int], which: int) -> Told:
-    before, value = (float(np.exp(at[which])) for at in (fit.start, logs))
-    if len(free) > 1 and which in free:
-        low, high = _spread(fit, logs, free, which)
+    """What is known of one parameter, fitted or not."""
+    if which in free:
+        low, high = _range(fit, logs, free, which)
     else:
-        low, high = (_edge(fit, logs, which, end) for end in (_LOW[which], _HIGH[which]))
-    low, high = (0.0 if low <= _LOW[which] else math.exp(low)), (math.inf if high >= _HIGH[which] else math.exp(high))
-    if which == 2:
-        before, value = (math.inf if at[2] >= _HIGH[2] else end for at, end in ((fit.start, before), (logs, value)))
-    return Told(NAMES[which], before, value, low, high, which in free)
+        low, high = (_edge(fit, logs, which, float(end)) for end in (_LOW[which], _HIGH[which]))
+    before, value = (math.inf if which == 2 and at[2] >= _HIGH[2] else math.exp(at[which]) for at in (fit.start, logs))
+    return Told(
+        NAMES[which], before, value, 0.0 if low <= _LOW[which] else math.exp(low),
+        math.inf if high >= _HIGH[which] else math.exp(high), which in free,
+    )  # fmt: skip
+
+
+def _range(fit: _Fit, logs: Floats, free: list[int], which: int) -> tuple[float, float]:
+    """Range of a fitted parameter: from the readings' errors, and from parameters that were not fitted.
+
+    Each of those is set to half and to double the file's value and the fit repeated; where the readings allow it, its range
+    counts too.
+    """
+    low, high = _spread(fit, logs, free, which)
+    worst = fit.cost(logs) + _QUANTILE
+    for other in (number for number in range(len(NAMES)) if number not in free):
+        for factor in (-math.log(2.0), math.log(2.0)):
+            moved = logs.copy()
+            moved[other] += factor
+            if logs[other] >= _HIGH[other]:
+                continue  # a machine file without a block rate is believed
+            moved = fit.settle(moved, free)
+            if fit.cost(moved) <= worst:
+                ends = _spread(fit, moved, free, which)
+                low, high = min(low, ends[0]), max(high, ends[1])
+    return low, high
 
 
 def _spread(fit: _Fit, logs: Floats, free: list[int], which: int) -> tuple[float, float]:
-    """Range of one of several fitted parameters from the normal equations; a misfit larger than the errors widens it."""
+    """Range of a fitted parameter from the normal equations; a misfit larger than the errors widens it."""
     slopes = fit.slopes(logs, free)
     spare = len(fit.readings) - len(free)
     misfit = max(1.0, fit.cost(logs) / spare) if spare else 1.0

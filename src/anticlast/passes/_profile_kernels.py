@@ -96,13 +96,9 @@ def _lowered(line, pose, tool, below, at, tilt):
 
 
 @numba.njit(cache=True, nogil=True)
-def _left(line, table, low, high, tool, pose, tilt):
-    """Return (height, row) that a pass leaves on a line: the lowest entry over rows low to high of its table.
-
-    All whole rows first, from the middle outwards, for the front and the rear of the bottom may both come near; then a golden
-    section about the lowest, which a flat end mill's sharp edge (a kink) does not disturb.
-    """
-    best, row = np.inf, -1
+def _best_row(line, table, low, high, tool, pose, below, tilt):
+    """Return (height, row) of the lowest entry over whole rows low to high, from the middle outwards; inf if none is below."""
+    best, row = below, -1
     middle = (low + high) // 2
     for n in range(2 * (high - low) + 2):
         i = middle + (n // 2 + 1 if n % 2 == 0 else -(n // 2))
@@ -113,8 +109,15 @@ def _left(line, table, low, high, tool, pose, tilt):
         h = _lowered(line, pose, tool, best, float(i), tilt)
         if h < best:
             best, row = h, i
-    if row < 0:
-        return np.inf, float(low)
+    return (best if row >= 0 else np.inf), row
+
+
+@numba.njit(cache=True, nogil=True)
+def _refined(line, table, best, row, low, high, tool, pose, tilt):
+    """Return (height, row) of the lowest entry within a row of the one given, by golden section.
+
+    A flat end mill's sharp edge makes the lowest place a kink, which does not disturb it.
+    """
     first, last = float(max(row - 1, low)), float(min(row + 1, high))
     b, c = last - _GOLDEN * (last - first), first + _GOLDEN * (last - first)
     _pose(table, b, pose)
@@ -141,7 +144,37 @@ def _left(line, table, low, high, tool, pose, tilt):
 
 
 @numba.njit(cache=True, nogil=True)
-def profiles(form, tool, u, v, aside, tables, step, error, scale, height, shift, lowered):
+def _left(line, table, abreast, step, reach, tool, pose, tilt):
+    """Return (height, row) that a pass leaves on a line: the lowest entry over poses within reach of it.
+
+    Front, rear and middle of the bottom may come near, each with a lowest place of its own: rows whose contact lies no further
+    than a bottom's radius from the line, and those before and behind, are searched apart. Between rows an entry dips by no more
+    than ``tool[3]``.
+
+    Parameters
+    ----------
+    abreast : float
+        Row whose contact is abreast of the line.
+    """
+    last = table.shape[0] - 1
+    low = min(max(math.floor(abreast - reach / step), 0), last - 3)
+    high = max(min(math.ceil(abreast + reach / step), last), low + 3)
+    split = tool[0] / step + 0.5
+    first = min(max(math.ceil(abreast - split), low), high)
+    second = min(max(math.floor(abreast + split), first), high)
+    best, at = np.inf, float(low)
+    for part in range(3):
+        i, j = (first, second) if part == 0 else ((second, high) if part == 1 else (low, first))
+        h, row = _best_row(line, table, i, j, tool, pose, best + tool[3], tilt)
+        if row >= 0:
+            h, place = _refined(line, table, h, row, i, j, tool, pose, tilt)
+            if h < best:
+                best, at = h, place
+    return best, at
+
+
+@numba.njit(cache=True, nogil=True)
+def profiles(form, tool, u, v, aside, tables, step, reach, error, scale, height, shift, lowered):
     """Fill height, shift and lowered (n, m) [mm]: what each pass leaves beside its line, and how far ahead it is cut.
 
     ``lowered`` is what it leaves under a tilt error about the contact, in the worst direction for each place.
@@ -149,7 +182,7 @@ def profiles(form, tool, u, v, aside, tables, step, error, scale, height, shift,
     Parameters
     ----------
     form : (3,)
-    tool : (disc, corner, rounds)
+    tool : (disc, corner, rounds, dip)
     u, v : (n,)
         Stations. Table k is about station k: its middle row has its contact there.
     aside : (m,)
@@ -157,6 +190,8 @@ def profiles(form, tool, u, v, aside, tables, step, error, scale, height, shift,
     tables : (n, p, 6)
     step : float
         Plan distance between contacts of neighbouring rows.
+    reach : float
+        How far before and behind a place rows are looked at.
     error : float
         Tilt error [rad].
     scale : (n, 2)
@@ -164,18 +199,18 @@ def profiles(form, tool, u, v, aside, tables, step, error, scale, height, shift,
     """
     line, pose = np.empty(6), np.empty(6)
     tilt, upright = np.empty(4), np.zeros(4)
-    last = tables.shape[1] - 1
+    middle = 0.5 * (tables.shape[1] - 1)
     for k in range(len(u)):
-        tilt[0], tilt[1], tilt[2] = error, 0.5 * last, step * scale[k, 0]
+        tilt[0], tilt[1], tilt[2] = error, middle, step * scale[k, 0]
         for j in range(len(aside)):
             _ground(form, u[k], v[k] + aside[j], line)
-            h, at = _left(line, tables[k], 0, last, tool, pose, upright)
+            h, at = _left(line, tables[k], middle, step, reach, tool, pose, upright)
             height[k, j] = h
-            shift[k, j] = (at - 0.5 * last) * step
+            shift[k, j] = (at - middle) * step
             tilt[3] = aside[j] * scale[k, 1]
             lowered[k, j] = h
             if error > 0.0:
-                lowered[k, j], _ = _left(line, tables[k], 0, last, tool, pose, tilt)
+                lowered[k, j], _ = _left(line, tables[k], middle, step, reach, tool, pose, tilt)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -190,12 +225,9 @@ def heights(form, tool, u, v, table, start, step, reach, height):
         How far before and behind a point rows are looked at.
     """
     line, pose, upright = np.empty(6), np.empty(6), np.zeros(4)
-    last = table.shape[0] - 1
     for k in range(len(u)):
-        low = min(max(math.floor((u[k] - reach - start) / step), 0), last - 3)
-        high = max(min(math.ceil((u[k] + reach - start) / step), last), low + 3)
         _ground(form, u[k], v[k], line)
-        height[k], _ = _left(line, table, low, high, tool, pose, upright)
+        height[k], _ = _left(line, table, (u[k] - start) / step, step, reach, tool, pose, upright)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -214,15 +246,12 @@ def ridges(form, tool, u, lower, upper, first, second, start, step, reach, round
     line, pose, upright = np.empty(6), np.empty(6), np.zeros(4)
     for k in range(len(u)):
         low, high = lower[k], upper[k]
+        below, above = np.inf, np.inf
         for _ in range(rounds):
             v = 0.5 * (low + high)
             _ground(form, u[k], v, line)
-            i0 = min(max(math.floor((u[k] - reach - start[0]) / step), 0), first.shape[0] - 4)
-            i1 = max(min(math.ceil((u[k] + reach - start[0]) / step), first.shape[0] - 1), i0 + 3)
-            j0 = min(max(math.floor((u[k] - reach - start[1]) / step), 0), second.shape[0] - 4)
-            j1 = max(min(math.ceil((u[k] + reach - start[1]) / step), second.shape[0] - 1), j0 + 3)
-            below, _ = _left(line, first, i0, i1, tool, pose, upright)
-            above, _ = _left(line, second, j0, j1, tool, pose, upright)
+            below, _ = _left(line, first, (u[k] - start[0]) / step, step, reach, tool, pose, upright)
+            above, _ = _left(line, second, (u[k] - start[1]) / step, step, reach, tool, pose, upright)
             if below < above:
                 low = v
             else:

@@ -31,8 +31,9 @@ _TRIED = 36
 _NARROWED = 2
 _MOST_ROUNDS = 60
 _GOLDEN = 0.5 * (math.sqrt(5.0) - 1.0)
-# A direction no worse than the closed form by more than this share is the closed form: sums over levels are this coarse.
-_SAME_LENGTH = 1e-6
+# A direction no worse than the closed form by more than this share is the closed form: sums over levels are coarse, and
+# curves are polygons, mirrored to about as much; integrals are exact but for round-off.
+_SAME_LENGTH = {"pass by pass": 1e-6, "one step": 1e-10, "everywhere": 1e-10}
 # Levels over the outline's width, samples along each (mm), cells of the quadrature over its longer side.
 _LEVELS = 240
 _SAMPLE_MM = 1.5
@@ -137,7 +138,7 @@ def best_direction(
     NotConverged
     """
     measure = _ball_measure(saddle, outline, radius_mm, scallop_mm, spacing, allowance_mm)
-    direction, own = _least(measure, convex_axis_rad(saddle))
+    direction, own = _least(measure, convex_axis_rad(saddle), _SAME_LENGTH[spacing])
     xy = np.vstack((outline.boundary_points(_SAMPLE_MM), outline.grid(_SAMPLE_MM)))
     strip = second_order_step(saddle, radius_mm, xy, direction, scallop_mm, allowance_mm)
     return FeedDirection(direction, measure(direction), float(strip.min()), own)
@@ -162,7 +163,7 @@ def most_convex_direction_rad(saddle: Saddle, outline: Outline) -> float:
         slope = gradient @ t
         return float(weights @ (float(t @ hessian @ t) / (1.0 + slope * slope)) / weights.sum())
 
-    return _least(mean_bend, convex_axis_rad(saddle))[0]
+    return _least(mean_bend, convex_axis_rad(saddle), _SAME_LENGTH["everywhere"])[0]
 
 
 # ---------------------------------------------------------------------------------------- lengths
@@ -230,7 +231,7 @@ def _quadrature(outline: Outline) -> tuple[Floats, Floats]:
 # ---------------------------------------------------------------------------------------- the search
 
 
-def _least(function: Callable[[float], float], closed_form_rad: float) -> tuple[float, bool]:
+def _least(function: Callable[[float], float], closed_form_rad: float, same: float) -> tuple[float, bool]:
     """Return where a function of period pi is least, and whether that is the closed form.
 
     A round of directions that holds the closed form, then golden sections around the best of them.
@@ -241,7 +242,7 @@ def _least(function: Callable[[float], float], closed_form_rad: float) -> tuple[
     best, least = closed_form_rad, float(values[0])
     for dip in dips[np.argsort(values[dips], kind="stable")][:_NARROWED]:
         at, value = _golden(function, float(tried[dip]), math.pi / _TRIED)
-        if value < least - _SAME_LENGTH * abs(least):
+        if value < least - same * abs(least):
             best, least = at, value
     return best % math.pi, best == closed_form_rad
 

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import shapely
+from shapely.geometry import LineString, Point
 
 from anticlast.errors import CannotPlan
 from anticlast.passes.rough import limits
@@ -180,7 +181,7 @@ class _Planner:
                 turned = np.roll(xy, -place, axis=0)
                 turned = np.vstack((turned, turned[:1]))
                 arc = _arc_onto(turned, share * limits.cut_radius_mm(self.operation))
-                if self.walk.is_clear(arc[[0, 0]]) and shapely.covers(self.walk.room, shapely.linestrings(arc)):
+                if self.walk.is_clear(arc[[0, 0]]) and shapely.covers(self.walk.room, LineString(arc)):
                     return np.vstack((arc, turned[1:]))
         turned = np.roll(xy, -int(order[0]), axis=0)
         return np.vstack((turned, turned[:1]))
@@ -215,11 +216,11 @@ class _Planner:
         """Return the nearest place in air from which a straight way to a pass keeps off the surface."""
         assert self.walk is not None
         for place in (self._in_air(start), self._in_air(start, 0.0)):
-            if place is not None and shapely.covers(self.walk.room, shapely.linestrings([place, start])):
+            if place is not None and shapely.covers(self.walk.room, LineString([place, start])):
                 return place
         raise CannotPlan(
             "way to a pass",
-            f"operation {self.operation.index}: no way in air to the roughing pass at ({start[0]:.3f}, {start[1]:.3f}) was found; "
+            f"operation {self.operation.index}: no way in air to the pass at ({start[0]:.3f}, {start[1]:.3f}) was found; "
             "change width_of_cut or depth_of_cut a little",
         )
 
@@ -229,13 +230,13 @@ class _Planner:
         air = shapely.buffer(self.walk.air, -inside_mm) if inside_mm > 0.0 else self.walk.air
         if air.is_empty:
             return None
-        line = shapely.shortest_line(air, shapely.points(near))
+        line = shapely.shortest_line(air, Point(near))
         return np.asarray(shapely.get_coordinates(line)[0])
 
 
 def _waits(pieces: tuple[Piece, ...], near_mm: float) -> list[set[int]]:
     """Return for each piece those of the round before that lie so near that they have to be cut first."""
-    lines = [shapely.linestrings(piece.xy) for piece in pieces]
+    lines = [LineString(piece.xy) for piece in pieces]
     by_round: dict[int, list[int]] = {}
     for i, piece in enumerate(pieces):
         by_round.setdefault(piece.round, []).append(i)

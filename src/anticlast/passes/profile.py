@@ -31,6 +31,8 @@ _ROUNDS_ROUND, _ROUNDS_SHARP = 15, 24
 # Rows are looked at this far past the rear of the bottom, shares of the cutter radius.
 _PAST_REAR = 0.25
 _RIDGE_ROUNDS = 12
+# Slope of a bottom that still makes strips, for how far an edge may dip between rows.
+_STEEPEST_BOTTOM = 0.3
 
 
 @dataclass(frozen=True, slots=True)
@@ -116,7 +118,10 @@ class Sweep:
 
     def _tool(self) -> Floats:
         rounds = _ROUNDS_ROUND if self.cutter.corner_radius_mm > 0.0 else _ROUNDS_SHARP
-        return np.array([self.disc_mm, self.cutter.corner_radius_mm, float(rounds)])
+        # Between rows a corner arc dips by half a step squared over its diameter, a sharp edge by what the bottom's slope lets it.
+        corner = self.cutter.corner_radius_mm
+        dip = self.step_mm * min(_STEEPEST_BOTTOM, self.step_mm / (8.0 * corner) if corner > 0.0 else np.inf)
+        return np.array([self.disc_mm, corner, float(rounds), 1.5 * dip])
 
     def profiles(
         self,
@@ -176,6 +181,7 @@ class Sweep:
                 aside_mm,
                 tables[part],
                 self.step_mm,
+                self.reach_mm,
                 error_rad,
                 scale[part],
                 height[part],

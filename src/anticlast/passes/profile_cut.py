@@ -10,7 +10,7 @@ import math
 
 import numpy as np
 import shapely
-from shapely.geometry import Polygon
+from shapely.geometry import LinearRing, LineString, MultiLineString, Point, Polygon
 from shapely.geometry.base import BaseGeometry
 
 from anticlast.errors import CannotPlan
@@ -122,7 +122,7 @@ def floor_mm(job: Job, operation: Operation) -> float:
 def _check_walls(operation: Operation, stock: Terraces, loops: list[Loop], floor_z: float) -> None:
     """Raise `CannotPlan` where shank or holder would rub on walls of the groove."""
     cutter = operation.cutter
-    path = shapely.union_all([shapely.linestrings(loop.xy) for loop in loops])
+    path = MultiLineString([loop.xy for loop in loops])
     for body in cutter.bodies():
         if body.name == "flutes" or (body.name == "shank" and body.radius_mm < cutter.radius_mm - _OFF_MM):
             continue
@@ -159,8 +159,8 @@ class _Contour:
         top = self.job.stock.top_mm
         layers = max(1, math.ceil((top - floor_z) / limits.cut_depth_mm(self.operation) - 1e-9))
         above = top
-        if floor_z < self.tab_top_mm - SAME_POINT_MM:
-            self._lay_tabs()
+        if floor_z < self.tab_top_mm - SAME_POINT_MM and self._holds_a_piece():
+            self._lay_tabs(floor_z)
         self.track.lift()
         for number in range(1, layers + 1):
             z = top - (top - floor_z) * number / layers
@@ -173,19 +173,27 @@ class _Contour:
         self.track.lift()
         return self.rounds
 
-    def _lay_tabs(self) -> None:
+    def _holds_a_piece(self) -> bool:
+        """Whether cutting the contour parts a piece from the rest: not where the cutter clears all of a hole."""
+        inside = Polygon(self.loop.xy)
+        swept = LineString(self.loop.xy).buffer(self.radius_mm)
+        return not inside.difference(swept).buffer(-_OFF_MM).is_empty
+
+    def _lay_tabs(self, floor_z: float) -> None:
         operation = self.operation
         width = operation.tab_width_mm or self.radius_mm
         groove = 2.0 * (self.radius_mm + operation.allowance_mm)
         blank = self.job.stock.outline.polygon
         self.tabs = lay_tabs(self.loop, operation.tabs, 0.5 * width + self.radius_mm, groove, blank)
-        if len(self.tabs) < operation.tabs:
+        free = floor_z <= self.job.stock.bottom_mm + SAME_POINT_MM
+        if len(self.tabs) < operation.tabs and free:
             self.notes.append(
                 f"{len(self.tabs)} of {operation.tabs} tabs on a contour of {self.loop.length_mm:.0f} mm: there is no room, or no"
                 " blank beyond the groove to hold on to"
             )
-        if not self.tabs:
-            self.notes.append("the part comes free of the blank: hold it from below")
+        if not self.tabs and free:
+            hole = shapely.is_ccw(LinearRing(self.loop.xy))
+            self.notes.append(f"the {'piece in a hole' if hole else 'part'} comes free of the blank: hold it from below")
 
     def _cuts(self, standing: BaseGeometry) -> Bools:
         """Tell at which places the cutter is in stock that stands over a level."""
@@ -311,13 +319,13 @@ class _Contour:
         stands = self.track.stands
         if stands is None:
             return None
-        line, here = shapely.linestrings(self.loop.xy), shapely.points(stands[:2])
+        line, here = LineString(self.loop.xy), Point(stands[:2])
         if float(shapely.distance(line, here)) > SAME_POINT_MM:
             return None
         return float(shapely.line_locate_point(line, here))
 
     def _along(self, path: Floats, at: Floats) -> float:
-        return float(shapely.line_locate_point(shapely.linestrings(path), shapely.points(at)))
+        return float(shapely.line_locate_point(LineString(path), Point(at)))
 
     def _arc_from_outside(self, standing: BaseGeometry) -> tuple[float, Floats] | None:
         """Return a place on the contour and an arc onto it that starts in air, the shortest found, or None."""
@@ -333,13 +341,13 @@ class _Contour:
                 mirrored = point + radius * ((1.0 - np.cos(angle)) * left + np.sin(angle) * along)
                 if not all(self._clear(way[[0, 0]], standing) for way in (arc, mirrored)):
                     continue
-                both = shapely.linestrings(np.vstack((arc, mirrored[::-1])))
+                both = LineString(np.vstack((arc, mirrored[::-1])))
                 if float(shapely.distance(self.job.part.outline.polygon, both)) >= keep:
                     return place, arc
         return None
 
     def _clear(self, xy: Floats, standing: BaseGeometry) -> bool:
-        line = shapely.linestrings(xy)
+        line = LineString(xy)
         return standing.is_empty or float(shapely.distance(standing, line)) >= self.radius_mm + _OFF_MM
 
 

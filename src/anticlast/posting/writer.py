@@ -91,6 +91,8 @@ def _header(job: Job, paths: Sequence[AxisPath], dialect: _Dialect) -> Iterator[
         yield comment(
             f"SADDLE POINT AT ROTARY 0, FROM WHERE THE ROTARY AXES MEET: {origin}. THE PROGRAM IS WRONG FOR ANY OTHER"
         )
+    if job.turn_rad:
+        yield comment(f"THE PART IS SET TURNED {plain(math.degrees(job.turn_rad), 3)} DEGREES ABOUT Z FROM ITS DRAWING")
     if machine.rotary and dialect.inverse:
         yield comment("F UNDER G93 IS ONE OVER THE MINUTES OF ITS BLOCK, NISTIR 6556 SECTION 3.5.19")
     yield comment(f"F UNDER G94 IS {unit} PER MINUTE OF THE CUTTER TIP")
@@ -163,7 +165,7 @@ def _arc_words(path: AxisPath, rows: slice, dialect: _Dialect) -> list[tuple[str
     """For each block of a slice the plane code, G2 or G3, and the two centre words; empty texts on straight moves."""
     if path.arcs is None:
         return [("", "", [])] * len(path.rapid[rows])
-    found = []
+    found: list[tuple[str, str, list[str]]] = []
     for plane, turned, *centre in path.arcs[rows].tolist():
         if plane == 0.0:
             found.append(("", "", []))

@@ -151,7 +151,9 @@ def pose_least(
             top += 2
             continue
         for i in range(-1 - first, -1 - second):
-            found, under = patch_least(patches[i], pose, shift, body, (min(below, best), tolerance, enough), there)
+            found, under = patch_least(
+                patches[i], pose, shift, body, (min(below, best), tolerance, enough), there
+            )
             bound = min(bound, under)
             if found < best:
                 best = found
@@ -162,9 +164,14 @@ def pose_least(
 
 
 @njit(cache=True, nogil=True)
-def pose_on(poses: np.ndarray, cumulative: np.ndarray, s: float, pose: np.ndarray) -> int:
-    """Fill ``pose`` (6,) with the pose at path length s [mm] and return its piece."""
-    k = min(max(np.searchsorted(cumulative, s) - 1, 0), poses.shape[0] - 1)
+def pose_on(poses: np.ndarray, cumulative: np.ndarray, s: float, starts: bool, pose: np.ndarray) -> int:
+    """Fill ``pose`` (6,) with the pose at path length s [mm] and return its piece.
+
+    Where one piece ends and the next begins, it is the next one's start if ``starts``, else the end of the one before:
+    the two differ where a new run begins.
+    """
+    side = np.searchsorted(cumulative, s, "right") if starts else np.searchsorted(cumulative, s, "left")
+    k = min(max(side - 1, 0), poses.shape[0] - 1)
     length = cumulative[k + 1] - cumulative[k]
     f = min(max((s - cumulative[k]) / length, 0.0), 1.0) if length > 0.0 else 0.0
     for i in range(6):
@@ -194,8 +201,8 @@ def wander(
         Gets half of the straight way from one end of the span to the other.
     """
     one, two = np.empty(6), np.empty(6)
-    k0 = pose_on(poses, cumulative, span[0], one)
-    k1 = pose_on(poses, cumulative, span[1], two)
+    k0 = pose_on(poses, cumulative, span[0], True, one)
+    k1 = max(pose_on(poses, cumulative, span[1], False, two), k0)
     vv = 0.0
     for i in range(3):
         shift[i] = 0.5 * (two[i] - one[i])
@@ -259,7 +266,7 @@ def motion_least(
             s0, s1 = stack[top, 0], stack[top, 1]
             top -= 1
             s = 0.5 * (s0 + s1)
-            k = pose_on(poses, cumulative, s, pose)
+            k = pose_on(poses, cumulative, s, False, pose)
             known = min(best, shared[0])
             slack = max(tolerance, share * abs(known)) if known < math.inf else tolerance
             found, _ = pose_least(tree, pose, still, body, (known, 0.1 * slack, -math.inf), place, hint)

@@ -173,7 +173,7 @@ def check_rapids(job: Job, cutting: Clearance, rigid: Clearance, motion: PartMot
     where = (
         f"the cutter comes within {cutting.distance_mm:.3f} mm of the blank {_place(cutting.at_mm)} at rapid"
     )
-    if cutting.distance_mm >= limit - CLEARANCE_MM:
+    if cutting.bound_mm >= limit - CLEARANCE_MM:
         return Finding(
             "rapids", True, cutting.distance_mm, limit, "mm", line, f"{where}; {limit:g} mm are asked for"
         )

@@ -142,6 +142,7 @@ def lifts(motion: PartMotion) -> Bools:
 def least_clearance(
     tree: PatchTree, motion: PartMotion, pieces: Bools, cutter: Cutter, bodies: Sequence[Body],
     interest_mm: float = math.inf,
+    share: float = _SHARE,
 ) -> Clearance:  # fmt: skip
     """Return the least distance of some bodies of a cutter from patches, over some pieces of the motion.
 
@@ -155,19 +156,27 @@ def least_clearance(
     bodies : sequence of Body
     interest_mm : float
         Larger distances need not be told apart from this one.
+    share : float
+        Distances this share of the least one apart need not be told apart.
     """
     rows = np.flatnonzero(pieces & (motion.tool == cutter.number))
     rows = rows[rows > 0]
     worst = Clearance(math.inf, math.inf)
     for body in bodies if rows.size else ():
         worst = nearer(
-            worst, _one_body(tree, motion, rows, cutter, body, min(interest_mm, worst.distance_mm))
+            worst, _one_body(tree, motion, rows, cutter, body, min(interest_mm, worst.distance_mm), share)
         )
     return worst
 
 
 def _one_body(
-    tree: PatchTree, motion: PartMotion, rows: Ints, cutter: Cutter, body: Body, interest_mm: float
+    tree: PatchTree,
+    motion: PartMotion,
+    rows: Ints,
+    cutter: Cutter,
+    body: Body,
+    interest_mm: float,
+    share: float = _SHARE,
 ) -> Clearance:
     """Return the least distance of one body; ``rows`` are the pieces, ascending."""
     poses = np.ascontiguousarray(
@@ -192,7 +201,7 @@ def _one_body(
     def search(span: tuple[int, int]) -> Floats:
         result = np.empty(6)
         some = runs[span[0] : span[1]]
-        kernels.motion_least(*arguments, some, shape, _TOLERANCE_MM, _SHARE, shared, result)
+        kernels.motion_least(*arguments, some, shape, _TOLERANCE_MM, share, shared, result)
         return result
 
     found = in_threads(search, spans(len(runs)))

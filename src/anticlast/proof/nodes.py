@@ -85,7 +85,7 @@ def lay_nodes(outline: Outline, saddle: Saddle, grid_mm: float) -> Nodes:
     gx, gy = grid_lines(x0, x1, grid_mm), grid_lines(y0, y1, grid_mm)
     inside = _inside(outline, gx, gy)
     whole, cut = _sort_cells(outline, gx, gy, inside)
-    at = np.full(inside.shape, -1, np.int64)
+    at = np.full(inside.shape, -1, np.int32)
     used = inside.copy()
     for j, i in ((0, 0), (0, 1), (1, 0), (1, 1)):
         used[j : j + whole.shape[0], i : i + whole.shape[1]] |= whole
@@ -95,7 +95,7 @@ def lay_nodes(outline: Outline, saddle: Saddle, grid_mm: float) -> Nodes:
     a, b, c, d = at[:-1, :-1][whole], at[:-1, 1:][whole], at[1:, 1:][whole], at[1:, :-1][whole]
     triangles = np.concatenate((np.column_stack((a, b, c)), np.column_stack((a, c, d))))
     edge_xy, edge_triangles = _clipped(outline, gx, gy, cut)
-    triangles = np.concatenate((triangles, edge_triangles + len(xy)))
+    triangles = np.concatenate((triangles, (edge_triangles + len(xy)).astype(np.int32)))
     return _tiled(np.concatenate((xy, edge_xy)), triangles, at, gx, gy, saddle)
 
 
@@ -152,8 +152,8 @@ def _clipped(
 
 def _tiled(
     xy: Floats,
-    triangles: npt.NDArray[np.int64],
-    at: npt.NDArray[np.int64],
+    triangles: npt.NDArray[np.int32],
+    at: npt.NDArray[np.int32],
     gx: Floats,
     gy: Floats,
     saddle: Saddle,

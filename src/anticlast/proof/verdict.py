@@ -110,7 +110,8 @@ def _collisions(
         bodies = rigid_bodies(cutter)
         flutes = nearer(flutes, flute_clearance(finished, motion, moving & ~beside, cutter, 0.0))
         holder = nearer(holder, rigid_clearance(coarse, finished, motion, moving, cutter))
-        cutting = nearer(cutting, least_clearance(blank, motion, at_rapid, cutter, [cutting_body(cutter)]))
+        ends = [cutting_body(cutter)]
+        cutting = nearer(cutting, least_clearance(blank, motion, at_rapid, cutter, ends, share=0.0))
         rigid = nearer(rigid, least_clearance(blank, motion, at_rapid, cutter, bodies))
         if job.stock.allowance_mm is not None:
             feeding = moving & ~motion.rapid
@@ -130,9 +131,9 @@ def moving_pieces(job: Job, program: ReadProgram, motion: PartMotion) -> Bools:
     """
     at_start, at_end = known_places(program)
     columns = [SIX.index(letter) for letter in job.machine.letters]
-    known = (at_start & at_end)[:, columns].all(axis=1) if len(at_start) else np.zeros(0, bool)
-    moving = motion.fraction > 0.0
+    known: Bools = np.logical_and.reduce((at_start & at_end)[:, columns], axis=1)
+    moving: Bools = motion.fraction > 0.0
     moving[:1] = False
-    if len(known):
+    if known.size:
         moving &= known[np.maximum(motion.motion, 0)]
-    return np.asarray(moving)
+    return moving

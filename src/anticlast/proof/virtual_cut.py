@@ -19,7 +19,7 @@ from anticlast.proof.nodes import Nodes, lay_nodes, part_depths_mm
 from anticlast.proof.pieces import Pieces, take_pieces
 from anticlast.proof.threads import in_threads, spans
 from anticlast.saddle import Saddle
-from anticlast.tolerances import BOUND_SLACK_MM, MEASURE_MM, UNCUT_MM
+from anticlast.tolerances import BOUND_SLACK_MM, MEASURE_MM, SAME_POINT_MM, UNCUT_MM
 
 if TYPE_CHECKING:
     from anticlast.records import Bools, Floats, Job, PartMotion, ScallopMap
@@ -115,7 +115,7 @@ def measure(
     pieces = take_pieces(motion, job.cutters, saddle, moving)
     field = _Field(job, saddle, nodes, pieces, wanted_mm)
     field.cut()
-    gouge = deepest_gouge(saddle, job.part.outline, pieces)
+    gouge = _deeper(deepest_gouge(saddle, job.part.outline, pieces), field)
     highest, bound = field.search()
     untouched = np.mean(field.owner[nodes.triangles] < 0, axis=1)
     some = np.flatnonzero(untouched)
@@ -235,6 +235,16 @@ class _Field:
         found = in_threads(run, spans(len(nodes.triangles)))
         best = max((own for own, _ in found), key=lambda own: own[0])
         return best, max(float(best[0]), *(bound for _, bound in found))
+
+
+def _deeper(gouge: Gouge, field: _Field) -> Gouge:
+    """Return the gouge, or the lowest node where that lies deeper: the wall of a bull or flat end mill above its rim."""
+    lowest = int(np.argmin(field.height))
+    depth = -float(field.height[lowest])
+    if depth <= gouge.deepest_mm + SAME_POINT_MM:
+        return gouge
+    x, y = field.nodes.xy[lowest]
+    return Gouge(depth, max(depth, gouge.bound_mm), (float(x), float(y)), int(field.owner[lowest]))
 
 
 def _first_reach_mm(job: Job) -> float:

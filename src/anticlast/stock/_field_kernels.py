@@ -28,6 +28,7 @@ _REFINES = 8
 _NEWTON = 16
 _NEWTON_MM = 1e-7
 _BISECTIONS = 24
+_EDGE_BISECTIONS = 10
 # Distances are told apart to this share of the least one.
 _TOLD = 0.01
 
@@ -247,12 +248,19 @@ def tilted_sweep(u: float, v: float, s: np.ndarray) -> tuple:
                 else:
                     tb, vb, mb = middle, value, rise
         elif k > 0 and (here < FAR) != (before_low < FAR):
-            out, within = (before, t) if here < FAR else (t, before)
-            for _ in range(5):
+            # The line comes into or goes out of the shadow: halve on the slope, what lies outside counting as too high.
+            out, within, rise = (before, t, -slope) if here < FAR else (t, before, before_slope)
+            sense = 1.0 if out > within else -1.0
+            if rise >= 0.0:
+                before, before_low, before_slope = t, here, slope
+                continue
+            for _ in range(_EDGE_BISECTIONS):
                 middle = 0.5 * (out + within)
-                value, top, _ = pose_interval(u, v, middle, s)
+                value, top, rise = pose_interval(u, v, middle, s)
                 if value < FAR:
-                    low, high, within = min(low, value), max(high, top), middle
+                    low, high = min(low, value), max(high, top)
+                if value < FAR and rise * sense < 0.0:
+                    within = middle
                 else:
                     out = middle
         before, before_low, before_slope = t, here, slope
@@ -385,36 +393,39 @@ def take_out(high: np.ndarray, low: np.ndarray, count: np.ndarray, j: int, i: in
 
 
 @njit(cache=True, nogil=True)
-def in_material(u: float, v: float, z: float, grid: tuple, row: int, high: np.ndarray, low: np.ndarray, count: np.ndarray) -> bool:
+def in_material(
+    u: float, v: float, z: float, grid: tuple, row: int, high: np.ndarray, low: np.ndarray, count: np.ndarray
+) -> bool:
     """Tell whether a point is in material; ``row`` is the grid row below or at v, counted in the band.
 
     Between four columns of one piece each the top is read bilinearly; elsewhere the nearest column decides.
     """
     u0, v0, g, first = grid
     x, y = (u - u0) / g, (v - v0) / g - first
-    i = int(math.floor(x))
+    i = math.floor(x)
     if i < -1 or i >= count.shape[1]:
         return False
     fx, fy = x - i, y - row
-    if 0 <= i < count.shape[1] - 1 and row + 1 < count.shape[0] and row >= 0:
-        if count[row, i] == 1 and count[row, i + 1] == 1 and count[row + 1, i] == 1 and count[row + 1, i + 1] == 1:
-            top = (1.0 - fy) * ((1.0 - fx) * high[0, row, i] + fx * high[0, row, i + 1])
-            top += fy * ((1.0 - fx) * high[0, row + 1, i] + fx * high[0, row + 1, i + 1])
-            base = max(low[0, row, i], low[0, row, i + 1], low[0, row + 1, i], low[0, row + 1, i + 1])
-            if z >= base:
-                return z < top
+    between = 0 <= i < count.shape[1] - 1 and 0 <= row < count.shape[0] - 1
+    if between and count[row, i] == count[row, i + 1] == count[row + 1, i] == count[row + 1, i + 1] == 1:
+        top = (1.0 - fy) * ((1.0 - fx) * high[0, row, i] + fx * high[0, row, i + 1])
+        top += fy * ((1.0 - fx) * high[0, row + 1, i] + fx * high[0, row + 1, i + 1])
+        base = max(low[0, row, i], low[0, row, i + 1], low[0, row + 1, i], low[0, row + 1, i + 1])
+        if z >= base:
+            return z < top
     ni, nj = i + (1 if fx >= 0.5 else 0), row + (1 if fy >= 0.5 else 0)
     if ni < 0 or ni >= count.shape[1] or nj < 0 or nj >= count.shape[0]:
         return False
+    found = False
     for k in range(count[nj, ni]):
-        if low[k, nj, ni] < z < high[k, nj, ni]:
-            return True
-    return False
+        found = found or low[k, nj, ni] < z < high[k, nj, ni]
+    return found
 
 
 @njit(cache=True, nogil=True)
-def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, circle: np.ndarray, grid: tuple, rows: tuple, highest: float, ahead_mm: float,
-                 least: float, high: np.ndarray, low: np.ndarray, count: np.ndarray, hits: np.ndarray) -> None:  # fmt: skip
+def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, circle: np.ndarray, grid: tuple, rows: tuple,
+                 highest: float, ahead_mm: float, least: float, high: np.ndarray, low: np.ndarray, count: np.ndarray,
+                 hits: np.ndarray) -> None:  # fmt: skip
     """Mark the points of a cutter's surface that stand before material, at station k.
 
     Parameters
@@ -442,7 +453,7 @@ def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, circle: np.nda
     gx, gy, gz = ey * az - ez * ay, ez * ax - ex * az, ex * ay - ey * ax
     fg, fa = fx * gx + fy * gy + fz * gz, fx * ax + fy * ay + fz * az
     turns = bx != 0.0 or by != 0.0 or bz != 0.0
-    u0, v0, g, first = grid
+    _, v0, g, first = grid
     sine = math.sqrt(max(0.0, 1.0 - az * az))
     v_low, v_high = v0 + rows[0] * g - 3.0 * ahead_mm, v0 + rows[1] * g + 3.0 * ahead_mm
     angles = hits.shape[1]
@@ -451,7 +462,7 @@ def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, circle: np.nda
         if cz + h * az - radius * sine + min(0.0, 3.0 * ahead_mm * fz) > highest:
             continue
         middle = cy + h * ay
-        if middle + radius < v_low or middle - radius > v_high or radial == 0.0 and axial == 0.0:
+        if middle + radius < v_low or middle - radius > v_high or (radial == 0.0 and axial == 0.0):
             continue
         for m in range(angles):
             c, d = circle[m, 0], circle[m, 1]
@@ -474,7 +485,7 @@ def sample_front(k: int, stations: np.ndarray, rings: np.ndarray, circle: np.nda
             steep = 1.0 - nz * nz
             ahead = ahead_mm * (1.0 + 2.0 * steep * steep)
             v += ahead * fy
-            row = int(math.floor((v - v0) / g))
+            row = math.floor((v - v0) / g)
             if row < rows[0] or row >= rows[1]:
                 continue
             u, z = cx + h * ax + radius * rx + ahead * fx, cz + h * az + radius * rz + ahead * fz
@@ -526,9 +537,9 @@ def band_distance(tip: tuple, axis: tuple, body: np.ndarray, limit: float, grid:
     right = tip[0] + max(body[1] * axis[0], body[2] * axis[0]) + wide - u0
     near = tip[1] + min(body[1] * axis[1], body[2] * axis[1]) - wide - v0
     far = tip[1] + max(body[1] * axis[1], body[2] * axis[1]) + wide - v0
-    i0, i1 = max(0, int(math.floor(left / g)) // tile), min(across - 1, int(math.ceil(right / g)) // tile)
-    j0 = max(0, (int(math.floor(near / g)) - first) // tile)
-    j1 = min(tops.shape[0] - 1, (int(math.ceil(far / g)) - first) // tile)
+    i0, i1 = max(0, math.floor(left / g) // tile), min(across - 1, math.ceil(right / g) // tile)
+    j0 = max(0, (math.floor(near / g) - first) // tile)
+    j1 = min(tops.shape[0] - 1, (math.ceil(far / g) - first) // tile)
     for tj in range(j0, j1 + 1):
         for ti in range(i0, i1 + 1):
             q = tj * across + ti
@@ -698,8 +709,8 @@ def run_band(
         if cuts[k] and highest > -FAR:
             load_segment(k, ends, shapes, shape_of, close_mm, s)
             plan_box(s, highest, box)
-            j0, j1 = max(0, int(math.ceil((box[1] - v0) / g)) - first), min(local - 1, int(math.floor((box[3] - v0) / g)) - first)
-            i0, i1 = max(0, int(math.ceil((box[0] - u0) / g))), min(nx - 1, int(math.floor((box[2] - u0) / g)))
+            j0, j1 = max(0, math.ceil((box[1] - v0) / g) - first), min(local - 1, math.floor((box[3] - v0) / g) - first)
+            i0, i1 = max(0, math.ceil((box[0] - u0) / g)), min(nx - 1, math.floor((box[2] - u0) / g))
             if box[4] < highest:
                 for j in range(j0, j1 + 1):
                     v = v0 + (first + j) * g
@@ -738,8 +749,8 @@ def _row_top(high: np.ndarray, count: np.ndarray, first: int) -> float:
 
 @njit(cache=True, nogil=True)
 def _watch(k: int, ends: np.ndarray, shape_of: np.ndarray, bodies: np.ndarray, of_shape: np.ndarray, only_rapid: np.ndarray,
-           at_rapid: bool, offsets: np.ndarray, step_mm: float, horizon_mm: float, caps: np.ndarray, near: np.ndarray, one: np.ndarray,
-           place: tuple, columns: tuple, found: np.ndarray) -> None:  # fmt: skip
+           at_rapid: bool, offsets: np.ndarray, step_mm: float, horizon_mm: float, caps: np.ndarray, near: np.ndarray,
+           one: np.ndarray, place: tuple, columns: tuple, found: np.ndarray) -> None:  # fmt: skip
     for body in range(bodies.shape[0]):
         if of_shape[body] != shape_of[k] or (only_rapid[body] and not at_rapid):
             near[body] = -FAR

@@ -28,7 +28,8 @@ def specific(h: float, laws: np.ndarray, found: np.ndarray) -> None:
 @njit(cache=True, nogil=True)
 def station_loads(
     first: int, after: int, hits: np.ndarray, frames: np.ndarray, shape_of: np.ndarray, places: np.ndarray, edges: np.ndarray,
-    inner: np.ndarray, outer: np.ndarray, flutes: np.ndarray, tooth_mm: np.ndarray, laws: np.ndarray, least: float, out: np.ndarray,
+    inner: np.ndarray, outer: np.ndarray, flutes: np.ndarray, tooth_mm: np.ndarray, laws: np.ndarray, least: float,
+    out: np.ndarray,
 ) -> None:  # fmt: skip
     """Work out each station's row of ``out`` from the marked points.
 
@@ -114,7 +115,7 @@ def station_loads(
             row[TORQUE_HIGH] += turn_high[m] * teeth / angles
             sums[:] = 0.0
             for tooth in range(teeth):
-                at = (m + int(round(tooth * angles / teeth))) % angles
+                at = (m + round(tooth * angles / teeth)) % angles
                 sums[0] += low[at]
                 sums[1] += high[at]
                 sums[2] += turn_low[at]

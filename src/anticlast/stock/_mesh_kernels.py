@@ -46,10 +46,10 @@ def cross(
             continue
         if up < 0.0:
             b, c = c, b
-        i0 = max(0, int(math.ceil((min(a[0], b[0], c[0]) - u0) / g)))
-        i1 = min(columns - 1, int(math.floor((max(a[0], b[0], c[0]) - u0) / g)))
-        j0 = max(0, int(math.ceil((min(a[1], b[1], c[1]) - v0) / g)))
-        j1 = min(rows - 1, int(math.floor((max(a[1], b[1], c[1]) - v0) / g)))
+        i0 = max(0, math.ceil((min(a[0], b[0], c[0]) - u0) / g))
+        i1 = min(columns - 1, math.floor((max(a[0], b[0], c[0]) - u0) / g))
+        j0 = max(0, math.ceil((min(a[1], b[1], c[1]) - v0) / g))
+        j1 = min(rows - 1, math.floor((max(a[1], b[1], c[1]) - v0) / g))
         for j in range(j0, j1 + 1):
             y = v0 + j * g
             for i in range(i0, i1 + 1):

@@ -69,7 +69,8 @@ class ColumnGrid:
         """Return u and v [mm] of every column's middle, each (rows, columns), turned frame."""
         u = self.u0_mm + self.spacing_mm * np.arange(self.columns)
         v = self.v0_mm + self.spacing_mm * np.arange(self.rows)
-        return tuple(np.meshgrid(u, v))  # type: ignore[return-value]
+        across, along = np.meshgrid(u, v)
+        return across, along
 
     def middles_xy(self) -> tuple[Floats, Floats]:
         """Return x and y [mm] of every column's middle, each (rows, columns), part coordinates."""

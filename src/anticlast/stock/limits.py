@@ -70,6 +70,8 @@ def limits_of(job: Job, one: PassLoad) -> tuple[Limit, ...]:
     cutter, operation = _cutter(job, one.cutter), _operation(job, one.operation)
     material = materials.material(job.stock.material)
     feed = operation.feed_mm_min if operation else math.nan
+    fastest = one.speed_mm_min[1] / 1e3
+    too_fast = 100.0 - 100.0 * material.cutting_speed_m_min.high / max(fastest, 1e-9)
 
     def slower(limit: float, value: float) -> str:
         share = limit / value if value > 0.0 else 1.0
@@ -87,9 +89,9 @@ def limits_of(job: Job, one: PassLoad) -> tuple[Limit, ...]:
             f"cutting with T{cutter.number} takes up to", slower(1e3 * job.machine.spindle.power_kw, one.power_w[1]),
         ),
         Limit(
-            "speed", one.speed_mm_min[1] / 1e3, material.cutting_speed_m_min.high, "m/min", one.speed_line, False,
+            "speed", fastest, material.cutting_speed_m_min.high, "m/min", one.speed_line, False,
             f"the fastest point of T{cutter.number} cuts {material.name} at",
-            f"lower the spindle speed by {100 - 100 * material.cutting_speed_m_min.high / max(one.speed_mm_min[1] / 1e3, 1e-9):.0f} %",
+            f"lower the spindle speed by {too_fast:.0f} %",
         ),
         Limit(
             "chip", one.chip_mm, 2.0 * cutter.radius_mm * material.feed_per_tooth_share.high, "mm", one.chip_line, False,

@@ -42,8 +42,8 @@ def laws_of(job: Job) -> Floats:
 def bending_mm_per_n(cutter: Cutter) -> float:
     """Return how far the tip bends aside under 1 N across it, as a cantilever from the holder face.
 
-    F / (3 E) [l^3 / I_f + (L^3 - l^3) / I_s], with l the flutes' length (at 0.8 of their diameter), L the stickout, I = pi d^4 / 64:
-    the integral of the bending moment of a stepped rod (derived in docs/theory-stock.md).
+    F / (3 E) [l^3 / I_f + (L^3 - l^3) / I_s], with l the flutes' length (at 0.8 of their diameter), L the stickout and
+    I = pi d^4 / 64: the bending moment of a stepped rod, integrated (derived in docs/theory-stock.md).
     """
     fluted, whole = cutter.flute_length_mm, cutter.stickout_mm
     stiff = [math.pi * (2.0 * radius) ** 4 / 64.0 for radius in (FLUTED_SHARE * cutter.radius_mm, cutter.shank_radius_mm)]

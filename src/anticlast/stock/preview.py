@@ -197,10 +197,11 @@ def _known(job: Job, program: ReadProgram, motion: PartMotion) -> Bools:
     """Tell which rows are motion between places that the program states, (m,)."""
     at_start, at_end = known_places(program)
     columns = [SIX.index(letter) for letter in job.machine.letters]
-    moving = motion.fraction > 0.0
+    moving: Bools = np.asarray(motion.fraction > 0.0)
     if len(at_start):
-        moving &= (at_start & at_end)[:, columns].all(axis=1)[np.maximum(motion.motion, 0)]
-    return np.asarray(moving)
+        known: Bools = np.asarray((at_start & at_end)[:, columns].all(axis=1))
+        moving = moving & known[np.maximum(motion.motion, 0)]
+    return moving
 
 
 def _starts(operation: Ints, count: int) -> Ints:

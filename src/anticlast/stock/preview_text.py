@@ -144,7 +144,8 @@ def _range(pair: Pair, scale: float, digits: int) -> str:
 
 def _table(passes: list[PassLoad], k: float, unit: str) -> list[str]:
     head = (
-        f"   pass    depth    width  arc deg  removal {unit}^3/min   speed m/min      force N        power W     bending um  flags"
+        f"   pass    depth    width  arc deg  removal {unit}^3/min   speed m/min"
+        "      force N        power W     bending um  flags"
     )
     shown = passes
     if len(passes) > _SHOWN_PASSES:

@@ -78,7 +78,8 @@ def thickness_map(field: StockField, saddle: Saddle, outline: Outline, bottom_mm
     x0, y0, x1, y1 = outline.bounds
     step = max(max(x1 - x0, y1 - y0) / _MAP_SIDE, field.grid.spacing_mm)
     # Points lie half a step inside, so that none stands on the outline's own edges.
-    x, y = (low + step * (np.arange(max(1, int((high - low) / step))) + 0.5) for low, high in ((x0, x1), (y0, y1)))
+    x = x0 + step * (np.arange(max(1, int((x1 - x0) / step)), dtype=np.float64) + 0.5)
+    y = y0 + step * (np.arange(max(1, int((y1 - y0) / step)), dtype=np.float64) + 0.5)
     px, py = np.meshgrid(x, y)
     xy = np.column_stack((px.ravel(), py.ravel()))
     inside = outline.contains(xy)

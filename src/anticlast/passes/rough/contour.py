@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import shapely
-from shapely.geometry import MultiPolygon, Polygon
+from shapely.geometry import LineString, MultiLineString, MultiPolygon, Polygon
 from shapely.geometry.base import BaseGeometry
 
 from anticlast.errors import NotConverged
@@ -100,8 +100,8 @@ class Grid:
         segments = self._segments(level_mm)
         if not len(segments):
             return []
-        merged = shapely.line_merge(shapely.multilinestrings(shapely.linestrings(segments)))
-        found = []
+        merged = shapely.line_merge(MultiLineString(list(segments)))
+        found: list[BaseGeometry] = []
         for line in shapely.get_parts(merged):
             xy = shapely.get_coordinates(line)
             closed = bool(np.all(xy[0] == xy[-1]))
@@ -110,7 +110,7 @@ class Grid:
             xy = xy[keep] if len(keep) >= 4 else xy
             moved = self._onto(xy, level_mm)
             ends = (moved[:1], moved[:1]) if closed else (xy[:1], xy[-1:])
-            found.append(shapely.linestrings(np.concatenate((ends[0], moved[1:-1], ends[1]))))
+            found.append(LineString(np.concatenate((ends[0], moved[1:-1], ends[1]))))
         return found
 
     def _onto(self, xy: Floats, level_mm: float) -> Floats:

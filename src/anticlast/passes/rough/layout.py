@@ -11,7 +11,7 @@ from functools import lru_cache
 
 import numpy as np
 import shapely
-from shapely.geometry import Polygon
+from shapely.geometry import LineString, Polygon
 from shapely.geometry.base import BaseGeometry
 
 from anticlast.passes.rough import limits
@@ -213,7 +213,7 @@ class _Site:
 
     def room(self, z_mm: float) -> BaseGeometry:
         """Return where the cutter's centre may stand with its tip at z."""
-        room = self.grid.below(z_mm)
+        room = self._whole(self.grid.below(z_mm))
         if self.zone is not None:
             room = shapely.intersection(room, shapely.buffer(self.zone, -self.operation.cutter.radius_mm))
         for radius, low, grid in self.bodies:
@@ -225,8 +225,15 @@ class _Site:
 
     def is_open(self, piece: Piece, standing: BaseGeometry) -> bool:
         """Tell whether a way down starts where the layer above is cleared."""
-        path = shapely.linestrings(piece.xy)
+        path = LineString(piece.xy)
         return bool(shapely.intersection(grown(path, self.clear_radius_mm - 2.0 * _DOUBT_MM), standing).area <= SAME_POINT_MM)
+
+    def _whole(self, room: BaseGeometry) -> BaseGeometry:
+        """Return a region without the islands that a grid makes of narrow valleys between its nodes."""
+        rim = shapely.boundary(self.grid.inner)
+        parts = [part for part in shapely.get_parts(room) if isinstance(part, Polygon)]
+        kept = [part for part in parts if part.area > 9.0 * self.spacing_mm**2 or shapely.intersects(part, rim)]
+        return shapely.union_all(kept) if kept else Polygon()
 
     def closed(self, room: BaseGeometry, rest: BaseGeometry, barred: list[BaseGeometry]) -> Polygon | None:
         """Return a part of the room from which stock can be cut that could not be reached from air, None if none."""

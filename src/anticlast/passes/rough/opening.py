@@ -48,7 +48,7 @@ def opening(
         down = ramp.helix(middle, radius, start, floor_mm, cutter.ramp_angle_rad)
         last = math.atan2(down[-1, 1] - middle[1], down[-1, 0] - middle[0])
         round_ = ramp.circle(middle, radius, last)
-        return Piece(round_, True, number, grown(shapely.polygons(round_), radius_mm), down)
+        return Piece(round_, True, number, grown(Polygon(round_), radius_mm), down)
     line = _longest(room, middle)
     if line is None or line.length < _RAMP_RADII * cutter.radius_mm:
         return None

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import shapely
-from shapely.geometry import MultiPolygon, Polygon
+from shapely.geometry import LineString, MultiPolygon, Polygon
 from shapely.geometry.base import BaseGeometry
 
 from anticlast.errors import NotConverged
@@ -154,7 +154,7 @@ def _widened(bounds: tuple[float, float, float, float], by_mm: float) -> tuple[f
 def _engaged(ring: Floats, stock: BaseGeometry, bite: Bite, number: int) -> Iterator[Piece]:
     """Yield the runs of a closed ring on which the cutter is in the stock, each with a point in air at its ends."""
     xy = shapely.get_coordinates(shapely.segmentize(shapely.linestrings(ring), _SPACING_SHARE * bite.radius_mm))[:-1]
-    depth = bite.radius_mm - shapely.distance(stock, shapely.points(xy))
+    depth = bite.radius_mm - np.asarray(shapely.distance(stock, shapely.points(xy)))
     cuts = depth > 0.0
     if not cuts.any():
         return
@@ -178,6 +178,6 @@ def _runs(cuts: Bools) -> list[tuple[int, int]]:
 
 
 def _piece(xy: Floats, closed: bool, number: int, bite: Bite) -> Piece:
-    line = shapely.simplify(shapely.linestrings(xy), SIMPLER_MM)
+    line = LineString(xy).simplify(SIMPLER_MM)
     xy = shapely.get_coordinates(line)
     return Piece(xy, closed, number, grown(line, bite.radius_mm))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import shapely
-from shapely.geometry import Polygon
+from shapely.geometry import LinearRing, LineString, Point, Polygon
 from shapely.geometry.base import BaseGeometry
 
 from anticlast.passes.rough.peel import SLIVER_MM, grown
@@ -51,7 +51,7 @@ class Walk:
 
     def is_clear(self, xy: Floats) -> bool:
         """Tell whether the cutter can go along a plan path (n, 2) in air."""
-        line = shapely.linestrings(xy)
+        line = LineString(xy)
         if not shapely.covers(self.room, line):
             return False
         return self.stock.is_empty or float(shapely.distance(self.stock, line)) >= self.radius_mm - GRAZE_MM
@@ -64,7 +64,7 @@ class Walk:
         if np.linalg.norm(end - start) <= GRAZE_MM or self.is_clear(np.array([start, end])):
             return np.array([start, end])
         ways = [self._shortened(way) for way in self._around(start, end)]
-        return min(ways, key=lambda way: float(shapely.linestrings(way).length), default=None)
+        return min(ways, key=lambda way: float(LineString(way).length), default=None)
 
     def _around(self, start: Floats, end: Floats) -> list[Floats]:
         """Return ways along the rims of the air that both points lie in."""
@@ -94,10 +94,10 @@ class Walk:
         return path[kept]
 
 
-def _along_ring(ring: BaseGeometry, start: Floats, end: Floats) -> Floats:
+def _along_ring(ring: LinearRing, start: Floats, end: Floats) -> Floats:
     """Return the shorter way along a ring between the places on it nearest to two points, the points included."""
-    first = float(shapely.line_locate_point(ring, shapely.points(start)))
-    last = float(shapely.line_locate_point(ring, shapely.points(end)))
+    first = float(shapely.line_locate_point(ring, Point(start)))
+    last = float(shapely.line_locate_point(ring, Point(end)))
     xy = shapely.get_coordinates(ring)
     at = np.concatenate(([0.0], np.cumsum(np.linalg.norm(np.diff(xy, axis=0), axis=1))))
     length = at[-1]
