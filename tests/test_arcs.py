@@ -133,7 +133,11 @@ def least_distance(a: float, x0: float, x1: float) -> float:
         return float(np.abs(np.linalg.norm(places - centre, axis=1) - np.linalg.norm(p - centre)).max())
 
     rough = 0.5 / a
-    return float(minimize_scalar(worst, bounds=(0.5 * rough, 6.0 * rough), method="bounded", options={"xatol": 1e-6}).fun)
+    return float(
+        minimize_scalar(
+            worst, bounds=(0.5 * rough, 6.0 * rough), method="bounded", options={"xatol": 1e-6}
+        ).fun
+    )
 
 
 # ------------------------------------------------------------------------------------------ from job to proof
@@ -142,7 +146,11 @@ CASES: dict[str, dict[str, object]] = {
     "along X": {"direction": 0.0},
     "along Y": {"direction": 90.0, "pattern": "graded"},
     "aslant": {"direction": 30.0},
-    "fixed axis on a table": {"machine": "trunnion-ac", "tilt": 'axis = "fixed"\nfixed = [0.1, 0.15, 1.0]', "outline": HOLED},
+    "fixed axis on a table": {
+        "machine": "trunnion-ac",
+        "tilt": 'axis = "fixed"\nfixed = [0.1, 0.15, 1.0]',
+        "outline": HOLED,
+    },
 }
 
 
@@ -161,7 +169,9 @@ def test_fewer_blocks_and_the_same_surface(name: str, tmp_path: Path) -> None:
     assert not np.isin(straight.program.motions.shape, (Shape.ARC_CW, Shape.ARC_CCW)).any()
     operation = bent.job.operations[0]
     # Straight moves may use up the share of the scallop that is set aside for them, and arcs leave some of it.
-    assert bent.proof.scallop_max_mm == pytest.approx(straight.proof.scallop_max_mm, abs=0.03 * operation.scallop_mm)
+    assert bent.proof.scallop_max_mm == pytest.approx(
+        straight.proof.scallop_max_mm, abs=0.03 * operation.scallop_mm
+    )
     assert bent.proof.scallop_max_mm <= operation.scallop_mm
     assert bent.times.seconds.sum() <= 1.02 * straight.times.seconds.sum()
 
@@ -205,7 +215,9 @@ def test_every_arc_is_legal(inch: bool, tmp_path: Path) -> None:
             assert {*offset.values()} == {letter for letter in words if letter in "IJK"}
             assert any(letter in words for letter in pair)
             start = math.hypot(*(words[offset[letter]] for letter in pair))
-            end = math.hypot(*(words.get(letter, at[letter]) - at[letter] - words[offset[letter]] for letter in pair))
+            end = math.hypot(
+                *(words.get(letter, at[letter]) - at[letter] - words[offset[letter]] for letter in pair)
+            )
             worst = max(worst, abs(start - end))
         else:
             assert not {"I", "J", "K"} & set(words)

@@ -565,7 +565,7 @@ def test_interpreted_kernels_agree(make_job):
     stretch = stretch_along(job, 0.5, np.linspace(-3, 3, 7))
     choices = kin.rotary(stretch.axis)
     args = (
-        kin.chain, stretch.axis, choices.words, choices.free, np.zeros((7, 2)), kin.low, kin.high, np.full(2, 3600.0),
+        kin.chain, stretch.axis, choices.words, np.zeros((7, 2)), kin.low, kin.high, np.full(2, 3600.0),
         np.zeros(2), np.array([-1, 0]), np.array([3, 1]), np.full(7, 1e-3), 1e-4,
         np.array([1, 0, 0, 0, 1, 0, 0], dtype=np.uint8), np.where(np.arange(7) == 2, 1e-6, np.inf),
     )  # fmt: skip

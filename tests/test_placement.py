@@ -114,7 +114,9 @@ def test_the_place_is_the_best_that_linear_programming_finds(make_job, machine, 
 def test_a_part_beyond_the_travel_is_brought_inside_and_cut(tmp_path) -> None:
     """At X 85 the program is withheld by an axis limit; at the proposed place the same job is released."""
     path = tmp_path / "job.toml"
-    path.write_text(job_text(**{**SMALL, "machine": "trunnion-ac", "part_origin": [85.0, 0.0, 30.0]}), encoding="utf-8")
+    path.write_text(
+        job_text(**{**SMALL, "machine": "trunnion-ac", "part_origin": [85.0, 0.0, 30.0]}), encoding="utf-8"
+    )
     job = pipeline.load_job(path)
     found = pipeline.survey(job).placement
     assert not found.now.fits
@@ -122,19 +124,30 @@ def test_a_part_beyond_the_travel_is_brought_inside_and_cut(tmp_path) -> None:
     assert found.best.part_origin_mm[2] == 30.0
     withheld = pipeline.make(job, tmp_path / "out", grid_mm=0.2)
     assert {finding.check for finding in withheld.findings if not finding.ok} & {"travel X", "travel Y"}
-    moved = turned_job(replace(job, part_origin_mm=found.best.part_origin_mm), math.radians(found.best.turn_deg))
+    moved = turned_job(
+        replace(job, part_origin_mm=found.best.part_origin_mm), math.radians(found.best.turn_deg)
+    )
     made = pipeline.make(moved, tmp_path / "out", grid_mm=0.2)
     assert made.released, [finding.message for finding in made.findings if not finding.ok]
 
 
 def test_the_program_moves_as_much_less_as_was_foretold(make_job) -> None:
     """Travel of all axes in units of their feeds over the cutting blocks, before and after."""
-    job = make_job(**{**SMALL, "machine": "trunnion-bc", "part_origin": [30.0, 20.0, 30.0], "tilt": "lead = 12.0\nlean = 8.0"})
+    job = make_job(
+        **{
+            **SMALL,
+            "machine": "trunnion-bc",
+            "part_origin": [30.0, 20.0, 30.0],
+            "tilt": "lead = 12.0\nlean = 8.0",
+        }
+    )
     found = placement(job)
     assert found.moves
     motion = []
     for origin in (found.now.part_origin_mm, found.best.part_origin_mm):
-        _, (axes,) = pipeline.plan(replace(turned_job(job, math.radians(found.best.turn_deg)), part_origin_mm=origin))
+        _, (axes,) = pipeline.plan(
+            replace(turned_job(job, math.radians(found.best.turn_deg)), part_origin_mm=origin)
+        )
         steps = np.abs(np.diff(axes.words, axis=0, prepend=axes.start[None, :]))[axes.purpose == Purpose.CUT]
         motion.append(float((steps / [axis.feed for axis in job.machine.axes]).sum()))
     assert found.best.turn_deg == 0.0
@@ -200,7 +213,9 @@ def test_turn_of_a_job_file_by_hand(tmp_path) -> None:
 
 
 def test_turn_does_not_go_with_a_measured_blank(tmp_path) -> None:
-    text = job_text(**{**SMALL, "stock_extra": 'mesh = "blank.stl"'}).replace("clearance = 5.0", "clearance = 5.0\nturn = 5.0")
+    text = job_text(**{**SMALL, "stock_extra": 'mesh = "blank.stl"'}).replace(
+        "clearance = 5.0", "clearance = 5.0\nturn = 5.0"
+    )
     (tmp_path / "job.toml").write_text(text, encoding="utf-8")
     with pytest.raises(BadInput, match="measure the blank as it is set"):
         pipeline.load_job(tmp_path / "job.toml")
@@ -210,7 +225,10 @@ class TestCommand:
     @pytest.fixture
     def job_file(self, tmp_path):
         path = tmp_path / "job.toml"
-        path.write_text(job_text(**{**SMALL, "machine": "trunnion-ac", "part_origin": [85.0, 0.0, 30.0]}), encoding="utf-8")
+        path.write_text(
+            job_text(**{**SMALL, "machine": "trunnion-ac", "part_origin": [85.0, 0.0, 30.0]}),
+            encoding="utf-8",
+        )
         return path
 
     def test_lines(self, job_file) -> None:
@@ -251,7 +269,14 @@ class TestCommand:
 
 def test_an_empty_choice_of_turns_still_looks_at_the_one_it_has(make_job) -> None:
     job = make_job(**{**SMALL, "machine": "rotary-b"})
-    found = propose(job.machine, job.part_origin_mm, [_sweep(job, job.operations[0])], blank_corners(job), 5.0, turns_deg=[])
+    found = propose(
+        job.machine,
+        job.part_origin_mm,
+        [_sweep(job, job.operations[0])],
+        blank_corners(job),
+        5.0,
+        turns_deg=[],
+    )
     assert found.best.turn_deg == 0.0
 
 
@@ -272,7 +297,9 @@ class TestStandingStill:
     @pytest.mark.parametrize("machine", ["trunnion-ac", "rotary-a", "head-b-table-c"])
     def test_it_cuts_the_same_surface_with_the_axes_standing(self, machine, tmp_path) -> None:
         """Per-minute feed, no rotary motion in the cut, and no slower than the motion that follows the surface."""
-        (tmp_path / "job.toml").write_text(job_text(**{**SMALL, "machine": machine, "tilt": "lead = 15.0"}), encoding="utf-8")
+        (tmp_path / "job.toml").write_text(
+            job_text(**{**SMALL, "machine": machine, "tilt": "lead = 15.0"}), encoding="utf-8"
+        )
         job = pipeline.load_job(tmp_path / "job.toml")
         found = pipeline.survey(job).steady
         following = pipeline.make(job, tmp_path / "a", grid_mm=0.2)
@@ -282,7 +309,8 @@ class TestStandingStill:
         assert standing.released, [finding.message for finding in standing.findings if not finding.ok]
         assert not standing.program.motions.inverse.any()
         asked = [
-            made.axis_paths[0].minutes[made.axis_paths[0].purpose == Purpose.CUT].sum() for made in (standing, following)
+            made.axis_paths[0].minutes[made.axis_paths[0].purpose == Purpose.CUT].sum()
+            for made in (standing, following)
         ]
         assert asked[0] <= 1.001 * asked[1]
 

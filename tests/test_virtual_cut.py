@@ -74,7 +74,7 @@ def job(
     part = Part(saddle.a_per_mm, saddle.b_per_mm, saddle.rotate_rad, outline)
     stock = Stock("tooling board", top, -30.0, outline, allowance)
     return SimpleNamespace(
-        part=part, stock=stock, cutters=(cutter,), operations=(SimpleNamespace(scallop_mm=limit),)
+        part=part, stock=stock, cutters=(cutter,), operations=(SimpleNamespace(does="finish", scallop_mm=limit),)
     )
 
 

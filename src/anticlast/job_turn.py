@@ -28,7 +28,9 @@ def turned_job(job: Job, turn_rad: float) -> Job:
     return replace(
         job,
         part=replace(
-            job.part, rotate_rad=job.part.rotate_rad + turn_rad, outline=_turned_outline(job.part.outline, turn_rad)
+            job.part,
+            rotate_rad=job.part.rotate_rad + turn_rad,
+            outline=_turned_outline(job.part.outline, turn_rad),
         ),
         stock=replace(job.stock, outline=_turned_outline(job.stock.outline, turn_rad)),
         operations=tuple(_turned_operation(operation, turn_rad) for operation in job.operations),

@@ -167,8 +167,14 @@ def job_for(job: Job, operation: Operation, case: Case) -> Job:
 
     The blank is taken to be within the allowance that earlier operations leave, as it is when the operation starts.
     """
-    before = [other.allowance_mm for other in job.operations if other.index < operation.index]
-    stock = job.stock if not before else replace(job.stock, allowance_mm=before[-1])
+    before = [
+        other.allowance_mm
+        for other in job.operations
+        if other.index < operation.index and other.does != "outline"
+    ]
+    stock = job.stock
+    if before:
+        stock = replace(stock, allowance_mm=before[-1], mesh=None, heights=None)
     return replace(job, operations=(operation_for(job, operation, case),), stock=stock)
 
 

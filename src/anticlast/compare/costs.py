@@ -31,6 +31,8 @@ _FREE = 1e6
 # but for what rounding its words to posted digits moves it (mm).
 _SAME_WORD = 1e-6
 _SAME_PLACE_MM = 2e-3
+# The axis square to the planes of G17, G18 and G19.
+_AXIAL = np.array([2, 1, 0])
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,7 +68,8 @@ class Costs:
     scallop_mm : float
         Highest scallop predicted.
     time_s, feed_only_s, cut_only_s : float
-        Estimated from the text that was read back; as F alone asks for; cut length over the feed, which nothing beats.
+        Estimated from the text that was read back, waits for cutter and spindle included; as F alone asks for; cut length over
+        the feed, which nothing beats.
     least_speed_m_min : float
         Smallest cutting speed at a contact on the finished surface.
     rotary_travel_deg : dict
@@ -90,7 +93,7 @@ class Costs:
 
 def costs_of(job: Job, path: CutterPath, axes: AxisPath, program: ReadProgram) -> Costs:
     """Return the costs of a job's only operation, from its plan and from the text that was read back."""
-    times = estimate(program.motions, job.machine)
+    times = estimate(program.motions, job.machine, program.events)
     travel = np.abs(program.motions.end - program.motions.start).sum(axis=0)
     return Costs(
         passes=path.passes,
@@ -98,7 +101,7 @@ def costs_of(job: Job, path: CutterPath, axes: AxisPath, program: ReadProgram) -
         blocks=program.blocks,
         cut_length_mm=path.cut_length_mm,
         scallop_mm=path.scallop_predicted_mm,
-        time_s=float(times.seconds.sum()),
+        time_s=times.total_s,
         feed_only_s=float(times.feed_only_s.sum()),
         cut_only_s=60.0 * path.cut_length_mm / path.operation.feed_mm_min,
         least_speed_m_min=least_speed_m_min(path),
@@ -195,18 +198,42 @@ def asked_seconds(job: Job, path: CutterPath, axes: AxisPath, motions: Motions) 
             point = stretch.tip_mm + height * stretch.axis
             planned, minutes = _run_length(point), np.cumsum(row_minutes(stretch, point))
             row = _row_at(point, moved[0])
-        along = planned[row] + _run_length(moved)
-        asked[first + run.start : first + run.stop] = 60.0 * np.diff(np.interp(along, planned, minutes))
+        rows = slice(first + run.start, first + run.stop)
+        along = planned[row] + _travelled(moved, motions, rows)
+        last = _row_at(point, moved[-1], np.abs(planned - along[-1]))
+        if last is None or last < row:
+            return None
+        if along[-1] > along[0]:
+            along = planned[row] + (along - along[0]) * (
+                (planned[last] - planned[row]) / (along[-1] - along[0])
+            )
+        asked[rows] = 60.0 * np.diff(np.interp(along, planned, minutes))
         # The cutter may be drawn off within a stretch, for an axis to turn back; what follows starts further on.
-        done = int(np.searchsorted(planned, along[-1] - _SAME_PLACE_MM))
-        point, planned, minutes = point[done:], planned[done:], minutes[done:]
+        point, planned, minutes = point[last:], planned[last:], minutes[last:]
     return asked
 
 
-def _row_at(point: Floats, start: Floats) -> int | None:
-    """Return the first row that lies at a place, None if none does."""
-    rows = np.flatnonzero(np.linalg.norm(point - start, axis=1) <= _SAME_PLACE_MM)
-    return int(rows[0]) if rows.size else None
+def _row_at(point: Floats, place: Floats, off: Floats | None = None) -> int | None:
+    """Return the row that lies at a place, None if none does; of several the first, or the one where ``off`` is least."""
+    rows = np.flatnonzero(np.linalg.norm(point - place, axis=1) <= _SAME_PLACE_MM)
+    if not rows.size:
+        return None
+    return int(rows[0]) if off is None else int(rows[np.argmin(off[rows])])
+
+
+def _travelled(moved: Floats, motions: Motions, rows: slice) -> Floats:
+    """Return how far the reference point (n + 1, 3) has gone after each motion [mm]: straight, or round an arc."""
+    step = np.linalg.norm(np.diff(moved, axis=0), axis=1)
+    turns = motions.turns[rows]
+    arcs = np.flatnonzero(turns > 0.0)
+    if arcs.size:
+        # Arcs are posted only where no rotary axis moves: the reference point goes as X Y Z do.
+        axial = _AXIAL[motions.plane[rows][arcs].astype(np.int64) - 17]
+        spoke = motions.start[rows][arcs, :3] - motions.centre[rows][arcs]
+        climb = (motions.end[rows][arcs, :3] - motions.start[rows][arcs, :3])[np.arange(arcs.size), axial]
+        spoke[np.arange(arcs.size), axial] = 0.0
+        step[arcs] = np.hypot(np.linalg.norm(spoke, axis=1) * turns[arcs], climb)
+    return np.concatenate(([0.0], np.cumsum(step)))
 
 
 def _runs(axes: AxisPath) -> list[slice]:

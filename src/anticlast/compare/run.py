@@ -19,6 +19,8 @@ if TYPE_CHECKING:
 
 # Clearances above this need not be told apart here (mm).
 _NEAR_MM = 1.0
+# Findings on loads, by the start of their names; a limit that the job sets makes them more than a warning.
+_LOADS = ("force", "bending")
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,7 +50,7 @@ def try_case(setup: Setup, case: Case) -> Outcome:
     """Plan, post, read back, check and time one case.
 
     The full proof is left to the best cases; what is checked here are the predicted scallop, the language, the axis
-    limits, feeds and spindle, and that flutes, shank and holder stay clear.
+    limits, feeds and spindle, that flutes, shank and holder stay clear, and the load if the job limits it.
     """
     from anticlast import pipeline
     from anticlast.compare.cases import job_for
@@ -68,9 +70,9 @@ def try_case(setup: Setup, case: Case) -> Outcome:
     with tempfile.TemporaryDirectory(prefix="anticlast-") as folder:
         temporary, _ = pipeline.post(job, (axes,), Path(folder) / f"{job.slug}.ngc")
         program = pipeline.read_back(job, temporary)
-    for finding in quick_findings(job, program, path.scallop_predicted_mm):
-        if not finding.ok and not finding.warning:
-            return Outcome(case, None, finding.check, finding.message)
+        for finding in quick_findings(job, program, path.scallop_predicted_mm):
+            if not finding.ok and not finding.warning:
+                return Outcome(case, None, finding.check, finding.message)
     return Outcome(case, costs_of(job, path, axes, program))
 
 
@@ -79,7 +81,7 @@ def _without_number(message: str, index: int) -> str:
 
 
 def quick_findings(job: Job, program: ReadProgram, scallop_mm: float) -> list[Finding]:
-    """Return the findings on a program that need no virtual cut."""
+    """Return the findings on a program, whose text still stands, that need no virtual cut."""
     from anticlast.proof import checks, collisions
     from anticlast.proof.patches import finished_patches
     from anticlast.proof.verdict import moving_pieces
@@ -102,6 +104,10 @@ def quick_findings(job: Job, program: ReadProgram, scallop_mm: float) -> list[Fi
     )
     holder = collisions.least_clearance(part, motion, moving, cutter, rigid, _NEAR_MM)
     found.append(checks.check_holder(holder, motion))
+    if cutter.max_force_n is not None or cutter.max_deflection_mm is not None:
+        from anticlast.stock.preview import stock_preview
+
+        found += [one for one in stock_preview(job, program, motion).findings if one.check.startswith(_LOADS)]
     return found
 
 

@@ -7,6 +7,7 @@ from dataclasses import replace
 
 from anticlast.compare.cases import Case, operation_for, own_case
 from anticlast.records import Job, Operation
+from anticlast.report.numbers import Units
 
 
 def settings_of(job: Job, operation: Operation, case: Case) -> tuple[str, ...]:
@@ -24,7 +25,7 @@ def settings_of(job: Job, operation: Operation, case: Case) -> tuple[str, ...]:
         ("lean", f"{math.degrees(new.lean_rad):.4g}", new.lean_rad != operation.lean_rad),
         ("axis", _axis_text(new.fixed_axis), new.fixed_axis != operation.fixed_axis),
         ("way", f'"{case.way}"', new.way != operation.way),
-        ("scallop", f"{case.scallop_mm * scale:.4g}", operation.scallop_mm is None),
+        ("scallop", f"{case.scallop_mm * scale:.4g} instead of the stepover", operation.scallop_mm is None),
         ("spindle", f"{new.spindle_rpm:.0f}", new.spindle_rpm != operation.spindle_rpm),
         ("feed", f"{new.feed_mm_min * scale:.4g}", new.feed_mm_min != operation.feed_mm_min),
     ]
@@ -37,10 +38,11 @@ def _axis_text(axis: tuple[float, float, float] | None) -> str:
 
 def notes_of(job: Job, operation: Operation, scallop_mm: float) -> tuple[str, ...]:
     """Say what was taken for granted."""
+    units = Units(job.units == "inch")
     notes = []
     if operation.scallop_mm is None:
         notes.append(
-            f"the job gives a stepover; cases keep to the most that it leaves, {1e3 * scallop_mm:.3g} µm"
+            f"the job gives a stepover; cases keep to the most that it leaves, {units.small(scallop_mm)}"
         )
     for cutter in job.cutters:
         given = [
@@ -53,6 +55,6 @@ def notes_of(job: Job, operation: Operation, scallop_mm: float) -> tuple[str, ..
             new = operation_for(job, operation, replace(case, cutter=cutter.number))
             notes.append(
                 f"T{cutter.number} has no finishing operation of its own: same speed at the full diameter and same feed per"
-                f" tooth as T{operation.cutter.number}, {new.spindle_rpm:.0f} rev/min, {new.feed_mm_min:.0f} mm/min"
+                f" tooth as T{operation.cutter.number}, {new.spindle_rpm:.0f} rev/min, {units.feed(new.feed_mm_min)}"
             )
     return tuple(notes)

@@ -98,7 +98,12 @@ def _runs(v0: np.ndarray, v1: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
 
 @numba.njit(cache=True, nogil=True)
 def _joined(
-    first: np.ndarray, way: np.ndarray, piece: np.ndarray, seconds: np.ndarray, free: np.ndarray, jerk: np.ndarray
+    first: np.ndarray,
+    way: np.ndarray,
+    piece: np.ndarray,
+    seconds: np.ndarray,
+    free: np.ndarray,
+    jerk: np.ndarray,
 ) -> tuple[np.ndarray, np.ndarray]:
     """Join runs up (or down) with an even run between them that is shorter than jerk takes to build the acceleration."""
     out, ways = np.zeros(first.size, np.int64), np.zeros(way.size, np.int64)
@@ -157,7 +162,13 @@ def humps(
 
 @numba.njit(cache=True, nogil=True)
 def _measure(
-    hump: np.ndarray, piece: np.ndarray, v0: np.ndarray, v1: np.ndarray, seconds: np.ndarray, free: np.ndarray, jerk: np.ndarray
+    hump: np.ndarray,
+    piece: np.ndarray,
+    v0: np.ndarray,
+    v1: np.ndarray,
+    seconds: np.ndarray,
+    free: np.ndarray,
+    jerk: np.ndarray,
 ) -> None:
     """Fill in a hump's row from column 4 on, given its lines."""
     start, level, fall, after = int(hump[0]), int(hump[1]), int(hump[2]), int(hump[3])

@@ -370,10 +370,8 @@ def _stray(
 @numba.njit(cache=True, nogil=True)
 def _turn_into(
     found: np.ndarray,
-    free: np.ndarray,
     low: np.ndarray,
     turns: np.ndarray,
-    turns_before: np.ndarray,
     old: np.ndarray,
     hop: bool,
     slack_deg: float,
@@ -381,15 +379,11 @@ def _turn_into(
 ) -> bool:
     """Set ``turn`` (m,) from the words ``old`` to a state's words; True if an axis would have to jump in the cut.
 
-    A free word stays. An axis without limits takes the short way. With the cutter off the part (``hop``) any turn will do.
+    An axis without limits takes the short way. With the cutter off the part (``hop``) any turn will do.
     """
     blocked = False
     for j in range(turn.size):
-        if free[j] == 1:
-            turn[j] = 0.0
-            if turns_before[j] != turns[j]:
-                blocked = True
-        elif low[j] == -math.inf:
+        if low[j] == -math.inf:
             turn[j] = _fold(found[j] - old[j])
         else:
             turn[j] = found[j] + 360.0 * turns[j] - old[j]
@@ -419,7 +413,6 @@ def choose_branches(
     chain: np.ndarray,
     axis: np.ndarray,
     found: np.ndarray,
-    free: np.ndarray,
     outside: np.ndarray,
     low: np.ndarray,
     high: np.ndarray,
@@ -491,10 +484,7 @@ def choose_branches(
                 if total >= best:
                     continue
                 old = word[before] if i > 0 else start
-                lane_before = before % lanes if i > 0 else lane
-                blocked = _turn_into(
-                    found[i, branch], free[i, branch], low, turns[lane], turns[lane_before], old, off, slack_deg, turn
-                )
+                blocked = _turn_into(found[i, branch], low, turns[lane], old, off, slack_deg, turn)
                 total += _turn_cost(old, turn, low, high, rate, slack_deg)
                 if total >= best:
                     continue
@@ -517,11 +507,9 @@ def choose_branches(
                     word_split[s, j] = word_new[s, j]
                 for other in range(states):
                     total = cost_new[other] + pause[i] + outside[i, branch]
-                    if total >= cost_split[s] or _turn_into(
-                        found[i, branch], free[i, branch], low, turns[lane], turns[other % lanes], word_new[other], True,
-                        slack_deg, turn,
-                    ):  # fmt: skip
+                    if total >= cost_split[s]:
                         continue
+                    _turn_into(found[i, branch], low, turns[lane], word_new[other], True, slack_deg, turn)
                     total += _turn_cost(word_new[other], turn, low, high, rate, slack_deg)
                     if total < cost_split[s]:
                         cost_split[s] = total
@@ -538,7 +526,7 @@ def choose_branches(
         picked[i, 1] = state
         picked[i, 0] = apart[i, state]
         state = back[i, picked[i, 0]]
-    return _unwrap(chain, axis, found, free, low, start, turns, picked, cross_rad, slack_deg, hop)
+    return _unwrap(chain, axis, found, low, start, turns, picked, cross_rad, slack_deg, hop)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -546,7 +534,6 @@ def _unwrap(
     chain: np.ndarray,
     axis: np.ndarray,
     found: np.ndarray,
-    free: np.ndarray,
     low: np.ndarray,
     start: np.ndarray,
     turns: np.ndarray,
@@ -566,10 +553,7 @@ def _unwrap(
         branch, lane = picked[i, 0] // lanes, picked[i, 0] % lanes
         off = i == 0 or hop[i] == 1
         old = leave[i - 1] if i > 0 else start
-        lane_before = picked[i - 1, 1] % lanes if i > 0 else lane
-        blocked = _turn_into(
-            found[i, branch], free[i, branch], low, turns[lane], turns[lane_before], old, off, slack_deg, turn
-        )
+        blocked = _turn_into(found[i, branch], low, turns[lane], old, off, slack_deg, turn)
         if not off and picked[i - 1, 1] // lanes != branch:
             blocked = blocked or _stray(chain, axis[i - 1], axis[i], old, turn, work) > cross_rad[i]
         forced[i] = 1 if blocked and not off else 0
@@ -579,7 +563,7 @@ def _unwrap(
         if picked[i, 1] != picked[i, 0]:
             split[i] = 1
             branch, lane = picked[i, 1] // lanes, picked[i, 1] % lanes
-            _turn_into(found[i, branch], free[i, branch], low, turns[lane], turns[lane], arrive[i], True, slack_deg, turn)
+            _turn_into(found[i, branch], low, turns[lane], arrive[i], True, slack_deg, turn)
             for j in range(m):
                 leave[i, j] = arrive[i, j] + turn[j]
     return arrive, leave, split, forced

@@ -64,7 +64,9 @@ def _chord(
 
 
 @numba.njit(cache=True, nogil=True)
-def _aside(unit: np.ndarray, i: int, scale: np.ndarray, lin: np.ndarray, dev_lin: float, dev_rot: float) -> float:
+def _aside(
+    unit: np.ndarray, i: int, scale: np.ndarray, lin: np.ndarray, dev_lin: float, dev_rot: float
+) -> float:
     """How far the path may leave corner i along its bisector, in scaled length, until X Y Z or a rotary axis is off by d."""
     norm, straight, part = 0.0, 0.0, 0.0
     for j in range(scale.size):
@@ -219,7 +221,9 @@ def bends(
             if tangent > _POINT_SHARE * min(length[i - 1], length[i]):
                 zone[i] = tangent
                 for j in range(k):
-                    curve[i, j] = (unit[i, j] - unit[i - 1, j]) * secant / (2.0 * math.sin(0.5 * angle) * aside)
+                    curve[i, j] = (
+                        (unit[i, j] - unit[i - 1, j]) * secant / (2.0 * math.sin(0.5 * angle) * aside)
+                    )
             continue
         kind[i], zone[i] = SMOOTH, math.inf
         nb, na = math.sqrt((behind * behind).sum()), math.sqrt((before * before).sum())

@@ -36,7 +36,7 @@ def _bent(
     if size <= 0.25 * ramp:
         return 1, vertex, free
     if most * cap * cap > _SLIGHT * accel:
-        return min(_PIECES, int(math.ceil(4.0 * size / ramp))), vertex, free
+        return min(_PIECES, math.ceil(4.0 * size / ramp)), vertex, free
     for j in range(unit.shape[1]):
         if unit[i, j] != 0.0:
             left = min(left, (accel - abs(curve[vertex, j]) * cap * cap) / abs(unit[i, j]))
@@ -211,7 +211,11 @@ def profile(
         v = min(cap[block[i]], math.sqrt(0.5 * (x[i] + x[i + 1]) + free[i] * size[i]))
         v = max(v, max(v0, v1))
         ramps = (2.0 * v * v - x[i] - x[i + 1]) / (2.0 * free[i])
-        parts = ((v0, v, (v - v0) / free[i]), (v, v, max(0.0, size[i] - ramps) / v), (v, v1, (v - v1) / free[i]))
+        parts = (
+            (v0, v, (v - v0) / free[i]),
+            (v, v, max(0.0, size[i] - ramps) / v),
+            (v, v1, (v - v1) / free[i]),
+        )
         for a, b, spent in parts:
             if spent > _INSTANT:
                 piece[n], low[n], high[n], seconds[n] = i, a, b, spent

@@ -128,16 +128,18 @@ def choose_all(wishes: Sequence[Wish], start_deg: Floats) -> tuple[Chosen, ...]:
     heads = np.cumsum([0, *length[:-1]])
     hop = np.zeros(sum(length), dtype=np.uint8)
     hop[heads] = 1
-    settled = [_settle_start(wish.kinematics.rotary(wish.axis)) for wish in wishes]
-    outside = [_linear_cost(w.kinematics, *found, w.tip_mm) for w, found in zip(wishes, settled, strict=True)]
+    found = _settled(
+        [wish.kinematics.rotary(wish.axis) for wish in wishes], np.asarray(start_deg, dtype=np.float64)
+    )
+    rows = [slice(head, head + n) for head, n in zip(heads, length, strict=True)]
+    outside = [_linear_cost(w.kinematics, found[at], w.tip_mm) for w, at in zip(wishes, rows, strict=True)]
     pauses = [np.full(n, np.inf) if w.pause is None else w.pause for w, n in zip(wishes, length, strict=True)]
     low, high = kinematics.low, kinematics.high
     axis = np.ascontiguousarray(np.concatenate([wish.axis for wish in wishes]))
     arrive, leave, split, forced = _kernels.choose_branches(
         kinematics.chain,
         axis,
-        np.concatenate([found for found, _ in settled]),
-        np.concatenate([free for _, free in settled]),
+        found,
         np.concatenate(outside),
         low,
         high,
@@ -150,7 +152,6 @@ def choose_all(wishes: Sequence[Wish], start_deg: Floats) -> tuple[Chosen, ...]:
         np.concatenate(pauses),
     )
     _require_no_jump(axis, forced)
-    rows = [slice(head, head + n) for head, n in zip(heads, length, strict=True)]
     return tuple(_chosen(wishes[0].kinematics, arrive[at], leave[at], split[at]) for at in rows)
 
 
@@ -199,27 +200,36 @@ def _turns(low: Floats, high: Floats) -> tuple[Floats, Floats]:
     return first.astype(np.int64), (last - first + 1.0).astype(np.int64)
 
 
-def _settle_start(choices: RotaryChoices) -> tuple[Floats, Bytes]:
-    """Give a word that is free from the first row on the value it has where it first is decided.
+def _settled(choices: Sequence[RotaryChoices], start_deg: Floats) -> Floats:
+    """Words (n, branches, m) of all stretches, each free word set to a value of its own branch.
 
-    The stretch then starts with the word it will need, and does not turn while the cutter is down. A word that is free on
-    every row stays where it was.
+    Rows that are free from the start of a stretch take the first value that is decided, so that the word does not turn while
+    the cutter is down; later ones keep the value of the row before, over whole stretches too, and before any is decided the
+    word the program starts with.
     """
-    found, free = choices.words.copy(), choices.free.copy()
+    found = np.concatenate([choice.words for choice in choices])
+    decided = np.concatenate([choice.free for choice in choices]) == 0
+    if decided.all():
+        return found
+    count = np.arange(len(found))
+    heads = np.cumsum([0, *(len(choice.words) for choice in choices)])
     for branch in range(found.shape[1]):
         for j in range(found.shape[2]):
-            decided = np.flatnonzero(free[:, branch, j] == 0)
-            if decided.size and decided[0] > 0:
-                found[: decided[0], branch, j] = found[decided[0], branch, j]
-                free[: decided[0], branch, j] = 0
-    return found, free
+            column, known = found[:, branch, j], decided[:, branch, j].copy()
+            for head, end in zip(heads[:-1], heads[1:], strict=True):
+                first = np.flatnonzero(known[head:end])
+                if first.size:
+                    column[head : head + first[0]] = column[head + first[0]]
+                    known[head : head + first[0]] = True
+            last = np.maximum.accumulate(np.where(known, count, -1))
+            column[:] = np.where(last >= 0, column[last], start_deg[j])
+    return found
 
 
-def _linear_cost(kinematics: Kinematics, found: Floats, free: Bytes, tip_mm: Floats | None) -> Floats:
+def _linear_cost(kinematics: Kinematics, found: Floats, tip_mm: Floats | None) -> Floats:
     """Cost (n, branches) of words that put the spindle gauge point outside X Y Z limits; whole turns do not matter.
 
-    In the unit of the kernel: minutes of travel at the fastest feed, a thousandfold, and ten minutes. A row whose words are
-    free has none, for its X Y Z are decided by the rows around it.
+    In the unit of the kernel: minutes of travel at the fastest feed, a thousandfold, and ten minutes.
     """
     count, branches = found.shape[:2]
     cost = np.zeros((count, branches))
@@ -230,8 +240,7 @@ def _linear_cost(kinematics: Kinematics, found: Floats, free: Bytes, tip_mm: Flo
     for branch in range(branches):
         gauge = kinematics.gauge_point(kinematics.place(tip_mm, found[:, branch]))
         past = np.maximum(np.maximum(low - gauge, gauge - high) - LIMIT_MM, 0.0)
-        toll = 10.0 * (past > 0.0).any(axis=1) + 1000.0 * (past / rate).sum(axis=1)
-        cost[:, branch] = np.where(free[:, branch].any(axis=1), 0.0, toll)
+        cost[:, branch] = 10.0 * (past > 0.0).any(axis=1) + 1000.0 * (past / rate).sum(axis=1)
     return cost
 
 

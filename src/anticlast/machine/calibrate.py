@@ -24,8 +24,11 @@ _LOW = np.log(np.array([0.05, 0.01, 5.0]))
 _HIGH = np.log(np.array([20.0, 100.0, 1e5]))
 # 95 % of a chi-square distribution with one degree of freedom: a reading's cost may rise by this within its error.
 _QUANTILE = 3.841458820694124
+# Acceleration is taken to be wrong first, unless another has to move far less.
+_RELUCTANCE = (1.0, 1.5, 1.5)
 _SCAN = 9  # starts tried over a range
 _ROUNDS = 60
+_UNFELT = 1e-3  # squared slope, errors per unit of logarithm: below it a factor of e^30 hides within an error
 
 
 @dataclass(frozen=True, slots=True)
@@ -108,7 +111,9 @@ class Calibration:
             )
         ]
         if not self.explained:
-            short = all(measured < before for measured, before in zip(self.measured_s, self.before_s, strict=True))
+            short = all(
+                measured < before for measured, before in zip(self.measured_s, self.before_s, strict=True)
+            )
             hint = "faster than F and rapid rates ask" if short else "slower than these can explain"
             return [
                 *said,
@@ -121,7 +126,11 @@ class Calibration:
             said.append("The ranges allow for what was left as it is being off by half or double.")
         if len(self.measured_s) == 1:
             said.append("One reading tells one number; measure programs of other kinds to tell the others.")
-        return [*said, "For the machine file (it is not changed):", *("  " + line for line in self.file_lines())]
+        return [
+            *said,
+            "For the machine file (it is not changed):",
+            *("  " + line for line in self.file_lines()),
+        ]
 
     def file_lines(self) -> list[str]:
         """Lines for the machine file, in its own units, of what was fitted."""
@@ -270,13 +279,19 @@ def calibrate(readings: Sequence[Reading], machine: Machine, error_s: float) -> 
     measured = np.array([reading.seconds for reading in readings])
     errors = np.hypot(error_s, READING_SHARE * measured)
     fit = _Fit(readings, machine, errors)
-    logs, free = fit.start.copy(), []
+    logs = fit.start.copy()
+    free: list[int] = []
     while len(free) < min(len(readings), len(NAMES)):
         tried = [which for which in range(len(NAMES)) if which not in free]
         ends = [_with(fit, logs, free, which) for which in tried]
         costs = np.array([fit.cost(end) for end in ends])
         # Among those that explain the readings alike, the one that has to move least from the file's value.
-        moves = np.array([abs(end[which] - fit.start[which]) for end, which in zip(ends, tried, strict=True)])
+        moves = np.array(
+            [
+                abs(end[which] - fit.start[which]) * _RELUCTANCE[which]
+                for end, which in zip(ends, tried, strict=True)
+            ]
+        )
         best = int(np.where(costs <= costs.min() + 1.0, moves, math.inf).argmin())
         if free and fit.cost(logs) - costs[best] <= _QUANTILE:
             break
@@ -306,7 +321,9 @@ def _told(fit: _Fit, logs: Floats, free: list[int], which: int) -> Told:
         low, high = _range(fit, logs, free, which)
     else:
         low, high = (_edge(fit, logs, which, float(end)) for end in (_LOW[which], _HIGH[which]))
-    before, value = (math.inf if which == 2 and at[2] >= _HIGH[2] else math.exp(at[which]) for at in (fit.start, logs))
+    before, value = (
+        math.inf if which == 2 and at[2] >= _HIGH[2] else math.exp(at[which]) for at in (fit.start, logs)
+    )
     return Told(
         NAMES[which], before, value, 0.0 if low <= _LOW[which] else math.exp(low),
         math.inf if high >= _HIGH[which] else math.exp(high), which in free,
@@ -320,6 +337,9 @@ def _range(fit: _Fit, logs: Floats, free: list[int], which: int) -> tuple[float,
     counts too.
     """
     low, high = _spread(fit, logs, free, which)
+    # Slopes tell nothing of where a number stops mattering (an acceleration that is not reached): go and see.
+    low = min(low, _edge(fit, logs, which, float(_LOW[which])))
+    high = max(high, _edge(fit, logs, which, float(_HIGH[which])))
     worst = fit.cost(logs) + _QUANTILE
     for other in (number for number in range(len(NAMES)) if number not in free):
         for factor in (-math.log(2.0), math.log(2.0)):
@@ -339,8 +359,10 @@ def _spread(fit: _Fit, logs: Floats, free: list[int], which: int) -> tuple[float
     slopes = fit.slopes(logs, free)
     spare = len(fit.readings) - len(free)
     misfit = max(1.0, fit.cost(logs) / spare) if spare else 1.0
-    covariance = np.linalg.pinv(slopes.T @ slopes, rcond=1e-12) * misfit * _QUANTILE
-    half = math.sqrt(max(float(covariance[free.index(which), free.index(which)]), 0.0))
+    # A direction that the readings do not feel makes the range wide, not nothing.
+    weights, axes = np.linalg.eigh(slopes.T @ slopes)
+    part = axes[free.index(which)] ** 2
+    half = math.sqrt(float((part / np.maximum(weights, _UNFELT)).sum()) * misfit * _QUANTILE)
     return float(logs[which]) - half, float(logs[which]) + half
 
 

@@ -61,7 +61,9 @@ def read_measured(path: Path) -> tuple[Measured, ...]:
         for name in COLUMNS:
             if header.count(name) != 1:
                 what = "missing" if name not in header else "found twice"
-                faults.append(Fault(file, 1, name, f"{what}; needs one column each named program and seconds"))
+                faults.append(
+                    Fault(file, 1, name, f"{what}; needs one column each named program and seconds")
+                )
         if faults:
             raise BadInput(faults)
         places = [header.index(name) for name in COLUMNS]

@@ -77,7 +77,7 @@ def estimate(motions: Motions, machine: Machine, events: Sequence[Event] = ()) -
     bounds = _bounds(motions, machine, path)
     stop = _stops(motions, path, waits)
     times, loads = _profile_times(machine, path, bounds, stop)
-    seconds = np.bincount(path.row, weights=times, minlength=count)
+    seconds: Floats = np.bincount(path.row, weights=times, minlength=count).astype(np.float64)
     # What each axis does over a row; rows that stand still take no time.
     row_loads = np.zeros((count, len(machine.axes)))
     np.add.at(row_loads, path.row, loads)
@@ -233,7 +233,18 @@ def _profile_times(machine: Machine, path: _Path, bounds: _Bounds, stop: Bools) 
     )  # fmt: skip
     if np.isfinite(jerk).any():
         _motion_kernels.jerk_limits(
-            path.unit, path.length, cap, kind, limit, curve, path.scale, linear, CORNER_MM, CORNER_DEG, path.accel, jerk
+            path.unit,
+            path.length,
+            cap,
+            kind,
+            limit,
+            curve,
+            path.scale,
+            linear,
+            CORNER_MM,
+            CORNER_DEG,
+            path.accel,
+            jerk,
         )
     block, vertex, size, free, top = _speed_kernels.pieces(
         path.unit, path.length, cap, kind, limit, curve, zone, path.accel
@@ -243,7 +254,9 @@ def _profile_times(machine: Machine, path: _Path, bounds: _Bounds, stop: Bools) 
     lines = _speed_kernels.profile(block, vertex, size, free, cap, squares)
     along_jerk = _finite_inverse((np.abs(path.unit) / jerk).max(axis=1))[block]
     lost = _jerk_kernels.jerk_losses(*lines, free, along_jerk)
-    seconds = np.bincount(block[lines[0]], weights=lines[3] + lost, minlength=len(path.row))
+    seconds: Floats = np.bincount(block[lines[0]], weights=lines[3] + lost, minlength=len(path.row)).astype(
+        np.float64
+    )
     return seconds, _speed_kernels.loads(*lines, block, vertex, path.unit, curve, path.accel)
 
 

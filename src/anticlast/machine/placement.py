@@ -161,7 +161,9 @@ def propose(
         gain is worth moving the part.
     """
     origin = np.asarray(part_origin_mm, dtype=np.float64)
-    turns = np.arange(0.0, 360.0, TURN_STEP_DEG) if turns_deg is None else np.asarray(turns_deg, dtype=np.float64)
+    turns = (
+        np.arange(0.0, 360.0, TURN_STEP_DEG) if turns_deg is None else np.asarray(turns_deg, dtype=np.float64)
+    )
     stands = [
         _Stand(machine, origin, sweeps, corners_mm, clearance_mm, float(turn), turn_now_deg)
         for turn in (0.0, *turns[turns != 0.0])
@@ -275,7 +277,9 @@ class _Stand:
         if not lift:
             reach[2] = 0.0
         across = np.linspace(-1.0, 1.0, _GRID)
-        unit = np.stack(np.meshgrid(across, across, across if lift else [0.0], indexing="ij"), axis=-1).reshape(-1, 3)
+        unit = np.stack(
+            np.meshgrid(across, across, across if lift else [0.0], indexing="ij"), axis=-1
+        ).reshape(-1, 3)
         at = np.zeros(3)
         scale = max(float(self._linear_motion(np.zeros((1, 3)))[0]), 1e-6)
         for _ in range(_GRIDS):
@@ -314,6 +318,7 @@ class _Stand:
             cut={k: (float(cut[:, j].min()), float(cut[:, j].max())) for j, k in enumerate(letters)},
             reach={k: (float(every[:, j].min()), float(every[:, j].max())) for j, k in enumerate(letters)},
             margin={
-                k: (float(every[:, j].min() - low[j]), float(high[j] - every[:, j].max())) for j, k in enumerate(letters)
+                k: (float(every[:, j].min() - low[j]), float(high[j] - every[:, j].max()))
+                for j, k in enumerate(letters)
             },
         )

@@ -43,7 +43,11 @@ class SteadyAxis:
 
     def as_json(self) -> dict[str, Any]:
         """Return plain data."""
-        return {"operation": self.operation, "fixed": list(self.axis), "from_normal_deg": list(self.from_normal_deg)}
+        return {
+            "operation": self.operation,
+            "fixed": list(self.axis),
+            "from_normal_deg": list(self.from_normal_deg),
+        }
 
     def line(self) -> str:
         """Return a line to read."""
@@ -72,7 +76,8 @@ def steady_axis(kinematics: Kinematics, normals: Floats, operation: int) -> Stea
         None if no axis within 60 degrees of part Z stays between 10 and 50 degrees off all normals.
     """
     tilt, around = (
-        angle.ravel() for angle in np.meshgrid(np.radians(_TILTS_DEG), np.radians(_AZIMUTHS_DEG), indexing="ij")
+        angle.ravel()
+        for angle in np.meshgrid(np.radians(_TILTS_DEG), np.radians(_AZIMUTHS_DEG), indexing="ij")
     )
     tried = np.column_stack([np.sin(tilt) * np.cos(around), np.sin(tilt) * np.sin(around), np.cos(tilt)])
     reached = kinematics.nearest_axis(tried)

@@ -157,7 +157,11 @@ def hold_backs(
             letter = machine.letters[which] if which >= 0 else ""
             found.append(
                 HoldBack(
-                    CAUSES[cause], letter, float(times.seconds[chosen].sum()), float(lost[chosen].sum()), worst
+                    CAUSES[cause],
+                    letter,
+                    float(times.seconds[chosen].sum()),
+                    float(lost[chosen].sum()),
+                    worst,
                 )
             )
     return tuple(sorted(found, key=lambda item: -item.lost_s))
@@ -175,7 +179,12 @@ def marks_of(text: bytes) -> tuple[Mark, ...]:
 
 
 def program_time(
-    program: str, blocks: int, motions: Motions, times: MotionTimes, machine: Machine, marks: Sequence[Mark] = ()
+    program: str,
+    blocks: int,
+    motions: Motions,
+    times: MotionTimes,
+    machine: Machine,
+    marks: Sequence[Mark] = (),
 ) -> ProgramTime:
     """Split a program's time over its operations and passes.
 
@@ -217,13 +226,18 @@ def _operation_starts(motions: Motions, marks: Sequence[Mark]) -> list[tuple[int
     """Line, name and number of each operation."""
     marked = [mark for mark in marks if mark.kind == "OPERATION"]
     if marked:
-        starts = [(mark.line, f"operation {mark.number}: {mark.text}".rstrip(": "), mark.number) for mark in marked]
+        starts = [
+            (mark.line, f"operation {mark.number}: {mark.text}".rstrip(": "), mark.number) for mark in marked
+        ]
         return starts if starts[0][0] <= 1 else [(1, "before the first operation", 0), *starts]
     if len(motions.line) == 0:
         return []
     changes = np.flatnonzero(np.diff(motions.tool, prepend=motions.tool[0] - 1))
     lines = [1, *(int(motions.line[row]) for row in changes[1:])]
-    return [(line, f"cutter T{motions.tool[row]}", i + 1) for i, (line, row) in enumerate(zip(lines, changes, strict=True))]
+    return [
+        (line, f"cutter T{motions.tool[row]}", i + 1)
+        for i, (line, row) in enumerate(zip(lines, changes, strict=True))
+    ]
 
 
 def _passes(

@@ -15,6 +15,7 @@ import numpy as np
 from anticlast.passes.cusp import plan_of
 from anticlast.passes.profile import Sweep, osculating_lead_rad
 from anticlast.records import Bools, Floats, Ints
+from anticlast.tolerances import SAME_POINT_MM
 
 # Below this lead the rear of a flat bottom stands so low that it rubs on chips: its height over a 6 mm bottom is 26 micrometres.
 LEAST_LEAD_RAD = math.radians(0.25)
@@ -26,12 +27,15 @@ _MOST_LEAD_RAD = math.radians(50.0)
 # than at 0.9, but every error of the lead would show twice.
 _MIDDLE_SHARE = 0.9
 # Leads asked first where the machine reaches every axis, as shares of the one that osculates; then between the best two.
-_SHARES = np.array([0.3, 0.45, 0.6, 0.8, 1.0, 1.3, 1.8, 3.0, 6.0, 12.0, 24.0])
-_LEADS_ASKED = 14
+_SHARES = np.array([0.3, 0.45, 0.65, 0.95, 1.4, 2.2, 4.0, 8.0, 16.0])
+_LEADS_ASKED = 11
 _SECTIONS = 11
+# Where the machine's lean swings from front to side, the contact must not travel round the rim faster than this share of the feed:
+# else it would run backwards, and a strip looked at here and there would not tell what is left between.
+_MOST_SWING = 0.5
 _GOLDEN = 0.6180339887498949
 # Profile samples to either side of the line, dense beside it: a contact near the rim of the bottom leaves narrow strips.
-_SIDE = 22
+_SIDE = 18
 _CROWDING = 1.6
 _FURTHEST = 0.995
 _FAR_MM = 1e3
@@ -56,12 +60,16 @@ class Family:
 
 @dataclass(frozen=True, slots=True)
 class Demand:
-    """What a strip has to keep: scallop limit, tilt error to survive and what it may gouge then, least lead."""
+    """What a strip has to keep: scallop limit, tilt error to survive and what it may gouge then, least lead, most lift.
+
+    Between stations lead and lift run smoothly only if the machine follows; where it does not, hardly any lift is safe.
+    """
 
     height_mm: float
     margin_rad: float
     gouge_mm: float
     least_rad: float
+    lift_mm: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -99,7 +107,7 @@ class Strips:
 
 
 def strips_of(
-    height: Floats, shift: Floats, lowered: Floats, aside_mm: Floats, across: Floats, demand: Demand
+    height: Floats, shift: Floats, lowered: Floats, aside_mm: Floats, across: Floats, swing: Floats, demand: Demand
 ) -> Strips:
     """Return the strips of profiles (n, m), sampled at the plan distances (m,) of `sides`.
 
@@ -109,6 +117,8 @@ def strips_of(
         As `Sweep.profiles` has them.
     across : (n,)
         Surface distance per plan distance across the feed.
+    swing : (n,)
+        How far the contact travels round the rim of the bottom, per feed.
     """
     height = np.where(np.isfinite(height), height, _FAR_MM)
     middle = aside_mm.size // 2
@@ -128,6 +138,7 @@ def strips_of(
     gouge = np.max(np.where(near, -lowered - lift[:, None], 0.0), axis=1)
     # Below 0: what is not kept, as a share; above: the width of the strip.
     over = np.maximum(bump / (_MIDDLE_SHARE * demand.height_mm), gouge / demand.gouge_mm)
+    over = np.maximum(over, np.maximum(lift / demand.lift_mm, swing / _MOST_SWING))
     worth = np.where(over <= 1.0, left + right, -np.minimum(over, _FAR_MM))
     kept = worth > 0.0
     inside &= kept[:, None]
@@ -265,6 +276,8 @@ def fit(
         True: each station has its own angle, looked for about the lead that osculates. False: one angle for every line of
         stations along the feed, of all small and large ones the best at the line's worst station.
     """
+    if relative and len(ways) == 2 and _symmetric(u_nodes) and _symmetric(v_nodes):
+        return _turned_over(fit(sweep, u_nodes, v_nodes, ways[:1], family, demand, counts | counts[::-1, ::-1], relative))
     way = np.repeat(np.array(ways, dtype=np.float64), u_nodes.size * v_nodes.size)
     v, u = (np.tile(grid.ravel(), len(ways)) for grid in np.meshgrid(v_nodes, u_nodes, indexing="ij"))
     xy = plan_of(u, v, sweep.direction_rad)
@@ -276,9 +289,13 @@ def fit(
     matter = np.tile(counts.ravel(), len(ways)).reshape(-1, members)
     matter |= ~matter.any(axis=1, keepdims=True)
 
+    none = np.zeros(u.size)
+
     def ask(angle: Floats, error_rad: float = demand.margin_rad) -> Strips:
         lead, lean = family.wish(np.repeat(angle, members))
-        return strips_of(*sweep.profiles(u, v, way, lead, lean, aside, error_rad), aside, across, demand)
+        profiles = sweep.profiles(u, v, way, lead, lean, aside, error_rad)
+        swing = none if relative else _swing(sweep, u, v, way, lead, lean)
+        return strips_of(*profiles, aside, across, swing, demand)
 
     def worth(angle: Floats) -> Floats:
         return np.where(matter, ask(angle).worth.reshape(-1, members), np.inf).min(axis=1)
@@ -306,6 +323,39 @@ def fit(
     reached = np.stack(sweep.reached(u, v, way, axis)).reshape(2, *shape)
     fields = {name: getattr(strips, name).reshape(shape) for name in Strips.__slots__}
     return Fit(u_nodes, v_nodes, family, angle.reshape(shape), Strips(**fields), reached)
+
+
+def _swing(sweep: Sweep, u: Floats, v: Floats, way: Floats, lead: Floats, lean: Floats) -> Floats:
+    """Return how far the contact travels round the rim of the bottom per feed (n,), by differences over a pose step."""
+    step = sweep.step_mm
+    azimuth = []
+    for side in (-0.5 * step, 0.5 * step):
+        _, axis = sweep.poses(u + side, v, way, lead, lean, 0.0)
+        got_lead, got_lean = sweep.reached(u + side, v, way, axis)
+        azimuth.append(np.arctan2(np.tan(got_lean), np.tan(got_lead)))
+    turned = (azimuth[1] - azimuth[0] + math.pi) % (2.0 * math.pi) - math.pi
+    return sweep.disc_mm * np.abs(turned) / step
+
+
+def _symmetric(nodes: Floats) -> bool:
+    return bool(np.abs(nodes + nodes[::-1]).max() <= SAME_POINT_MM)
+
+
+def _turned_over(one: Fit) -> Fit:
+    """Return a fit for both ways from that for one, on symmetric grids: half a turn about Z takes saddle and passes to each other.
+
+    A pass at (u, v) fed against +u is the pass at (-u, -v) fed along it; its left is that one's right.
+    """
+
+    def both(first: Floats, second: Floats) -> Floats:
+        return np.concatenate((first, second[..., ::-1, ::-1]), axis=-3)
+
+    s = one.strips
+    fields = {name: both(getattr(s, name), getattr(s, name)) for name in Strips.__slots__}
+    fields["left_mm"], fields["right_mm"] = both(s.left_mm, s.right_mm), both(s.right_mm, s.left_mm)
+    fields["ahead_mm"], fields["behind_mm"] = both(s.ahead_mm, s.behind_mm), both(s.behind_mm, s.ahead_mm)
+    angle, reached = both(one.angle_rad, one.angle_rad), both(one.reached_rad, one.reached_rad)
+    return Fit(one.u_mm, one.v_mm, one.family, angle, Strips(**fields), reached)
 
 
 def _sectioned(

@@ -26,7 +26,9 @@ _LOOK_MM = 1.5
 _LOOK_ASIDE = 5
 # What a pass leaves this share of the way to its neighbour is its own: no other cuts there.
 _OWN_SHARE = 0.4
-_ROUNDS = 8
+_ROUNDS = 10
+# Passes may lie this share of the tolerance below the surface between stations before they are raised.
+_SINK_SHARE = 0.25
 # The height is lowered until the passes come out at a whole number within this share of one.
 _EVEN_SHARE = 0.05
 # Where something stands too high, steps are cut down for this share of the limit.
@@ -37,12 +39,13 @@ _UNDER = 0.998
 class Left:
     """What passes leave inside the outline: highest on the ridge after each pass, in strips, and on the rim beside each pass.
 
-    -inf where a ridge or a strip does not meet the outline.
+    -inf where a ridge or a strip does not meet the outline. ``lowest_mm`` is the lowest place of all strips.
     """
 
     ridge_mm: Floats
     strip_mm: Floats
     rim_mm: Floats
+    lowest_mm: float
 
     @property
     def highest_mm(self) -> float:
@@ -92,8 +95,15 @@ def lay(task: Task, found: Fit, lines: Lines) -> Laid:
             pieces, order = _cut_order(task, found, at)
         left = _left_by(task, found, at, pieces, order)
         highest = left.highest_mm
-        if highest <= design:
+        sunk = -left.lowest_mm > _SINK_SHARE * task.operation.tolerance_mm
+        if highest <= design and not sunk:
             return Laid(found, at, pieces, order, left)
+        if sunk:
+            # Between stations lead and lift are not quite what they should be: all passes go up by as much.
+            raised = replace(found.strips, lift_mm=found.strips.lift_mm - left.lowest_mm)
+            found = replace(found, strips=raised)
+            layer = replace(layer, fit=found)
+            continue
         if float(left.strip_mm.max()) > design:
             found_for *= 0.98 * design / float(left.strip_mm.max())
             found = task.fit(found.family, found_for)
@@ -173,17 +183,18 @@ def _left_by(task: Task, found: Fit, lines_mm: Floats, pieces: Pieces, order: li
     for number, u in enumerate(_places(task, 0.5 * (lines_mm[1:] + lines_mm[:-1]))):
         if u.size:
             ridge[number] = task.sweep.ridges(u, tracks[number], tracks[number + 1])[1].max()
-    strip = np.full(lines_mm.size, -np.inf)
+    strip, lowest = np.full(lines_mm.size, -np.inf), math.inf
     for number, (u, track) in enumerate(zip(_places(task, lines_mm), tracks, strict=True)):
         if u.size:
-            strip[number] = _in_strip(task, found, lines_mm, number, u, track, int(sign[number]))
-    return Left(ridge, strip, _on_rim(task, lines_mm, tracks))
+            height = _in_strip(task, found, lines_mm, number, u, track, int(sign[number]))
+            strip[number], lowest = height.max(), min(lowest, float(height.min()))
+    return Left(ridge, strip, _on_rim(task, lines_mm, tracks), lowest)
 
 
 def _in_strip(
     task: Task, found: Fit, lines_mm: Floats, number: int, u_mm: Floats, track: Track, sign: int
-) -> float:
-    """Return the highest place of a pass's own strip at abscissae u (n,)."""
+) -> Floats:
+    """Return the heights of a pass's own strip at abscissae u (n,) and some places to either side."""
     share = np.linspace(-0.95, 0.95, 2 * _LOOK_ASIDE + 1)
     left, right = found.reach((0 if sign >= 0 else 1,), u_mm, np.full(u_mm.size, track.v_mm))
     aside = np.where(share > 0.0, share * left[:, None], share * right[:, None])
@@ -191,7 +202,7 @@ def _in_strip(
         steps = np.diff(lines_mm)[max(number - 1, 0) : number + 1]
         aside = np.clip(aside, -_OWN_SHARE * float(steps.min()), _OWN_SHARE * float(steps.min()))
     places = np.broadcast_to(u_mm[:, None], aside.shape).ravel()
-    return float(task.sweep.heights(places, track.v_mm + aside.ravel(), track).max())
+    return task.sweep.heights(places, track.v_mm + aside.ravel(), track)
 
 
 def _on_rim(task: Task, lines_mm: Floats, tracks: list[Track]) -> Floats:

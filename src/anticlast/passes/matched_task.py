@@ -23,8 +23,10 @@ from anticlast.tolerances import CHORD_SHARE_OF_STRIP
 _STATION_SHARE = 0.15
 _LEAST_STATIONS = 9
 # Where not every axis is reached, lead and lean change along a line by themselves, and what is chosen changes from line to line.
-_CLOSE_ALONG_MM, _CLOSE_ACROSS_MM = 2.0, 4.0
+_CLOSE_ALONG_MM, _CLOSE_ACROSS_MM = 3.0, 4.0
 _RIM_MM = 1.0
+# There a strip may be lifted off its deepest place by this share of the height at most.
+_LIFT_SHARE = 0.15
 
 
 @dataclass(frozen=True, slots=True)
@@ -121,7 +123,8 @@ class Task:
         """Return the widest strips that leave at most a height."""
         # Chords may gouge as much as they may raise the scallop; what is left of the tolerance is for the tilt error.
         allowed = self.operation.tolerance_mm - 0.5 * self.budget_mm
-        demand = Demand(height_mm, self.operation.lead_margin_rad, allowed, max(self.operation.lead_rad, 0.0))
+        lift = math.inf if self.full else _LIFT_SHARE * height_mm
+        demand = Demand(height_mm, self.operation.lead_margin_rad, allowed, max(self.operation.lead_rad, 0.0), lift)
         return fit(self.sweep, self.u_mm, self.v_mm, self.ways, family, demand, self.counts, self.full)
 
     def layer(self, found: Fit, zigzag: bool = True) -> Layer:

@@ -9,7 +9,9 @@ import numpy as np
 
 
 @numba.njit(cache=True, nogil=True)
-def _probe(points: np.ndarray, normals: np.ndarray, sags: np.ndarray, i: int, number: int, out: np.ndarray) -> None:
+def _probe(
+    points: np.ndarray, normals: np.ndarray, sags: np.ndarray, i: int, number: int, out: np.ndarray
+) -> None:
     """Set ``out`` (6,) to a place of the wished path and the normal there: odd numbers rows, even ones middles of moves.
 
     Number 0 is the middle of the move from row i to i + 1, number 1 row i + 1, and so on.
@@ -168,7 +170,19 @@ def fit_all(
             bad = last + 1
             while i + step <= last:
                 if not fit_one(
-                    points, normals, sags, words, i, i + step, plane, side, budgets[i + 1], digit, mismatch, largest, trial
+                    points,
+                    normals,
+                    sags,
+                    words,
+                    i,
+                    i + step,
+                    plane,
+                    side,
+                    budgets[i + 1],
+                    digit,
+                    mismatch,
+                    largest,
+                    trial,
                 ):
                     bad = i + step
                     break
@@ -177,13 +191,37 @@ def fit_all(
             while bad - good > 1 and good > i + 1:
                 middle = (good + bad) // 2
                 if fit_one(
-                    points, normals, sags, words, i, middle, plane, side, budgets[i + 1], digit, mismatch, largest, trial
+                    points,
+                    normals,
+                    sags,
+                    words,
+                    i,
+                    middle,
+                    plane,
+                    side,
+                    budgets[i + 1],
+                    digit,
+                    mismatch,
+                    largest,
+                    trial,
                 ):
                     good = middle
                 else:
                     bad = middle
             if good > best and fit_one(
-                points, normals, sags, words, i, good, plane, side, budgets[i + 1], digit, mismatch, largest, trial
+                points,
+                normals,
+                sags,
+                words,
+                i,
+                good,
+                plane,
+                side,
+                budgets[i + 1],
+                digit,
+                mismatch,
+                largest,
+                trial,
             ):
                 best = good
                 for c in range(5):

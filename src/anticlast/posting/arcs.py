@@ -94,5 +94,7 @@ def arc_length_mm(arcs: Floats, steps_mm: Floats) -> Floats:
     """
     along = np.linalg.norm(steps_mm, axis=1)
     turned = np.abs(arcs[:, 1]) * np.linalg.norm(arcs[:, 2:], axis=1)
-    third = np.choose(np.clip(arcs[:, 0] - 17, 0, 2).astype(np.int64), [steps_mm[:, 2], steps_mm[:, 1], steps_mm[:, 0]])
+    third = np.choose(
+        np.clip(arcs[:, 0] - 17, 0, 2).astype(np.int64), [steps_mm[:, 2], steps_mm[:, 1], steps_mm[:, 0]]
+    )
     return np.where(arcs[:, 0] > 0.0, np.hypot(turned, third), along)

@@ -32,4 +32,4 @@ def writer_for(machine: Machine) -> Writer:
         raise BadInput(
             Fault(str(machine.source), 0, "write", "is not a function write(job, axis_paths, stream)")
         )
-    return write  # type: ignore[no-any-return]
+    return write

@@ -355,9 +355,9 @@ def sweep(
         Plan of the nodes (n,) [mm], where their normal lines leave the part (n,) [mm], first node of each tile.
     tiles : (first, after last)
     lists : (start, pieces)
-        From `_reach_kernels.bin_pieces`.
+        From `_reach_kernels.reach_boxes`.
     pieces : (c0, c1, a0, a1, size, state)
-        Reference points and axes at both ends [mm, 1], size and state as in `_reach_kernels.bin_pieces`.
+        Reference points and axes at both ends [mm, 1], size and state as in `_reach_kernels.reach_boxes`.
     above : float [mm]
         Only nodes that stand at least this high are worked on.
     height : (n,) [mm]

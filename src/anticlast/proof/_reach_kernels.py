@@ -15,6 +15,8 @@ _STEPS = 80
 # Places looked at on a rim before the lowest are made exact, and rounds of that.
 _RIM_PLACES = 32
 _RIM_ROUNDS = 4
+# Cells that a mill's bottom is cut into, to find where it is near the surface.
+_RINGS, _SECTORS = 4, 24
 
 
 @njit(cache=True, nogil=True)
@@ -80,17 +82,9 @@ def rim_least(a: float, b: float, c: tuple, axis: tuple, disc: float) -> tuple[f
     On a plane a saddle's distance has no lowest point inside a circle but on it: it curves up one way and down the
     other. All lowest places among evenly spaced ones are made exact by parabolas through three points.
     """
-    # A direction square to the axis, from the coordinate axis least along it.
-    ex, ey, ez = 1.0, 0.0, 0.0
-    if abs(axis[0]) > 0.7:
-        ex, ey = 0.0, 1.0
-    on = ex * axis[0] + ey * axis[1] + ez * axis[2]
-    ex, ey, ez = ex - on * axis[0], ey - on * axis[1], ez - on * axis[2]
-    scale = disc / math.sqrt(ex * ex + ey * ey + ez * ez)
-    one = (ex * scale, ey * scale, ez * scale)
-    two = (
-        axis[1] * one[2] - axis[2] * one[1], axis[2] * one[0] - axis[0] * one[2], axis[0] * one[1] - axis[1] * one[0],
-    )  # fmt: skip
+    one, two = _square_to(axis[0], axis[1], axis[2])
+    one = (disc * one[0], disc * one[1], disc * one[2])
+    two = (disc * two[0], disc * two[1], disc * two[2])
     step = 2.0 * math.pi / _RIM_PLACES
     around = np.empty(_RIM_PLACES)
     least, at_x, at_y = math.inf, 0.0, 0.0
@@ -189,16 +183,17 @@ def chunk_box(
         low = min(d0, d1) - bend * length * length / 8.0
         if low - corner - disc * sine - bend * radius * radius / 2.0 > high:
             return 0
-        if low <= high + rise * radius / (1.0 - rise) / 2.0:
+        if disc > 0.0 or corner == 0.0:
+            # The flutes of a bull or flat end reach up past any residual of interest unless it is far below.
+            state = 2 if low < -radius else 1
+        elif low <= high + rise * radius / (1.0 - rise) / 2.0:
             state = 2
-        elif disc == 0.0:
+        else:
             drop = max(0.0, low - high - bend * radius * radius / 2.0)
-            reach = (
-                math.sqrt(max(0.0, radius * radius - drop * drop)) + drop * max(bend, 2.0 * b) * length / 2.0
-            )
+            reach = math.sqrt(max(0.0, radius * radius - drop * drop)) + drop * max(bend, 2.0 * b) * length / 2.0
     else:
         state = 2
-    reach += slope * (max(high, radius - low) + (2.0 * radius if state == 2 else 0.0))
+    reach += slope * (max(high, corner + disc * sine - low) + (2.0 * radius if state == 2 else 0.0))
     box[0], box[1], box[2], box[3] = math.inf, -math.inf, math.inf, -math.inf
     for x, y, fx, fy in ((x0, y0, fx0, fy0), (x1, y1, fx1, fy1)):
         w = math.sqrt(1.0 + 4.0 * (a * a * fx * fx + b * b * fy * fy))
@@ -210,56 +205,156 @@ def chunk_box(
 
 
 @njit(cache=True, nogil=True)
-def bin_pieces(
-    surface: tuple, c0: np.ndarray, c1: np.ndarray, size: np.ndarray, active: np.ndarray, high: float, grid: tuple,
-    start: np.ndarray, pieces: np.ndarray, state: np.ndarray,
+def mill_box(
+    a: float, b: float, ends: tuple, axes: tuple, size: tuple, high: float, slope: float, box: np.ndarray
+) -> bool:
+    """Shrink the box of a bull or flat end mill's chunk to the part of its bottom that is near enough to the surface.
+
+    The bottom of the core is cut into cells; those further from the surface than the corner radius and ``high``, by more
+    than the distance can change over a cell and half the chunk, do not count. The wall above the rim only gets further
+    away as it rises if the axis stands steeply enough on the surface: docs/theory-proof.md#reach.
+
+    Parameters
+    ----------
+    ends, size : as in `chunk_box`, size with the height of the flutes as fourth
+    axes : (6,)
+        Unit cutter axis at both ends.
+    high, slope, box
+        As in `chunk_box`.
+
+    Returns
+    -------
+    bool
+        False if nothing is near enough.
+    """
+    disc, corner, sine, flutes = size
+    length = math.sqrt((ends[3] - ends[0]) ** 2 + (ends[4] - ends[1]) ** 2 + (ends[5] - ends[2]) ** 2)
+    turn = math.sqrt((axes[3] - axes[0]) ** 2 + (axes[4] - axes[1]) ** 2 + (axes[5] - axes[2]) ** 2)
+    bend = 2.0 * max(a, b) / max(0.1, 1.0 - 2.0 * max(a, b) * 2.0 * (disc + corner))
+    steep = math.sqrt(max(0.0, 1.0 - sine * sine)) - 0.5 * bend * flutes
+    if steep < 0.1:
+        return True
+    cell = disc * math.hypot(0.5 / _RINGS, math.pi / _SECTORS)
+    moved = 0.5 * (length + disc * turn)
+    slack = cell * sine + 0.5 * bend * cell * cell + moved
+    lows = (math.inf, -math.inf, math.inf, -math.inf)
+    least = math.inf
+    for end in range(2):
+        x, y, z = ends[3 * end], ends[3 * end + 1], ends[3 * end + 2]
+        ax, ay, az = axes[3 * end], axes[3 * end + 1], axes[3 * end + 2]
+        one, two = _square_to(ax, ay, az)
+        for i in range(_RINGS):
+            r = disc * (i + 0.5) / _RINGS
+            for j in range(_SECTORS):
+                s, t = r * math.cos(2.0 * math.pi * j / _SECTORS), r * math.sin(2.0 * math.pi * j / _SECTORS)
+                px, py = x + s * one[0] + t * two[0], y + s * one[1] + t * two[1]
+                pz = z + s * one[2] + t * two[2]
+                distance, _, _ = foot(a, b, px, py, pz)
+                if distance - slack > corner + high:
+                    continue
+                least = min(least, distance)
+                lows = (min(lows[0], px), max(lows[1], px), min(lows[2], py), max(lows[3], py))
+    if math.isinf(least):
+        return False
+    wall = (high + max(0.0, corner + slack - least)) / steep
+    # As far below the surface as the corner arc may reach, the normal line leads that far sideways.
+    depth = max(high, corner + slack - least)
+    grow = cell + moved + corner + wall + slope * depth
+    box[0], box[1] = max(box[0], lows[0] - grow), min(box[1], lows[1] + grow)
+    box[2], box[3] = max(box[2], lows[2] - grow), min(box[3], lows[3] + grow)
+    return True
+
+
+@njit(cache=True, nogil=True)
+def _square_to(ax: float, ay: float, az: float) -> tuple[tuple, tuple]:
+    """Return two unit vectors square to a unit axis and to each other."""
+    ex, ey = (1.0, 0.0) if abs(ax) < 0.7 else (0.0, 1.0)
+    on = ex * ax + ey * ay
+    ex, ey, ez = ex - on * ax, ey - on * ay, -on * az
+    norm = math.sqrt(ex * ex + ey * ey + ez * ez)
+    ex, ey, ez = ex / norm, ey / norm, ez / norm
+    return (ex, ey, ez), (ay * ez - az * ey, az * ex - ax * ez, ax * ey - ay * ex)
+
+
+@njit(cache=True, nogil=True)
+def reach_boxes(
+    surface: tuple, c0: np.ndarray, c1: np.ndarray, a0: np.ndarray, a1: np.ndarray, size: np.ndarray,
+    active: np.ndarray, high: float, chunk_start: np.ndarray, run: tuple, boxes: np.ndarray, found: np.ndarray,
 ) -> None:  # fmt: skip
-    """Count (``pieces`` empty) or list the pieces that reach each tile below a residual height ``high``.
+    """Find the plan boxes of all chunks of a run of pieces.
 
     Parameters
     ----------
     surface : (a, b, slope)
-    c0, c1 : (m, 3) [mm]
-    size : (m, 3)
-        As in `chunk_box`.
+    c0, c1, a0, a1 : (m, 3) [mm, 1]
+    size : (m, 4)
+        As in `mill_box`.
     active : (m,) bool
+    high : float [mm]
+        As in `chunk_box`.
+    chunk_start : (m + 1,)
+        First chunk of each piece; the chunks of a piece are equally long.
+    run : (first, after last)
+        Pieces to work on.
+    boxes : (chunks, 4) [mm]
+        Filled.
+    found : (chunks,) uint8
+        Answers of `chunk_box`.
+    """
+    a, b, slope = surface
+    for k in range(run[0], run[1]):
+        first, chunks = chunk_start[k], chunk_start[k + 1] - chunk_start[k]
+        for j in range(chunks):
+            found[first + j] = 0
+            if not active[k]:
+                continue
+            s, e = j / chunks, (j + 1) / chunks
+            dx, dy, dz = c1[k, 0] - c0[k, 0], c1[k, 1] - c0[k, 1], c1[k, 2] - c0[k, 2]
+            ends = (
+                c0[k, 0] + s * dx, c0[k, 1] + s * dy, c0[k, 2] + s * dz,
+                c0[k, 0] + e * dx, c0[k, 1] + e * dy, c0[k, 2] + e * dz,
+            )  # fmt: skip
+            box = boxes[first + j]
+            state = chunk_box(a, b, ends, (size[k, 0], size[k, 1], size[k, 2]), high, slope, box)
+            if state == 1 and size[k, 0] > 0.0:
+                tx, ty, tz = a1[k, 0] - a0[k, 0], a1[k, 1] - a0[k, 1], a1[k, 2] - a0[k, 2]
+                axes = (
+                    a0[k, 0] + s * tx, a0[k, 1] + s * ty, a0[k, 2] + s * tz,
+                    a0[k, 0] + e * tx, a0[k, 1] + e * ty, a0[k, 2] + e * tz,
+                )  # fmt: skip
+                whole = (size[k, 0], size[k, 1], size[k, 2], size[k, 3])
+                if not mill_box(a, b, ends, axes, whole, high, slope, box):
+                    state = 0
+            found[first + j] = state
+
+
+@njit(cache=True, nogil=True)
+def bin_boxes(
+    chunk_start: np.ndarray, boxes: np.ndarray, found: np.ndarray, grid: tuple, start: np.ndarray, pieces: np.ndarray
+) -> None:
+    """Count (``pieces`` empty) or list the pieces that reach each tile.
+
+    Parameters
+    ----------
+    chunk_start, boxes, found
+        From `reach_boxes`.
     grid : (x low, y low, tile [mm], tiles in x, tiles in y)
     start : (tiles + 1,)
         Counting: entry t + 1 gets the number for tile t. Listing: running sums of those.
     pieces : (0,) or (total,) int32
         In order of motion within each tile.
-    state : (m,) uint8
-        Gets the largest answer of `chunk_box` over the piece.
     """
-    a, b, slope = surface
     x_low, y_low, tile, nx, ny = grid
     last = np.full(nx * ny, -1, np.int32)
     filled = start[:-1].copy()
-    box = np.empty(4)
-    for k in range(c0.shape[0]):
-        if not active[k]:
-            continue
-        dx, dy, dz = c1[k, 0] - c0[k, 0], c1[k, 1] - c0[k, 1], c1[k, 2] - c0[k, 2]
-        chunks = math.ceil(math.sqrt(dx * dx + dy * dy + dz * dz) / (2.0 * tile) + 1e-9)
-        chunks = max(chunks, 1)
-        for j in range(chunks):
-            s, e = j / chunks, (j + 1) / chunks
-            ends = (
-                c0[k, 0] + s * dx, c0[k, 1] + s * dy, c0[k, 2] + s * dz,
-                c0[k, 0] + e * dx, c0[k, 1] + e * dy, c0[k, 2] + e * dz,
-            )  # fmt: skip
-            found = chunk_box(a, b, ends, (size[k, 0], size[k, 1], size[k, 2]), high, slope, box)
-            if found == 0:
+    for k in range(chunk_start.size - 1):
+        for c in range(chunk_start[k], chunk_start[k + 1]):
+            if found[c] == 0:
                 continue
-            state[k] = max(state[k], found)
-            i0, i1 = (
-                max(0, math.floor((box[0] - x_low) / tile)),
-                min(nx - 1, math.floor((box[1] - x_low) / tile)),
-            )
-            j0, j1 = (
-                max(0, math.floor((box[2] - y_low) / tile)),
-                min(ny - 1, math.floor((box[3] - y_low) / tile)),
-            )
+            i0 = max(0, math.floor((boxes[c, 0] - x_low) / tile))
+            i1 = min(nx - 1, math.floor((boxes[c, 1] - x_low) / tile))
+            j0 = max(0, math.floor((boxes[c, 2] - y_low) / tile))
+            j1 = min(ny - 1, math.floor((boxes[c, 3] - y_low) / tile))
             for v in range(j0, j1 + 1):
                 for u in range(i0, i1 + 1):
                     t = v * nx + u

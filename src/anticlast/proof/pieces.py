@@ -26,8 +26,8 @@ class Pieces:
     a0, a1 : (m, 3)
         Unit cutter axis, likewise.
     size : (m, 4) [mm]
-        Radius of the corner circle (0 for a ball), corner radius, largest sine between cutter axis and vertical (1),
-        height of the straight flutes above the reference point.
+        Radius of the corner circle (0 for a ball), corner radius, largest sine between the cutter axis and surface
+        normals below the cutter, height of the straight flutes above the reference point.
     active : (m,) bool
         Pieces made with a cutter the job knows. Row 0 is no piece.
     """
@@ -70,7 +70,7 @@ def take_pieces(
         height[rows] = cutter.reference_height_mm
         disc = 0.0 if cutter.shape == "ball" else cutter.radius_mm - cutter.corner_radius_mm
         flutes = max(0.0, cutter.flute_length_mm - cutter.corner_radius_mm)
-        size[rows] = disc, cutter.corner_radius_mm, 1.0, flutes
+        size[rows] = disc, cutter.corner_radius_mm, 0.0, flutes
     # Rows of fraction 0 put the tip elsewhere without motion.
     active &= motion.fraction > 0.0
     active[:1] = False
@@ -78,14 +78,28 @@ def take_pieces(
         active &= moving
     tip, axis = _own_frame(saddle, motion.tip_mm), _own_frame(saddle, motion.axis)
     before = np.maximum(np.arange(count) - 1, 0)
+    c0, c1 = tip[before] + height[:, None] * axis[before], tip + height[:, None] * axis
+    size[:, 2] = np.maximum(
+        _sines(saddle, c0, axis[before], size), _sines(saddle, c1, axis, size)
+    )  # fmt: skip
     return Pieces(
-        c0=tip[before] + height[:, None] * axis[before],
-        c1=tip + height[:, None] * axis,
+        c0=c0,
+        c1=c1,
         a0=axis[before].copy(),
         a1=axis,
         size=size,
         active=active,
     )
+
+
+def _sines(saddle: Saddle, centre: Floats, axis: Floats, size: Floats) -> Floats:
+    """Return a bound on the sine between cutter axes and the surface normals within two cutter radii, (n,)."""
+    gx, gy = 2.0 * saddle.a_per_mm * centre[:, 0], -2.0 * saddle.b_per_mm * centre[:, 1]
+    normal = np.column_stack((-gx, -gy, np.ones(len(gx)))) / np.sqrt(1.0 + gx * gx + gy * gy)[:, None]
+    sine = np.linalg.norm(np.cross(axis, normal), axis=1)
+    # Normals turn by at most the largest curvature times the way.
+    sine += 4.0 * max(saddle.a_per_mm, saddle.b_per_mm) * (size[:, 0] + size[:, 1])
+    return np.where(np.einsum("ni,ni->n", axis, normal) > 0.0, np.minimum(sine, 1.0), 1.0)
 
 
 def sub_points(c0: Floats, c1: Floats, step_mm: float) -> tuple[npt.NDArray[np.int64], Floats, Floats]:

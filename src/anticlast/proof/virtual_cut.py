@@ -22,12 +22,14 @@ from anticlast.saddle import Saddle
 from anticlast.tolerances import BOUND_SLACK_MM, MEASURE_MM, SAME_POINT_MM, UNCUT_MM
 
 if TYPE_CHECKING:
-    from anticlast.records import Bools, Floats, Job, PartMotion, ScallopMap
+    from anticlast.records import Bools, Bytes, Floats, Job, PartMotion, ScallopMap
 
 # Grid chosen without being asked: this fine up to the most steps along the longer side, and at least so many steps.
 _GRID_MM, _MOST_STEPS, _LEAST_STEPS = 0.1, 1000, 200
 # Most quarterings of triangles in one run of the search for the peak: about a minute's work; the bound stays honest.
 _QUARTERINGS = 300_000
+# Most trials of nodes with pieces deep in the part: some seconds' work.
+_MOST_TRIALS = 50_000_000.0
 _MAP_SIDE = 400
 
 
@@ -111,9 +113,14 @@ def measure(
     """
     grid = choose_grid_mm(job) if grid_mm is None else grid_mm
     saddle = Saddle.of(job.part)
-    nodes = lay_nodes(job.part.outline, saddle, grid)
     pieces = take_pieces(motion, job.cutters, saddle, moving)
-    field = _Field(job, saddle, nodes, pieces, wanted_mm)
+    field = _Field(job, saddle, lay_nodes(job.part.outline, saddle, grid), pieces, wanted_mm)
+    trials = field.deep_trials()
+    if trials > _MOST_TRIALS:
+        # A cutter deep in the part all along, by a wrong offset say, is no less wrong on a coarser grid.
+        grid *= float(np.sqrt(trials / _MOST_TRIALS))
+        field = _Field(job, saddle, lay_nodes(job.part.outline, saddle, grid), pieces, wanted_mm)
+    nodes = field.nodes
     field.cut()
     gouge = _deeper(deepest_gouge(saddle, job.part.outline, pieces), field)
     highest, bound = field.search()
@@ -151,30 +158,42 @@ class _Field:
         self.owner = np.full(len(nodes.x), -1, np.int32)
         self.floor = np.full(len(nodes.x), -np.inf)
         self.state = np.zeros(len(pieces.c0), np.uint8)
+        # A chunk is at most two tiles long, so that its box is not much bigger than what it cuts.
+        length = np.linalg.norm(pieces.c1 - pieces.c0, axis=1)
+        chunks = np.where(pieces.active, np.ceil(length / (2.0 * nodes.tiling[2]) + 1e-9), 1.0)
+        self.chunks = np.concatenate(([0], np.cumsum(np.maximum(chunks, 1.0)))).astype(np.int64)
         self.lists: tuple[npt.NDArray[np.int64], npt.NDArray[np.int32]] | None = None
 
     def _bin(self, high_mm: float) -> None:
         """List the pieces that can cut each tile below a height."""
-        pieces, tiles = self.pieces, len(self.nodes.tile_start) - 1
-        start, none = np.zeros(tiles + 1, np.int64), np.empty(0, np.int32)
-        self.state[:] = 0
-        arguments = (
-            self.surface,
-            pieces.c0,
-            pieces.c1,
-            pieces.size,
-            pieces.active,
-            high_mm,
-            self.nodes.tiling,
-        )
-        _reach_kernels.bin_pieces(*arguments, start, none, self.state)
-        start = np.cumsum(start)
+        boxes, found, start = self._count(high_mm)
         listing = np.empty(int(start[-1]), np.int32)
         if listing.size:
-            _reach_kernels.bin_pieces(*arguments, start, listing, self.state)
+            _reach_kernels.bin_boxes(self.chunks, boxes, found, self.nodes.tiling, start, listing)
         self.lists = (start, listing)
         if np.any(self.state == 2) and np.isinf(self.floor[0]):
             self.floor = self._depths(np.arange(len(self.height)))
+
+    def _count(self, high_mm: float) -> tuple[Floats, Bytes, npt.NDArray[np.int64]]:
+        """Find what each chunk of motion can reach and where each tile's list begins; sets the state of each piece."""
+        own, count = self.pieces, int(self.chunks[-1])
+        boxes, found = np.empty((count, 4)), np.empty(count, np.uint8)
+        motion = (own.c0, own.c1, own.a0, own.a1, own.size, own.active)
+
+        def run(span: tuple[int, int]) -> None:
+            _reach_kernels.reach_boxes(self.surface, *motion, high_mm, self.chunks, span, boxes, found)
+
+        in_threads(run, spans(len(own.c0)))
+        self.state = np.maximum.reduceat(found, self.chunks[:-1])
+        start, none = np.zeros(len(self.nodes.tile_start), np.int64), np.empty(0, np.int32)
+        _reach_kernels.bin_boxes(self.chunks, boxes, found, self.nodes.tiling, start, none)
+        return boxes, found, np.cumsum(start)
+
+    def deep_trials(self) -> float:
+        """Return how often nodes would be tried with pieces that run far below the surface."""
+        _, _, start = self._count(self.low)
+        reached, deep = np.count_nonzero(self.state), np.count_nonzero(self.state == 2)
+        return float(np.sum(np.diff(start) * np.diff(self.nodes.tile_start))) * deep / max(1, reached)
 
     def _depths(self, rows: npt.NDArray[np.int64]) -> Floats:
         return part_depths_mm(
@@ -249,7 +268,9 @@ def _deeper(gouge: Gouge, field: _Field) -> Gouge:
 
 def _first_reach_mm(job: Job) -> float:
     """Return a height [mm] that finishing passes are likely to come below everywhere: short lists for the first cut."""
-    limits = [operation.scallop_mm for operation in job.operations if operation.scallop_mm]
+    every = [operation for operation in job.operations if operation.scallop_mm]
+    last = [operation for operation in every if operation.does == "finish"] or every
+    limits = [operation.scallop_mm for operation in last if operation.scallop_mm]
     return 3.0 * max(limits) if limits else UNCUT_MM / 10.0
 
 

@@ -18,14 +18,8 @@ __all__ = ["compare_picture"]
 
 _SHEET_IN = (11.5, 6.6)
 # Cutter and pattern are told apart by shape as well as by colour.
-_MARKS = (
-    ("o", "#0b5c8a"),
-    ("s", "#b3400a"),
-    ("^", "#2e6b3e"),
-    ("D", "#6b3fa0"),
-    ("v", "#8a6d0b"),
-    ("P", "#5b5b5b"),
-)
+_SHAPES = ("o", "s", "^", "D", "v", "P", "X", "h")
+_COLOURS = ("#0b5c8a", "#b3400a", "#2e6b3e", "#6b3fa0", "#8a6d0b")
 # Times that spread further than this are drawn on a logarithmic scale.
 _WIDE = 5.0
 _ROWS = 12  # of the list beside the plot
@@ -97,7 +91,10 @@ def _draw(figure: Any, job: Job, one: Comparison, units: Units, top_in: float) -
 def _marks(front: Sequence[FrontPoint]) -> dict[tuple[int, str], tuple[str, str]]:
     """Return shape and colour of every cutter and pattern, in a fixed order."""
     names = sorted({point.case.family for point in front})
-    return {name: _MARKS[number % len(_MARKS)] for number, name in enumerate(names)}
+    return {
+        name: (_SHAPES[number % len(_SHAPES)], _COLOURS[number % len(_COLOURS)])
+        for number, name in enumerate(names)
+    }
 
 
 def _points(
@@ -126,9 +123,10 @@ def _points(
                 mew=1.2,
                 zorder=5,
             )
+            # Cases keep to the limit, so there is room beyond it.
             axes.annotate(
-                "the job", (point.scallop_mm * small, point.time_s), (0, 11), textcoords="offset points", size=8.5,
-                ha="center", va="bottom", zorder=6,
+                "the job", (point.scallop_mm * small, point.time_s), (34, 0), textcoords="offset points", size=8.5,
+                ha="left", va="center", zorder=6, arrowprops={"arrowstyle": "-", "color": sheet.INK, "lw": 0.8, "shrinkB": 6},
             )  # fmt: skip
     # Between two points of the front the smoother one is the best there is.
     steps = ([point.scallop_mm * small for point in best], [point.time_s for point in best])
@@ -184,7 +182,9 @@ def _even_times(high_s: float) -> list[float]:
 def _time_text(seconds: float) -> str:
     if seconds < 60.0:
         return f"{seconds:g} s"
-    return f"{seconds / 60.0:g} min" if seconds < 3600.0 else f"{seconds / 3600.0:g} h"
+    if seconds % 60.0:
+        return clock(seconds)
+    return f"{seconds / 60.0:g} min" if seconds < 3600.0 or seconds % 3600.0 else f"{seconds / 3600.0:g} h"
 
 
 def _key(

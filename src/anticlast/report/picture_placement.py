@@ -44,7 +44,9 @@ def placement_picture(job: Job, placement: Placement | None, path: Path) -> None
 
     sheet.check_suffix(path)
     if placement is None:
-        raise BadInput(Fault(str(job.source), 0, "operation", "no operation follows the surface; nothing to place"))
+        raise BadInput(
+            Fault(str(job.source), 0, "operation", "no operation follows the surface; nothing to place")
+        )
     units = Units(job.units == "inch")
     axes_count = len(job.machine.axes)
     tall = _TOP + axes_count * _ROW + _FOOT
@@ -92,11 +94,23 @@ def _bars(axes: Any, axis: Axis, placement: Placement, units: Units) -> None:
     axes.text(-0.115, 0.5, axis.letter, transform=axes.transAxes, size=13, weight="bold", va="center")
     for row, (name, place) in enumerate(zip(("now", "best"), places, strict=False)):
         middle = row + 0.5
-        axes.barh(middle, (high - low) * factor, left=low * factor, height=0.78, color=sheet.BLANK, linewidth=0)
+        axes.barh(
+            middle, (high - low) * factor, left=low * factor, height=0.78, color=sheet.BLANK, linewidth=0
+        )
         for span, tall, colour in ((place.reach, 0.5, sheet.STEEL), (place.cut, 0.5, sheet.WIDE)):
             start, end = span[axis.letter]
-            axes.barh(middle, (end - start) * factor, left=start * factor, height=tall, color=colour, linewidth=0)
-        axes.text(-0.015, 1.0 - middle / len(places), name, transform=axes.transAxes, size=8.5, ha="right", va="center")
+            axes.barh(
+                middle, (end - start) * factor, left=start * factor, height=tall, color=colour, linewidth=0
+            )
+        axes.text(
+            -0.015,
+            1.0 - middle / len(places),
+            name,
+            transform=axes.transAxes,
+            size=8.5,
+            ha="right",
+            va="center",
+        )
         if axis.limits is not None:
             _margins(axes, place.margin[axis.letter], 1.0 - middle / len(places), factor, unit)
     if axis.limits is None:
@@ -133,7 +147,11 @@ def _key(axes: Any) -> None:
     axes.set_xlim(0.0, 10.0)
     axes.set_ylim(0.0, 1.0)
     axes.axis("off")
-    spots = ((0.0, sheet.WIDE, "in the cut"), (2.0, sheet.STEEL, "drawn back clear of the blank"), (5.4, sheet.BLANK, "limits"))
+    spots = (
+        (0.0, sheet.WIDE, "in the cut"),
+        (2.0, sheet.STEEL, "drawn back clear of the blank"),
+        (5.4, sheet.BLANK, "limits"),
+    )
     for left, colour, name in spots:
         axes.add_patch(Rectangle((left, 0.25), 0.35, 0.5, facecolor=colour, linewidth=0))
         axes.text(left + 0.48, 0.5, name, size=8.5, va="center")

@@ -78,7 +78,9 @@ def shares(motions: Motions, times: MotionTimes, edges_s: Floats) -> tuple[Float
     ends = np.cumsum(times.seconds)
     feed = motions.shape != Shape.RAPID
     rates = [np.where(feed, times.feed_only_s, 0.0)]
-    rates += [np.where(feed & (times.held_back_by == cause), times.seconds, 0.0) for cause in range(len(CAUSES))]
+    rates += [
+        np.where(feed & (times.held_back_by == cause), times.seconds, 0.0) for cause in range(len(CAUSES))
+    ]
     # What has passed by each edge, linear within a motion; the difference is what falls into the bin.
     grown = [
         np.diff(np.interp(edges_s, np.concatenate(([0.0], ends)), np.concatenate(([0.0], np.cumsum(rate)))))
@@ -137,7 +139,9 @@ def part_cells(
     at = middle[of, :2] + place[:, None] * way[of, :2]
     weight = (share / np.maximum(parts, 1))[of]
     sums = [
-        _blurred(np.histogram2d(at[:, 1], at[:, 0], bins=(y_edges, x_edges), weights=weight * value[row[of]])[0])
+        _blurred(
+            np.histogram2d(at[:, 1], at[:, 0], bins=(y_edges, x_edges), weights=weight * value[row[of]])[0]
+        )
         for value in (times.feed_only_s, times.seconds)
     ]
     with np.errstate(invalid="ignore", divide="ignore"):
@@ -171,7 +175,13 @@ def _over_part(figure: Any, job: Job, motions: Motions, times: MotionTimes, part
     width = min(4.9, 3.1 * (x1 - x0) / (y1 - y0))
     axes = sheet.axes_at(figure, 0.75, 3.55, width, width * (y1 - y0) / (x1 - x0))
     mesh = axes.pcolormesh(
-        x_edges * units.scale, y_edges * units.scale, shown, cmap=_colours(), vmin=0.0, vmax=100.0, rasterized=True
+        x_edges * units.scale,
+        y_edges * units.scale,
+        shown,
+        cmap=_colours(),
+        vmin=0.0,
+        vmax=100.0,
+        rasterized=True,
     )
     axes.add_patch(
         PathPatch(sheet.outline_path(job.part.outline, units.scale), fill=False, edgecolor=sheet.INK, lw=1.2)
@@ -199,7 +209,12 @@ def _bars(axes: Any, timed: ProgramTime) -> None:
         axes.barh(-place, item.lost_s, color=colour, height=0.4)
         name = f"{item.axis} axis, {item.cause}" if item.axis else item.cause
         axes.text(
-            0.0, -place + 0.42, f"{name}: {clock(item.lost_s)}, line {item.line}", size=8, va="center", color=sheet.INK
+            0.0,
+            -place + 0.42,
+            f"{name}: {clock(item.lost_s)}, line {item.line}",
+            size=8,
+            va="center",
+            color=sheet.INK,
         )
     axes.set_xlim(0.0, 1.05 * longest)
     axes.set_ylim(-len(items) + 0.65, 0.65)

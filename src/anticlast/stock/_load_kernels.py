@@ -13,7 +13,7 @@ from numba import njit
 COLUMNS = 16
 # An angle belongs to the engaged arc when what a tooth takes there turns the spindle by more than this share of the most: the
 # few hundredths of a mm round a ball's axis, where a tooth never leaves the material, do not count.
-_ARC_SHARE = 0.03
+_ARC_SHARE = 0.02
 
 
 @njit(cache=True, nogil=True)
@@ -28,7 +28,7 @@ def specific(h: float, laws: np.ndarray, found: np.ndarray) -> None:
 @njit(cache=True, nogil=True)
 def station_loads(
     first: int, after: int, hits: np.ndarray, frames: np.ndarray, shape_of: np.ndarray, places: np.ndarray, edges: np.ndarray,
-    inner: np.ndarray, outer: np.ndarray, flutes: np.ndarray, tooth_mm: np.ndarray, laws: np.ndarray, least: float,
+    inner: np.ndarray, outer: np.ndarray, rims: np.ndarray, flutes: np.ndarray, tooth_mm: np.ndarray, laws: np.ndarray, least: float,
     out: np.ndarray,
 ) -> None:  # fmt: skip
     """Work out each station's row of ``out`` from the marked points.
@@ -39,7 +39,7 @@ def station_loads(
     frames : (n, 15)
         See ``_field_kernels.sample_front``.
     shape_of : (n,) int64
-    places, edges, inner, outer : (shapes, rings, ...)
+    places, edges, inner, outer, rims : (shapes, rings, ...)
         See ``rings.Rings``.
     flutes : (shapes,) int64
     tooth_mm : (n,)
@@ -75,9 +75,9 @@ def station_loads(
                 c, d = circle[m, 0], circle[m, 1]
                 rx, ry, rz = c * ex + d * gx, c * ey + d * gy, c * ez + d * gz
                 turned = radius * (rx * f[12] + ry * f[13] + rz * f[14])
-                ahead = (f[9] + h * f[12] - turned * ax) * (radial * rx + axial * ax)
-                ahead += (f[10] + h * f[13] - turned * ay) * (radial * ry + axial * ay)
-                ahead += (f[11] + h * f[14] - turned * az) * (radial * rz + axial * az)
+                vx, vy, vz = f[9] + h * f[12] - turned * ax, f[10] + h * f[13] - turned * ay, f[11] + h * f[14] - turned * az
+                out_speed, up_speed = vx * rx + vy * ry + vz * rz, vx * ax + vy * ay + vz * az
+                ahead = radial * out_speed + axial * up_speed
                 if ahead <= least:
                     continue
                 lever[m] += ahead * edges[shape, ring] * radius
@@ -89,7 +89,8 @@ def station_loads(
                     continue
                 weight += edges[shape, ring]
                 chips += chip * edges[shape, ring]
-                row[CHIP_MAX] = max(row[CHIP_MAX], chip)
+                thickest = rims[shape, ring, 0] * out_speed + rims[shape, ring, 1] * up_speed
+                row[CHIP_MAX] = max(row[CHIP_MAX], chip, tooth_mm[n] * thickest)
                 if laws.shape[0] > 0:
                     specific(chip, laws, kc)
                     width = chip * edges[shape, ring]

@@ -128,6 +128,7 @@ def follow(
         np.array([getattr(ring, name) for ring in rings]).reshape(len(rings), -1)
         for name in ("edge_mm", "inner_mm", "outer_mm")
     )
+    tables = (*tables, np.array([ring.rim for ring in rings]).reshape(len(rings), -1, 2))
     places = ring_table(cutters)
     flutes = np.array([cutter.flutes for cutter in cutters], np.int64)
     feed = np.divide(60.0 * segments.length_mm, seconds, out=np.full(len(segments), np.nan), where=seconds > 0.0)
@@ -172,11 +173,13 @@ def _rows(
     feeding = ~segments.rapid
     section = windowed(path, np.where(feeding, volume, 0.0), segments.length_mm, reach)
     seen = windowed(path, found[:, kernels.AREA] * segments.length_mm, segments.length_mm, reach)
-    cutting = feeding & (section > 0.0) & (segments.length_mm > 0.0)
+    # What neighbours took is spread over this segment only if it meets stock itself.
+    meets = (volume > 0.0) | (found[:, kernels.AREA] > 0.0)
+    cutting = feeding & meets & (section > 0.0) & (segments.length_mm > 0.0)
     lowest, highest = windowed_extremes(path, low, high, reach)
     depth = np.where(cutting & (highest > lowest), highest - lowest, 0.0)
     scale = np.divide(section, seen, out=np.zeros(len(section)), where=seen > 0.0)
-    good = cutting & (seen > 0.0)
+    good = cutting & (seen > 0.0) & (found[:, kernels.AREA] > 0.0)
     scale = np.where(good, np.clip(scale, 1.0 / _MOST_SCALE, _MOST_SCALE), 0.0)
 
     def column(index: int) -> Floats:

@@ -32,12 +32,15 @@ class Rings:
         Radius at the end of that edge nearest to the axis: 0 where it reaches the axis.
     outer_mm : (rings,)
         Radius at its other end.
+    rim : (rings, 2)
+        Radial and axial part of the normal at that end: the chip is thickest there.
     """
 
     place: Floats
     edge_mm: Floats
     inner_mm: Floats
     outer_mm: Floats
+    rim: Floats
 
 
 def rings_of(cutter: Cutter) -> Rings:
@@ -48,13 +51,13 @@ def rings_of(cutter: Cutter) -> Rings:
     corner = cutter.corner_radius_mm
     disc = 0.0 if cutter.shape == "ball" else cutter.radius_mm - corner
     place, edge = np.zeros((RINGS, 4)), np.zeros(RINGS)
-    inner, outer = np.zeros(RINGS), np.zeros(RINGS)
+    inner, outer, rim = np.zeros(RINGS), np.zeros(RINGS), np.zeros((RINGS, 2))
     row = 0
     if disc > 0.0:
         step = disc / _BOTTOM
         for k in range(_BOTTOM):
             place[row] = -corner, (k + 0.5) * step, 0.0, -1.0
-            edge[row], inner[row], outer[row] = step, k * step, (k + 1) * step
+            edge[row], inner[row], outer[row], rim[row] = step, k * step, (k + 1) * step, (0.0, -1.0)
             row += 1
     if corner > 0.0:
         step = 0.5 * math.pi / _CORNER
@@ -63,14 +66,15 @@ def rings_of(cutter: Cutter) -> Rings:
             place[row] = -corner * math.cos(turn), disc + corner * math.sin(turn), math.sin(turn), -math.cos(turn)
             edge[row] = corner * step
             inner[row], outer[row] = (disc + corner * math.sin(turn + s * step / 2) for s in (-1.0, 1.0))
+            rim[row] = math.sin(turn + step / 2), -math.cos(turn + step / 2)
             row += 1
     up = max(0.0, cutter.flute_length_mm - corner)
     for k in range(_SIDE):
         low, high = (up * ((k + s) / _SIDE) ** 2 for s in (0.0, 1.0))
         place[row] = 0.5 * (low + high), cutter.radius_mm, 1.0, 0.0
-        edge[row], inner[row], outer[row] = high - low, cutter.radius_mm, cutter.radius_mm
+        edge[row], inner[row], outer[row], rim[row] = high - low, cutter.radius_mm, cutter.radius_mm, (1.0, 0.0)
         row += 1
-    return Rings(place, edge, np.where(inner < 1e-9, 0.0, inner), outer)
+    return Rings(place, edge, np.where(inner < 1e-9, 0.0, inner), outer, rim)
 
 
 def ring_table(cutters: Sequence[Cutter]) -> Floats:

@@ -18,6 +18,8 @@ if TYPE_CHECKING:
 
 # Points of a map along the longer side of the part.
 _MAP_SIDE = 240
+# Neighbouring columns that differ by more than this slope stand on two sides of a wall.
+_STEEPEST = 3.0
 # Steps to where the normal leaves the material; a smooth top needs three, at a wall the last step stands.
 _STEPS = 6
 
@@ -41,17 +43,19 @@ def tops_at_mm(field: StockField, x: Floats, y: Floats, empty_mm: float) -> Floa
     u, v = turned(x, y)
     s, t = (u - grid.u0_mm) / grid.spacing_mm, (v - grid.v0_mm) / grid.spacing_mm
     i, j = np.floor(s).astype(int), np.floor(t).astype(int)
-    total, weight = np.zeros(np.shape(x)), np.zeros(np.shape(x))
-    for dj in (0, 1):
-        for di in (0, 1):
-            ii, jj = i + di, j + dj
-            share = np.abs(1 - di - (s - i)) * np.abs(1 - dj - (t - j))
-            inside = (ii >= 0) & (ii < grid.columns) & (jj >= 0) & (jj < grid.rows)
-            ii, jj = np.clip(ii, 0, grid.columns - 1), np.clip(jj, 0, grid.rows - 1)
-            share = np.where(inside & (field.count[jj, ii] > 0), share, 0.0)
-            total += share * field.high_mm[0, jj, ii]
-            weight += share
-    return np.where(weight > 1e-9, total / np.maximum(weight, 1e-9), empty_mm)
+    tops, shares = np.zeros((4, *np.shape(x))), np.zeros((4, *np.shape(x)))
+    for corner, (dj, di) in enumerate(((0, 0), (0, 1), (1, 0), (1, 1))):
+        ii, jj = i + di, j + dj
+        inside = (ii >= 0) & (ii < grid.columns) & (jj >= 0) & (jj < grid.rows)
+        ii, jj = np.clip(ii, 0, grid.columns - 1), np.clip(jj, 0, grid.rows - 1)
+        share = np.abs(1 - di - (s - i)) * np.abs(1 - dj - (t - j))
+        shares[corner] = np.where(inside & (field.count[jj, ii] > 0), share, 0.0)
+        tops[corner] = field.high_mm[0, jj, ii]
+    # Across a wall nothing is read: the nearest column decides which side the point is on.
+    nearest = np.take_along_axis(tops, np.argmax(shares, axis=0)[None], axis=0)
+    shares = np.where(np.abs(tops - nearest) <= _STEEPEST * grid.spacing_mm, shares, 0.0)
+    weight = shares.sum(axis=0)
+    return np.where(weight > 1e-9, np.sum(shares * tops, axis=0) / np.maximum(weight, 1e-9), empty_mm)
 
 
 def thickness_mm(field: StockField, saddle: Saddle, xy: Floats, bottom_mm: float) -> Floats:
@@ -66,10 +70,12 @@ def thickness_mm(field: StockField, saddle: Saddle, xy: Floats, bottom_mm: float
         Counts as the top where there is no material.
     """
     z, normal = saddle.height(xy[:, 0], xy[:, 1]), saddle.normal(xy)
-    t = np.zeros(len(xy))
+    above = tops_at_mm(field, xy[:, 0], xy[:, 1], bottom_mm)
+    t = (above - z) / normal[:, 2]
     for _ in range(_STEPS):
-        top = tops_at_mm(field, xy[:, 0] + t * normal[:, 0], xy[:, 1] + t * normal[:, 1], bottom_mm)
-        t = (top - z) / normal[:, 2]
+        top = tops_at_mm(field, xy[:, 0] + t * normal[:, 0], xy[:, 1] + t * normal[:, 1], np.nan)
+        # Where the normal leaves the blank through its side, the top right above counts.
+        t = (np.where(np.isnan(top), above, top) - z) / normal[:, 2]
     return np.asarray(t)
 
 
