@@ -53,7 +53,9 @@ class RasterStock:
         window[met] = tip[2]
         return taken
 
-    def run(self, path: CutterPath, radius_mm: float, step_mm: float = 0.3) -> tuple[Cuts, dict[Purpose, float]]:
+    def run(
+        self, path: CutterPath, radius_mm: float, step_mm: float = 0.3
+    ) -> tuple[Cuts, dict[Purpose, float]]:
         """Make all moves of a path; return what its cutting moves met, and the volume each kind of move took."""
         width, angle, places = [], [], []
         volume = dict.fromkeys(Purpose, 0.0)

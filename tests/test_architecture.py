@@ -24,7 +24,7 @@ LAYERS = (
     {"pipeline", "compare"},
     {"cli"},
 )
-LOWER_HALF = {"readback", "proof"}
+LOWER_HALF = {"readback", "proof", "stock"}
 # What the read-back half may share with the planning half: records, geometry, nothing that plans or writes text.
 SHARED_WITH_LOWER_HALF = {
     "errors", "tolerances", "cutter", "records", "saddle", "outline", "readback", "proof", "stock", "materials",

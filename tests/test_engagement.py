@@ -6,7 +6,6 @@ import math
 
 import numpy as np
 import pytest
-from stock_bench import BALL, BULL, FLAT, SADDLE, block, engage, line, motion
 
 from anticlast import outline
 from anticlast.cutter import Cutter
@@ -15,6 +14,7 @@ from anticlast.stock import _field_kernels, _load_kernels
 from anticlast.stock.clearance import clearance_through_time, first_contact, slack_mm
 from anticlast.stock.field import LEAST_COSINE
 from anticlast.stock.rings import ANGLES, RINGS, rings_of
+from stock_bench import BALL, BULL, FLAT, SADDLE, block, engage, line, motion
 
 STEP_DEG = 360.0 / ANGLES  # arcs are told in whole steps
 INCH = 25.4
@@ -139,7 +139,7 @@ def test_slot_with_a_ball_meets_the_makers_table(diameter: float, depth: float, 
 
 
 def test_tilted_ball_does_not_cut_on_its_axis() -> None:
-    """D = 10, ap = 0.3, leaned 30 degrees sideways: contact at R sin 30, engaged from there on by acos(1 - 2 ap / D) to both sides.
+    """D = 10, ap = 0.3, leaned 30 degrees sideways: engaged by acos(1 - 2 ap / D) to both sides of the contact at R sin 30.
 
     Slowest at 2 R sin(30 - 19.9), fastest at D sin(30 + 19.9) = 7.65 (methods of the tilted effective diameter).
     """
@@ -262,7 +262,10 @@ def bodies(moves: object) -> dict[str, object]:
 def test_shank_in_its_own_slot_is_clear_and_holder_stands_over_it() -> None:
     """5 mm deep with 10 mm of flutes: shank 5 mm over the top, holder face 15 mm (closed form). Rapids 2.3 mm over the top."""
     found = bodies(
-        motion([[-45, 2, 30], [-45, 2, 5], [40, 2, 5], [40, 2, 30], [0, 8, 30], [0, 8, 12.3], [0, 8, 30]], rapid=[1, 1, 0, 1, 1, 1, 1])
+        motion(
+            [[-45, 2, 30], [-45, 2, 5], [40, 2, 5], [40, 2, 30], [0, 8, 30], [0, 8, 12.3], [0, 8, 30]],
+            rapid=[1, 1, 0, 1, 1, 1, 1],
+        )
     )
     slack = slack_mm(0.25, 15.0)
     assert found["shank"].distance_mm == pytest.approx(5.0, abs=slack)

@@ -164,7 +164,9 @@ def test_region_of_a_layer_against_the_height_itself(level: float) -> None:
 @pytest.mark.parametrize(("a", "b"), [(0.01, 0.01), (0.002, 0.02), (0.02, 0.003)])
 def test_lowest_tip_height_has_neither_summit_nor_lowest_point(sort: str, a: float, b: float) -> None:
     """So a region below a level is known by its rim, and reaches out of the blank."""
-    field = TipField.of_cutter(Saddle(a, b, 0.0), CUTTERS[sort], 0.3)  # its valley along the grid, lest nodes miss it
+    field = TipField.of_cutter(
+        Saddle(a, b, 0.0), CUTTERS[sort], 0.3
+    )  # its valley along the grid, lest nodes miss it
     z = Grid.over((-25.0, -25.0, 25.0, 25.0), 0.5, field.height_and_slope).z_mm
     around = np.stack([np.roll(np.roll(z, i, 0), j, 1) for i in (-1, 0, 1) for j in (-1, 0, 1) if i or j])
     inner = (slice(1, -1), slice(1, -1))
@@ -175,7 +177,9 @@ def test_lowest_tip_height_has_neither_summit_nor_lowest_point(sort: str, a: flo
 # ------------------------------------------------------------------------------------ the whole operation
 
 
-@pytest.mark.parametrize(("outline", "cutter"), [("rectangle", "flat"), ("circle", "bull"), ("holed", "ball"), ("L", "flat")])
+@pytest.mark.parametrize(
+    ("outline", "cutter"), [("rectangle", "flat"), ("circle", "bull"), ("holed", "ball"), ("L", "flat")]
+)
 def test_no_point_of_the_cutter_comes_nearer_than_the_allowance(outline: str, cutter: str) -> None:
     job = rough_job(outline, cutter)
     path = plan(job)
@@ -218,7 +222,9 @@ def test_engagement_and_what_is_left_of_an_open_blank(outline: str) -> None:
     assert volume[Purpose.ENTRY] == 0.0
     left = left_over(job, stock)
     assert left.min() >= operation.allowance_mm - 0.2 * MICROMETRE
-    assert left.max() <= limits.left_mm(operation, job.part) + 0.1  # a cell of the raster on the steepest slope, 0.36
+    assert (
+        left.max() <= limits.left_mm(operation, job.part) + 0.1
+    )  # a cell of the raster on the steepest slope, 0.36
     assert f"{limits.left_mm(operation, job.part):.2f} mm are left" in path.notes[0]
 
 
@@ -238,7 +244,9 @@ def test_slotting_only_where_it_is_asked_for() -> None:
     asked = rough_job(more="slotting = true\nwidth_of_cut = 9.0")
     _, cuts, _ = cut_raster(asked, plan(asked))
     assert cuts.width_mm.max() > 0.9 * 10.0
-    with pytest.raises(BadInput, match=r"width_of_cut.*at most half the diameter without slotting = true, 5 mm"):
+    with pytest.raises(
+        BadInput, match=r"width_of_cut.*at most half the diameter without slotting = true, 5 mm"
+    ):
         rough_job(more="width_of_cut = 9.0")
 
 
@@ -297,9 +305,14 @@ def test_closed_stock_is_entered_on_a_ramp(cutter: str) -> None:
 
 @settings(max_examples=40, derandomize=True, deadline=None)
 @given(
-    radius=st.floats(0.2, 8.0), drop=st.floats(0.05, 6.0), degrees=st.floats(0.5, 20.0), length=st.floats(0.5, 30.0)
+    radius=st.floats(0.2, 8.0),
+    drop=st.floats(0.05, 6.0),
+    degrees=st.floats(0.5, 20.0),
+    length=st.floats(0.5, 30.0),
 )
-def test_ramps_fall_by_their_angle_and_reach_the_floor(radius: float, drop: float, degrees: float, length: float) -> None:
+def test_ramps_fall_by_their_angle_and_reach_the_floor(
+    radius: float, drop: float, degrees: float, length: float
+) -> None:
     tangent = math.tan(math.radians(degrees))
     bent = length * np.array([[0.0, 0.0], [0.6, 0.0], [0.6, 0.4]])
     for way in (
@@ -334,9 +347,9 @@ def test_a_second_cutter_cuts_only_what_the_first_left() -> None:
     job = rough_job(more=SECOND)
     first, second = plan(job), plan(job, 1)
     alone = parse_job(
-        ROUGH.format(outline=SHAPES["rectangle"], cutter=SORTS["flat"], more="", margin=3.0, stock="").replace(
-            "does = \"rough\"\ncutter = 1\n", "does = \"rough\"\ncutter = 2\ndepth_of_cut = 0.8\n"
-        ),
+        ROUGH.format(
+            outline=SHAPES["rectangle"], cutter=SORTS["flat"], more="", margin=3.0, stock=""
+        ).replace('does = "rough"\ncutter = 1\n', 'does = "rough"\ncutter = 2\ndepth_of_cut = 0.8\n'),
         "job.toml",
     )
     assert second.cut_length_mm < 0.35 * plan(alone).cut_length_mm
@@ -360,8 +373,14 @@ def test_a_blank_brought_near_the_form_before_loses_only_what_stands_on_it() -> 
 def test_inch_job_is_the_same_path() -> None:
     text = job_text(machine="mill-3", outline='shape = "rectangle"\nsize = [25.4, 20.32]', a=0.01, top=5.08, bottom=-10.16,
                     margin=2.54, stock_extra="", diameter=7.62, cutter_shape="flat", clearance=5.08)  # fmt: skip
-    text = text.replace('does = "finish"', 'does = "rough"').replace('pattern = "raster"\n', "").replace("scallop = 0.01\n", "")
-    text = text.replace("feed = 1500", "feed = 1524\nallowance = 0.254").replace("tolerance = 0.004", "tolerance = 0.00508")
+    text = (
+        text.replace('does = "finish"', 'does = "rough"')
+        .replace('pattern = "raster"\n', "")
+        .replace("scallop = 0.01\n", "")
+    )
+    text = text.replace("feed = 1500", "feed = 1524\nallowance = 0.254").replace(
+        "tolerance = 0.004", "tolerance = 0.00508"
+    )
     inch = text.replace('units = "mm"', 'units = "inch"').replace("a = 0.01", "a = 0.254")
     for mm, other in (
         ("size = [25.4, 20.32]", "size = [1.0, 0.8]"), ("top = 5.08", "top = 0.2"), ("bottom = -10.16", "bottom = -0.4"),
@@ -419,10 +438,16 @@ def test_a_cutter_that_cannot_stand_upright_is_refused() -> None:
 @pytest.mark.parametrize(
     ("more", "fault"),
     [
-        ("depth_of_cut = 25.0", r"depth_of_cut: found 25 mm; needs at most the flute length of the cutter, 20 mm"),
+        (
+            "depth_of_cut = 25.0",
+            r"depth_of_cut: found 25 mm; needs at most the flute length of the cutter, 20 mm",
+        ),
         ("width_of_cut = 2.0\nstepover = 2.0", r"width_of_cut: given besides stepover"),
         ("reach = 5.0", r"reach: found 5 mm; needs at least the diameter of the cutter, 10 mm"),
-        ("tabs = 3", r'tabs: has no place in an operation that does "rough"; only in one that does "outline"'),
+        (
+            "tabs = 3",
+            r'tabs: has no place in an operation that does "rough"; only in one that does "outline"',
+        ),
     ],
 )
 def test_keys_that_do_not_fit_are_told(more: str, fault: str) -> None:
@@ -474,7 +499,11 @@ tolerance = 0.005
 def test_rough_semi_finish_and_finish_are_released(tmp_path) -> None:
     job_file = tmp_path / "job.toml"
     text = ROUGH.format(
-        outline='shape = "rectangle"\nsize = [24.0, 18.0]', cutter=SORTS["flat"], more=WHOLE, margin=3.0, stock=""
+        outline='shape = "rectangle"\nsize = [24.0, 18.0]',
+        cutter=SORTS["flat"],
+        more=WHOLE,
+        margin=3.0,
+        stock="",
     )
     job_file.write_text(text, encoding="utf-8")
     made = pipeline.make(job_file, tmp_path / "out", grid_mm=0.2)

@@ -87,7 +87,9 @@ def plan(job: Job) -> CutterPath:
     return plan_outline(job, job.operations[-1], lambda axis: axis)
 
 
-def cut(job: Job, path: CutterPath, stock: RasterStock | None = None) -> tuple[RasterStock, dict[Purpose, float]]:
+def cut(
+    job: Job, path: CutterPath, stock: RasterStock | None = None
+) -> tuple[RasterStock, dict[Purpose, float]]:
     stock = RasterStock(job.stock.outline, job.stock.top_mm) if stock is None else stock
     _, volume = stock.run(path, path.operation.cutter.radius_mm)
     return stock, volume
@@ -136,7 +138,9 @@ def test_climbing_round_the_outside_and_inside_holes(outline: str) -> None:
     right = wrong = 0
     for stretch in path.stretches:
         step = np.diff(stretch.tip_mm, axis=0)
-        for k in np.flatnonzero((stretch.purpose[1:] == Purpose.CUT) & (np.hypot(step[:, 0], step[:, 1]) > 0.3)):
+        for k in np.flatnonzero(
+            (stretch.purpose[1:] == Purpose.CUT) & (np.hypot(step[:, 0], step[:, 1]) > 0.3)
+        ):
             along = step[k, :2] / np.hypot(*step[k, :2])
             middle = 0.5 * (stretch.tip_mm[k, :2] + stretch.tip_mm[k + 1, :2])
             side = (radius + 0.3) * np.array([along[1], -along[0]])
@@ -150,7 +154,9 @@ def test_tabs_stand_to_their_height_and_width_and_nothing_else_holds_the_part() 
     job = outline_job("circle", more="tabs = 3\ntab_width = 2.5\ntab_height = 1.2")
     stock, _ = cut(job, plan(job))
     turn = np.arange(0.0, 360.0, 0.1)
-    middle = 17.0 * np.column_stack((np.cos(np.radians(turn)), np.sin(np.radians(turn))))  # of the groove, 14 + 3
+    middle = 17.0 * np.column_stack(
+        (np.cos(np.radians(turn)), np.sin(np.radians(turn)))
+    )  # of the groove, 14 + 3
     height = stock.at(middle)
     top, floor = job.stock.bottom_mm + 1.2, job.stock.bottom_mm
     assert set(np.unique(np.round(height, 6))) == {round(floor, 6), round(top, 6)}
@@ -202,7 +208,8 @@ def test_no_way_down_in_stock_is_steeper_than_the_ramp(outline: str, more: str) 
             step = stretch.tip_mm[k] - stretch.tip_mm[k - 1]
             count = max(1, math.ceil(float(np.linalg.norm(step)) / 0.3))
             taken = sum(
-                stock.cut(stretch.tip_mm[k - 1] + share * step, 3.0) for share in np.arange(1, count + 1) / count
+                stock.cut(stretch.tip_mm[k - 1] + share * step, 3.0)
+                for share in np.arange(1, count + 1) / count
             )
             if step[2] < 0.0:
                 flat = float(np.hypot(step[0], step[1]))
@@ -264,7 +271,11 @@ def test_inch_job_is_the_same_path() -> None:
         flutes=20.32, machine="mill-3",
     ).replace("stickout = 32.0", "stickout = 30.48").replace("holder = [[16.0, 20.0], [32.0, 25.0]]\n", "")  # fmt: skip
     text = text.replace("feed = 600", "feed = 635").replace("diameter = 6.0", "diameter = 6.35")
-    text = text.replace("top = 4.0", "top = 5.08").replace("bottom = -8.0", "bottom = -7.62").replace("0.0, 40.0]", "0.0, 38.1]")
+    text = (
+        text.replace("top = 4.0", "top = 5.08")
+        .replace("bottom = -8.0", "bottom = -7.62")
+        .replace("0.0, 40.0]", "0.0, 38.1]")
+    )
     inch = text.replace('units = "mm"', 'units = "inch"')
     for mm, other in (
         ("a = 0.008", "a = 0.2032"), ("[25.4, 20.32]", "[1.0, 0.8]"), ("tab_height = 1.27", "tab_height = 0.05"),
@@ -284,9 +295,15 @@ def test_inch_job_is_the_same_path() -> None:
 
 @pytest.mark.parametrize(
     ("machine", "outline", "margin", "more"),
-    [("mill-3", "rounded", 3.0, ""), ("trunnion-ac", "circle", 12.0, ""), ("head-b-table-c", "holed", 9.0, "skin = 0.3")],
+    [
+        ("mill-3", "rounded", 3.0, ""),
+        ("trunnion-ac", "circle", 12.0, ""),
+        ("head-b-table-c", "holed", 9.0, "skin = 0.3"),
+    ],
 )
-def test_rough_and_outline_are_released(machine: str, outline: str, margin: float, more: str, tmp_path) -> None:
+def test_rough_and_outline_are_released(
+    machine: str, outline: str, margin: float, more: str, tmp_path
+) -> None:
     text = OUTLINE.format(
         outline=SHAPES[outline], more=more, margin=margin, rough=ROUGH, flutes=20.0, machine=machine
     )

@@ -9,10 +9,8 @@ import manifold3d
 import numpy as np
 import pytest
 import trimesh
-from conftest import JobMaker, job_text
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from stock_bench import BALL, BLOCK, BULL, FLAT, SADDLE, block, cut, motion, profile_mm, slot_volume_mm3
 
 from anticlast import outline
 from anticlast.cutter import Cutter
@@ -27,6 +25,8 @@ from anticlast.stock.blank import blank_field, offset_heights_mm
 from anticlast.stock.grid import TURN_RAD, ColumnGrid, back, turned, turned_surface
 from anticlast.stock.sweep import lay_stations, seconds_of, shape_table, take_segments
 from anticlast.stock.thickness import thickness_map, thickness_mm, thickness_range
+from conftest import JobMaker, job_text
+from stock_bench import BALL, BLOCK, BULL, FLAT, SADDLE, block, cut, motion, profile_mm, slot_volume_mm3
 
 MICROMETRE = 1e-3
 CUTTERS = {"flat": FLAT, "ball": BALL, "bull": BULL}
@@ -424,8 +424,8 @@ def test_body_distances_agree_with_their_twins() -> None:
     """Twin: the nearest of many points of the cylinder's surface, and of many places on the line."""
     rng = np.random.default_rng(2)
     body = np.array([2.0, 3.0, 9.0, 0.0])
-    angle, height, share = (grid.ravel() for grid in np.meshgrid(np.linspace(0, 2 * math.pi, 400), np.linspace(3, 9, 120), [0.0, 1.0]))
-    side = np.column_stack((2.0 * np.cos(angle), 2.0 * np.sin(angle), height))[share == 0.0]
+    angle, height = (grid.ravel() for grid in np.meshgrid(np.linspace(0, 2 * math.pi, 400), np.linspace(3, 9, 120)))
+    side = np.column_stack((2.0 * np.cos(angle), 2.0 * np.sin(angle), height))
     disc = rng.uniform(-2.0, 2.0, (40000, 2))
     disc = disc[np.hypot(*disc.T) <= 2.0]
     skin = np.concatenate((side, *(np.column_stack((disc, np.full(len(disc), z))) for z in (3.0, 9.0))))
@@ -449,7 +449,8 @@ def test_tile_tops_and_boxes() -> None:
     assert tops[0, 0] == high[0, :8, :8].max()
     assert tops[2, 3] == high[0, 16:, 24:].max()
     box = np.empty(5)
-    kernels.plan_box(_scratch(BALL, np.zeros(3), np.array([0, 0, 1.0]), np.array([4.0, 1.0, 2.0]), np.array([0, 0, 1.0])), 50.0, box)
+    up = np.array([0.0, 0.0, 1.0])
+    kernels.plan_box(_scratch(BALL, np.zeros(3), up, np.array([4.0, 1.0, 2.0]), up), 50.0, box)
     np.testing.assert_allclose(box, [-3.0, -3.0, 7.0, 4.0, -3.0])
 
 

@@ -8,7 +8,6 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from conftest import job_text
 from typer.testing import CliRunner
 
 from anticlast import pipeline
@@ -21,6 +20,7 @@ from anticlast.report.picture_stock import stock_picture
 from anticlast.saddle import Saddle
 from anticlast.stock.preview import StockPreview, stock_preview
 from anticlast.stock.program_passes import passes_of
+from conftest import job_text
 
 TILE = """\
 [job]

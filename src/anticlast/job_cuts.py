@@ -35,7 +35,9 @@ def check_cut(
     for key, owners in _BELONGS.items():
         if key in operation.given and does not in owners:
             known = " or ".join(f'"{owner}"' for owner in owners)
-            operation.fault(key, f'has no place in an operation that does "{does}"; only in one that does {known}')
+            operation.fault(
+                key, f'has no place in an operation that does "{does}"; only in one that does {known}'
+            )
     cutter = next((item for item in cutters if item.get("number") == operation.get("cutter")), None)
     if cutter is not None:
         _check_sizes(operation, cutter, units)
@@ -48,7 +50,8 @@ def _check_sizes(operation: Checked[OperationTable], cutter: Checked[CutterTable
     if depth is not None and flutes is not None and depth > flutes:
         limit = length_text(flutes, units)
         operation.fault(
-            "depth_of_cut", f"found {length_text(depth, units)}; needs at most the flute length of the cutter, {limit}"
+            "depth_of_cut",
+            f"found {length_text(depth, units)}; needs at most the flute length of the cutter, {limit}",
         )
     width, diameter, reach = operation.get("width_of_cut"), cutter.get("diameter"), operation.get("reach")
     if reach is not None and diameter is not None and reach < diameter:
@@ -63,9 +66,14 @@ def _check_sizes(operation: Checked[OperationTable], cutter: Checked[CutterTable
         return
     limit = diameter if operation.get("slotting") else 0.5 * diameter
     if width > limit:
-        hint = "the diameter of the cutter" if operation.get("slotting") else "half the diameter without slotting = true"
+        hint = (
+            "the diameter of the cutter"
+            if operation.get("slotting")
+            else "half the diameter without slotting = true"
+        )
         operation.fault(
-            "width_of_cut", f"found {length_text(width, units)}; needs at most {hint}, {length_text(limit, units)}"
+            "width_of_cut",
+            f"found {length_text(width, units)}; needs at most {hint}, {length_text(limit, units)}",
         )
 
 
@@ -77,7 +85,8 @@ def _check_outline(
 ) -> None:
     if cutter is not None and cutter.get("shape") in ("ball", "bull"):
         operation.fault(
-            "cutter", f'found a {cutter.get("shape")} cutter; an operation that does "outline" needs a flat one'
+            "cutter",
+            f'found a {cutter.get("shape")} cutter; an operation that does "outline" needs a flat one',
         )
     for key in ("scallop", "stepover"):
         if key in operation.given:

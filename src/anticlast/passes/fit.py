@@ -29,9 +29,9 @@ _MIDDLE_SHARE = 0.9
 # Leads asked first where the machine reaches every axis, as shares of the one that osculates; then between the best two.
 _SHARES = np.array([0.3, 0.45, 0.65, 0.95, 1.4, 2.2, 4.0, 8.0, 16.0])
 _LEADS_ASKED = 11
-_SECTIONS = 11
-# Where the machine's lean swings from front to side, the contact must not travel round the rim faster than this share of the feed:
-# else it would run backwards, and a strip looked at here and there would not tell what is left between.
+_SECTIONS = 15
+# Where the machine's lean swings from front to side, the contact must not travel round the rim faster than this share of the
+# feed: else it would run backwards, and a strip looked at here and there would not tell what is left between.
 _MOST_SWING = 0.5
 _GOLDEN = 0.6180339887498949
 # Profile samples to either side of the line, dense beside it: a contact near the rim of the bottom leaves narrow strips.
@@ -342,7 +342,7 @@ def _symmetric(nodes: Floats) -> bool:
 
 
 def _turned_over(one: Fit) -> Fit:
-    """Return a fit for both ways from that for one, on symmetric grids: half a turn about Z takes saddle and passes to each other.
+    """Return a fit for both ways from that for one, on symmetric grids: half a turn about Z swaps the ways.
 
     A pass at (u, v) fed against +u is the pass at (-u, -v) fed along it; its left is that one's right.
     """

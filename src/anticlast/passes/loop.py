@@ -28,7 +28,9 @@ class Loop:
     def points(self, place_mm: Floats) -> Floats:
         """Return the points (n, 2) at lengths (n,) along the path."""
         place = np.asarray(place_mm, dtype=np.float64) % self.length_mm
-        return np.column_stack((np.interp(place, self.at, self.xy[:, 0]), np.interp(place, self.at, self.xy[:, 1])))
+        return np.column_stack(
+            (np.interp(place, self.at, self.xy[:, 0]), np.interp(place, self.at, self.xy[:, 1]))
+        )
 
     def between(self, start_mm: float, end_mm: float) -> Floats:
         """Return the path (n, 2) from one length to another further on, both ends and all corners between."""

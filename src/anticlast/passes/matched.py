@@ -5,8 +5,6 @@ docs/theory-matched.md.
 
 from __future__ import annotations
 
-import math
-
 import numpy as np
 
 from anticlast.errors import CannotPlan
@@ -25,8 +23,6 @@ from anticlast.records import Bools, CutterPath, Job, Operation, Purpose
 _LINK_SECONDS = 1.0
 # Of the machine stage's half of the budget, what the highest of many ridges is usually raised by.
 _LINEAR_SHARE = 0.5
-# A matched operation that takes this many times the passes of a ball is refused.
-_MOST_BALLS = 2.0
 _LOOK_MM = 1.5
 
 
@@ -47,7 +43,7 @@ def plan_matched(job: Job, operation: Operation, nearest: Nearest, rise_mm: floa
     ------
     CannotPlan
         If the axis is fixed; if the cutter finds no strip somewhere, for no lean within reach keeps limit, tolerance
-        and tilt error; or if a ball of the same radius would take less than half the passes.
+        and tilt error; or if a ball of the same radius would take far fewer passes.
     NotConverged
         If no spacing of the passes settles.
     """
@@ -57,7 +53,7 @@ def plan_matched(job: Job, operation: Operation, nearest: Nearest, rise_mm: floa
     if isinstance(best, NoStrip):
         raise notes.no_strip(task, best, job.machine.name)
     wanted = best[1].v_mm.size
-    _require_better_than_ball(task, wanted)
+    notes.check_against_ball(task, wanted)
     laid = lay(task, *best)
     legs = legs_of(task.frame, laid.pieces, laid.order, _stays(task, laid))
     chords = Chords(0.5 * task.budget_mm, min(task.budget_mm, 0.5 * operation.tolerance_mm))
@@ -90,18 +86,6 @@ def _require(operation: Operation) -> None:
             f"operation {operation.index}: pattern 'matched' sets the lean of the cutter itself; "
             'leave axis = "fixed" out, or use a ball and another pattern',
         )
-
-
-def _require_better_than_ball(task: Task, passes: int) -> None:
-    """Raise `CannotPlan` if a ball of the same radius, at the narrowest of its steps, takes far fewer passes."""
-    u, v = (at[task.counts.ravel()] for at in task.stations())
-    step = notes.ball_steps_mm(task, u, v)
-    if step is None:
-        return
-    low, high = task.outline.v_range(task.frame.direction_rad)
-    ball_passes = math.ceil((high - low) / float(step.min()))
-    if passes > _MOST_BALLS * ball_passes:
-        raise notes.narrower_than_ball(task, passes, ball_passes)
 
 
 def _stays(task: Task, laid: Laid) -> Bools:

@@ -26,13 +26,13 @@ _LOOK_MM = 1.5
 _LOOK_ASIDE = 5
 # What a pass leaves this share of the way to its neighbour is its own: no other cuts there.
 _OWN_SHARE = 0.4
-_ROUNDS = 10
+_ROUNDS = 12
 # Passes may lie this share of the tolerance below the surface between stations before they are raised.
 _SINK_SHARE = 0.25
 # The height is lowered until the passes come out at a whole number within this share of one.
 _EVEN_SHARE = 0.05
 # Where something stands too high, steps are cut down for this share of the limit.
-_UNDER = 0.998
+_UNDER = 0.98
 
 
 @dataclass(frozen=True, slots=True)

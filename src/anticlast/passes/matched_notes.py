@@ -18,6 +18,10 @@ from anticlast.passes.strips import NoStrip
 from anticlast.records import Bools, Floats
 
 
+# A matched operation that takes this many times the passes of a ball is refused.
+_MOST_BALLS = 1.25
+
+
 def notes_of(task: Task, laid: Laid, wanted: int, lifts: int) -> tuple[str, ...]:
     """Return the notes of a planned operation.
 
@@ -95,16 +99,20 @@ def _ball_note(task: Task, inside: Bools, width: Floats) -> str:
     return text
 
 
-def _turned_note(task: Task, wanted: int) -> str:
-    """Say what turning the part a quarter turn on the table would gain, on a machine that does not reach every axis."""
+def _turned_note(task: Task, wanted: int | None) -> str:
+    """Say what turning the part a quarter turn on the table would gain, on a machine that does not reach every axis.
+
+    ``wanted`` are the passes as the part lies, None if it cannot be cut so.
+    """
     best = task.with_part_turned().best()
+    turned = "with the part turned 90 degrees on the table"
     if isinstance(best, NoStrip):
-        return (
-            f"with the part turned 90 degrees on the table there would be no strip near ({_xy(task, best)})"
-        )
+        return f"{turned} there would be no strip near ({_xy(task, best)})"
     then = best[1].v_mm.size
+    if wanted is None:
+        return f"{turned} it would take about {then} passes"
     gain = f"{100.0 * (1.0 - then / wanted):.0f} % fewer" if then < wanted else "no gain"
-    return f"with the part turned 90 degrees on the table it would take about {then} passes instead of {wanted}: {gain}"
+    return f"{turned} it would take about {then} passes instead of {wanted}: {gain}"
 
 
 def _xy(task: Task, at: NoStrip) -> str:
@@ -115,30 +123,34 @@ def _xy(task: Task, at: NoStrip) -> str:
 def no_strip(task: Task, at: NoStrip, machine: str) -> CannotPlan:
     """Return the refusal of an operation that finds no strip at a place: why, and what would mend it."""
     operation, cutter = task.operation, task.operation.cutter
+    limit, gouge = 1e3 * (operation.scallop_mm or 0.0), 1e3 * operation.tolerance_mm
     why = (
         f"a {2.0 * cutter.radius_mm:.4g} mm {cutter.shape} end mill finds no lean near ({_xy(task, at)}) at which it leaves no "
-        f"more than {1e3 * (operation.scallop_mm or 0.0):.3g} µm and gouges no more than {1e3 * operation.tolerance_mm:.3g} µm under "
-        f"a tilt error of {math.degrees(operation.lead_margin_rad):.3g} degrees"
+        f"more than {limit:.3g} µm and gouges no more than {gouge:.3g} µm under a tilt error of "
+        f"{math.degrees(operation.lead_margin_rad):.3g} degrees"
     )
     if task.full:
         mend = "use a smaller cutter, a larger tolerance or a smaller lead_margin"
     else:
-        mend = (
-            f"{machine} cannot lean it as it needs: turn the part on the table, use a machine with two rotary axes, or a ball "
-            "and another pattern"
-        )
+        mend = f"{machine} cannot lean it as it needs: {_turned_note(task, None)}; or use a ball and another pattern"
     return CannotPlan("strip", f"operation {operation.index}: {why}; {mend}")
 
 
-def narrower_than_ball(task: Task, passes: int, ball_passes: int) -> CannotPlan:
-    """Return the refusal of an operation that a ball of the same radius does in far fewer passes."""
-    operation = task.operation
-    return CannotPlan(
+def check_against_ball(task: Task, passes: int) -> None:
+    """Raise `CannotPlan` if a ball of the same radius, at the narrowest of its steps, takes far fewer passes."""
+    u, v = (at[task.counts.ravel()] for at in task.stations())
+    step = ball_steps_mm(task, u, v)
+    if step is None:
+        return
+    low, high = task.outline.v_range(task.frame.direction_rad)
+    balls = math.ceil((high - low) / float(step.min()))
+    if passes <= _MOST_BALLS * balls:
+        return
+    raise CannotPlan(
         "strip",
-        f"operation {operation.index}: matched strips would take {passes} passes, a ball of the same radius about {ball_passes}; "
-        "use the ball and another pattern, or another direction"
-        + ("" if task.full else ", turn the part on the table, or use a machine with two rotary axes"),
+        f"operation {task.operation.index}: matched strips would take about {passes} passes, a ball of the same radius {balls}; "
+        "use the ball and another pattern, or another direction" + ("" if task.full else f"; {_turned_note(task, passes)}"),
         float(passes),
-        float(ball_passes),
+        _MOST_BALLS * balls,
         "passes",
     )

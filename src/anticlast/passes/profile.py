@@ -118,7 +118,7 @@ class Sweep:
 
     def _tool(self) -> Floats:
         rounds = _ROUNDS_ROUND if self.cutter.corner_radius_mm > 0.0 else _ROUNDS_SHARP
-        # Between rows a corner arc dips by half a step squared over its diameter, a sharp edge by what the bottom's slope lets it.
+        # Between rows a corner arc dips by half a step squared over its diameter, a sharp edge by what its slope lets it.
         corner = self.cutter.corner_radius_mm
         dip = self.step_mm * min(_STEEPEST_BOTTOM, self.step_mm / (8.0 * corner) if corner > 0.0 else np.inf)
         return np.array([self.disc_mm, corner, float(rounds), 1.5 * dip])

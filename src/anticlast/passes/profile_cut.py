@@ -55,7 +55,9 @@ def contours(job: Job, operation: Operation) -> tuple[list[Loop], int]:
     turned = [shapely.orient_polygons(part, exterior_cw=True) for part in parts]
     rings = [part.exterior for part in turned] + [ring for part in turned for ring in part.interiors]
     holes = sum(len(part.interiors) for part in shapely.get_parts(outline.polygon))
-    return [Loop(shapely.get_coordinates(ring)) for ring in rings], holes - sum(len(part.interiors) for part in turned)
+    return [Loop(shapely.get_coordinates(ring)) for ring in rings], holes - sum(
+        len(part.interiors) for part in turned
+    )
 
 
 def plan_outline(job: Job, operation: Operation, nearest_axis: Nearest) -> CutterPath:
@@ -99,7 +101,9 @@ def plan_outline(job: Job, operation: Operation, nearest_axis: Nearest) -> Cutte
         notes.update(dict.fromkeys(cut.notes))
     track.lift()
     if not track.stretches:
-        raise CannotPlan("outline", f"operation {operation.index}: no stock stands along the outline above z = {floor:.3f}")
+        raise CannotPlan(
+            "outline", f"operation {operation.index}: no stock stands along the outline above z = {floor:.3f}"
+        )
     return CutterPath(
         operation=operation,
         stretches=tuple(track.stretches),
@@ -193,7 +197,9 @@ class _Contour:
             )
         if not self.tabs and free:
             hole = shapely.is_ccw(LinearRing(self.loop.xy))
-            self.notes.append(f"the {'piece in a hole' if hole else 'part'} comes free of the blank: hold it from below")
+            self.notes.append(
+                f"the {'piece in a hole' if hole else 'part'} comes free of the blank: hold it from below"
+            )
 
     def _cuts(self, standing: BaseGeometry) -> Bools:
         """Tell at which places the cutter is in stock that stands over a level."""
@@ -278,7 +284,9 @@ class _Contour:
             path = loop.between(start, end)
             # The first way down starts in the layer above, the others where the tip has come across a tab.
             down_from = above if number == 0 else min(above, over)
-            if number == 0 and (track.stands is None or np.abs(track.stands[:2] - path[0]).max() > SAME_POINT_MM):
+            if number == 0 and (
+                track.stands is None or np.abs(track.stands[:2] - path[0]).max() > SAME_POINT_MM
+            ):
                 track.start([*path[0], max(over, above)], self.rounds)
             track.link(_level(path[:1], down_from), self.rounds)
             tips = ramp.along(path, down_from, z, self.operation.cutter.ramp_angle_rad)

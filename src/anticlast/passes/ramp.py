@@ -67,7 +67,9 @@ def along(xy: Floats, top_mm: float, floor_mm: float, ramp_rad: float) -> Floats
     length = float(at[-1])
     needed = (top_mm - floor_mm) / math.tan(ramp_rad)
     laps = math.ceil(needed / length - 1e-9)
-    there = np.concatenate([at[:-1] + lap * length if lap % 2 == 0 else (lap + 1) * length - at[:0:-1] for lap in range(laps)])
+    there = np.concatenate(
+        [at[:-1] + lap * length if lap % 2 == 0 else (lap + 1) * length - at[:0:-1] for lap in range(laps)]
+    )
     there = np.append(there[there < needed], needed)
     place = np.where((there // length) % 2 == 0, there % length, length - there % length)
     # A whole number of laps ends exactly at an end of the path.

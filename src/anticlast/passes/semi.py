@@ -20,4 +20,6 @@ def notes_of(operation: Operation, scallop_mm: float) -> tuple[str, ...]:
     if operation.does != "semi-finish":
         return ()
     least, most = operation.allowance_mm, operation.allowance_mm + scallop_mm
-    return (f"leaves {least:.3f} to {most:.3f} mm on the surface: even to {1000.0 * scallop_mm:.0f} micrometres",)
+    return (
+        f"leaves {least:.3f} to {most:.3f} mm on the surface: even to {1000.0 * scallop_mm:.0f} micrometres",
+    )

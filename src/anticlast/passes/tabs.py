@@ -42,7 +42,9 @@ def lay_tabs(
     pitch = length / count
     starts = np.arange(count) * pitch
     shifts = np.arange(_PHASES) * pitch / _PHASES
-    turning = [sum(loop.bend_rad(s + shift - half_mm, s + shift + half_mm) for s in starts) for shift in shifts]
+    turning = [
+        sum(loop.bend_rad(s + shift - half_mm, s + shift + half_mm) for s in starts) for shift in shifts
+    ]
     held = [_held(loop, starts + shift, groove_mm, blank) for shift in shifts]
     best = min(range(_PHASES), key=lambda i: (-int(held[i].sum()), round(turning[i], 6), i))
     middle = (starts + shifts[best])[held[best]]

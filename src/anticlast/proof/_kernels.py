@@ -203,6 +203,77 @@ def entry_and_slope(
 
 
 @njit(cache=True, nogil=True)
+def off_mill(p: tuple, n: tuple, c: np.ndarray, axis: np.ndarray, size: np.ndarray, out: np.ndarray) -> float:
+    """Return a point's distance from a bull or flat end mill [mm], its gradient in ``out``; 0 or less inside."""
+    wx, wy, wz = p[0] - c[0], p[1] - c[1], p[2] - c[2]
+    z = wx * axis[0] + wy * axis[1] + wz * axis[2]
+    wx, wy, wz = wx - z * axis[0], wy - z * axis[1], wz - z * axis[2]
+    r = math.sqrt(wx * wx + wy * wy + wz * wz)
+    over, up = (-z, -1.0) if z < 0.5 * size[3] else (z - size[3], 1.0)
+    over, side = max(over, 0.0), max(r - size[0], 0.0)
+    far = math.sqrt(over * over + side * side)
+    if far == 0.0:
+        return -size[1]
+    along = up * over / far
+    across = side / (far * r) if r > 0.0 else 0.0
+    out[0] = along * axis[0] + across * wx
+    out[1] = along * axis[1] + across * wy
+    out[2] = along * axis[2] + across * wz
+    return far - size[1]
+
+
+@njit(cache=True, nogil=True)
+def stays_out(
+    q: tuple,
+    n: tuple,
+    c0: np.ndarray,
+    c1: np.ndarray,
+    a0: np.ndarray,
+    a1: np.ndarray,
+    size: np.ndarray,
+    below: float,
+) -> bool:
+    """Tell quickly whether a bull or flat end mill surely does not meet a line lower than ``below`` along one piece.
+
+    Distance is convex in height and share together, but for the turn of the axis. Where it falls with the height at both
+    ends of the piece, it is no lower further down; the tangents over the share then bound it from below.
+    """
+    p = (q[0] + below * n[0], q[1] + below * n[1], q[2] + below * n[2])
+    out = np.empty(3)
+    bounds = (0.0, 0.0)
+    slopes = (0.0, 0.0)
+    moved, turned = 0.0, 0.0
+    for i in range(3):
+        moved += (c1[i] - c0[i]) ** 2
+        turned += (a1[i] - a0[i]) ** 2
+    moved, turned = math.sqrt(moved), math.sqrt(turned)
+    for end in range(2):
+        c, axis = (c0, a0) if end == 0 else (c1, a1)
+        far = off_mill(p, n, c, axis, size, out)
+        if far <= 0.0 or out[0] * n[0] + out[1] * n[1] + out[2] * n[2] > 0.0:
+            return False
+        # Velocity of the mill's point there, as in `entry_and_slope`.
+        w = (p[0] - c[0], p[1] - c[1], p[2] - c[2])
+        d = (a1[0] - a0[0], a1[1] - a0[1], a1[2] - a0[2])
+        ap = axis[0] * w[0] + axis[1] * w[1] + axis[2] * w[2]
+        dp = d[0] * w[0] + d[1] * w[1] + d[2] * w[2]
+        slope = 0.0
+        for i in range(3):
+            slope -= out[i] * (c1[i] - c0[i] + d[i] * ap - axis[i] * dp)
+        bounds = (far, bounds[1]) if end == 0 else (bounds[0], far)
+        slopes = (slope, slopes[1]) if end == 0 else (slopes[0], slope)
+    if slopes[0] >= 0.0:
+        least = bounds[0]
+    elif slopes[1] <= 0.0:
+        least = bounds[1]
+    else:
+        meet = (bounds[1] - slopes[1] - bounds[0]) / (slopes[0] - slopes[1])
+        least = bounds[0] + slopes[0] * min(max(meet, 0.0), 1.0)
+    arm = size[0] + size[1] + math.sqrt((p[0] - c0[0]) ** 2 + (p[1] - c0[1]) ** 2 + (p[2] - c0[2]) ** 2)
+    return least > 0.25 * turned * (moved + turned * arm)
+
+
+@njit(cache=True, nogil=True)
 def mill_entry(
     q: tuple,
     n: tuple,
@@ -223,17 +294,7 @@ def mill_entry(
     height, share, cosine
         As `ball_entry`.
     """
-    # The bottom plane: below it at both ends of the piece, a point stays out of the cutter all along.
-    top = min(below, 1e6)
-    x, y, z = q[0] + top * n[0], q[1] + top * n[1], q[2] + top * n[2]
-    first = (x - c0[0]) * a0[0] + (y - c0[1]) * a0[1] + (z - c0[2]) * a0[2]
-    last = (x - c1[0]) * a1[0] + (y - c1[1]) * a1[1] + (z - c1[2]) * a1[2]
-    bow = (
-        (c1[0] - c0[0]) * (a1[0] - a0[0])
-        + (c1[1] - c0[1]) * (a1[1] - a0[1])
-        + (c1[2] - c0[2]) * (a1[2] - a0[2])
-    )
-    if max(first, last) + 0.25 * abs(bow) < -size[1]:
+    if below < math.inf and stays_out(q, n, c0, c1, a0, a1, size, below):
         return math.inf, 0.0, 0.0
     out = np.empty(3)
     s0, s1 = 0.0, 1.0

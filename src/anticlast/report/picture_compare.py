@@ -73,7 +73,7 @@ def _draw(figure: Any, job: Job, one: Comparison, units: Units, top_in: float) -
         0.0, 0.16, f"{one.machine}; scallop limit of the job {units.small(one.scallop_mm)}; {len(one.ranked)} cases can be"
         f" cut, {len(one.refused)} cannot", size=9.5, color=sheet.QUIET, va="center",
     )  # fmt: skip
-    axes = sheet.axes_at(figure, 0.9, top_in + 1.05, 5.7, 4.85)
+    axes = sheet.axes_at(figure, 1.2, top_in + 1.05, 5.4, 4.85)
     side = sheet.axes_at(figure, 6.95, top_in + 1.05, 4.35, 4.85)
     side.axis("off")
     side.set_xlim(0.0, 1.0)

@@ -28,8 +28,8 @@ def specific(h: float, laws: np.ndarray, found: np.ndarray) -> None:
 @njit(cache=True, nogil=True)
 def station_loads(
     first: int, after: int, hits: np.ndarray, frames: np.ndarray, shape_of: np.ndarray, places: np.ndarray, edges: np.ndarray,
-    inner: np.ndarray, outer: np.ndarray, rims: np.ndarray, flutes: np.ndarray, tooth_mm: np.ndarray, laws: np.ndarray, least: float,
-    out: np.ndarray,
+    inner: np.ndarray, outer: np.ndarray, rims: np.ndarray, flutes: np.ndarray, tooth_mm: np.ndarray, laws: np.ndarray,
+    least: float, out: np.ndarray,
 ) -> None:  # fmt: skip
     """Work out each station's row of ``out`` from the marked points.
 

@@ -124,11 +124,11 @@ def follow(
     spacing = field.grid.spacing_mm
     stations = lay_stations(segments, _STATION_CELLS * spacing)
     rings = [rings_of(cutter) for cutter in cutters]
-    tables = tuple(
+    edge, inner, outer = (
         np.array([getattr(ring, name) for ring in rings]).reshape(len(rings), -1)
         for name in ("edge_mm", "inner_mm", "outer_mm")
     )
-    tables = (*tables, np.array([ring.rim for ring in rings]).reshape(len(rings), -1, 2))
+    rim = np.array([ring.rim for ring in rings]).reshape(len(rings), -1, 2)
     places = ring_table(cutters)
     flutes = np.array([cutter.flutes for cutter in cutters], np.int64)
     feed = np.divide(60.0 * segments.length_mm, seconds, out=np.full(len(segments), np.nan), where=seconds > 0.0)
@@ -147,8 +147,8 @@ def follow(
         rows = slice(int(stations.first[first]), int(stations.first[after]))
         of = stations.segment[rows]
         arguments = (
-            taken.hits, stations.frame[rows], segments.shape[of], places, *tables, flutes, tooth[of], laws, LEAST_COSINE,
-            table[rows],
+            taken.hits, stations.frame[rows], segments.shape[of], places, edge, inner, outer, rim, flutes, tooth[of], laws,
+            LEAST_COSINE, table[rows],
         )  # fmt: skip
         _in_blocks(len(of), arguments)
     found = carried(table, stations.first, segments.rapid)

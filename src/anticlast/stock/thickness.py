@@ -100,7 +100,8 @@ def thickness_range(
     """Return the smallest, the mean (by plan area) and the largest thickness inside an outline, at every column there."""
     area = field.grid.areas_mm2(outline)
     x, y = field.grid.middles_xy()
-    there = area > 0.5 * field.grid.spacing_mm**2
+    # Columns whose middle is on the very edge may belong to the wall beside it.
+    there = area > 0.6 * field.grid.spacing_mm**2
     if not np.any(there):
         return 0.0, 0.0, 0.0
     values = thickness_mm(field, saddle, np.column_stack((x[there], y[there])), bottom_mm)

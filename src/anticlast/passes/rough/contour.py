@@ -33,7 +33,9 @@ class Grid:
     exact: HeightAndSlope
 
     @classmethod
-    def over(cls, bounds: tuple[float, float, float, float], spacing_mm: float, exact: HeightAndSlope) -> Grid:
+    def over(
+        cls, bounds: tuple[float, float, float, float], spacing_mm: float, exact: HeightAndSlope
+    ) -> Grid:
         """Ask the function at the nodes of a grid over (x0, y0, x1, y1)."""
         x0, y0, x1, y1 = bounds
         x = np.linspace(x0, x1, max(2, int(np.ceil((x1 - x0) / spacing_mm)) + 1))

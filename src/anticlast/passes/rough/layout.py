@@ -91,7 +91,9 @@ def stock_before(job: Job, operation: Operation) -> Terraces:
 
     What semi-finishing and finishing take off is not counted: the stock stands no higher than this.
     """
-    earlier = tuple(other for other in job.operations if other.does == "rough" and other.index < operation.index)
+    earlier = tuple(
+        other for other in job.operations if other.does == "rough" and other.index < operation.index
+    )
     if earlier:
         return layout(job.part, job.stock, earlier, job.clearance_mm).after
     return untouched(job.part, job.stock)
@@ -203,9 +205,13 @@ class _Site:
         The lowest is that of the surface with its allowance around the part, as far out as a cutter at its edge
         reaches; never below the blank.
         """
-        ground = shapely.intersection(self.part.outline.grown(2.0 * self.operation.cutter.radius_mm).polygon, self.blank)
+        ground = shapely.intersection(
+            self.part.outline.grown(2.0 * self.operation.cutter.radius_mm).polygon, self.blank
+        )
         rim = shapely.get_coordinates(shapely.segmentize(shapely.boundary(ground), 0.5))
-        raised = self.saddle.height(rim[:, 0], rim[:, 1]) + self.operation.allowance_mm * self.saddle.stretch(rim)
+        raised = self.saddle.height(rim[:, 0], rim[:, 1]) + self.operation.allowance_mm * self.saddle.stretch(
+            rim
+        )
         top = self.stock.top_mm
         lowest = max(float(raised.min()), self.stock.bottom_mm)
         count = max(1, math.ceil((top - lowest) / limits.cut_depth_mm(self.operation) - 1e-9))
@@ -226,13 +232,18 @@ class _Site:
     def is_open(self, piece: Piece, standing: BaseGeometry) -> bool:
         """Tell whether a way down starts where the layer above is cleared."""
         path = LineString(piece.xy)
-        return bool(shapely.intersection(grown(path, self.clear_radius_mm - 2.0 * _DOUBT_MM), standing).area <= SAME_POINT_MM)
+        return bool(
+            shapely.intersection(grown(path, self.clear_radius_mm - 2.0 * _DOUBT_MM), standing).area
+            <= SAME_POINT_MM
+        )
 
     def _whole(self, room: BaseGeometry) -> BaseGeometry:
         """Return a region without the islands that a grid makes of narrow valleys between its nodes."""
         rim = shapely.boundary(self.grid.inner)
         parts = [part for part in shapely.get_parts(room) if isinstance(part, Polygon)]
-        kept = [part for part in parts if part.area > 9.0 * self.spacing_mm**2 or shapely.intersects(part, rim)]
+        kept = [
+            part for part in parts if part.area > 9.0 * self.spacing_mm**2 or shapely.intersects(part, rim)
+        ]
         return shapely.union_all(kept) if kept else Polygon()
 
     def closed(self, room: BaseGeometry, rest: BaseGeometry, barred: list[BaseGeometry]) -> Polygon | None:

@@ -69,7 +69,12 @@ def left_mm(operation: Operation, part: Part) -> float:
     other operations leave their allowance.
     """
     if operation.does == "rough":
-        return operation.allowance_mm + cut_depth_mm(operation) + cusp_mm(operation) + _bridged_mm(operation, part)
+        return (
+            operation.allowance_mm
+            + cut_depth_mm(operation)
+            + cusp_mm(operation)
+            + _bridged_mm(operation, part)
+        )
     return operation.allowance_mm
 
 

@@ -85,7 +85,9 @@ def thick_parts(stock: BaseGeometry) -> BaseGeometry:
 
 
 def _is_thick(part: Polygon) -> bool:
-    return bool(part.area > 0.5 * SLIVER_MM * part.length and not shapely.buffer(part, -0.5 * SLIVER_MM).is_empty)
+    return bool(
+        part.area > 0.5 * SLIVER_MM * part.length and not shapely.buffer(part, -0.5 * SLIVER_MM).is_empty
+    )
 
 
 def peel(
@@ -130,7 +132,9 @@ def _round(
     room: BaseGeometry, stock: BaseGeometry, bite: Bite, corner_mm: float, width_mm: float, number: int
 ) -> Iterator[Piece]:
     """Yield the passes of one round."""
-    near = shapely.intersection(room, shapely.box(*_widened(stock.bounds, 2.0 * bite.radius_mm + 2.0 * corner_mm)))
+    near = shapely.intersection(
+        room, shapely.box(*_widened(stock.bounds, 2.0 * bite.radius_mm + 2.0 * corner_mm))
+    )
     reach = shapely.difference(near, grown(stock, bite.radius_mm - width_mm))
     if corner_mm > 0.0:
         reach = grown(shapely.buffer(reach, -corner_mm, quad_segs=_QUARTER), corner_mm)
@@ -153,7 +157,9 @@ def _widened(bounds: tuple[float, float, float, float], by_mm: float) -> tuple[f
 
 def _engaged(ring: Floats, stock: BaseGeometry, bite: Bite, number: int) -> Iterator[Piece]:
     """Yield the runs of a closed ring on which the cutter is in the stock, each with a point in air at its ends."""
-    xy = shapely.get_coordinates(shapely.segmentize(shapely.linestrings(ring), _SPACING_SHARE * bite.radius_mm))[:-1]
+    xy = shapely.get_coordinates(
+        shapely.segmentize(shapely.linestrings(ring), _SPACING_SHARE * bite.radius_mm)
+    )[:-1]
     depth = bite.radius_mm - np.asarray(shapely.distance(stock, shapely.points(xy)))
     cuts = depth > 0.0
     if not cuts.any():

@@ -46,7 +46,9 @@ class Walk:
         """Where the centre can stand without cutting."""
         if self._air is None:
             # Chords of the rounding come nearer to the stock than its radius; the graze allows for that.
-            self._air = shapely.difference(self._exact_room, grown(self.stock, self.radius_mm - 0.25 * GRAZE_MM))
+            self._air = shapely.difference(
+                self._exact_room, grown(self.stock, self.radius_mm - 0.25 * GRAZE_MM)
+            )
         return self._air
 
     def is_clear(self, xy: Floats) -> bool:
