@@ -14,7 +14,7 @@ from anticlast.cli import app
 from conftest import job_text
 
 ROOT = Path(__file__).resolve().parents[1]
-COMMANDS = ("make", "survey", "scallop", "machines", "prove", "stock")
+COMMANDS = ("make", "survey", "scallop", "machines", "prove", "stock", "compare", "time")
 
 
 def run(*words: str | Path):

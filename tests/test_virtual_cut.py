@@ -74,7 +74,10 @@ def job(
     part = Part(saddle.a_per_mm, saddle.b_per_mm, saddle.rotate_rad, outline)
     stock = Stock("tooling board", top, -30.0, outline, allowance)
     return SimpleNamespace(
-        part=part, stock=stock, cutters=(cutter,), operations=(SimpleNamespace(does="finish", scallop_mm=limit),)
+        part=part,
+        stock=stock,
+        cutters=(cutter,),
+        operations=(SimpleNamespace(does="finish", scallop_mm=limit),),
     )
 
 
@@ -533,6 +536,88 @@ def test_mill_entry_against_brute_force(corner: float, turn: float) -> None:
         assert on == pytest.approx(0.0, abs=1e-8)
     assert hits > 15
     assert misses > 4
+
+
+def mill_passes(
+    saddle: Saddle, cutter: Cutter, lead: float, across: np.ndarray, half: float, step: float
+) -> PartMotion:
+    """Passes along y of an end mill leaned forward from the turning surface normal, its lowest rim point in contact."""
+    along = np.linspace(-half, half, math.ceil(2 * half / step) + 1)
+    tips, axes = [], []
+    for number, x in enumerate(across):
+        y = along if number % 2 == 0 else along[::-1]
+        xy = np.column_stack((np.full(len(y), x), y))
+        normal, feed = saddle.normal(xy), saddle.tangent(xy, math.pi / 2)
+        axis = math.cos(lead) * normal + math.sin(lead) * feed
+        inward = math.sin(lead) * normal - math.cos(lead) * feed
+        reference = saddle.point(xy) + cutter.corner_radius_mm * normal
+        reference += (cutter.radius_mm - cutter.corner_radius_mm) * inward
+        tips.append(reference - cutter.corner_radius_mm * axis)
+        axes.append(axis)
+    return motion(np.concatenate(tips), np.concatenate(axes))
+
+
+def brute_mill_heights(
+    saddle: Saddle, xy: np.ndarray, made: PartMotion, cutter: Cutter, ladder: np.ndarray
+) -> np.ndarray:
+    """Lowest place on a ladder of heights that any of many poses covers, all pairs, plain numpy."""
+    q, n = saddle.point(xy), saddle.normal(xy)
+    points = (q[:, None, :] + ladder[None, :, None] * n[:, None, :]).reshape(-1, 3)
+    size = np.array([cutter.radius_mm - cutter.corner_radius_mm, cutter.corner_radius_mm, 0.0, 15.0])
+    covered = np.zeros(len(points), bool)
+    for k in range(1, len(made.tip_mm)):
+        for t in np.linspace(0.0, 1.0, 9):
+            axis = made.axis[k - 1] + t * (made.axis[k] - made.axis[k - 1])
+            c0 = made.tip_mm[k - 1] + cutter.corner_radius_mm * made.axis[k - 1]
+            c1 = made.tip_mm[k] + cutter.corner_radius_mm * made.axis[k]
+            covered |= mill_distance(points, c0 + t * (c1 - c0), axis / np.linalg.norm(axis), size) <= 0.0
+    covered = covered.reshape(len(q), len(ladder))
+    return np.where(covered.any(axis=1), ladder[np.argmax(covered, axis=1)], np.inf)
+
+
+@pytest.mark.parametrize(("corner", "lead_deg"), [(0.8, 7.0), (0.8, 14.0), (0.0, 9.0)])
+def test_leaned_mill_on_a_saddle_against_brute_force(corner: float, lead_deg: float) -> None:
+    """Turning axis, wide strips, lists thinned by tile: every node as if each pose had been tried on it, and the bound."""
+    saddle, cutter = Saddle(0.012, 0.010, 0.0), mill(3.0, corner)
+    made = mill_passes(saddle, cutter, lead_deg * DEG, np.array([-1.1, 0.2, 1.3]), 1.2, 0.15)
+    cut = measure(job(saddle, rectangle((2.4, 1.2)), cutter, UNCUT_MM, limit=0.004), made, 0.12)
+    rows = np.arange(0, len(cut.height_mm), 5)
+    ladder = np.linspace(-0.02, 0.08, 501)
+    expected = brute_mill_heights(saddle, cut.nodes.xy[rows], made, cutter, ladder)
+    # The ladder's rungs are 0.2 um apart and poses 1/8 of a piece: a sampled rim stays 0.15 / 8 mm * sin(lead) / 2 back.
+    back = 0.0002 + 0.15 / 8 * math.sin(lead_deg * DEG)
+    reached = np.isfinite(expected)
+    assert reached.sum() > 0.9 * len(rows)
+    assert np.all(cut.height_mm[rows] <= expected + NM)
+    assert np.all(cut.height_mm[rows][reached] >= expected[reached] - back)
+    x, y = np.meshgrid(np.linspace(-1.2, 1.2, 33), np.linspace(-0.6, 0.6, 7))
+    between = brute_mill_heights(saddle, np.column_stack((x.ravel(), y.ravel())), made, cutter, ladder)
+    assert between.max() - back <= cut.bound_mm
+    assert -between.min() <= cut.gouge.bound_mm + 0.0002
+    assert cut.bound_mm <= cut.highest_mm + 1.001 * BOUND_SLACK_MM
+
+
+def test_quick_answer_never_hides_an_entry() -> None:
+    rng = np.random.default_rng(8)
+    size = np.array([2.0, 0.5, 0.3, 8.0])
+    quick = slow = 0
+    for _ in range(3000):
+        a0 = np.array([0.1, 0.0, 1.0]) + 0.1 * rng.normal(size=3)
+        a1 = a0 + 0.01 * rng.normal(size=3)
+        a0, a1 = a0 / np.linalg.norm(a0), a1 / np.linalg.norm(a1)
+        c0 = np.array([0.0, 0.0, 0.5]) + 0.1 * rng.normal(size=3)
+        c1 = c0 + 0.2 * rng.normal(size=3)
+        q = (*rng.uniform(-3.5, 3.5, 2), 0.0)
+        n = np.array([0.0, 0.0, 1.0]) + 0.1 * rng.normal(size=3)
+        n = tuple(n / np.linalg.norm(n))
+        below = float(rng.uniform(0.0, 0.4))
+        h, _, _ = _kernels.mill_entry(q, n, c0, c1, a0, a1, size, math.inf)
+        if _kernels.stays_out(q, n, c0, c1, a0, a1, size, below, 0.0, 0.0):
+            quick += 1
+            assert h >= below - 1e-9
+        elif h >= below:
+            slow += 1
+    assert quick > 3 * slow > 0
 
 
 def test_rim_distance_against_brute_force() -> None:

@@ -77,6 +77,11 @@ def _finding_line(finding: Finding) -> str:
     return f"  {mark}  {finding.message}{where}"
 
 
+def _scallop_words(height_mm: float) -> str:
+    """Say what scallop is predicted; roughing and outline operations leave none that counts."""
+    return f", scallop {height_mm * 1000:.2f} um predicted" if height_mm > 0.0 else ""
+
+
 def _report(made: Made, out: Path) -> None:
     job = made.job
     for entry in made.operations:
@@ -87,8 +92,8 @@ def _report(made: Made, out: Path) -> None:
         )
         typer.echo(
             f"operation {entry.index}: {entry.does}, {entry.pattern}, T{entry.cutter}: {entry.passes} passes,"
-            f" cut length {entry.cut_length_mm / 1000:.2f} m{floor}, links {entry.link_length_mm / 1000:.2f} m,"
-            f" scallop {entry.scallop_predicted_mm * 1000:.2f} um predicted, {_clock(entry.time_s)}"
+            f" cut length {entry.cut_length_mm / 1000:.2f} m{floor}, links {entry.link_length_mm / 1000:.2f} m"
+            f"{_scallop_words(entry.scallop_predicted_mm)}, {_clock(entry.time_s)}"
         )
     typer.echo("checks:")
     for finding in sorted(made.findings, key=lambda item: (item.ok, item.warning)):

@@ -107,7 +107,13 @@ class Strips:
 
 
 def strips_of(
-    height: Floats, shift: Floats, lowered: Floats, aside_mm: Floats, across: Floats, swing: Floats, demand: Demand
+    height: Floats,
+    shift: Floats,
+    lowered: Floats,
+    aside_mm: Floats,
+    across: Floats,
+    swing: Floats,
+    demand: Demand,
 ) -> Strips:
     """Return the strips of profiles (n, m), sampled at the plan distances (m,) of `sides`.
 
@@ -277,11 +283,13 @@ def fit(
         stations along the feed, of all small and large ones the best at the line's worst station.
     """
     if relative and len(ways) == 2 and _symmetric(u_nodes) and _symmetric(v_nodes):
-        return _turned_over(fit(sweep, u_nodes, v_nodes, ways[:1], family, demand, counts | counts[::-1, ::-1], relative))
+        return _turned_over(
+            fit(sweep, u_nodes, v_nodes, ways[:1], family, demand, counts | counts[::-1, ::-1], relative)
+        )
     way = np.repeat(np.array(ways, dtype=np.float64), u_nodes.size * v_nodes.size)
     v, u = (np.tile(grid.ravel(), len(ways)) for grid in np.meshgrid(v_nodes, u_nodes, indexing="ij"))
     xy = plan_of(u, v, sweep.direction_rad)
-    k_t, k_b, _, tangent, _ = sweep.saddle.along(xy, sweep.direction_rad)
+    tangent = sweep.saddle.tangent(xy, sweep.direction_rad)
     across = sweep.saddle.stretch(xy) * np.linalg.norm(tangent[:, :2], axis=1)
     aside = sides(_FURTHEST * sweep.cutter.radius_mm / float(across.max()))
     shape = (len(ways), v_nodes.size, u_nodes.size)
@@ -290,23 +298,25 @@ def fit(
     matter |= ~matter.any(axis=1, keepdims=True)
 
     none = np.zeros(u.size)
+    least = max(demand.least_rad, LEAST_LEAD_RAD)
+    start = _start(sweep, u[:, None] + sweep.offsets(), v[:, None], least)
+    here = start[:, start.shape[1] // 2]
+    # Within reach of the cutter a lead changes as the one that osculates: where it falls, the rear of poses ahead comes near.
+    varies = start / here[:, None]
 
     def ask(angle: Floats, error_rad: float = demand.margin_rad) -> Strips:
+        if relative:
+            lead, lean = family.wish(np.maximum(angle[:, None] * varies, least))
+            return strips_of(*sweep.profiles(u, v, way, lead, lean, aside, error_rad), aside, across, none, demand)
         lead, lean = family.wish(np.repeat(angle, members))
-        profiles = sweep.profiles(u, v, way, lead, lean, aside, error_rad)
-        swing = none if relative else _swing(sweep, u, v, way, lead, lean)
-        return strips_of(*profiles, aside, across, swing, demand)
+        swing = _swing(sweep, u, v, way, lead, lean)
+        return strips_of(*sweep.profiles(u, v, way, lead, lean, aside, error_rad), aside, across, swing, demand)
 
     def worth(angle: Floats) -> Floats:
         return np.where(matter, ask(angle).worth.reshape(-1, members), np.inf).min(axis=1)
 
-    least = max(demand.least_rad, LEAST_LEAD_RAD)
     if relative:
-        curvature = np.maximum(k_b, k_t)
-        start = np.maximum(
-            osculating_lead_rad(sweep.disc_mm, sweep.cutter.corner_radius_mm, curvature), least
-        )
-        angles = np.clip(start[:, None] * _SHARES, least, max(_MOST_LEAD_RAD, least))
+        angles = np.clip(here[:, None] * _SHARES, least, max(_MOST_LEAD_RAD, least))
     else:
         asked = np.geomspace(least, max(_MOST_LEAD_RAD, least), _LEADS_ASKED)
         angles = np.broadcast_to(asked, (len(matter), _LEADS_ASKED))
@@ -323,6 +333,18 @@ def fit(
     reached = np.stack(sweep.reached(u, v, way, axis)).reshape(2, *shape)
     fields = {name: getattr(strips, name).reshape(shape) for name in Strips.__slots__}
     return Fit(u_nodes, v_nodes, family, angle.reshape(shape), Strips(**fields), reached)
+
+
+def _start(sweep: Sweep, u_mm: Floats, v_mm: Floats, least_rad: float) -> Floats:
+    """Return the lead [rad] that fits the more concave of both curvatures, along and across the feed, of (u, v) of one shape.
+
+    Along the feed it is what keeps the rear of the bottom off a concave surface.
+    """
+    u_mm, v_mm = np.broadcast_arrays(u_mm, v_mm)
+    xy = plan_of(u_mm, v_mm, sweep.direction_rad)
+    k_t, k_b, _, _, _ = sweep.saddle.along(xy, sweep.direction_rad)
+    lead = osculating_lead_rad(sweep.disc_mm, sweep.cutter.corner_radius_mm, np.maximum(k_b, k_t))
+    return np.maximum(lead, least_rad).reshape(u_mm.shape)
 
 
 def _swing(sweep: Sweep, u: Floats, v: Floats, way: Floats, lead: Floats, lean: Floats) -> Floats:

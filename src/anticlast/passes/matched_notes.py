@@ -17,7 +17,6 @@ from anticlast.passes.scallop import second_order_step
 from anticlast.passes.strips import NoStrip
 from anticlast.records import Bools, Floats
 
-
 # A matched operation that takes this many times the passes of a ball is refused.
 _MOST_BALLS = 1.25
 
@@ -149,7 +148,8 @@ def check_against_ball(task: Task, passes: int) -> None:
     raise CannotPlan(
         "strip",
         f"operation {task.operation.index}: matched strips would take about {passes} passes, a ball of the same radius {balls}; "
-        "use the ball and another pattern, or another direction" + ("" if task.full else f"; {_turned_note(task, passes)}"),
+        "use the ball and another pattern, or another direction"
+        + ("" if task.full else f"; {_turned_note(task, passes)}"),
         float(passes),
         _MOST_BALLS * balls,
         "passes",

@@ -124,7 +124,9 @@ class Task:
         # Chords may gouge as much as they may raise the scallop; what is left of the tolerance is for the tilt error.
         allowed = self.operation.tolerance_mm - 0.5 * self.budget_mm
         lift = math.inf if self.full else _LIFT_SHARE * height_mm
-        demand = Demand(height_mm, self.operation.lead_margin_rad, allowed, max(self.operation.lead_rad, 0.0), lift)
+        demand = Demand(
+            height_mm, self.operation.lead_margin_rad, allowed, max(self.operation.lead_rad, 0.0), lift
+        )
         return fit(self.sweep, self.u_mm, self.v_mm, self.ways, family, demand, self.counts, self.full)
 
     def layer(self, found: Fit, zigzag: bool = True) -> Layer:

@@ -116,6 +116,11 @@ class Sweep:
         turn = np.array([[c, -s, 0.0], [s, c, 0.0], [0.0, 0.0, 1.0]])
         return np.ascontiguousarray(np.hstack((point @ turn, axis @ turn)))
 
+    def offsets(self) -> Floats:
+        """Return plan distances (p,) along +u from a station to the poses that may cut abreast of it."""
+        half = math.ceil(self.reach_mm / self.step_mm)
+        return np.arange(-half, half + 1) * self.step_mm
+
     def _tool(self) -> Floats:
         rounds = _ROUNDS_ROUND if self.cutter.corner_radius_mm > 0.0 else _ROUNDS_SHARP
         # Between rows a corner arc dips by half a step squared over its diameter, a sharp edge by what its slope lets it.
@@ -135,13 +140,16 @@ class Sweep:
     ) -> tuple[Floats, Floats, Floats]:
         """Return what passes leave beside their lines, how far ahead of the place it is cut, and what a tilt error leaves.
 
-        Lead and lean stay as they are within the cutter's reach of each station (u, v) (n,). Above the line of the pass
-        the height is 0, or negative where the rear of the bottom gouges. A tilt error about the contact moves each place of the
+        Above the line of the pass the height is 0, or negative where the rear of the bottom gouges. A tilt error about the contact moves each place of the
         bottom along the normal by the error times its distance from the contact, to first order; the worst direction of the
         error is taken place by place. docs/theory-matched.md#guard.
 
         Parameters
         ----------
+        u_mm, v_mm, way : (n,)
+            Stations.
+        lead_rad, lean_rad : (n,) or (n, p)
+            The same all within the cutter's reach of a station, or at each of `offsets` from it.
         aside_mm : (m,)
             Plan distances to the left of the line.
         error_rad : float
@@ -152,16 +160,15 @@ class Sweep:
         height, shift, lowered : (n, m) [mm]
             ``shift`` is along +u.
         """
-        half = math.ceil(self.reach_mm / self.step_mm)
-        offsets = np.arange(-half, half + 1) * self.step_mm
+        offsets = self.offsets()
         many = offsets.size
         sign = np.broadcast_to(np.asarray(way, dtype=np.float64), u_mm.shape)
         point, axis = self.poses(
             (u_mm[:, None] + offsets).ravel(),
             np.repeat(v_mm, many),
             np.repeat(sign, many),
-            np.repeat(lead_rad, many),
-            np.repeat(lean_rad, many),
+            np.broadcast_to(np.reshape(lead_rad, (u_mm.size, -1)), (u_mm.size, many)).ravel(),
+            np.broadcast_to(np.reshape(lean_rad, (u_mm.size, -1)), (u_mm.size, many)).ravel(),
             0.0,
         )
         tables = self.table(point, axis).reshape(u_mm.size, many, 6)

@@ -203,23 +203,27 @@ def entry_and_slope(
 
 
 @njit(cache=True, nogil=True)
-def off_mill(p: tuple, n: tuple, c: np.ndarray, axis: np.ndarray, size: np.ndarray, out: np.ndarray) -> float:
-    """Return a point's distance from a bull or flat end mill [mm], its gradient in ``out``; 0 or less inside."""
+def off_mill(
+    p: tuple, n: tuple, c: np.ndarray, axis: np.ndarray, v: tuple, size: np.ndarray
+) -> tuple[float, float, float]:
+    """Return a point's distance from a bull or flat end mill [mm], and its rates along n and along a motion -v of the mill."""
     wx, wy, wz = p[0] - c[0], p[1] - c[1], p[2] - c[2]
     z = wx * axis[0] + wy * axis[1] + wz * axis[2]
-    wx, wy, wz = wx - z * axis[0], wy - z * axis[1], wz - z * axis[2]
-    r = math.sqrt(wx * wx + wy * wy + wz * wz)
     over, up = (-z, -1.0) if z < 0.5 * size[3] else (z - size[3], 1.0)
-    over, side = max(over, 0.0), max(r - size[0], 0.0)
+    wx, wy, wz = wx - z * axis[0], wy - z * axis[1], wz - z * axis[2]
+    r2 = wx * wx + wy * wy + wz * wz
+    if r2 <= size[0] * size[0]:
+        # Over or under the disc: the distance is along the axis.
+        along = up * (n[0] * axis[0] + n[1] * axis[1] + n[2] * axis[2])
+        return over - size[1], along, up * (v[0] * axis[0] + v[1] * axis[1] + v[2] * axis[2])
+    r = math.sqrt(r2)
+    over, side = max(over, 0.0), r - size[0]
     far = math.sqrt(over * over + side * side)
     if far == 0.0:
-        return -size[1]
-    along = up * over / far
-    across = side / (far * r) if r > 0.0 else 0.0
-    out[0] = along * axis[0] + across * wx
-    out[1] = along * axis[1] + across * wy
-    out[2] = along * axis[2] + across * wz
-    return far - size[1]
+        return -size[1], 0.0, 0.0
+    along, across = up * over / far, side / (far * r)
+    ox, oy, oz = along * axis[0] + across * wx, along * axis[1] + across * wy, along * axis[2] + across * wz
+    return far - size[1], ox * n[0] + oy * n[1] + oz * n[2], ox * v[0] + oy * v[1] + oz * v[2]
 
 
 @njit(cache=True, nogil=True)
@@ -232,45 +236,82 @@ def stays_out(
     a1: np.ndarray,
     size: np.ndarray,
     below: float,
+    spread: float,
+    bend: float,
 ) -> bool:
     """Tell quickly whether a bull or flat end mill surely does not meet a line lower than ``below`` along one piece.
 
-    Distance is convex in height and share together, but for the turn of the axis. Where it falls with the height at both
-    ends of the piece, it is no lower further down; the tangents over the share then bound it from below.
+    Distance is convex in height, share and place together, but for the turn of the axis and the surface's curvature.
+    Where it falls with the height at both ends of the piece, it is no lower further down; the tangents over the share
+    then bound it from below: docs/theory-proof.md#bull-and-flat-ends.
+
+    Parameters
+    ----------
+    q, n, c0, c1, a0, a1, size
+        As in `mill_entry`.
+    below : float [mm]
+    spread : float [mm]
+        The answer holds for all lines whose surface points lie within this of q; 0 for the one line.
+    bend : float [1/mm]
+        Largest curvature of the surface.
     """
     p = (q[0] + below * n[0], q[1] + below * n[1], q[2] + below * n[2])
-    out = np.empty(3)
-    bounds = (0.0, 0.0)
-    slopes = (0.0, 0.0)
-    moved, turned = 0.0, 0.0
-    for i in range(3):
-        moved += (c1[i] - c0[i]) ** 2
-        turned += (a1[i] - a0[i]) ** 2
-    moved, turned = math.sqrt(moved), math.sqrt(turned)
-    for end in range(2):
-        c, axis = (c0, a0) if end == 0 else (c1, a1)
-        far = off_mill(p, n, c, axis, size, out)
-        if far <= 0.0 or out[0] * n[0] + out[1] * n[1] + out[2] * n[2] > 0.0:
-            return False
-        # Velocity of the mill's point there, as in `entry_and_slope`.
-        w = (p[0] - c[0], p[1] - c[1], p[2] - c[2])
-        d = (a1[0] - a0[0], a1[1] - a0[1], a1[2] - a0[2])
-        ap = axis[0] * w[0] + axis[1] * w[1] + axis[2] * w[2]
-        dp = d[0] * w[0] + d[1] * w[1] + d[2] * w[2]
-        slope = 0.0
-        for i in range(3):
-            slope -= out[i] * (c1[i] - c0[i] + d[i] * ap - axis[i] * dp)
-        bounds = (far, bounds[1]) if end == 0 else (bounds[0], far)
-        slopes = (slope, slopes[1]) if end == 0 else (slopes[0], slope)
-    if slopes[0] >= 0.0:
-        least = bounds[0]
-    elif slopes[1] <= 0.0:
-        least = bounds[1]
+    v = (c1[0] - c0[0], c1[1] - c0[1], c1[2] - c0[2])
+    flattest = -bend * spread
+    far0, rise0, slope0 = off_mill(p, n, c0, a0, v, size)
+    if far0 <= 0.0 or rise0 > flattest:
+        return False
+    far1, rise1, slope1 = off_mill(p, n, c1, a1, v, size)
+    if far1 <= 0.0 or rise1 > flattest:
+        return False
+    if spread > 0.0:
+        far0 -= spread * math.sqrt(max(0.0, 1.0 - rise0 * rise0))
+        far1 -= spread * math.sqrt(max(0.0, 1.0 - rise1 * rise1))
+    # The mill moves by v: distances change against it.
+    if slope0 <= 0.0:
+        least = far0
+    elif slope1 >= 0.0:
+        least = far1
     else:
-        meet = (bounds[1] - slopes[1] - bounds[0]) / (slopes[0] - slopes[1])
-        least = bounds[0] + slopes[0] * min(max(meet, 0.0), 1.0)
+        meet = (far0 - far1 - slope1) / (slope0 - slope1)
+        least = far0 - slope0 * min(max(meet, 0.0), 1.0)
+    turned = math.sqrt((a1[0] - a0[0]) ** 2 + (a1[1] - a0[1]) ** 2 + (a1[2] - a0[2]) ** 2)
     arm = size[0] + size[1] + math.sqrt((p[0] - c0[0]) ** 2 + (p[1] - c0[1]) ** 2 + (p[2] - c0[2]) ** 2)
-    return least > 0.25 * turned * (moved + turned * arm)
+    return least > 1.1 * turned * arm + bend * spread * (0.5 * spread + abs(below))
+
+
+@njit(cache=True, nogil=True)
+def keep_near(
+    surface: tuple, grid: tuple, tiles: tuple, lists: tuple, pieces: tuple, high: float, keep: np.ndarray
+) -> None:
+    """Mark the entries of tiles' lists that are needed; bull and flat ends that stay above ``high`` all over are not.
+
+    Parameters
+    ----------
+    surface : (a, b, w)
+        w the largest 1 / cos(slope) over the nodes.
+    grid : (x low, y low, tile [mm], tiles in x, tiles in y)
+    tiles : (first, after last)
+    lists, pieces
+        As in `sweep`.
+    high : float [mm]
+    keep : (total,) bool
+        Set for the entries of these tiles.
+    """
+    a, b, w = surface
+    x_low, y_low, tile, nx, _ = grid
+    start, listing = lists
+    c0, c1, a0, a1, size, state = pieces
+    spread = tile * math.sqrt(0.5) * w
+    for t in range(tiles[0], tiles[1]):
+        q, n = surface_at(a, b, x_low + (t % nx + 0.5) * tile, y_low + (t // nx + 0.5) * tile)
+        for e in range(start[t], start[t + 1]):
+            k = listing[e]
+            keep[e] = (
+                size[k, 0] == 0.0
+                or state[k] == 2
+                or not stays_out(q, n, c0[k], c1[k], a0[k], a1[k], size[k], high, spread, 2.0 * max(a, b))
+            )
 
 
 @njit(cache=True, nogil=True)
@@ -294,7 +335,7 @@ def mill_entry(
     height, share, cosine
         As `ball_entry`.
     """
-    if below < math.inf and stays_out(q, n, c0, c1, a0, a1, size, below):
+    if below < math.inf and stays_out(q, n, c0, c1, a0, a1, size, below, 0.0, 0.0):
         return math.inf, 0.0, 0.0
     out = np.empty(3)
     s0, s1 = 0.0, 1.0

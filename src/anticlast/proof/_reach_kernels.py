@@ -190,7 +190,9 @@ def chunk_box(
             state = 2
         else:
             drop = max(0.0, low - high - bend * radius * radius / 2.0)
-            reach = math.sqrt(max(0.0, radius * radius - drop * drop)) + drop * max(bend, 2.0 * b) * length / 2.0
+            reach = (
+                math.sqrt(max(0.0, radius * radius - drop * drop)) + drop * max(bend, 2.0 * b) * length / 2.0
+            )
     else:
         state = 2
     reach += slope * (max(high, corner + disc * sine - low) + (2.0 * radius if state == 2 else 0.0))
@@ -330,7 +332,12 @@ def reach_boxes(
 
 @njit(cache=True, nogil=True)
 def bin_boxes(
-    chunk_start: np.ndarray, boxes: np.ndarray, found: np.ndarray, grid: tuple, start: np.ndarray, pieces: np.ndarray
+    chunk_start: np.ndarray,
+    boxes: np.ndarray,
+    found: np.ndarray,
+    grid: tuple,
+    start: np.ndarray,
+    pieces: np.ndarray,
 ) -> None:
     """Count (``pieces`` empty) or list the pieces that reach each tile.
 

@@ -20,6 +20,7 @@ from anticlast.proof.collisions import (
     rigid_clearance,
 )
 from anticlast.proof.patches import COARSE_MM, blank_patches, finished_patches
+from anticlast.proof.standing import holder_in_standing, rapids_in_standing, standing_clearances
 from anticlast.proof.virtual_cut import measure, scallop_map
 from anticlast.readback.checks import check_axes, check_cutters, known_places
 from anticlast.readback.forward import axis_travel, part_motion
@@ -113,14 +114,24 @@ def _collisions(
         ends = [cutting_body(cutter)]
         cutting = nearer(cutting, least_clearance(blank, motion, at_rapid, cutter, ends, share=0.0))
         rigid = nearer(rigid, least_clearance(blank, motion, at_rapid, cutter, bodies))
-        if job.stock.allowance_mm is not None:
-            feeding = moving & ~motion.rapid
-            in_stock = nearer(in_stock, least_clearance(blank, motion, feeding, cutter, bodies, 1.0))
+        feeding = moving & ~motion.rapid
+        in_stock = nearer(in_stock, least_clearance(blank, motion, feeding, cutter, bodies, 1.0))
     findings.append(checks.check_flutes(job, flutes, motion))
     findings.append(checks.check_holder(holder, motion))
-    findings.append(checks.check_rapids(job, cutting, rigid, motion))
-    findings += checks.check_holder_in_stock(in_stock, motion)
-    return holder.distance_mm, min(cutting.distance_mm, rigid.distance_mm)
+    rapids, near = (
+        checks.check_rapids(job, cutting, rigid, motion),
+        min(cutting.distance_mm, rigid.distance_mm),
+    )
+    in_blank = checks.check_holder_in_stock(in_stock, motion)
+    if not rapids.ok or in_blank:
+        # The blank before any cut is the strict answer; what stands by then decides where that one is not enough.
+        standing = standing_clearances(job, motion, moving)
+        in_blank = holder_in_standing(standing, motion) if in_blank else []
+        if not rapids.ok:
+            rapids = rapids_in_standing(job, standing, motion)
+            near = rapids.worst
+    findings += [rapids, *in_blank]
+    return holder.distance_mm, near
 
 
 def moving_pieces(job: Job, program: ReadProgram, motion: PartMotion) -> Bools:

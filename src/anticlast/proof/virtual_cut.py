@@ -171,8 +171,23 @@ class _Field:
         if listing.size:
             _reach_kernels.bin_boxes(self.chunks, boxes, found, self.nodes.tiling, start, listing)
         self.lists = (start, listing)
+        if np.any(self.pieces.size[:, 0] > 0.0):
+            self._thin(high_mm, start, listing)
         if np.any(self.state == 2) and np.isinf(self.floor[0]):
             self.floor = self._depths(np.arange(len(self.height)))
+
+    def _thin(self, high_mm: float, start: npt.NDArray[np.int64], listing: npt.NDArray[np.int32]) -> None:
+        """Drop bull and flat ends from lists of tiles over which they stay above a height."""
+        keep = np.empty(len(listing), np.bool_)
+        surface = (*self.surface[:2], self.stretch)
+
+        def run(span: tuple[int, int]) -> None:
+            lists, pieces = (start, listing), self._kernel_pieces()
+            _kernels.keep_near(surface, self.nodes.tiling, span, lists, pieces, high_mm, keep)
+
+        in_threads(run, spans(len(start) - 1))
+        kept = np.concatenate(([0], np.cumsum(keep)))
+        self.lists = (kept[start], listing[keep])
 
     def _count(self, high_mm: float) -> tuple[Floats, Bytes, npt.NDArray[np.int64]]:
         """Find what each chunk of motion can reach and where each tile's list begins; sets the state of each piece."""
@@ -193,7 +208,8 @@ class _Field:
         """Return how often nodes would be tried with pieces that run far below the surface."""
         _, _, start = self._count(self.low)
         reached, deep = np.count_nonzero(self.state), np.count_nonzero(self.state == 2)
-        return float(np.sum(np.diff(start) * np.diff(self.nodes.tile_start))) * deep / max(1, reached)
+        trials = float(np.sum(np.diff(start) * np.diff(self.nodes.tile_start)))
+        return trials * float(deep) / float(reached) if reached else 0.0
 
     def _depths(self, rows: npt.NDArray[np.int64]) -> Floats:
         return part_depths_mm(

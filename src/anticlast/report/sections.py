@@ -113,11 +113,12 @@ def _key_figures(made: Made, units: Units) -> str:
     figures: list[tuple[str, str, str]] = []
     if made.times is not None and made.program is not None:
         rapid = made.program.motions.shape == Shape.RAPID
-        total, moving = float(made.times.seconds.sum()), float(made.times.seconds[rapid].sum())
+        total, moving = made.times.total_s, float(made.times.seconds[rapid].sum())
+        waiting = made.times.waiting_s
         figures += [
             ("time", clock(total), "on this machine"),
-            ("cutting", clock(total - moving), "feed moves"),
-            ("rapid", clock(moving), "G0 moves"),
+            ("cutting", clock(total - moving - waiting), "feed moves"),
+            ("rapid", clock(moving), f"G0 moves; {clock(waiting)} of waits" if waiting else "G0 moves"),
         ]
     if made.proof is not None:
         limit = scallop_limit_mm(made)
