@@ -22,7 +22,7 @@ from anticlast.records import Job, Proof, ReadProgram, Shape
 from anticlast.saddle import Saddle
 
 _WORD = re.compile(r"([A-Za-z])([-+]?\d*\.?\d+\.?)")
-_STEP_MM, _CELL_MM, _NODE_MM = 0.1, 0.25, 0.3
+_STEP_MM, _CELL_MM, _NODE_MM = 0.1, 0.25, 0.15
 # The judge's own error: samples 0.1 mm apart on a ball stand 0.1^2 / (8 R) over its path, rounded up.
 _JUDGE_MM = 1e-3
 _SAME_MM = 1e-6
@@ -152,7 +152,9 @@ def walk(job: Job, read: ReadProgram) -> Walk:
     used = {int(n) for n in (*read.motions.tool, *read.motions.offset_h)}
     motion = part_motion(read, job.machine, job.part_origin_mm, {**dict.fromkeys(used, 0.0), **lengths})
     at_start, at_end = known_places(read)
-    known = np.logical_and(at_start, at_end)[:, :3].all(axis=1) if len(read.motions.line) else np.zeros(0, bool)
+    known = (
+        np.logical_and(at_start, at_end)[:, :3].all(axis=1) if len(read.motions.line) else np.zeros(0, bool)
+    )
     tips, rapid, rows = [np.zeros((0, 3))], [np.zeros(0, bool)], [np.zeros(0, int)]
     for i in range(1, len(motion.tip_mm)):
         row = int(motion.motion[i])
@@ -319,5 +321,7 @@ def table(outcomes: list[Outcome]) -> str:
         told = ", ".join(f"{check} {number}" for check, number in checks.most_common())
         sums = [len(mine), *(sum(map(bool, column)) for column in zip(
             *((one.same, one.harm, not one.released) for one in mine), strict=True))]  # fmt: skip
-        rows.append(f"{kind:<15}" + "".join(f"{n:>6}" for n in sums) + f"{sum(o.escaped for o in mine):>9}  {told}")
+        rows.append(
+            f"{kind:<15}" + "".join(f"{n:>6}" for n in sums) + f"{sum(o.escaped for o in mine):>9}  {told}"
+        )
     return "\n".join(rows)

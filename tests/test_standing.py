@@ -2,14 +2,18 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
+import numpy as np
 import pytest
 
+from anticlast.proof.standing import holder_in_standing, rapids_in_standing, sure_mm
 from anticlast.proof.verdict import prove
 from anticlast.readback.reader import read_program
-from anticlast.records import Finding, Job, Proof
+from anticlast.records import Finding, Job, PartMotion, Proof
 from anticlast.saddle import Saddle
+from anticlast.stock.clearance import BodyClearance
 from conftest import JobMaker
 from test_verdict import passes, text
 
@@ -71,8 +75,6 @@ def test_the_same_rapid_passes_once_the_stock_is_gone(block: Job, tmp_path: Path
 
 def test_what_sampling_may_miss_is_taken_off(block: Job, tmp_path: Path) -> None:
     """5.45 mm are found; a job that asks for 5.4 is not given them, for they could not be shown."""
-    from dataclasses import replace
-
     found = finding(
         verdict(replace(block, clearance_mm=5.4), with_rapid(block, first=False), tmp_path), "rapids"
     )
@@ -93,3 +95,20 @@ def test_a_holder_in_a_tall_block_is_refused(make_job: JobMaker, tmp_path: Path)
     # The tip is down to about -0.5 at the outline's corners: at most 40.5 - 34 mm of the holder are in.
     assert -6.8 < found.worst < 0.0
     assert "into the stock as it stands" in found.message
+
+
+def test_a_rapid_cannot_hide_behind_a_nearer_feed_move(block: Job) -> None:
+    """Only a body's least distance is known: at feed and not shown to be clear, it says nothing good about rapids."""
+    feed = np.array([False, False])
+    motion = PartMotion(
+        np.zeros((2, 3)), np.tile([0.0, 0.0, 1.0], (2, 1)), np.array([1, 2]), feed, np.ones(2, np.int64),
+        np.array([-1, 0]), np.ones(2),
+    )  # fmt: skip
+    near = BodyClearance(1, "holder 1", 0.1, 0.25, 1, 2, (0.0, 0.0), -1, 0)
+    assert sure_mm(near) == pytest.approx(0.1 - 0.25 - 0.02)
+    assert not rapids_in_standing(block, [near], motion, rigid_clear=False).ok
+    assert rapids_in_standing(block, [near], motion, rigid_clear=True).ok
+    assert not holder_in_standing([near], motion)[0].ok
+    clear = replace(near, distance_mm=0.3)
+    assert rapids_in_standing(block, [clear], motion, rigid_clear=False).ok
+    assert holder_in_standing([clear], motion)[0].ok

@@ -140,7 +140,8 @@ class Sweep:
     ) -> tuple[Floats, Floats, Floats]:
         """Return what passes leave beside their lines, how far ahead of the place it is cut, and what a tilt error leaves.
 
-        Above the line of the pass the height is 0, or negative where the rear of the bottom gouges. A tilt error about the contact moves each place of the
+        Above the line of the pass the height is 0, or negative where the rear of the bottom gouges. A tilt error about the
+        contact moves each place of the
         bottom along the normal by the error times its distance from the contact, to first order; the worst direction of the
         error is taken place by place. docs/theory-matched.md#guard.
 

@@ -493,11 +493,11 @@ _SAG_SHARE = 0.05
 
 @njit(cache=True, nogil=True)
 def sag(
-    surface: tuple, edge2: float, high: float, cosine: float, bend_radius: float, spread: float, turn: float
+    surface: tuple, edge2: float, high: float, cosine: float, radii: tuple, spread: float, turn: float
 ) -> float:
     """Return how far one piece's residual can stand above its chord plane over a triangle [mm]; inf if too steep.
 
-    h'' >= -(2a + 2k sin(T) |h'| + 3 k^2 |h| + 2 turn (W + 1) + turn^2 reach) / cos(T), k = 2 max(a, b), T the angle
+    h'' >= -(2a + 2k sin(T) |h'| + 3 k^2 |h| + 2 turn (W + 1) + turn^2 R) / cos(T), k = 2 max(a, b), T the angle
     between normal line and swept volume; the chord plane is off by at most half of that times
     edge^2 / 3 + spread^2 / 4: docs/theory-proof.md#bound.
 
@@ -511,8 +511,8 @@ def sag(
         Largest residual at the corners, in size.
     cosine : float
         Smallest cosine of T at the corners.
-    bend_radius : float [mm]
-        Smallest radius of curvature of the swept volume.
+    radii : (smallest, cutter) [mm]
+        Smallest radius of curvature of the swept volume, and the cutter's radius.
     spread : float [mm]
         How far apart along the piece the corners' entries lie; 0 for a ball, whose swept volume is convex.
     turn : float [1/mm]
@@ -521,14 +521,15 @@ def sag(
     a, b, w = surface
     k = 2.0 * max(a, b)
     reach = math.sqrt(edge2 / 3.0)
-    change = 1.5 * (w * reach + spread) / bend_radius + k * reach
+    change = 1.5 * (w * reach + spread) / radii[0] + k * reach + turn * spread
     # cos(T + d) >= cos(T) (1 - d^2 / 2) - d sin(T), sin(T + d) <= sin(T) + d cos(T).
     sine = math.sqrt(max(0.0, 1.0 - cosine * cosine))
     sine, cosine = sine + change * cosine, cosine * (1.0 - 0.5 * change * change) - change * sine
     if cosine < _STEEP:
         return math.inf
     slope = ((w + 1.0) * sine + k * high) / cosine
-    bend = 2.0 * a + 2.0 * k * sine * slope + 3.0 * k * k * high + 2.0 * turn * (w + 1.0)
+    bend = 2.0 * a + 2.0 * k * sine * slope + 3.0 * k * k * high
+    bend += 2.0 * turn * (w + 1.0) + turn * turn * radii[1]
     return bend / cosine * (edge2 / 6.0 + spread * spread / 8.0)
 
 
@@ -721,23 +722,16 @@ def _over(
     c0, c1, a0, a1, size, _ = pieces
     high = max(abs(heights[0]), abs(heights[1]), abs(heights[2]))
     if size[k, 0] == 0.0 and size[k, 1] > 0.0:
-        return sag(surface, edge2, high, cosine, size[k, 1], 0.0, 0.0)
+        return sag(surface, edge2, high, cosine, (size[k, 1], size[k, 1]), 0.0, 0.0)
     length, turned = 0.0, 0.0
     for i in range(3):
         length += (c1[k, i] - c0[k, i]) ** 2
         turned += (a1[k, i] - a0[k, i]) ** 2
     length = math.sqrt(length)
     # A flat end has no corner arc: along its rim the normal turns with the rim itself.
-    bend_radius = size[k, 1] if size[k, 1] > 0.0 else size[k, 0]
-    return sag(
-        surface,
-        edge2,
-        high,
-        cosine,
-        bend_radius,
-        spread * length,
-        1.1 * math.sqrt(turned) / max(length, 1e-9),
-    )
+    radii = (size[k, 1] if size[k, 1] > 0.0 else size[k, 0], size[k, 0] + size[k, 1])
+    turn = 1.1 * math.sqrt(turned) / max(length, 1e-9)
+    return sag(surface, edge2, high, cosine, radii, spread * length, turn)
 
 
 @njit(cache=True, nogil=True)

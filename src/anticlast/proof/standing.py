@@ -55,14 +55,21 @@ def sure_mm(found: BodyClearance) -> float:
     return found.distance_mm - found.slack_mm - STOCK_REACH_MM
 
 
-def rapids_in_standing(job: Job, found: Sequence[BodyClearance], motion: PartMotion) -> Finding:
-    """Compare rapids with the stock as it stands: the cutting end keeps the job's clearance, shank and holder stay off it."""
+def rapids_in_standing(
+    job: Job, found: Sequence[BodyClearance], motion: PartMotion, *, rigid_clear: bool
+) -> Finding:
+    """Compare rapids with the stock as it stands: the cutting end keeps the job's clearance, shank and holder stay off it.
+
+    ``rigid_clear``: shank and holder are known to be clear of the blank at rapid. If they are not, a body that is near at
+    feed counts too: only its least distance is known, and a rapid may hide behind that.
+    """
     limit = job.clearance_mm
-    rigid = [one for one in found if one.body != _END and one.row >= 0 and motion.rapid[one.row]]
+    rigid = [one for one in found if one.body != _END and one.row >= 0 and not rigid_clear]
     ends = [one for one in found if one.body == _END and one.row >= 0]
     for one in sorted(rigid, key=sure_mm)[:1]:
         if sure_mm(one) <= 0.0:
-            message = f"at rapid the {_told(one)}; lift the cutter higher before it moves across"
+            start = "at rapid the" if motion.rapid[one.row] else "rapids are not shown to be clear, for the"
+            message = f"{start} {_told(one)}; lift the cutter higher before it moves across"
             return Finding("rapids", False, one.distance_mm, 0.0, "mm", _line(one), message)
     if not ends:
         message = "no rapid move comes near the stock as it stands by then"

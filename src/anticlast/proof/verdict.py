@@ -128,7 +128,7 @@ def _collisions(
         standing = standing_clearances(job, motion, moving)
         in_blank = holder_in_standing(standing, motion) if in_blank else []
         if not rapids.ok:
-            rapids = rapids_in_standing(job, standing, motion)
+            rapids = rapids_in_standing(job, standing, motion, rigid_clear=rigid.bound_mm > 0.0)
             near = rapids.worst
     findings += [rapids, *in_blank]
     return holder.distance_mm, near
