@@ -371,6 +371,10 @@ def stock(
         Path | None,
         typer.Option("--picture", metavar="FILE", help="Also draw what remains, and sections: .png or .svg."),
     ] = None,
+    page: Annotated[
+        Path | None,
+        typer.Option("--page", metavar="FILE", help="Also write an interactive page: stock, cutter and load through time."),
+    ] = None,
     as_json: JsonOption = False,
 ) -> None:
     """Preview the stock before an operation and what each pass will meet, before any cutting.
@@ -390,6 +394,11 @@ def stock(
             from anticlast.report.picture_stock import stock_picture
 
             stock_picture(found, picture)
+        if page is not None:
+            from anticlast.report.stock_page import write_stock_page
+
+            progress("the page")
+            write_stock_page(found, page)
     if as_json:
         _print_json(found.as_json(only=before))
     else:
@@ -397,6 +406,8 @@ def stock(
             typer.echo(line)
         if picture is not None:
             typer.echo(f"picture: {picture}")
+        if page is not None:
+            typer.echo(f"page: {page}")
     raise typer.Exit(0 if all(finding.ok or finding.warning for finding in found.findings) else 1)
 
 

@@ -92,7 +92,7 @@ def prove(job: Job, program: ReadProgram, grid_mm: float | None = None) -> tuple
         rapid_clearance_mm=rapid,
         travel={letter: (low, high) for letter, (low, high, _, _) in travel.items()},
         findings=tuple(findings),
-        scallop_map=scallop_map(cut),
+        scallop_map=scallop_map(cut, _stepover_mm(job), checks.gouge_limit_mm(job)),
     )
     return proof, motion
 
@@ -132,6 +132,18 @@ def _collisions(
             near = rapids.worst
     findings += [rapids, *in_blank]
     return holder.distance_mm, near
+
+
+def _stepover_mm(job: Job) -> float:
+    """Return about how far apart crests of the finishing operations lie: s^2 = 8 R h on a flat [mm]; 0 if unknown."""
+    finishing = [operation for operation in job.operations if operation.does == "finish"]
+    return max(
+        (
+            operation.stepover_mm or math.sqrt(8.0 * operation.cutter.radius_mm * (operation.scallop_mm or 0.0))
+            for operation in finishing
+        ),
+        default=0.0,
+    )
 
 
 def moving_pieces(job: Job, program: ReadProgram, motion: PartMotion) -> Bools:

@@ -31,6 +31,8 @@ _QUARTERINGS = 300_000
 # Most trials of nodes with pieces deep in the part: some seconds' work.
 _MOST_TRIALS = 50_000_000.0
 _MAP_SIDE = 400
+# Crests that one point of the map should hold, and points along the longer side that it should have all the same.
+_MAP_CRESTS, _MAP_LEAST = 4.0, 40
 
 
 @dataclass(frozen=True, slots=True)
@@ -298,17 +300,19 @@ def _starting_stock_mm(job: Job, saddle: Saddle, nodes: Nodes, cap_mm: float) ->
     return np.minimum(cap_mm, (job.stock.top_mm - z) / saddle.normal(nodes.xy)[:, 2])
 
 
-def scallop_map(cut: Cut) -> ScallopMap:
+def scallop_map(cut: Cut, stepover_mm: float = 0.0, allowed_mm: float = 0.0) -> ScallopMap:
     """Return the measured heights in plan, thinned to at most 400 by 400 points.
 
-    Each point stands for a block of grid points: their highest residual, or the deepest gouge if there is one beyond
-    the measuring uncertainty.
+    Each point stands for a block of grid points: their highest residual, or the deepest gouge if there is one deeper
+    than is allowed and the measuring uncertainty. Grid points meet crests at varying distances from the top, so blocks hold several
+    stepovers where the part is large enough: single crests would show the grid, not the scallop.
     """
     from anticlast.records import ScallopMap
 
     at = cut.nodes.at_grid
     height = np.where(at >= 0, cut.height_mm[np.maximum(at, 0)], np.nan)
-    step = max(1, -(-max(height.shape) // _MAP_SIDE))
+    crests = min(_MAP_CRESTS * stepover_mm / cut.grid_mm, max(height.shape) / _MAP_LEAST)
+    step = max(1, -(-max(height.shape) // _MAP_SIDE), int(crests))
     rows, columns = (-(-size // step) for size in height.shape)
     padded = np.full((rows * step, columns * step), np.nan)
     padded[: height.shape[0], : height.shape[1]] = height
@@ -316,7 +320,7 @@ def scallop_map(cut: Cut) -> ScallopMap:
     empty = np.all(np.isnan(blocks), axis=2)
     blocks[empty] = 0.0
     high, low = np.nanmax(blocks, axis=2), np.nanmin(blocks, axis=2)
-    picked = np.where(low < -MEASURE_MM, low, high)
+    picked = np.where(low < -(allowed_mm + MEASURE_MM), low, high)
     picked[empty] = np.nan
     middle = step // 2
     return ScallopMap(

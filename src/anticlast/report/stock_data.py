@@ -42,7 +42,14 @@ def stock_data(preview: StockPreview, units: Units) -> dict[str, Any]:
     motion, operation = preview.motion, preview.operation[first_segment]
     knot = np.minimum(np.searchsorted(rows, drops["row"]), len(rows) - 1) if len(rows) else drops["row"]
     stock = {
-        "grid": {"step": step, "rows": there.shape[0], "columns": there.shape[1], "zero": zero, "u": along_u, "v": along_v},
+        "grid": {
+            "step": step,
+            "rows": there.shape[0],
+            "columns": there.shape[1],
+            "zero": zero,
+            "u": along_u,
+            "v": along_v,
+        },
         "places_xy": packed(_drawn_xy(xy, there, job.stock.outline).astype(np.float32)),
         "rings": {"blank": rings(job.stock.outline), "part": rings(job.part.outline)},
         "there": packed(there.ravel().astype(np.uint8)),
@@ -70,7 +77,9 @@ def stock_data(preview: StockPreview, units: Units) -> dict[str, Any]:
         "loads": _loads(preview, rows, units),
         "operations": [operation.does for operation in job.operations],
         "thickest": [state.thickness_mm[2] for state in preview.states],
-        "start": max(0, int(np.argmax(operation >= preview.before)) - 1) if preview.before > 1 and len(rows) else 0,
+        "start": max(0, int(np.argmax(operation >= preview.before)) - 1)
+        if preview.before > 1 and len(rows)
+        else 0,
     }
     return {
         "units": {"scale": units.scale, "digits": 4 if units.inch else 3, "length": units.name},
@@ -170,7 +179,9 @@ def _drops(preview: StockPreview, stride: int) -> tuple[dict[str, np.ndarray], i
 
 def _bins(preview: StockPreview, rows: Ints) -> Ints:
     """Return the segment that begins each stretch between kept places."""
-    return np.concatenate(([0], np.searchsorted(preview.segments.row, rows[:-1], side="right"))).astype(np.int64)
+    return np.concatenate(([0], np.searchsorted(preview.segments.row, rows[:-1], side="right"))).astype(
+        np.int64
+    )
 
 
 def _clock(preview: StockPreview, rows: Ints) -> Floats:

@@ -67,13 +67,23 @@ def _states(preview: StockPreview, units: Units) -> str:
     rows = []
     for state in preview.states:
         last = state.before > len(preview.job.operations)
-        when = "at the end" if last else f"before {state.before}, {preview.job.operations[state.before - 1].does}"
+        when = (
+            "at the end"
+            if last
+            else f"before {state.before}, {preview.job.operations[state.before - 1].does}"
+        )
         low, mean, high = (units.length(value, bare=True) for value in state.thickness_mm)
         volume = f"{state.above_part_mm3 * units.scale**3:.5g}"
         cells = "".join(f"<td>{text(value)}</td>" for value in (volume, low, mean, high))
         rows.append(f"<tr><th scope='row'>{text(when)}</th>{cells}</tr>")
     name = units.name
-    heads = ("moment", f"over the surface, {name}³", f"thinnest, {name}", f"mean, {name}", f"thickest, {name}")
+    heads = (
+        "moment",
+        f"over the surface, {name}³",
+        f"thinnest, {name}",
+        f"mean, {name}",
+        f"thickest, {name}",
+    )
     head = "".join(f"<th scope='col'>{text(word)}</th>" for word in heads)
     return f"<table><thead><tr>{head}</tr></thead><tbody>{''.join(rows)}</tbody></table>"
 

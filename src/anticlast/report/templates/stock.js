@@ -184,7 +184,7 @@
 
   /* ---- strip ---- */
   const chart = byId("chart"), choice = byId("quantity"), EDGE = 52, TALL = 190;
-  for (const load of stock.loads) choice.add(new Option(load.unit === unit || load.unit ? `${load.title}, ${load.unit}` : load.title, load.key));
+  for (const load of stock.loads) choice.add(new Option(`${load.title}, ${load.unit}`, load.key));
   const total = stock.places ? stock.clock[last] : 0;
   const across = (place, room) => EDGE + (total ? stock.clock[place] / total : place / Math.max(last, 1)) * (room - EDGE - 10);
   function drawChart() {
