@@ -31,7 +31,9 @@ def block(
     return StockField.of_heights(grid, grid.areas_mm2(shape), bottom_mm, np.full(grid.shape, top_mm))
 
 
-def motion(tips: npt.ArrayLike, axes: npt.ArrayLike | None = None, rapid: npt.ArrayLike | None = None) -> PartMotion:
+def motion(
+    tips: npt.ArrayLike, axes: npt.ArrayLike | None = None, rapid: npt.ArrayLike | None = None
+) -> PartMotion:
     """Straight moves of T1 between tips; line n + 1 of the program leads to tip n."""
     tip = np.array(tips, dtype=np.float64)
     count = len(tip)
@@ -55,7 +57,9 @@ def line(start: tuple[float, float, float], end: tuple[float, float, float], mov
 def cut(field: StockField, moves: PartMotion, cutter: Cutter) -> float:
     """Cut, and return the volume taken."""
     segments = take_segments(moves, [cutter])
-    return float(sum(field.run(segments, [cutter], SADDLE, span).volume_mm3.sum() for span in runs(segments, None)))
+    return float(
+        sum(field.run(segments, [cutter], SADDLE, span).volume_mm3.sum() for span in runs(segments, None))
+    )
 
 
 def engage(

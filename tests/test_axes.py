@@ -105,7 +105,9 @@ def worst_off_path(job, path, stretch):
     height = path.operation.cutter.reference_height_mm
     line = stretch.tip_mm + height * stretch.axis
     budget = budget_of(path.operation)
-    off = weighted_distance(tip + height * axis, line, stretch.normal, budget.point_mm / budget.sideways_mm).max()
+    off = weighted_distance(
+        tip + height * axis, line, stretch.normal, budget.point_mm / budget.sideways_mm
+    ).max()
     # The axes that were wished for, densely, along the way
     share = np.linspace(0, 1, 21)
     wish = stretch.axis[:-1, None, :] * (1 - share)[:, None] + stretch.axis[1:, None, :] * share[:, None]

@@ -59,13 +59,17 @@ def test_a_turned_part_meets_the_same() -> None:
     """Side milling along Y against the same along X: the grid's own direction must not show."""
     along_x, _ = engage(block(), motion(line((-40, 21.0, 5), (40, 21.0, 5), 80)), FLAT)
     along_y, _ = engage(block(), motion(line((31.0, -30, 5), (31.0, 30, 5), 80)), FLAT)
-    assert np.median(middle(along_y.section_mm2)) == pytest.approx(np.median(middle(along_x.section_mm2)), rel=0.05)
+    assert np.median(middle(along_y.section_mm2)) == pytest.approx(
+        np.median(middle(along_x.section_mm2)), rel=0.05
+    )
 
 
 def test_finishing_takes_stepover_times_depth_less_the_cusp() -> None:
     """Section s ap - cusp, cusp = R s - [(s/2) sqrt(R^2 - s^2/4) + R^2 asin(s / 2R)] (derived: strip under the arcs)."""
     radius, step, depth = 3.0, 0.5, 0.3
-    cusp = radius * step - (step / 2 * math.sqrt(radius**2 - step**2 / 4) + radius**2 * math.asin(step / (2 * radius)))
+    cusp = radius * step - (
+        step / 2 * math.sqrt(radius**2 - step**2 / 4) + radius**2 * math.asin(step / (2 * radius))
+    )
     assert cusp == pytest.approx(1.737924e-3, rel=1e-6)
     field = block()
     sections = []
@@ -174,7 +178,9 @@ def test_rings_cover_the_cutter() -> None:
         assert set(np.round(normal, 12)) <= {0.0, 1.0}
 
 
-def _station_twin(hits: np.ndarray, cutter: Cutter, tooth_mm: float, law: tuple[float, float]) -> dict[str, float]:
+def _station_twin(
+    hits: np.ndarray, cutter: Cutter, tooth_mm: float, law: tuple[float, float]
+) -> dict[str, float]:
     """Upright cutter, feed along x, by plain loops: tangential force over a turn, its mean, its peak, the section."""
     rings = rings_of(cutter)
     force = np.zeros(ANGLES)
@@ -190,8 +196,16 @@ def _station_twin(hits: np.ndarray, cutter: Cutter, tooth_mm: float, law: tuple[
                 force[m] += one
                 torque += one * radius * cutter.flutes / ANGLES
                 section += share * radius * rings.edge_mm[ring] * 2.0 * math.pi / ANGLES
-    teeth = [sum(force[(m + t * ANGLES // cutter.flutes) % ANGLES] for t in range(cutter.flutes)) for m in range(ANGLES)]
-    return {"mean": force.sum() * cutter.flutes / ANGLES, "peak": max(teeth), "section": section, "torque": torque}
+    teeth = [
+        sum(force[(m + t * ANGLES // cutter.flutes) % ANGLES] for t in range(cutter.flutes))
+        for m in range(ANGLES)
+    ]
+    return {
+        "mean": force.sum() * cutter.flutes / ANGLES,
+        "peak": max(teeth),
+        "section": section,
+        "torque": torque,
+    }
 
 
 @pytest.mark.parametrize("cutter", [FLAT, BALL, BULL], ids=lambda cutter: cutter.shape)
@@ -242,9 +256,16 @@ def test_front_points_agree_with_their_twin() -> None:
             normal = radial * out + axial * axis
             if normal @ feed < LEAST_COSINE:
                 continue
-            place = point + height * axis + radius * out + ahead * (1.0 + 2.0 * (1.0 - normal[2] ** 2) ** 2) * feed
+            place = (
+                point
+                + height * axis
+                + radius * out
+                + ahead * (1.0 + 2.0 * (1.0 - normal[2] ** 2) ** 2) * feed
+            )
             row = math.floor((place[1] - grid[1]) / grid[2])
-            twin[ring, m] = _field_kernels.in_material(*place, grid, row, field.high_mm, field.low_mm, field.count)
+            twin[ring, m] = _field_kernels.in_material(
+                *place, grid, row, field.high_mm, field.low_mm, field.count
+            )
     assert np.array_equal(hits, twin)
     assert 100 < hits.sum() < 0.6 * hits.size
 
@@ -318,7 +339,9 @@ def test_tilted_holder_against_brute_force() -> None:
     tips = np.column_stack((-25.0 + 30.0 * share, 4.0 * share, 13.0 + 2.0 * np.sin(6.0 * share)))
     found, _ = clearance_through_time(field, motion(tips, axes), [cutter], SADDLE)
     x, y = (values[field.count > 0] for values in field.grid.middles_xy())
-    points = np.concatenate([np.column_stack((x, y, np.full(len(x), z))) for z in (10.0, 9.5, 9.0, 8.0, 5.0, 0.0)])
+    points = np.concatenate(
+        [np.column_stack((x, y, np.full(len(x), z))) for z in (10.0, 9.5, 9.0, 8.0, 5.0, 0.0)]
+    )
     fine = np.linspace(0.0, 1.0, 161)
     tip = np.column_stack([np.interp(fine, share, column) for column in tips.T])
     axis = np.column_stack([np.interp(fine, share, column) for column in axes.T])
@@ -328,9 +351,13 @@ def test_tilted_holder_against_brute_force() -> None:
         for k in range(len(fine)):
             offset = points - tip[k]
             height = offset @ axis[k]
-            out = np.sqrt(np.maximum(0.0, np.einsum("ij,ij->i", offset, offset) - height**2)) - shape.radius_mm
+            out = (
+                np.sqrt(np.maximum(0.0, np.einsum("ij,ij->i", offset, offset) - height**2)) - shape.radius_mm
+            )
             end = np.maximum(shape.low_mm - height, height - shape.high_mm)
-            apart = np.hypot(np.maximum(out, 0.0), np.maximum(end, 0.0)) + np.minimum(np.maximum(out, end), 0.0)
+            apart = np.hypot(np.maximum(out, 0.0), np.maximum(end, 0.0)) + np.minimum(
+                np.maximum(out, end), 0.0
+            )
             least = min(least, float(apart.min()))
         assert body.distance_mm == pytest.approx(least, abs=body.slack_mm), body.body
         assert 0 < body.line <= 41

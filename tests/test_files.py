@@ -26,9 +26,14 @@ def test_write_text_replaces_whole(tmp_path: Path) -> None:
 def test_an_error_while_writing_leaves_the_old_file(tmp_path: Path) -> None:
     target = tmp_path / "tile.ngc"
     files.write_text(target, "old")
-    with pytest.raises(ZeroDivisionError), files.beside(target) as (stream, _):
-        stream.write("half a prog")
-        raise ZeroDivisionError
+
+    def break_off() -> None:
+        with files.beside(target) as (stream, _):
+            stream.write("half a prog")
+            raise ZeroDivisionError
+
+    with pytest.raises(ZeroDivisionError):
+        break_off()
     assert target.read_text() == "old"
     assert leftovers(tmp_path) == ["tile.ngc"]
 

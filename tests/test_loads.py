@@ -42,7 +42,9 @@ def test_laws_come_as_a_range_or_not_at_all_and_a_job_may_override(make_job: Job
     assert len(metal) == len(materials.material("aluminium 6061").forces) > 1
     found = np.empty(2)
     _load_kernels.specific(0.02, metal, found)
-    assert tuple(found) == pytest.approx(materials.material("aluminium 6061").specific_force_n_mm2(0.02), rel=1e-12)
+    assert tuple(found) == pytest.approx(
+        materials.material("aluminium 6061").specific_force_n_mm2(0.02), rel=1e-12
+    )
     own = laws_of(make_job(material="acetal", stock_extra="specific_force = [60.0, 120.0]"))
     _load_kernels.specific(0.02, own, found)
     assert tuple(found) == (60.0, 120.0)
@@ -89,7 +91,12 @@ def test_slot_mean_force_of_the_textbook() -> None:
     mean, across = _slot_forces(767.01, 27.7, 2, 1.0, 0.05)
     assert across == pytest.approx(36.80962, abs=1e-4)
     found, _ = engage(
-        block(), motion(line((-25, 2, 9), (25, 2, 9), 4)), FLAT, feed_mm_min=600.0, rpm=6000.0, laws=((0, 0, 767.01, 27.7),)
+        block(),
+        motion(line((-25, 2, 9), (25, 2, 9), 4)),
+        FLAT,
+        feed_mm_min=600.0,
+        rpm=6000.0,
+        laws=((0, 0, 767.01, 27.7),),
     )
     middle = slice(len(found.rpm) // 3, 2 * len(found.rpm) // 3)
     # Half of it rubs all round: one angle more or less at either end of the arc is 1.5 % of the whole.

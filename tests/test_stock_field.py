@@ -41,7 +41,9 @@ def test_block_and_round_have_the_volume_of_their_outline() -> None:
     assert block().volume_mm3() == pytest.approx(60.0 * 40.0 * 20.0, rel=1e-12)
     disc = outline.circle(50.0)
     assert block(shape=disc).volume_mm3() == pytest.approx(disc.area_mm2 * 20.0, rel=1e-12)
-    holed = outline.polygon([[-20, -20], [20, -20], [20, 20], [-20, 20]], [[[-5, -5], [5, -5], [5, 5], [-5, 5]]])
+    holed = outline.polygon(
+        [[-20, -20], [20, -20], [20, 20], [-20, 20]], [[[-5, -5], [5, -5], [5, 5], [-5, 5]]]
+    )
     assert block(shape=holed).volume_mm3() == pytest.approx(1500.0 * 20.0, rel=1e-12)
 
 
@@ -77,7 +79,9 @@ def test_offset_heights_meet_the_offset_points() -> None:
     saddle = Saddle(0.01, 0.02, 0.7)
     xy = np.random.default_rng(5).uniform(-20, 20, (200, 2))
     moved = saddle.offset(xy, 1.5)
-    np.testing.assert_allclose(offset_heights_mm(saddle, moved[:, :2], 1.5), moved[:, 2], atol=0.01 * MICROMETRE)
+    np.testing.assert_allclose(
+        offset_heights_mm(saddle, moved[:, :2], 1.5), moved[:, 2], atol=0.01 * MICROMETRE
+    )
     with pytest.raises(NotConverged, match="allowance"):
         offset_heights_mm(Saddle(1.0, 1.0, 0.0), np.array([[0.0, 0.5]]), 5.0)
 
@@ -106,7 +110,10 @@ def test_mesh_blank_has_the_volume_of_the_mesh(tmp_path: Path) -> None:
 def test_mesh_that_cannot_be_a_blank_is_refused(tmp_path: Path) -> None:
     box = trimesh.creation.box((10.0, 10.0, 10.0))
     opened = trimesh.Trimesh(box.vertices, box.faces[:-1], process=False)
-    cases = [(opened, "not a closed solid"), (box.copy().apply_translation([20, 0, 0]), "outside the blank's outline")]
+    cases = [
+        (opened, "not a closed solid"),
+        (box.copy().apply_translation([20, 0, 0]), "outside the blank's outline"),
+    ]
     cases.append((box.copy().apply_translation([0, 0, 4.0]), "bottom and top"))
     for mesh, message in cases:
         with pytest.raises(BadInput, match=message):
@@ -149,8 +156,14 @@ def test_measured_heights_are_read_between_their_places(tmp_path: Path) -> None:
         (lambda rows: [*rows[:5], "1,two,3", *rows[6:]], r"heights\.csv:7: y: found 'two'"),
         (lambda rows: [*rows[:5], *rows[6:]], r"no height is given at x -4, y -12 \(1 places"),
         (lambda rows: [*rows, rows[0]], r"heights\.csv:197: the same place as on line 2"),
-        (lambda rows: [*rows[:5], rows[5].replace("-4,", "-4.5,"), *rows[6:]], r"heights\.csv:7: x: found -4\.5"),
-        (lambda rows: [row for row in rows if not row.startswith(("12,", "14,"))], "needs heights over the whole blank"),
+        (
+            lambda rows: [*rows[:5], rows[5].replace("-4,", "-4.5,"), *rows[6:]],
+            r"heights\.csv:7: x: found -4\.5",
+        ),
+        (
+            lambda rows: [row for row in rows if not row.startswith(("12,", "14,"))],
+            "needs heights over the whole blank",
+        ),
         (lambda rows: [*rows[:-1], rows[-1].rsplit(",", 1)[0] + ",9"], "above the top of the blank"),
         (lambda rows: [*rows[:-1], rows[-1].rsplit(",", 1)[0] + ",-12"], "more than the blank's bottom"),
     ],
@@ -182,7 +195,9 @@ def test_slot_volume_is_the_closed_form(name: str, spacing: float) -> None:
 def test_plunge_is_the_closed_form() -> None:
     """Straight down 6 mm: cylinder pi R^2 h for the flat, less the ball's missing third of its own cylinder (R^3 pi / 3)."""
     for cutter, exact in ((FLAT, math.pi * 9.0 * 6.0), (BALL, math.pi * 9.0 * 6.0 - math.pi * 27.0 / 3.0)):
-        assert cut(block(), motion([[1.0, 2.0, 12.0], [1.0, 2.0, 4.0]]), cutter) == pytest.approx(exact, rel=HALF_PERCENT)
+        assert cut(block(), motion([[1.0, 2.0, 12.0], [1.0, 2.0, 4.0]]), cutter) == pytest.approx(
+            exact, rel=HALF_PERCENT
+        )
 
 
 def _points(cutter: Cutter, tip: Floats, axis: Floats) -> Floats:
@@ -205,7 +220,10 @@ def _manifold_mm3(cutter: Cutter, moves: PartMotion) -> float:
     """Volume taken from the block: hulls of the cutter at both ends of each move (exact for a fixed axis), united."""
     blank = manifold3d.Manifold.cube((60.0, 40.0, 20.0)).translate((-30.0, -20.0, -10.0))
     poses = [_points(cutter, tip, axis) for tip, axis in zip(moves.tip_mm, moves.axis, strict=True)]
-    hulls = [manifold3d.Manifold.hull_points(np.concatenate(pair)) for pair in zip(poses[:-1], poses[1:], strict=True)]
+    hulls = [
+        manifold3d.Manifold.hull_points(np.concatenate(pair))
+        for pair in zip(poses[:-1], poses[1:], strict=True)
+    ]
     tool = manifold3d.Manifold.batch_boolean(hulls, manifold3d.OpType.Add)
     return float(blank.volume() - (blank - tool).volume())
 
@@ -402,7 +420,9 @@ def test_swept_interval_agrees_with_its_twin(name: str, upright: bool) -> None:
 
 def test_ball_sweep_is_the_tangent_of_its_circles() -> None:
     """A ball of radius 3 along a slope of 1:1 under its own line: lowest z is that of the line less R sqrt 2 (closed form)."""
-    scratch = _scratch(BALL, np.zeros(3), np.array([0, 0, 1.0]), np.array([10.0, 0, 10.0]), np.array([0, 0, 1.0]))
+    scratch = _scratch(
+        BALL, np.zeros(3), np.array([0, 0, 1.0]), np.array([10.0, 0, 10.0]), np.array([0, 0, 1.0])
+    )
     low, high = kernels.ball_sweep(5.0, 0.0, scratch)
     assert low == pytest.approx(5.0 - 3.0 * math.sqrt(2.0), abs=1e-12)
     assert high == pytest.approx(5.0 + 3.0 * math.sqrt(2.0), abs=1e-12)
@@ -411,7 +431,9 @@ def test_ball_sweep_is_the_tangent_of_its_circles() -> None:
 
 def test_upright_sweep_of_a_bull_down_a_slope() -> None:
     """Twin: least over a fine comb of places along the path."""
-    scratch = _scratch(BULL, np.zeros(3), np.array([0, 0, 1.0]), np.array([8.0, 0.0, -4.0]), np.array([0, 0, 1.0]))
+    scratch = _scratch(
+        BULL, np.zeros(3), np.array([0, 0, 1.0]), np.array([8.0, 0.0, -4.0]), np.array([0, 0, 1.0])
+    )
     for u, v in ((4.0, 0.5), (8.5, 1.0), (-2.0, 1.5), (3.0, 2.9)):
         t = np.linspace(0.0, 1.0, 200001)
         out = np.hypot(u - 8.0 * t, v)
@@ -424,7 +446,9 @@ def test_body_distances_agree_with_their_twins() -> None:
     """Twin: the nearest of many points of the cylinder's surface, and of many places on the line."""
     rng = np.random.default_rng(2)
     body = np.array([2.0, 3.0, 9.0, 0.0])
-    angle, height = (grid.ravel() for grid in np.meshgrid(np.linspace(0, 2 * math.pi, 400), np.linspace(3, 9, 120)))
+    angle, height = (
+        grid.ravel() for grid in np.meshgrid(np.linspace(0, 2 * math.pi, 400), np.linspace(3, 9, 120))
+    )
     side = np.column_stack((2.0 * np.cos(angle), 2.0 * np.sin(angle), height))
     disc = rng.uniform(-2.0, 2.0, (40000, 2))
     disc = disc[np.hypot(*disc.T) <= 2.0]
@@ -437,7 +461,9 @@ def test_body_distances_agree_with_their_twins() -> None:
     for x, y in rng.uniform(-6.0, 6.0, (20, 2)):
         z = np.linspace(-20.0, 4.0, 4001)
         twin = min(kernels.body_distance(x, y, value, tuple(axis), body) for value in z)
-        assert kernels.line_distance(x, y, -20.0, 4.0, tuple(axis), body) == pytest.approx(twin, abs=2 * MICROMETRE)
+        assert kernels.line_distance(x, y, -20.0, 4.0, tuple(axis), body) == pytest.approx(
+            twin, abs=2 * MICROMETRE
+        )
 
 
 def test_tile_tops_and_boxes() -> None:
@@ -494,7 +520,12 @@ def test_columns_cross_a_mesh_as_often_in_as_out() -> None:
 def test_too_many_pieces_of_a_mesh_fill_the_narrowest_gap() -> None:
     height = np.array([9.0, 8.0, 7.5, 6.0, 5.0, 4.0])
     sense = np.array([1.0, -1.0, 1.0, -1.0, 1.0, -1.0])
-    high, low, count, filled = np.zeros((2, 1, 1)), np.zeros((2, 1, 1)), np.zeros((1, 1), np.int64), np.zeros((1, 1))
+    high, low, count, filled = (
+        np.zeros((2, 1, 1)),
+        np.zeros((2, 1, 1)),
+        np.zeros((1, 1), np.int64),
+        np.zeros((1, 1)),
+    )
     _mesh_kernels.stack(np.array([0, 6]), height, sense, high, low, count, filled)
     assert count[0, 0] == 2
     assert (high[0, 0, 0], low[0, 0, 0], filled[0, 0]) == (9.0, 6.0, 0.5)
@@ -601,7 +632,9 @@ def test_turned_frame_turns_back() -> None:
     np.testing.assert_allclose(back(*turned(x, y)), [x, y], atol=1e-12)
     p, q, m = turned_surface(Saddle(0.01, 0.02, 0.4))
     u, v = turned(x, y)
-    np.testing.assert_allclose(p * u**2 + q * v**2 + m * u * v, Saddle(0.01, 0.02, 0.4).height(x, y), atol=1e-14)
+    np.testing.assert_allclose(
+        p * u**2 + q * v**2 + m * u * v, Saddle(0.01, 0.02, 0.4).height(x, y), atol=1e-14
+    )
 
 
 def test_cell_areas_add_up_to_the_outline() -> None:

@@ -173,7 +173,12 @@ def test_forces_rise_with_the_section(preview: StockPreview) -> None:
         assert 0.0 < one.force_n[0] < one.force_n[1]
         assert 0.0 < one.power_w[0] < one.power_w[1] < 350.0
         # Power is specific force times removal rate; aluminium's laws give 240 to 4000 N/mm^2 at these chips.
-        assert 200.0 < one.power_w[0] * 60e3 / one.removal_mm3_min < one.power_w[1] * 60e3 / one.removal_mm3_min < 6000.0
+        assert (
+            200.0
+            < one.power_w[0] * 60e3 / one.removal_mm3_min
+            < one.power_w[1] * 60e3 / one.removal_mm3_min
+            < 6000.0
+        )
 
 
 def test_passes_without_comments_are_told_by_rapids(preview: StockPreview, tmp_path: Path) -> None:
@@ -182,8 +187,13 @@ def test_passes_without_comments_are_told_by_rapids(preview: StockPreview, tmp_p
     temporary, _ = pipeline.post(job, axis_paths, tmp_path / "tile.ngc")
     told = passes_of(job, pipeline.read_back(job, temporary))
     bare = tmp_path / "bare.ngc"
-    bare.write_text("\n".join(row for row in temporary.read_text().splitlines() if not row.startswith("(")), encoding="utf-8")
-    program = read_program(bare, length_offsets={cutter.number: cutter.gauge_length_mm for cutter in job.cutters})
+    bare.write_text(
+        "\n".join(row for row in temporary.read_text().splitlines() if not row.startswith("(")),
+        encoding="utf-8",
+    )
+    program = read_program(
+        bare, length_offsets={cutter.number: cutter.gauge_length_mm for cutter in job.cutters}
+    )
     passes = passes_of(job, program)
     assert told.told
     assert not passes.told
@@ -213,10 +223,21 @@ def test_json_of_the_command(tmp_path: Path) -> None:
     result = run("stock", tile(tmp_path), "--json", "--grid", "0.4")
     assert result.exit_code == 0, result.output
     data = json.loads(result.output)
-    assert data["volume_above_part_mm3"] == pytest.approx(1200.0 - 0.01 * 24 * 20 * (24**2 - 20**2) / 12, rel=1e-3)
+    assert data["volume_above_part_mm3"] == pytest.approx(
+        1200.0 - 0.01 * 24 * 20 * (24**2 - 20**2) / 12, rel=1e-3
+    )
     assert set(data["thickness_mm"]) == {"min", "mean", "max"}
     assert {entry["operation"] for entry in data["passes"]} == {1, 2, 3}
-    needed = {"depth_mm", "width_mm", "engaged_deg", "removal_rate_mm3_min", "force_n", "power_w", "deflection_mm", "flags"}
+    needed = {
+        "depth_mm",
+        "width_mm",
+        "engaged_deg",
+        "removal_rate_mm3_min",
+        "force_n",
+        "power_w",
+        "deflection_mm",
+        "flags",
+    }
     assert all(needed <= set(entry) for entry in data["passes"])
     assert data["operations"][2]["thickness_after_mm"]["max"] < 0.012
 
@@ -270,7 +291,9 @@ def test_unknown_material_gives_no_force(tmp_path: Path) -> None:
     data = json.loads(run("stock", known, "--grid", "0.5", "--json").output)
     heavy = max(data["passes"], key=lambda entry: entry["force_n"]["high"])
     share = [math.sqrt(1.0 + part**2) for part in (0.157, 0.598)]
-    assert heavy["force_n"]["high"] / heavy["force_n"]["low"] == pytest.approx(2.0 * share[1] / share[0], rel=0.01)
+    assert heavy["force_n"]["high"] / heavy["force_n"]["low"] == pytest.approx(
+        2.0 * share[1] / share[0], rel=0.01
+    )
 
 
 def test_limit_of_the_job_withholds_the_program(tmp_path: Path) -> None:
@@ -288,8 +311,15 @@ def test_limit_of_the_job_withholds_the_program(tmp_path: Path) -> None:
 
 def test_inch_job_tells_inch_and_the_same_data(tmp_path: Path) -> None:
     mm, inch = tmp_path / "mm.toml", tmp_path / "inch.toml"
-    changes = {"machine": "mill-3", "outline": 'shape = "circle"\ndiameter = 12.7', "limit": "scallop = 0.0254"}
-    mm.write_text(job_text(**changes, top=6.35, bottom=-12.7, margin=2.54, stock_extra="", diameter=6.35), encoding="utf-8")
+    changes = {
+        "machine": "mill-3",
+        "outline": 'shape = "circle"\ndiameter = 12.7',
+        "limit": "scallop = 0.0254",
+    }
+    mm.write_text(
+        job_text(**changes, top=6.35, bottom=-12.7, margin=2.54, stock_extra="", diameter=6.35),
+        encoding="utf-8",
+    )
     inch.write_text(
         job_text(
             machine="mill-3", units="inch", a=0.127, outline='shape = "circle"\ndiameter = 0.5', limit="scallop = 0.001",

@@ -298,7 +298,9 @@ def compare(
         int | None,
         typer.Option("--operation", metavar="N", help="Only this operation; all that finish if not given."),
     ] = None,
-    every: Annotated[bool, typer.Option("--all", help="Try every combination, however long it takes.")] = False,
+    every: Annotated[
+        bool, typer.Option("--all", help="Try every combination, however long it takes.")
+    ] = False,
     front: Annotated[
         bool, typer.Option("--front", help="Try every cutter and pattern at half and twice the scallop too.")
     ] = False,
@@ -311,15 +313,21 @@ def compare(
     ] = None,
     picture: Annotated[
         Path | None,
-        typer.Option("--picture", metavar="FILE", help="Also draw time against scallop: .png or .svg. Implies --front."),
+        typer.Option(
+            "--picture", metavar="FILE", help="Also draw time against scallop: .png or .svg. Implies --front."
+        ),
     ] = None,
     cores: Annotated[
         int | None,
-        typer.Option("--cores", metavar="N", min=1, max=1024, help="Worker processes; all cores if not given."),
+        typer.Option(
+            "--cores", metavar="N", min=1, max=1024, help="Worker processes; all cores if not given."
+        ),
     ] = None,
     dask: Annotated[
         str | None,
-        typer.Option("--dask", metavar="ADDRESS", help="Run the cases on the Dask cluster of this scheduler."),
+        typer.Option(
+            "--dask", metavar="ADDRESS", help="Run the cases on the Dask cluster of this scheduler."
+        ),
     ] = None,
     as_json: JsonOption = False,
 ) -> None:
@@ -373,7 +381,7 @@ def stock(
     ] = None,
     page: Annotated[
         Path | None,
-        typer.Option("--page", metavar="FILE", help="Also write an interactive page: stock, cutter and load through time."),
+        typer.Option("--page", metavar="FILE", help="Also write an interactive page of stock and load."),
     ] = None,
     as_json: JsonOption = False,
 ) -> None:
@@ -422,17 +430,28 @@ def time(
     measured: Annotated[
         str | None,
         typer.Option(
-            "--measured", metavar="TIME|FILE",
+            "--measured",
+            metavar="TIME|FILE",
             help="What a stopwatch said: seconds or M:SS, or a .csv file with the columns program, seconds.",
         ),
     ] = None,
     error: Annotated[
         float | None,
-        typer.Option("--error", metavar="S", min=0.01, max=3600.0, help="Error of a reading, seconds; 0.5 if not given."),
+        typer.Option(
+            "--error",
+            metavar="S",
+            min=0.01,
+            max=3600.0,
+            help="Error of a reading, seconds; 0.5 if not given.",
+        ),
     ] = None,
     picture: Annotated[
         Path | None,
-        typer.Option("--picture", metavar="FILE", help="Also draw the feed reached and what holds it back: .png or .svg."),
+        typer.Option(
+            "--picture",
+            metavar="FILE",
+            help="Also draw the feed reached and what holds it back: .png or .svg.",
+        ),
     ] = None,
     as_json: JsonOption = False,
 ) -> None:

@@ -22,7 +22,7 @@ def _reason(error: OSError) -> str:
 
 @contextlib.contextmanager
 def beside(path: Path, *, keep: bool = False, text: bool = True) -> Iterator[tuple[IO[str], Path]]:
-    """Open a temporary file in the folder of ``path`` for writing; on success rename it to ``path``.
+    r"""Open a temporary file in the folder of ``path`` for writing; on success rename it to ``path``.
 
     Parameters
     ----------
@@ -31,7 +31,7 @@ def beside(path: Path, *, keep: bool = False, text: bool = True) -> Iterator[tup
     keep : bool
         Leave the finished file under its temporary name instead of renaming it; the caller renames or removes it.
     text : bool
-        ASCII text with ``\\n`` line ends when true, else a binary stream.
+        ASCII text with ``\n`` line ends when true, else a binary stream.
 
     Yields
     ------

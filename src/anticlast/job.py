@@ -192,7 +192,10 @@ def _check_turn(draft: _Draft) -> None:
     if draft.machine.get("turn"):
         for key in ("mesh", "heights"):
             if draft.stock.get(key) is not None:
-                draft.machine.fault("turn", f"has no place beside {key} in [stock]: measure the blank as it is set, without turn")
+                draft.machine.fault(
+                    "turn",
+                    f"has no place beside {key} in [stock]: measure the blank as it is set, without turn",
+                )
 
 
 def _check_material(stock: Checked[StockTable]) -> None:

@@ -207,7 +207,9 @@ def _check_pattern(operation: Checked[OperationTable], cutter: Checked[CutterTab
             "pattern", 'found "matched" with a ball cutter; needs a bull or flat cutter, or another pattern'
         )
     if pattern != "matched" and "lead_margin" in operation.given:
-        operation.fault("lead_margin", f'has no place in the pattern "{pattern}"; only "matched" sets the lead itself')
+        operation.fault(
+            "lead_margin", f'has no place in the pattern "{pattern}"; only "matched" sets the lead itself'
+        )
 
 
 def _check_step(
@@ -360,7 +362,10 @@ def check_stock_files(stock: Checked[StockTable], folder: Path) -> None:
         if not name.lower().endswith(suffix):
             stock.fault(key, f"found {found_text(name)}; needs the path of a {suffix} file")
         elif not (folder / name).is_file():
-            stock.fault(key, f"found {found_text(name)}; there is no such file; a path starts from the folder of this file")
+            stock.fault(
+                key,
+                f"found {found_text(name)}; there is no such file; a path starts from the folder of this file",
+            )
     force = stock.get("specific_force")
     if force is not None and force[0] > force[1]:
         stock.fault("specific_force", f"found {found_text(force)}; needs the lower value first")

@@ -440,7 +440,9 @@ def _load_findings(
     job: Job, program: ReadProgram, motion: PartMotion | None, progress: Progress
 ) -> tuple[Finding, ...]:
     """Hold a program against the limits that the job sets on its cutters; nothing is worked out if it sets none."""
-    if motion is None or all(cutter.max_force_n is None and cutter.max_deflection_mm is None for cutter in job.cutters):
+    if motion is None or all(
+        cutter.max_force_n is None and cutter.max_deflection_mm is None for cutter in job.cutters
+    ):
         return ()
     from anticlast.stock.preview import stock_preview
 
@@ -464,11 +466,15 @@ def time(program: str | Path, job: Job) -> tuple[ProgramTime, ReadProgram, Motio
     path = Path(program)
     # Times do not depend on where the part stands, so no length offsets are needed, nor all cutters be the job's.
     read = read_program(path)
-    broken = [Fault(str(path), item.line, "", item.message) for item in read.findings if item.check == "language"]
+    broken = [
+        Fault(str(path), item.line, "", item.message) for item in read.findings if item.check == "language"
+    ]
     if broken:
         raise BadInput(broken)
     times = estimate(read.motions, job.machine, read.events)
-    answer = program_time(path.name, read.blocks, read.motions, times, job.machine, marks_of(path.read_bytes()))
+    answer = program_time(
+        path.name, read.blocks, read.motions, times, job.machine, marks_of(path.read_bytes())
+    )
     return answer, read, times
 
 

@@ -184,7 +184,9 @@ def placement(job: Job) -> Placement | None:
     """
     from anticlast.machine.placement import propose
 
-    sweeps = [_sweep(job, operation) for operation in job.operations if operation.does in ("semi-finish", "finish")]
+    sweeps = [
+        _sweep(job, operation) for operation in job.operations if operation.does in ("semi-finish", "finish")
+    ]
     if not sweeps:
         return None
     hull = shapely.get_coordinates(job.stock.outline.polygon.convex_hull)
@@ -210,7 +212,9 @@ def steady(job: Job) -> SteadyAxis | None:
             kinematics = Kinematics(job.machine, job.part_origin_mm, operation.cutter.gauge_length_mm)
             if kinematics.rotary_count == 0:
                 return None
-            return steady_axis(kinematics, Saddle.of(job.part).normal(sample(job.part.outline)[0]), operation.index)
+            return steady_axis(
+                kinematics, Saddle.of(job.part).normal(sample(job.part.outline)[0]), operation.index
+            )
     return None
 
 
@@ -228,7 +232,9 @@ def _sweep(job: Job, operation: Operation) -> Sweep:
     share = np.linspace(0.0, 1.0, _SWEEP_POINTS)
     u = (first[:, None] + share * (last - first)[:, None]).ravel()
     v = np.repeat(lines[number], _SWEEP_POINTS)
-    xy = np.column_stack((u * math.cos(along) - v * math.sin(along), u * math.sin(along) + v * math.cos(along)))
+    xy = np.column_stack(
+        (u * math.cos(along) - v * math.sin(along), u * math.sin(along) + v * math.cos(along))
+    )
     heading = along + np.repeat(np.where(back, math.pi, 0.0), _SWEEP_POINTS)
     normal, contact = saddle.normal(xy), saddle.point(xy)
     if operation.fixed_axis is None:
@@ -250,9 +256,12 @@ def _placement_lines(found: Placement, scale: float, units: str) -> list[str]:
         place = ", ".join(f"{value * scale:.4g}" for value in best.part_origin_mm)
         turned = f", turn = {best.turn_deg:g}" if best.turn_deg != now.turn_deg else ""
         share = best.motion_min / now.motion_min if now.motion_min > 0.0 else 1.0
-        out = [f"placement           part_origin = [{place}]{turned}: the axes move {100 * share:.0f} % of what they do now"]
+        out = [
+            f"placement           part_origin = [{place}]{turned}: the axes move {100 * share:.0f} % of what they do now"
+        ]
         if best.off_wish_deg < now.off_wish_deg - 0.5:
-            out.append(f"  for that the cutter axis is off its wish by {best.off_wish_deg:.1f} deg at most, now {now.off_wish_deg:.1f}")
+            off = f"{best.off_wish_deg:.1f} deg at most, now {now.off_wish_deg:.1f}"
+            out.append(f"  for that the cutter axis is off its wish by {off}")
     else:
         out = ["placement           no other place on the table would move the axes notably less"]
     for letter, (low, high) in best.margin.items():
@@ -260,7 +269,11 @@ def _placement_lines(found: Placement, scale: float, units: str) -> list[str]:
         if not math.isfinite(low) and not math.isfinite(high):
             out.append(f"  {letter} margin   endless")
             continue
-        was = f"   now {now.margin[letter][0] * factor:.1f} and {now.margin[letter][1] * factor:.1f}" if found.moves else ""
+        was = (
+            f"   now {now.margin[letter][0] * factor:.1f} and {now.margin[letter][1] * factor:.1f}"
+            if found.moves
+            else ""
+        )
         out.append(f"  {letter} margin{low * factor:>10.1f} and{high * factor:>8.1f} {unit}{was}")
     return out
 

@@ -125,7 +125,8 @@ LINEAR_SIDEWAYS_SHARE: Final = 1e-3
 # shortest to within a millionth, and job files have tenths of a degree.
 SAME_FEED_DIRECTION_RAD: Final = 5e-4
 
-# Error of a stopwatch reading (s, standard deviation): two presses and the doubt when a program begins and ends (common practice).
+# Error of a stopwatch reading (s, standard deviation): two presses and the doubt when a program begins and ends (common
+# practice).
 STOPWATCH_S: Final = 0.5
 
 # Share of a reading by which the time model itself may miss a machine that it fits (standard deviation): what corner

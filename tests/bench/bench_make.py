@@ -77,7 +77,9 @@ def help_time() -> None:
     times = []
     for _ in range(5):
         began = time.perf_counter()
-        subprocess.run([sys.executable, "-m", "anticlast.cli", "--help"], check=True, stdout=subprocess.DEVNULL)
+        subprocess.run(
+            [sys.executable, "-m", "anticlast.cli", "--help"], check=True, stdout=subprocess.DEVNULL
+        )
         times.append(time.perf_counter() - began)
     print(f"anticlast --help: {sorted(times)[2]:.2f} s, median of 5")
 

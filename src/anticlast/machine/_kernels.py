@@ -795,7 +795,11 @@ def subdivide(
     for i in range(1, count):
         p, q, e, f = point[i - 1], point[i], axis[i - 1], axis[i]
         budget = budgets[i]
-        up0, up1, up2 = normal[i - 1, 0] + normal[i, 0], normal[i - 1, 1] + normal[i, 1], normal[i - 1, 2] + normal[i, 2]
+        up0, up1, up2 = (
+            normal[i - 1, 0] + normal[i, 0],
+            normal[i - 1, 1] + normal[i, 1],
+            normal[i - 1, 2] + normal[i, 2],
+        )
         size = math.sqrt(up0 * up0 + up1 * up1 + up2 * up2)
         upright[0], upright[1], upright[2] = up0 / size, up1 / size, up2 / size
         sag = 0.0
@@ -818,7 +822,24 @@ def subdivide(
             t_b = t_stack[top]
             rot_b, xyz_b = rot_stack[top], xyz_stack[top]
             off, turned, sampled = deviation(
-                chain, base, height, p, q, e, f, theta, t_a, rot_a, xyz_a, t_b, rot_b, xyz_b, work, upright, side, sag
+                chain,
+                base,
+                height,
+                p,
+                q,
+                e,
+                f,
+                theta,
+                t_a,
+                rot_a,
+                xyz_a,
+                t_b,
+                rot_b,
+                xyz_b,
+                work,
+                upright,
+                side,
+                sag,
             )
             if turned <= axis_tol and off + lever * max(0.0, turned - axis_slack) <= budget:
                 worst_mm, worst_rad = max(worst_mm, off), max(worst_rad, turned)

@@ -118,7 +118,8 @@ def choose_rotary(
         kinematics = Kinematics(job.machine, job.part_origin_mm, path.operation.cutter.gauge_length_mm)
         allowed = budget_of(path.operation).axis_rad
         wishes += [
-            Wish(kinematics, s.axis, s.tip_mm, CROSS_SHARE * allowed, allowed, _pauses(s)) for s in path.stretches
+            Wish(kinematics, s.axis, s.tip_mm, CROSS_SHARE * allowed, allowed, _pauses(s))
+            for s in path.stretches
         ]
     if not wishes:
         return tuple(() for _ in cutter_paths)
@@ -192,7 +193,9 @@ def axis_path(
             stand = cut.words[-1] if len(cut.words) else first
     rewinds = sum(len(words.runs) - 1 for words in chosen)
     if rewinds:
-        notes[f"the cutter is lifted {rewinds} times more so that an axis can turn back inside its limits"] = None
+        notes[
+            f"the cutter is lifted {rewinds} times more so that an axis can turn back inside its limits"
+        ] = None
     if stand is None or start is None:
         raise CannotPlan("cutter path", f"operation {operation.index} has no motion to post")
     parts.append(hops.leave(stand, home=last))
@@ -269,7 +272,11 @@ def stretch_blocks(
     leaves_scallop = np.asarray(stretch.purpose) <= Purpose.OVERRUN
     budgets = np.where(leaves_scallop, budget.point_mm, budget.link_mm)
     normal = np.ascontiguousarray(stretch.normal)
-    if operation.arcs and not np.ptp(rot, axis=0).any() and float(np.ptp(axis, axis=0).max()) < SAME_DIRECTION_RAD:
+    if (
+        operation.arcs
+        and not np.ptp(rot, axis=0).any()
+        and float(np.ptp(axis, axis=0).max()) < SAME_DIRECTION_RAD
+    ):
         return _arc_blocks(kinematics, digits, budget, stretch, point, rot, budgets), first
     row, share, words, failed, off, turned = _kernels.subdivide(
         kinematics.chain, kinematics.base, height, budget.lever_mm, point, axis, rot, rate, 1.0 / digits.angle_step_deg,

@@ -102,7 +102,9 @@ class Blocks:
             inside = to < len(kept)
             np.add.at(minutes, to[inside], self.minutes[inside])
         arcs = None if self.arcs is None else self.arcs[keep]
-        return Blocks(self.words[keep], self.rapid[keep], minutes, self.purpose[keep], self.pass_index[keep], arcs)
+        return Blocks(
+            self.words[keep], self.rapid[keep], minutes, self.purpose[keep], self.pass_index[keep], arcs
+        )
 
 
 def joined(parts: Sequence[Blocks]) -> Blocks:
@@ -113,7 +115,9 @@ def joined(parts: Sequence[Blocks]) -> Blocks:
         np.concatenate([part.minutes for part in parts]),
         np.concatenate([part.purpose for part in parts]),
         np.concatenate([part.pass_index for part in parts]),
-        np.concatenate([part.arc_rows for part in parts]) if any(part.arcs is not None for part in parts) else None,
+        np.concatenate([part.arc_rows for part in parts])
+        if any(part.arcs is not None for part in parts)
+        else None,
     ).moving(None)
 
 

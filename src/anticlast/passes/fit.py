@@ -307,10 +307,14 @@ def fit(
     def ask(angle: Floats, error_rad: float = demand.margin_rad) -> Strips:
         if relative:
             lead, lean = family.wish(np.maximum(angle[:, None] * varies, least))
-            return strips_of(*sweep.profiles(u, v, way, lead, lean, aside, error_rad), aside, across, none, demand)
+            return strips_of(
+                *sweep.profiles(u, v, way, lead, lean, aside, error_rad), aside, across, none, demand
+            )
         lead, lean = family.wish(np.repeat(angle, members))
         swing = _swing(sweep, u, v, way, lead, lean)
-        return strips_of(*sweep.profiles(u, v, way, lead, lean, aside, error_rad), aside, across, swing, demand)
+        return strips_of(
+            *sweep.profiles(u, v, way, lead, lean, aside, error_rad), aside, across, swing, demand
+        )
 
     def worth(angle: Floats) -> Floats:
         return np.where(matter, ask(angle).worth.reshape(-1, members), np.inf).min(axis=1)

@@ -163,8 +163,10 @@ def _cut_order(task: Task, found: Fit, lines_mm: Floats) -> tuple[Pieces, list[C
 def track_of(task: Task, found: Fit, v_mm: float, way: int, low_mm: float, high_mm: float) -> Track:
     """Return the poses of the pass on a line, fed along +u (way 1) or against it (-1), from low to high u."""
     sweep = task.sweep
-    u = low_mm + sweep.step_mm * np.arange(math.ceil((high_mm - low_mm) / sweep.step_mm) + 4)
-    v = np.full(u.size, v_mm)
+    u = np.asarray(
+        low_mm + sweep.step_mm * np.arange(math.ceil((high_mm - low_mm) / sweep.step_mm) + 4), np.float64
+    )
+    v = np.full(u.size, v_mm, np.float64)
     lead, lean, lift = found.wish(0 if way > 0 else 1, u, v)
     return Track(v_mm, low_mm, sweep.table(*sweep.poses(u, v, way, lead, lean, lift)))
 

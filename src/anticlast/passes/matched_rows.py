@@ -154,8 +154,9 @@ def _link(saddle: Saddle, sweep: Sweep, before: _Run, after: _Run) -> _Run | Non
     Reference point on a straight line, raised by an arch, while the axis turns evenly.
     """
     share = np.linspace(0.0, 1.0, _LINK_ROWS + 1)[1:]
-    ends = [np.repeat(values, share.size, axis=0) for values in (before.axis[-1:], after.axis[:1])]
-    axis = sweep.nearest(np.ascontiguousarray(turned_between(*ends, share)))
+    start = np.repeat(before.axis[-1:], share.size, axis=0)
+    end = np.repeat(after.axis[:1], share.size, axis=0)
+    axis = sweep.nearest(np.ascontiguousarray(turned_between(start, end, share)))
     axis[-1] = after.axis[0]
     straight = before.point[-1] + share[:, None] * (after.point[0] - before.point[-1])
     up = before.normal[-1] + after.normal[0]

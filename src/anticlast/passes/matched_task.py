@@ -76,8 +76,9 @@ class Task:
             grids.append(np.linspace(low, high, max(_LEAST_STATIONS, math.ceil((high - low) / apart) + 1)))
         v, u = (grid.ravel() for grid in np.meshgrid(grids[1], grids[0], indexing="ij"))
         beside = outline.grown(max(grid[1] - grid[0] for grid in grids)).contains(frame.xy(u, v))
+        along, across = grids
         return cls(
-            frame, sweep, outline, operation, *grids, beside.reshape(grids[1].size, grids[0].size), full
+            frame, sweep, outline, operation, along, across, beside.reshape(across.size, along.size), full
         )
 
     @property

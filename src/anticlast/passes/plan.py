@@ -189,7 +189,9 @@ def _cut_length(saddle: Saddle, course: Course, legs: Legs) -> float:
 
 def _rise_mm(job: Job, operation: Operation) -> float:
     """Return how far above its pass the ball starts an entry: clear of what earlier operations left."""
-    earlier = [left_mm(o, job.part) for o in job.operations if o.index < operation.index and o.does != "outline"]
+    earlier = [
+        left_mm(o, job.part) for o in job.operations if o.index < operation.index and o.does != "outline"
+    ]
     before = max([job.stock.allowance_mm or 0.0, *earlier])
     return max(before - operation.allowance_mm, 0.0) + entry.ABOVE_STOCK_MM
 

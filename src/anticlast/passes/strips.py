@@ -81,9 +81,10 @@ def lay_lines(layer: Layer, begin_mm: Floats | None = None) -> Lines | NoStrip:
     widest = float(np.maximum(strips.left_mm, strips.right_mm).max())
     if widest <= 0.0:
         return _barest(layer, low, high)
-    ends = [_edge(layer, number, high, widest, -1) for number in (0, 1)]
+    found = [_edge(layer, number, high, widest, -1) for number in (0, 1)]
+    ends = [end for end in found if end is not None]
     first = _edge(layer, 0, low, widest, 1)
-    if first is None or None in ends:
+    if first is None or len(ends) < len(found):
         return _barest(layer, low, high)
     lines = [first] if begin_mm is None else begin_mm.tolist()
     while lines[-1] < ends[(len(lines) - 1) % 2]:

@@ -92,7 +92,9 @@ def _header(job: Job, paths: Sequence[AxisPath], dialect: _Dialect) -> Iterator[
             f"SADDLE POINT AT ROTARY 0, FROM WHERE THE ROTARY AXES MEET: {origin}. THE PROGRAM IS WRONG FOR ANY OTHER"
         )
     if job.turn_rad:
-        yield comment(f"THE PART IS SET TURNED {plain(math.degrees(job.turn_rad), 3)} DEGREES ABOUT Z FROM ITS DRAWING")
+        yield comment(
+            f"THE PART IS SET TURNED {plain(math.degrees(job.turn_rad), 3)} DEGREES ABOUT Z FROM ITS DRAWING"
+        )
     if machine.rotary and dialect.inverse:
         yield comment("F UNDER G93 IS ONE OVER THE MINUTES OF ITS BLOCK, NISTIR 6556 SECTION 3.5.19")
     yield comment(f"F UNDER G94 IS {unit} PER MINUTE OF THE CUTTER TIP")

@@ -139,7 +139,8 @@ def _stepover_mm(job: Job) -> float:
     finishing = [operation for operation in job.operations if operation.does == "finish"]
     return max(
         (
-            operation.stepover_mm or math.sqrt(8.0 * operation.cutter.radius_mm * (operation.scallop_mm or 0.0))
+            operation.stepover_mm
+            or math.sqrt(8.0 * operation.cutter.radius_mm * (operation.scallop_mm or 0.0))
             for operation in finishing
         ),
         default=0.0,

@@ -28,8 +28,8 @@ if TYPE_CHECKING:
 _GRID_MM, _MOST_STEPS, _LEAST_STEPS = 0.1, 1000, 200
 # Most quarterings of triangles in one run of the search for the peak: about a minute's work; the bound stays honest.
 _QUARTERINGS = 300_000
-# Most trials of nodes with pieces deep in the part: some seconds' work.
-_MOST_TRIALS = 50_000_000.0
+# Most trials of nodes with pieces, some seconds' work, and how many a piece deep in the part counts for.
+_MOST_TRIALS, _DEEP_TRIALS = 3e8, 6.0
 _MAP_SIDE = 400
 # Crests that one point of the map should hold, and points along the longer side that it should have all the same.
 _MAP_CRESTS, _MAP_LEAST = 4.0, 40
@@ -117,9 +117,10 @@ def measure(
     saddle = Saddle.of(job.part)
     pieces = take_pieces(motion, job.cutters, saddle, moving)
     field = _Field(job, saddle, lay_nodes(job.part.outline, saddle, grid), pieces, wanted_mm)
-    trials = field.deep_trials()
+    trials = field.trials()
     if trials > _MOST_TRIALS:
-        # A cutter deep in the part all along, by a wrong offset say, is no less wrong on a coarser grid.
+        # A cutter deep in the part all along, by a wrong offset say, is no less wrong on a coarser grid; and the highest
+        # scallop is searched for between nodes whatever the grid.
         grid *= float(np.sqrt(trials / _MOST_TRIALS))
         field = _Field(job, saddle, lay_nodes(job.part.outline, saddle, grid), pieces, wanted_mm)
     nodes = field.nodes
@@ -206,12 +207,12 @@ class _Field:
         _reach_kernels.bin_boxes(self.chunks, boxes, found, self.nodes.tiling, start, none)
         return boxes, found, np.cumsum(start)
 
-    def deep_trials(self) -> float:
-        """Return how often nodes would be tried with pieces that run far below the surface."""
+    def trials(self) -> float:
+        """Return how often nodes would be tried with pieces, those deep in the part counted more: they cost more."""
         _, _, start = self._count(self.low)
-        reached, deep = np.count_nonzero(self.state), np.count_nonzero(self.state == 2)
+        reached, deep = int(np.sum(self.state > 0)), int(np.sum(self.state == 2))
         trials = float(np.sum(np.diff(start) * np.diff(self.nodes.tile_start)))
-        return trials * float(deep) / float(reached) if reached else 0.0
+        return trials * (1.0 + (_DEEP_TRIALS - 1.0) * float(deep) / float(max(reached, 1)))
 
     def _depths(self, rows: npt.NDArray[np.int64]) -> Floats:
         return part_depths_mm(
@@ -304,8 +305,8 @@ def scallop_map(cut: Cut, stepover_mm: float = 0.0, allowed_mm: float = 0.0) -> 
     """Return the measured heights in plan, thinned to at most 400 by 400 points.
 
     Each point stands for a block of grid points: their highest residual, or the deepest gouge if there is one deeper
-    than is allowed and the measuring uncertainty. Grid points meet crests at varying distances from the top, so blocks hold several
-    stepovers where the part is large enough: single crests would show the grid, not the scallop.
+    than is allowed and the measuring uncertainty. Grid points meet crests at varying distances from the top, so blocks
+    hold several stepovers where the part is large enough: single crests would show the grid, not the scallop.
     """
     from anticlast.records import ScallopMap
 

@@ -102,8 +102,14 @@ def _map(figure: Any, job: Job, state: StockState, units: Units, middle: tuple[f
     bar = figure.colorbar(filled, cax=below, orientation="horizontal")
     bar.set_label(f"thickness along the surface normal, {units.name}")
     bar.outline.set_linewidth(0.6)
-    axes.add_patch(PathPatch(sheet.outline_path(job.stock.outline, k), fill=False, edgecolor=sheet.QUIET, lw=0.8, ls="--"))
-    axes.add_patch(PathPatch(sheet.outline_path(job.part.outline, k), fill=False, edgecolor=sheet.INK, lw=1.4))
+    axes.add_patch(
+        PathPatch(
+            sheet.outline_path(job.stock.outline, k), fill=False, edgecolor=sheet.QUIET, lw=0.8, ls="--"
+        )
+    )
+    axes.add_patch(
+        PathPatch(sheet.outline_path(job.part.outline, k), fill=False, edgecolor=sheet.INK, lw=1.4)
+    )
     axes.axhline(middle[1] * k, color=sheet.TIGHT, lw=0.7, ls=(0, (8, 3)))
     axes.axvline(middle[0] * k, color=sheet.WIDE, lw=0.7, ls=(0, (3, 2)))
     axes.set_xlim(x0 - 0.05 * extent, x1 + 0.05 * extent)
@@ -116,7 +122,9 @@ def _map(figure: Any, job: Job, state: StockState, units: Units, middle: tuple[f
     sheet.scale_bar(axes, x0, y0 - 0.1 * extent, bar_length, units.name, 0.014 * extent)
 
 
-def _section(axes: Any, job: Job, state: StockState, units: Units, along: str, middle: tuple[float, float]) -> None:
+def _section(
+    axes: Any, job: Job, state: StockState, units: Units, along: str, middle: tuple[float, float]
+) -> None:
     """Draw one section: stock filled, finished surface as a line over the part's outline."""
     k = units.scale
     x0, y0, x1, y1 = job.stock.outline.bounds
@@ -140,7 +148,9 @@ def _section(axes: Any, job: Job, state: StockState, units: Units, along: str, m
     axes.set_ylim(lower - 2.0 * room, upper + room)
     axes.set_xlim(low * k, high * k)
     name = "Y" if along == "x" else "X"
-    axes.set_title(f"section along part {along.upper()} at {name} {units.length(other)}; height stretched", loc="left")
+    axes.set_title(
+        f"section along part {along.upper()} at {name} {units.length(other)}; height stretched", loc="left"
+    )
     axes.set_ylabel(f"Z, {units.name}", labelpad=2)
     for side in ("top", "right"):
         axes.spines[side].set_visible(False)
@@ -153,7 +163,9 @@ def _passes(axes: Any, preview: StockPreview, units: Units) -> None:
     axes.spines["top"].set_visible(False)
     axes.set_xlabel(f"pass of operation {preview.before}")
     if not shown:
-        axes.text(0.5, 0.5, "no pass cuts", ha="center", va="center", transform=axes.transAxes, color=sheet.QUIET)
+        axes.text(
+            0.5, 0.5, "no pass cuts", ha="center", va="center", transform=axes.transAxes, color=sheet.QUIET
+        )
         axes.set_yticks([])
         axes.set_xticks([])
         return
@@ -169,5 +181,7 @@ def _passes(axes: Any, preview: StockPreview, units: Units) -> None:
     beside = axes.twinx()
     beside.fill_between(number, [one.force_n[0] for one in shown], high, color=sheet.TIGHT, alpha=0.3, lw=0)
     beside.set_ylabel("force, N", color=sheet.TIGHT)
-    beside.set_ylim(0.0, 1.1 * max(1e-9, float(np.nanmax(high))) if not math.isnan(float(np.nanmax(high))) else 1.0)
+    beside.set_ylim(
+        0.0, 1.1 * max(1e-9, float(np.nanmax(high))) if not math.isnan(float(np.nanmax(high))) else 1.0
+    )
     beside.spines["top"].set_visible(False)

@@ -209,7 +209,11 @@ def pose_interval(u: float, v: float, t: float, s: np.ndarray) -> tuple:
         return FAR, -FAR, 0.0
     h = h0 + low * az
     turned = (x - h * ax) * s[BX] + (y - h * ay) * s[BY] + (low - h * az) * s[BZ]
-    vx, vy, vz = s[DX] + h * s[BX] - turned * ax, s[DY] + h * s[BY] - turned * ay, s[DZ] + h * s[BZ] - turned * az
+    vx, vy, vz = (
+        s[DX] + h * s[BX] - turned * ax,
+        s[DY] + h * s[BY] - turned * ay,
+        s[DZ] + h * s[BZ] - turned * az,
+    )
     slope = (vx * nx + vy * ny + vz * nz) / min(nz, -1e-9)
     return cz + low, cz + high, slope
 
@@ -268,7 +272,9 @@ def tilted_sweep(u: float, v: float, s: np.ndarray) -> tuple:
 
 
 @njit(cache=True, nogil=True)
-def load_segment(k: int, ends: np.ndarray, shapes: np.ndarray, shape_of: np.ndarray, close_mm: float, s: np.ndarray) -> None:
+def load_segment(
+    k: int, ends: np.ndarray, shapes: np.ndarray, shape_of: np.ndarray, close_mm: float, s: np.ndarray
+) -> None:
     """Fill the scratch array of segment k from its ends (c0, a0, c1, a1)."""
     shape = shape_of[k]
     for i in range(3):
@@ -342,7 +348,9 @@ def plan_box(s: np.ndarray, highest: float, box: np.ndarray) -> None:
 
 
 @njit(cache=True, nogil=True)
-def take_out(high: np.ndarray, low: np.ndarray, count: np.ndarray, j: int, i: int, a: float, b: float, out: np.ndarray) -> float:
+def take_out(
+    high: np.ndarray, low: np.ndarray, count: np.ndarray, j: int, i: int, a: float, b: float, out: np.ndarray
+) -> float:
     """Take the interval (a, b) out of column (j, i); return the length taken.
 
     ``out`` gets the lowest and highest z taken, and the length that had to be left in (a gap between two pieces of material
@@ -709,7 +717,10 @@ def run_band(
         if cuts[k] and highest > -FAR:
             load_segment(k, ends, shapes, shape_of, close_mm, s)
             plan_box(s, highest, box)
-            j0, j1 = max(0, math.ceil((box[1] - v0) / g) - first), min(local - 1, math.floor((box[3] - v0) / g) - first)
+            j0, j1 = (
+                max(0, math.ceil((box[1] - v0) / g) - first),
+                min(local - 1, math.floor((box[3] - v0) / g) - first),
+            )
             i0, i1 = max(0, math.ceil((box[0] - u0) / g)), min(nx - 1, math.floor((box[2] - u0) / g))
             if box[4] < highest:
                 for j in range(j0, j1 + 1):
@@ -774,7 +785,9 @@ def _joined(k: int, ends: np.ndarray) -> bool:
 
 
 @njit(cache=True, nogil=True)
-def _measure(u: float, v: float, bottom: float, top: float, s: np.ndarray, surface: tuple, along_normal: bool) -> tuple:
+def _measure(
+    u: float, v: float, bottom: float, top: float, s: np.ndarray, surface: tuple, along_normal: bool
+) -> tuple:
     """Return where what was taken begins and ends: heights over the tip along the axis, or over the finished surface."""
     if along_normal:
         p, q, m = surface

@@ -75,7 +75,11 @@ def station_loads(
                 c, d = circle[m, 0], circle[m, 1]
                 rx, ry, rz = c * ex + d * gx, c * ey + d * gy, c * ez + d * gz
                 turned = radius * (rx * f[12] + ry * f[13] + rz * f[14])
-                vx, vy, vz = f[9] + h * f[12] - turned * ax, f[10] + h * f[13] - turned * ay, f[11] + h * f[14] - turned * az
+                vx, vy, vz = (
+                    f[9] + h * f[12] - turned * ax,
+                    f[10] + h * f[13] - turned * ay,
+                    f[11] + h * f[14] - turned * az,
+                )
                 out_speed, up_speed = vx * rx + vy * ry + vz * rz, vx * ax + vy * ay + vz * az
                 ahead = radial * out_speed + axial * up_speed
                 if ahead <= least:

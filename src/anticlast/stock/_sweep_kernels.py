@@ -24,7 +24,12 @@ def join_rows(
             continue
         start, last = row - 1, row
         begun = fraction[start] if motion[start] == motion[row] else 0.0
-        while last + 1 < count and live[last + 1] and motion[last + 1] == motion[row] and last + 1 - start <= most:
+        while (
+            last + 1 < count
+            and live[last + 1]
+            and motion[last + 1] == motion[row]
+            and last + 1 - start <= most
+        ):
             trial = last + 1
             good = True
             for k in range(start + 1, trial):

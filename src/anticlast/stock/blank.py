@@ -53,7 +53,9 @@ def blank_field(job: Job, spacing_mm: float | None = None) -> StockField:
     elif stock.allowance_mm is not None:
         there = area > 0.0
         top = np.zeros(grid.shape)
-        top[there] = offset_heights_mm(Saddle.of(job.part), np.column_stack((x[there], y[there])), stock.allowance_mm)
+        top[there] = offset_heights_mm(
+            Saddle.of(job.part), np.column_stack((x[there], y[there])), stock.allowance_mm
+        )
         top = np.minimum(top, stock.top_mm)
     else:
         top = np.full(grid.shape, stock.top_mm)
@@ -140,7 +142,9 @@ def _load_mesh(stock: Stock, to_mm: float) -> tuple[Floats, np.ndarray]:
     if not len(mesh.faces):
         raise fault("holds no triangles; needs a closed solid")
     if not (mesh.is_watertight and mesh.is_winding_consistent):
-        raise fault("is not a closed solid: it has open edges or triangles facing both ways; needs every edge shared by two")
+        raise fault(
+            "is not a closed solid: it has open edges or triangles facing both ways; needs every edge shared by two"
+        )
     vertices = np.asarray(mesh.vertices, dtype=np.float64) * to_mm
     if mesh.volume < 0.0:
         raise fault("is inside out: its triangles face inwards")
@@ -154,6 +158,7 @@ def _load_mesh(stock: Stock, to_mm: float) -> tuple[Floats, np.ndarray]:
     outside = np.flatnonzero(~room.contains(vertices[:, :2]))
     if outside.size:
         x, y = vertices[outside[0], :2] / to_mm
-        raise fault(f"reaches outside the blank's outline, at [{x:.4g}, {y:.4g}]; give it more margin or its own outline")
+        raise fault(
+            f"reaches outside the blank's outline, at [{x:.4g}, {y:.4g}]; give it more margin or its own outline"
+        )
     return vertices, np.asarray(mesh.faces)
-

@@ -117,7 +117,9 @@ def slack_mm(spacing_mm: float, distance_mm: float) -> float:
     return spacing_mm * (math.sqrt(0.5) + 0.5 * STEP_SHARE) + 0.01 * max(0.0, distance_mm)
 
 
-def clearances(watch: Watch, segments: Segments, motion: PartMotion, field: StockField) -> tuple[BodyClearance, ...]:
+def clearances(
+    watch: Watch, segments: Segments, motion: PartMotion, field: StockField
+) -> tuple[BodyClearance, ...]:
     """Return what a watch found, one entry a body."""
     grid, answers = field.grid, []
     for body, name in enumerate(watch.names):
@@ -126,7 +128,9 @@ def clearances(watch: Watch, segments: Segments, motion: PartMotion, field: Stoc
         touched = found[found[:, 5] >= 0.0, 5]
         row = int(segments.row[int(best[1])]) if best[1] >= 0.0 else -1
         first = int(segments.row[int(touched.min())]) if touched.size else -1
-        x, y = back(np.array(grid.u0_mm + grid.spacing_mm * best[4]), np.array(grid.v0_mm + grid.spacing_mm * best[3]))
+        x, y = back(
+            np.array(grid.u0_mm + grid.spacing_mm * best[4]), np.array(grid.v0_mm + grid.spacing_mm * best[3])
+        )
         answers.append(
             BodyClearance(
                 cutter=watch.cutters[body],
@@ -143,17 +147,24 @@ def clearances(watch: Watch, segments: Segments, motion: PartMotion, field: Stoc
     return tuple(answers)
 
 
-def rapid_contacts(segments: Segments, motion: PartMotion, volume_mm3: Floats, spacing_mm: float) -> tuple[RapidContact, ...]:
+def rapid_contacts(
+    segments: Segments, motion: PartMotion, volume_mm3: Floats, spacing_mm: float
+) -> tuple[RapidContact, ...]:
     """Return the rapids that took material, by row of the part motion, in order of time."""
     least = _BRUSH_SHARE * spacing_mm**3 * np.maximum(1.0, segments.length_mm / spacing_mm)
     rows = np.flatnonzero(segments.rapid & (volume_mm3 > least))
     return tuple(
-        RapidContact(int(segments.row[k]), int(motion.line[segments.row[k]]), float(volume_mm3[k])) for k in rows
+        RapidContact(int(segments.row[k]), int(motion.line[segments.row[k]]), float(volume_mm3[k]))
+        for k in rows
     )
 
 
 def first_contact(
-    field: StockField, motion: PartMotion, cutters: Sequence[Cutter], saddle: Saddle, moving: Bools | None = None
+    field: StockField,
+    motion: PartMotion,
+    cutters: Sequence[Cutter],
+    saddle: Saddle,
+    moving: Bools | None = None,
 ) -> RapidContact | None:
     """Return the first rapid that runs into the stock as it stands at that moment, None if none does. Cuts the field."""
     segments = take_segments(motion, cutters, moving)

@@ -131,7 +131,9 @@ def follow(
     rim = np.array([ring.rim for ring in rings]).reshape(len(rings), -1, 2)
     places = ring_table(cutters)
     flutes = np.array([cutter.flutes for cutter in cutters], np.int64)
-    feed = np.divide(60.0 * segments.length_mm, seconds, out=np.full(len(segments), np.nan), where=seconds > 0.0)
+    feed = np.divide(
+        60.0 * segments.length_mm, seconds, out=np.full(len(segments), np.nan), where=seconds > 0.0
+    )
     tooth = np.divide(feed, rpm * flutes[segments.shape], out=np.full(len(segments), np.nan), where=rpm > 0.0)
     tooth[segments.rapid] = np.nan
     table = np.zeros((len(stations), kernels.COLUMNS))
@@ -143,7 +145,11 @@ def follow(
             segments, cutters, saddle, (first, after), along_normal=along_normal, stations=stations, rings=places,
             angles=ANGLES, watch=watch,
         )  # fmt: skip
-        volume[first:after], low[first:after], high[first:after] = taken.volume_mm3, taken.low_mm, taken.high_mm
+        volume[first:after], low[first:after], high[first:after] = (
+            taken.volume_mm3,
+            taken.low_mm,
+            taken.high_mm,
+        )
         rows = slice(int(stations.first[first]), int(stations.first[after]))
         of = stations.segment[rows]
         arguments = (
@@ -160,13 +166,21 @@ def _in_blocks(count: int, arguments: tuple) -> None:
     with ThreadPoolExecutor(4) as pool:
         list(
             pool.map(
-                lambda start: kernels.station_loads(start, min(count, start + _STATION_BLOCK), *arguments), blocks
+                lambda start: kernels.station_loads(start, min(count, start + _STATION_BLOCK), *arguments),
+                blocks,
             )
         )
 
 
 def _rows(
-    segments: Segments, volume: Floats, low: Floats, high: Floats, feed: Floats, rpm: Floats, found: Floats, spacing: float
+    segments: Segments,
+    volume: Floats,
+    low: Floats,
+    high: Floats,
+    feed: Floats,
+    rpm: Floats,
+    found: Floats,
+    spacing: float,
 ) -> Engagement:
     path = along_path(segments)
     reach = _WINDOW_CELLS * spacing

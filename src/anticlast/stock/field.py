@@ -82,7 +82,12 @@ class StockField:
         high, low = np.zeros((PIECES, *grid.shape)), np.zeros((PIECES, *grid.shape))
         high[0], low[0] = np.where(there, top_mm, 0.0), np.where(there, bottom_mm, 0.0)
         return cls(
-            grid, high, low, there.astype(np.int64), np.where(there, area_mm2, 0.0), np.full(grid.shape, -1, np.int64)
+            grid,
+            high,
+            low,
+            there.astype(np.int64),
+            np.where(there, area_mm2, 0.0),
+            np.full(grid.shape, -1, np.int64),
         )
 
     def copy(self) -> StockField:
@@ -97,7 +102,12 @@ class StockField:
     def lengths_mm(self, above_mm: Floats | float = -np.inf) -> Floats:
         """Return how much material each column holds above a height, (rows, columns) [mm]."""
         piece = np.arange(PIECES)[:, None, None] < self.count
-        return np.asarray(np.sum(np.where(piece, np.maximum(self.high_mm - np.maximum(self.low_mm, above_mm), 0.0), 0.0), axis=0))
+        return np.asarray(
+            np.sum(
+                np.where(piece, np.maximum(self.high_mm - np.maximum(self.low_mm, above_mm), 0.0), 0.0),
+                axis=0,
+            )
+        )
 
     def volume_mm3(self) -> float:
         """Return the volume of all material."""
@@ -146,7 +156,9 @@ class StockField:
         cuts = whole if cuts is None else cuts
         along_normal = ~whole if along_normal is None else along_normal
         if stations is None:
-            stations = Stations(np.zeros(len(segments) + 1, np.int64), np.empty(0, np.int64), np.empty((0, 15)))
+            stations = Stations(
+                np.zeros(len(segments) + 1, np.int64), np.empty(0, np.int64), np.empty((0, 15))
+            )
         rings = np.zeros((len(cutters), 1, 4)) if rings is None else rings
         looked = int(stations.first[after] - stations.first[first])
         hits = np.zeros((looked, rings.shape[1], angles), np.uint8)
@@ -154,7 +166,14 @@ class StockField:
         taken[:, :, 1], taken[:, :, 2] = np.inf, -np.inf
         table = (segments.ends, segments.shape, shape_table(cutters), segments.row, cuts, along_normal)
         spacing = self.grid.spacing_mm
-        sampling = (stations.first, stations.frame, rings, _AHEAD_SHARE * spacing, LEAST_COSINE, _CLOSE_SHARE * spacing)
+        sampling = (
+            stations.first,
+            stations.frame,
+            rings,
+            _AHEAD_SHARE * spacing,
+            LEAST_COSINE,
+            _CLOSE_SHARE * spacing,
+        )
         watching = (watch or Watch.nothing(len(self.bands))).arguments(segments.rapid, spacing)
         surface = turned_surface(saddle)
 
@@ -175,7 +194,10 @@ class StockField:
             list(pool.map(work, range(len(self.bands))))
         for (low_row, after_row), (high, low, count) in zip(self.bands, copies, strict=True):
             own = after_row - low_row
-            self.high_mm[:, low_row:after_row], self.low_mm[:, low_row:after_row] = high[:, :own], low[:, :own]
+            self.high_mm[:, low_row:after_row], self.low_mm[:, low_row:after_row] = (
+                high[:, :own],
+                low[:, :own],
+            )
             self.count[low_row:after_row] = count[:own]
         self.left_in_mm3 += float(taken[:, :, 3].sum())
         return Taken(
@@ -224,7 +246,10 @@ def runs(segments: Segments, stations: Stations | None, breaks: Sequence[int] = 
         while first < high:
             after = min(high, first + _RUN_SEGMENTS)
             if stations is not None:
-                full = int(np.searchsorted(stations.first, stations.first[first] + _RUN_STATIONS, side="right")) - 1
+                full = (
+                    int(np.searchsorted(stations.first, stations.first[first] + _RUN_STATIONS, side="right"))
+                    - 1
+                )
                 after = min(after, max(first + 1, full))
             spans.append((first, after))
             first = after

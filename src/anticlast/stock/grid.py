@@ -99,9 +99,7 @@ class ColumnGrid:
         marked = np.zeros((self.rows + 4, self.columns + 4), bool)
         for dj in (-1, 0, 1):
             for di in (-1, 0, 1):
-                marked[
-                    np.clip(j + dj + 2, 0, self.rows + 3), np.clip(i + di + 2, 0, self.columns + 3)
-                ] = True
+                marked[np.clip(j + dj + 2, 0, self.rows + 3), np.clip(i + di + 2, 0, self.columns + 3)] = True
         return np.flatnonzero(marked[2:-2, 2:-2])
 
 

@@ -108,7 +108,16 @@ def _bending_limits(cutter: Cutter, operation: Operation | None, one: PassLoad) 
     if cutter.max_deflection_mm is not None:
         what = f"the tip of T{cutter.number} may bend aside by"
         return [
-            Limit("bending", one.deflection_mm[1], cutter.max_deflection_mm, "mm", one.deflection_line, True, what, advice)
+            Limit(
+                "bending",
+                one.deflection_mm[1],
+                cutter.max_deflection_mm,
+                "mm",
+                one.deflection_line,
+                True,
+                what,
+                advice,
+            )
         ]
     if operation is None or operation.does != "finish":
         return []
@@ -126,7 +135,11 @@ def flagged(job: Job, one: PassLoad) -> PassLoad:
 
 
 def load_findings(
-    job: Job, passes: Sequence[PassLoad], near: Sequence[BodyClearance], contacts: Sequence[RapidContact], left_in_mm3: float
+    job: Job,
+    passes: Sequence[PassLoad],
+    near: Sequence[BodyClearance],
+    contacts: Sequence[RapidContact],
+    left_in_mm3: float,
 ) -> tuple[Finding, ...]:
     """Return a finding for each operation and limit, for each body, and for rapids, against the stock as it stood."""
     findings: list[Finding] = []
@@ -143,7 +156,9 @@ def load_findings(
     taken = sum(one.removed_mm3 for one in passes)
     if left_in_mm3 > _LEFT_IN_SHARE * taken:
         message = f"{left_in_mm3:.3g} mm3 under overhangs could not be followed: columns hold four pieces of material each"
-        findings.append(Finding("overhangs", False, left_in_mm3, _LEFT_IN_SHARE * taken, "mm3", 0, message, warning=True))
+        findings.append(
+            Finding("overhangs", False, left_in_mm3, _LEFT_IN_SHARE * taken, "mm3", 0, message, warning=True)
+        )
     return tuple(findings)
 
 
@@ -161,11 +176,11 @@ def _operation_findings(job: Job, index: int, passes: list[PassLoad]) -> list[Fi
             findings.append(Finding(check, True, worst.value, worst.limit, worst.unit, worst.line, message))
             continue
         more = f", and so in {over - 1} more passes" if over > 1 else ""
-        message = (
-            f"operation {index}, pass {one.number}: {value}, over {worst.limit:.4g} {worst.unit}{more}; {worst.advice}"
-        )
+        message = f"operation {index}, pass {one.number}: {value}, over {worst.limit:.4g} {worst.unit}{more}; {worst.advice}"
         findings.append(
-            Finding(check, False, worst.value, worst.limit, worst.unit, worst.line, message, warning=not worst.own)
+            Finding(
+                check, False, worst.value, worst.limit, worst.unit, worst.line, message, warning=not worst.own
+            )
         )
     return findings
 
@@ -173,7 +188,9 @@ def _operation_findings(job: Job, index: int, passes: list[PassLoad]) -> list[Fi
 def _clearance(body: BodyClearance) -> Finding:
     check = f"{body.body} of T{body.cutter} in stock"
     if body.row < 0:
-        message = f"the {body.body} of T{body.cutter} stays {body.distance_mm:.0f} mm or more clear of the stock"
+        message = (
+            f"the {body.body} of T{body.cutter} stays {body.distance_mm:.0f} mm or more clear of the stock"
+        )
         return Finding(check, True, body.distance_mm, 0.0, "mm", 0, message)
     where = f"at [{body.at_mm[0]:.2f}, {body.at_mm[1]:.2f}]"
     if body.first_row < 0:
@@ -194,7 +211,9 @@ def _clearance(body: BodyClearance) -> Finding:
 
 def _rapids(contacts: Sequence[RapidContact]) -> Finding:
     if not contacts:
-        return Finding("rapids in stock", True, 0.0, 0.0, "mm3", 0, "no rapid runs into the stock as it stands")
+        return Finding(
+            "rapids in stock", True, 0.0, 0.0, "mm3", 0, "no rapid runs into the stock as it stands"
+        )
     worst = max(contacts, key=lambda contact: contact.volume_mm3)
     message = (
         f"{len(contacts)} rapid moves run into the stock, first on line {contacts[0].line}; the worst would take"

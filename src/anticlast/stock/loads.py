@@ -36,7 +36,9 @@ def laws_of(job: Job) -> Floats:
     if own is not None:
         return np.array([[0.0, 0.0, value, 0.0] for value in own])
     forces = materials.material(job.stock.material).forces
-    return np.array([[f.kc11_n_mm2, f.mc, f.ktc_n_mm2, f.kte_n_mm] for f in forces], dtype=np.float64).reshape(-1, 4)
+    return np.array(
+        [[f.kc11_n_mm2, f.mc, f.ktc_n_mm2, f.kte_n_mm] for f in forces], dtype=np.float64
+    ).reshape(-1, 4)
 
 
 def bending_mm_per_n(cutter: Cutter) -> float:
@@ -46,13 +48,19 @@ def bending_mm_per_n(cutter: Cutter) -> float:
     I = pi d^4 / 64: the bending moment of a stepped rod, integrated (derived in docs/theory-stock.md).
     """
     fluted, whole = cutter.flute_length_mm, cutter.stickout_mm
-    stiff = [math.pi * (2.0 * radius) ** 4 / 64.0 for radius in (FLUTED_SHARE * cutter.radius_mm, cutter.shank_radius_mm)]
+    stiff = [
+        math.pi * (2.0 * radius) ** 4 / 64.0
+        for radius in (FLUTED_SHARE * cutter.radius_mm, cutter.shank_radius_mm)
+    ]
     return (fluted**3 / stiff[0] + (whole**3 - fluted**3) / stiff[1]) / (3.0 * CARBIDE_N_MM2)
 
 
 def breaking_force_n(cutter: Cutter) -> float:
     """Return the force across the tip that bends the root of the flutes, or the shank at the holder, to the stress allowed."""
-    rods = ((FLUTED_SHARE * cutter.radius_mm, cutter.flute_length_mm), (cutter.shank_radius_mm, cutter.stickout_mm))
+    rods = (
+        (FLUTED_SHARE * cutter.radius_mm, cutter.flute_length_mm),
+        (cutter.shank_radius_mm, cutter.stickout_mm),
+    )
     return min(CARBIDE_STRESS_N_MM2 * math.pi * (2.0 * radius) ** 3 / (32.0 * arm) for radius, arm in rods)
 
 
@@ -75,7 +83,9 @@ class Loads:
     mark_mm: Floats
 
 
-def loads_of(found: Engagement, cutters: tuple[Cutter, ...], shape: np.ndarray, tilt_rad: Floats, known: bool) -> Loads:
+def loads_of(
+    found: Engagement, cutters: tuple[Cutter, ...], shape: np.ndarray, tilt_rad: Floats, known: bool
+) -> Loads:
     """Work out forces across the cutter and bending from the tangential peak force.
 
     Parameters

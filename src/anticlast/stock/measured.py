@@ -62,7 +62,10 @@ class Measured:
                 )
                 raise BadInput(Fault(str(self.file), 0, name, message))
             places.append(np.clip(place, 0.0, len(line) - 1.0))
-        i, j = (np.minimum(place.astype(int), len(line) - 2) for place, line in zip(places, (self.x_mm, self.y_mm), strict=True))
+        i, j = (
+            np.minimum(place.astype(int), len(line) - 2)
+            for place, line in zip(places, (self.x_mm, self.y_mm), strict=True)
+        )
         s, t = places[0] - i, places[1] - j
         z = self.z_mm
         low = (1.0 - s) * z[j, i] + s * z[j, i + 1]
@@ -88,14 +91,20 @@ def read_heights(path: Path, to_mm: float) -> Measured:
     lines = np.array([line for line, _ in rows])
     values = np.array([value for _, value in rows])
     x, y = (_grid_line(path, lines, values[:, column], _HEADING[column]) for column in (0, 1))
-    i, j = (np.rint((values[:, c] - line[0]) / (line[1] - line[0])).astype(int) for c, line in ((0, x), (1, y)))
+    i, j = (
+        np.rint((values[:, c] - line[0]) / (line[1] - line[0])).astype(int) for c, line in ((0, x), (1, y))
+    )
     z = np.full((len(y), len(x)), np.nan)
     flat = j * len(x) + i
     order = np.argsort(flat, kind="stable")
     again = np.flatnonzero(np.diff(flat[order]) == 0)
     if again.size:
         one, two = lines[order[again[0]]], lines[order[again[0] + 1]]
-        raise BadInput(Fault(str(path), int(two), "", f"the same place as on line {one}; needs one height for each place"))
+        raise BadInput(
+            Fault(
+                str(path), int(two), "", f"the same place as on line {one}; needs one height for each place"
+            )
+        )
     z[j, i] = values[:, 2]
     missing = np.argwhere(np.isnan(z))
     if missing.size:
@@ -115,17 +124,23 @@ def _rows(path: Path) -> list[tuple[int, tuple[float, float, float]]]:
             reader = csv.reader(stream)
             heading = next(reader, [])
             if tuple(name.strip().lower() for name in heading) != _HEADING:
-                raise BadInput(Fault(str(path), 1, "", f"found the heading {','.join(heading)[:60]!r}; needs x,y,z"))
+                raise BadInput(
+                    Fault(str(path), 1, "", f"found the heading {','.join(heading)[:60]!r}; needs x,y,z")
+                )
             for row in reader:
                 if not row or all(not cell.strip() for cell in row):
                     continue
                 found.append((reader.line_num, _numbers(path, reader.line_num, row)))
                 if len(found) > _MOST_ROWS:
-                    raise BadInput(Fault(str(path), reader.line_num, "", f"more than {_MOST_ROWS} heights; needs fewer"))
+                    raise BadInput(
+                        Fault(str(path), reader.line_num, "", f"more than {_MOST_ROWS} heights; needs fewer")
+                    )
     except (OSError, UnicodeDecodeError, csv.Error) as error:
         raise BadInput(Fault(str(path), 0, "", f"cannot be read ({error})")) from error
     if len(found) < 4:
-        raise BadInput(Fault(str(path), 0, "", f"found {len(found)} heights; needs at least two by two places"))
+        raise BadInput(
+            Fault(str(path), 0, "", f"found {len(found)} heights; needs at least two by two places")
+        )
     return found
 
 
@@ -152,7 +167,9 @@ def _grid_line(path: Path, lines: Floats, values: Floats, name: str) -> Floats:
     gaps = np.diff(ordered)
     apart = gaps[gaps > 1e-3 * max(1e-9, (high - low) / max(1, len(values)))]
     if not apart.size:
-        raise BadInput(Fault(str(path), int(lines[0]), name, f"all rows have {name} {low:g}; needs at least two places"))
+        raise BadInput(
+            Fault(str(path), int(lines[0]), name, f"all rows have {name} {low:g}; needs at least two places")
+        )
     steps = max(1, round((high - low) / float(np.median(apart[apart > 0.5 * apart.max()]))))
     line = np.linspace(low, high, steps + 1)
     place = (values - low) / (line[1] - line[0])

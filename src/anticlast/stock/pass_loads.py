@@ -78,7 +78,14 @@ class PassLoad:
 
 
 def pass_loads(
-    job: Job, segments: Segments, found: Engagement, loads: Loads, operation: Ints, number: Ints, motion: PartMotion, known: bool
+    job: Job,
+    segments: Segments,
+    found: Engagement,
+    loads: Loads,
+    operation: Ints,
+    number: Ints,
+    motion: PartMotion,
+    known: bool,
 ) -> tuple[PassLoad, ...]:
     """Gather the loads of every pass, in order of time; motion that belongs to no pass is left out.
 
@@ -104,7 +111,10 @@ def pass_loads(
     groups = [order[low:high] for low, high in zip(edges[:-1], edges[1:], strict=True)]
     groups.sort(key=lambda group: int(group[0]))
     lines = motion.line[segments.row]
-    return tuple(flagged(job, _one(job, segments, found, loads, group, operation, number, lines, known)) for group in groups)
+    return tuple(
+        flagged(job, _one(job, segments, found, loads, group, operation, number, lines, known))
+        for group in groups
+    )
 
 
 def _one(

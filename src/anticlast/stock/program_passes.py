@@ -65,14 +65,18 @@ def _comments(path: str) -> tuple[list[tuple[int, int]], list[tuple[int, int]]]:
     return operations, passes
 
 
-def _told(program: ReadProgram, operations: list[tuple[int, int]], passes: list[tuple[int, int]]) -> ProgramPasses:
+def _told(
+    program: ReadProgram, operations: list[tuple[int, int]], passes: list[tuple[int, int]]
+) -> ProgramPasses:
     motions = program.motions
     count = len(motions.line)
     operation = _at(motions.line, operations)
     number = np.zeros(count, np.int64)
     rapid = motions.shape == Shape.RAPID
     # Last rapid at or before each motion, and where the operation of each motion begins.
-    last_rapid = np.maximum.accumulate(np.where(rapid, np.arange(count), -1)) if count else np.zeros(0, np.int64)
+    last_rapid = (
+        np.maximum.accumulate(np.where(rapid, np.arange(count), -1)) if count else np.zeros(0, np.int64)
+    )
     starts = np.searchsorted(motions.line, [line for line, _ in passes])
     before = 0
     for place, (start, (_, value)) in enumerate(zip(starts.tolist(), passes, strict=True)):

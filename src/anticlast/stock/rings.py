@@ -63,7 +63,12 @@ def rings_of(cutter: Cutter) -> Rings:
         step = 0.5 * math.pi / _CORNER
         for k in range(_CORNER):
             turn = (k + 0.5) * step
-            place[row] = -corner * math.cos(turn), disc + corner * math.sin(turn), math.sin(turn), -math.cos(turn)
+            place[row] = (
+                -corner * math.cos(turn),
+                disc + corner * math.sin(turn),
+                math.sin(turn),
+                -math.cos(turn),
+            )
             edge[row] = corner * step
             inner[row], outer[row] = (disc + corner * math.sin(turn + s * step / 2) for s in (-1.0, 1.0))
             rim[row] = math.sin(turn + step / 2), -math.cos(turn + step / 2)
@@ -72,7 +77,12 @@ def rings_of(cutter: Cutter) -> Rings:
     for k in range(_SIDE):
         low, high = (up * ((k + s) / _SIDE) ** 2 for s in (0.0, 1.0))
         place[row] = 0.5 * (low + high), cutter.radius_mm, 1.0, 0.0
-        edge[row], inner[row], outer[row], rim[row] = high - low, cutter.radius_mm, cutter.radius_mm, (1.0, 0.0)
+        edge[row], inner[row], outer[row], rim[row] = (
+            high - low,
+            cutter.radius_mm,
+            cutter.radius_mm,
+            (1.0, 0.0),
+        )
         row += 1
     return Rings(place, edge, np.where(inner < 1e-9, 0.0, inner), outer, rim)
 

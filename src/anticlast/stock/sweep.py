@@ -86,7 +86,17 @@ def take_segments(
     tip, axis = turned_points(motion.tip_mm), turned_points(motion.axis)
     last = np.empty(2 * count, np.int64)
     kept = kernels.join_rows(
-        tip, axis, height, motion.motion, motion.fraction, live, chord_mm, STOCK_REACH_MM, _REACH_MM, _MOST_JOINED, last
+        tip,
+        axis,
+        height,
+        motion.motion,
+        motion.fraction,
+        live,
+        chord_mm,
+        STOCK_REACH_MM,
+        _REACH_MM,
+        _MOST_JOINED,
+        last,
     )
     pairs = last[: 2 * kept].reshape(-1, 2)
     before, row = pairs[:, 0], pairs[:, 1]
@@ -166,7 +176,13 @@ def lay_stations(segments: Segments, spacing_mm: float) -> Stations:
     """
     number = np.zeros(len(segments), np.int64)
     kernels.mark_stations(
-        segments.ends, segments.shape, segments.rapid, segments.length_mm, spacing_mm, math.cos(_SHARP_RAD), number
+        segments.ends,
+        segments.shape,
+        segments.rapid,
+        segments.length_mm,
+        spacing_mm,
+        math.cos(_SHARP_RAD),
+        number,
     )
     segment = np.flatnonzero(number)
     return Stations(np.concatenate(([0], np.cumsum(number))), segment, _frames(segments, segment))

@@ -57,7 +57,14 @@ class Watch:
         numbers, rows, shape, rapid, offset = [], [], [], [], []
         for position, cutter in enumerate(cutters):
             corner = cutter.corner_radius_mm
-            end = ("cutting end", cutter.radius_mm - corner, corner, max(corner, cutter.flute_length_mm - corner), corner, True)
+            end = (
+                "cutting end",
+                cutter.radius_mm - corner,
+                corner,
+                max(corner, cutter.flute_length_mm - corner),
+                corner,
+                True,
+            )
             rigid = [
                 (body.name, body.radius_mm, body.low_mm, body.high_mm, 0.0, False)
                 for body in cutter.bodies()
