@@ -114,7 +114,9 @@ class Sweep:
         """Return poses (n, 6) in (u, v, z) from reference points and axes (n, 3) in part coordinates."""
         c, s = math.cos(self.direction_rad), math.sin(self.direction_rad)
         turn = np.array([[c, -s, 0.0], [s, c, 0.0], [0.0, 0.0, 1.0]])
-        return np.hstack((point @ turn, axis @ turn)).astype(np.float64)
+        poses = np.empty((len(point), 6))
+        poses[:, :3], poses[:, 3:] = point @ turn, axis @ turn
+        return poses
 
     def offsets(self) -> Floats:
         """Return plan distances (p,) along +u from a station to the poses that may cut abreast of it."""

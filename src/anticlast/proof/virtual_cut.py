@@ -212,7 +212,7 @@ class _Field:
         _, _, start = self._count(self.low)
         reached, deep = int(np.sum(self.state > 0)), int(np.sum(self.state == 2))
         trials = float(np.sum(np.diff(start) * np.diff(self.nodes.tile_start)))
-        return trials * (1.0 + (_DEEP_TRIALS - 1.0) * float(deep) / float(max(reached, 1)))
+        return trials * (1.0 + (_DEEP_TRIALS - 1.0) * deep / max(reached, 1))
 
     def _depths(self, rows: npt.NDArray[np.int64]) -> Floats:
         return part_depths_mm(
