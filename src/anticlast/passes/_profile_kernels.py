@@ -186,7 +186,7 @@ def profiles(form, tool, u, v, aside, tables, step, reach, error, scale, height,
     u, v : (n,)
         Stations. Table k is about station k: its middle row has its contact there.
     aside : (m,)
-        Plan distances across the feed at which to look.
+        Distances on the surface across the feed at which to look.
     tables : (n, p, 6)
     step : float
         Plan distance between contacts of neighbouring rows.
@@ -203,11 +203,11 @@ def profiles(form, tool, u, v, aside, tables, step, reach, error, scale, height,
     for k in range(len(u)):
         tilt[0], tilt[1], tilt[2] = error, middle, step * scale[k, 0]
         for j in range(len(aside)):
-            _ground(form, u[k], v[k] + aside[j], line)
+            _ground(form, u[k], v[k] + aside[j] / scale[k, 1], line)
             h, at = _left(line, tables[k], middle, step, reach, tool, pose, upright)
             height[k, j] = h
             shift[k, j] = (at - middle) * step
-            tilt[3] = aside[j] * scale[k, 1]
+            tilt[3] = aside[j]
             lowered[k, j] = h
             if error > 0.0:
                 lowered[k, j], _ = _left(line, tables[k], middle, step, reach, tool, pose, tilt)

@@ -115,7 +115,7 @@ def strips_of(
     swing: Floats,
     demand: Demand,
 ) -> Strips:
-    """Return the strips of profiles (n, m), sampled at the plan distances (m,) of `sides`.
+    """Return the strips of profiles (n, m), sampled at the distances (m,) of `sides`.
 
     Parameters
     ----------
@@ -139,9 +139,8 @@ def strips_of(
     low_right = np.argmin(risen[:, : middle + 1], axis=1)
     between = (places >= low_right[:, None]) & (places <= low_left[:, None])
     bump = np.max(np.where(between, risen, 0.0), axis=1)
-    arm = np.hypot(shift, aside_mm * across[:, None])
-    near = np.abs(places - middle) <= np.maximum(first, last)[:, None] + 1
-    gouge = np.max(np.where(near, -lowered - lift[:, None], 0.0), axis=1)
+    arm = np.hypot(shift, aside_mm)
+    gouge = np.max(-lowered - lift[:, None], axis=1, initial=0.0)
     # Below 0: what is not kept, as a share; above: the width of the strip.
     over = np.maximum(bump / (_MIDDLE_SHARE * demand.height_mm), gouge / demand.gouge_mm)
     over = np.maximum(over, np.maximum(lift / demand.lift_mm, swing / _MOST_SWING))
@@ -150,7 +149,7 @@ def strips_of(
     inside &= kept[:, None]
     shift = np.where(inside, shift, 0.0)
     arm = np.max(np.where(inside, arm, 0.0), axis=1)
-    left, right = np.where(kept, left, 0.0), np.where(kept, right, 0.0)
+    left, right = (np.where(kept, reach / across, 0.0) for reach in (left, right))
     return Strips(lift, left, right, bump, shift.max(axis=1), -shift.min(axis=1), arm, gouge, gouge, worth)
 
 
@@ -164,10 +163,17 @@ def _parabolic_lowest(height: Floats) -> Floats:
     return np.minimum(height.min(axis=1), b - np.minimum(dip, 0.25 * np.abs(bend)))
 
 
-def sides(furthest_mm: float) -> Floats:
-    """Return plan distances (2 _SIDE + 1,) from the line at which profiles are sampled, up to the furthest either way."""
+def sides(sweep: Sweep) -> Floats:
+    """Return distances on the surface (2 _SIDE + 1,) from the line at which profiles are sampled, to the rim or beyond.
+
+    One of them is the bottom's radius: where the surface twists, the bottom comes nearest with its edge.
+    """
     share = np.linspace(-1.0, 1.0, 2 * _SIDE + 1)
-    return furthest_mm * np.sign(share) * np.abs(share) ** _CROWDING
+    furthest = _FURTHEST * sweep.cutter.radius_mm
+    edge = math.floor(_SIDE * (sweep.disc_mm / furthest) ** (1.0 / _CROWDING))
+    if edge > 0:
+        furthest = sweep.disc_mm * (_SIDE / min(edge, _SIDE - 1)) ** _CROWDING
+    return furthest * np.sign(share) * np.abs(share) ** _CROWDING
 
 
 def _crossing(height: Floats, furthest_mm: float, limit_mm: float) -> tuple[Floats, Ints]:
@@ -291,7 +297,7 @@ def fit(
     xy = plan_of(u, v, sweep.direction_rad)
     tangent = sweep.saddle.tangent(xy, sweep.direction_rad)
     across = sweep.saddle.stretch(xy) * np.linalg.norm(tangent[:, :2], axis=1)
-    aside = sides(_FURTHEST * sweep.cutter.radius_mm / float(across.max()))
+    aside = sides(sweep)
     shape = (len(ways), v_nodes.size, u_nodes.size)
     members = 1 if relative else u_nodes.size
     matter = np.tile(counts.ravel(), len(ways)).reshape(-1, members)

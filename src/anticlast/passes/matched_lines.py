@@ -188,8 +188,8 @@ def _left_by(task: Task, found: Fit, lines_mm: Floats, pieces: Pieces, order: li
     strip, lowest = np.full(lines_mm.size, -np.inf), math.inf
     for number, (u, track) in enumerate(zip(_places(task, lines_mm), tracks, strict=True)):
         if u.size:
-            height = _in_strip(task, found, lines_mm, number, u, track, int(sign[number]))
-            strip[number], lowest = height.max(), min(lowest, float(height.min()))
+            own = _in_strip(task, found, lines_mm, number, u, track, int(sign[number]))
+            strip[number], lowest = own.max(), min(lowest, float(own.min()), _under_edge(task, u, track))
     return Left(ridge, strip, _on_rim(task, lines_mm, tracks), lowest)
 
 
@@ -205,6 +205,16 @@ def _in_strip(
         aside = np.clip(aside, -_OWN_SHARE * float(steps.min()), _OWN_SHARE * float(steps.min()))
     places = np.broadcast_to(u_mm[:, None], aside.shape).ravel()
     return task.sweep.heights(places, track.v_mm + aside.ravel(), track)
+
+
+def _under_edge(task: Task, u_mm: Floats, track: Track) -> float:
+    """Return the lowest place under both edges of the bottom and half-way to them, at abscissae u (n,)."""
+    xy = task.frame.xy(u_mm, np.full(u_mm.size, track.v_mm))
+    tangent = task.frame.saddle.tangent(xy, task.frame.direction_rad)
+    across = task.frame.saddle.stretch(xy) * np.linalg.norm(tangent[:, :2], axis=1)
+    aside = task.sweep.disc_mm / across[:, None] * np.array([-1.0, -0.75, 0.75, 1.0])
+    places = np.broadcast_to(u_mm[:, None], aside.shape).ravel()
+    return float(task.sweep.heights(places, track.v_mm + aside.ravel(), track).min())
 
 
 def _on_rim(task: Task, lines_mm: Floats, tracks: list[Track]) -> Floats:

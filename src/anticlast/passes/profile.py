@@ -121,7 +121,7 @@ class Sweep:
     def offsets(self) -> Floats:
         """Return plan distances (p,) along +u from a station to the poses that may cut abreast of it."""
         half = math.ceil(self.reach_mm / self.step_mm)
-        return np.arange(-half, half + 1) * self.step_mm
+        return np.asarray(np.arange(-half, half + 1) * self.step_mm, np.float64)
 
     def _tool(self) -> Floats:
         rounds = _ROUNDS_ROUND if self.cutter.corner_radius_mm > 0.0 else _ROUNDS_SHARP
@@ -154,7 +154,7 @@ class Sweep:
         lead_rad, lean_rad : (n,) or (n, p)
             The same all within the cutter's reach of a station, or at each of `offsets` from it.
         aside_mm : (m,)
-            Plan distances to the left of the line.
+            Distances on the surface to the left of the line.
         error_rad : float
             The tilt error.
 
