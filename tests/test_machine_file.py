@@ -20,7 +20,6 @@ from anticlast.machine.definition import (
     load_machine,
     machine_json,
     machine_lines,
-    post_folder,
     shipped_names,
 )
 from anticlast.machine.file_tables import machine_from
@@ -200,10 +199,6 @@ def test_listing() -> None:
 
 
 # ------------------------------------------------------------------------------------------ where posts are
-
-
-def test_post_folder_of_a_checkout() -> None:
-    assert post_folder() == ROOT / "post"
 
 
 def test_post_folder_of_a_wheel(tmp_path: Path) -> None:
