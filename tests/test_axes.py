@@ -14,7 +14,7 @@ from hypothesis import strategies as st
 from anticlast.errors import CannotPlan
 from anticlast.machine import _kernels, branches
 from anticlast.machine.axes import axis_path, budget_of
-from anticlast.machine.blocks import Digits
+from anticlast.machine.digits import Digits
 from anticlast.machine.kinematics import Kinematics
 from anticlast.records import CutterPath, Purpose, Stretch
 from anticlast.saddle import Saddle

@@ -15,8 +15,9 @@ import numpy as np
 
 from anticlast.errors import CannotPlan
 from anticlast.machine import _kernels
-from anticlast.machine.blocks import Blocks, Digits, joined, limit_notes, split_long, time_blocks
+from anticlast.machine.blocks import Blocks, joined, limit_notes, split_long, time_blocks
 from anticlast.machine.branches import Chosen, Run, Wish, choose_all
+from anticlast.machine.digits import Digits
 from anticlast.machine.hops import Hops
 from anticlast.machine.kinematics import Kinematics
 from anticlast.posting.arcs import fit_arcs

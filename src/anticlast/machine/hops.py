@@ -12,7 +12,8 @@ import math
 import numpy as np
 import shapely
 
-from anticlast.machine.blocks import Blocks, Digits
+from anticlast.machine.blocks import Blocks
+from anticlast.machine.digits import Digits
 from anticlast.machine.kinematics import Kinematics
 from anticlast.records import Floats, Job, Operation, Purpose
 from anticlast.saddle import Saddle

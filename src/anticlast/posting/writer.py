@@ -12,10 +12,10 @@ from typing import IO
 import numpy as np
 
 from anticlast.cutter import Cutter
+from anticlast.machine.digits import MM_PER_INCH, Digits
 from anticlast.posting.arcs import arc_length_mm
 from anticlast.records import AxisPath, Floats, Job, Purpose
 
-MM_PER_INCH = 25.4
 CHUNK = 4096  # blocks formatted at a time; bounds the memory
 LONGEST_COMMENT = 110  # characters; far below the 256 that NISTIR 6556 section 3.3 allows a line
 OPERATION_MARK = "(OPERATION "
@@ -54,12 +54,11 @@ class _Dialect:
     def __init__(self, job: Job) -> None:
         control = job.machine.control
         self.inch = job.units == "inch"
-        # One more digit in inch than in mm keeps the rounding of both alike (1e-4 mm against 1e-5 in = 2.5e-4 mm).
-        shift = {("mm", True): 1, ("inch", False): -1}.get((job.machine.units, self.inch), 0)
-        self.length = max(control.length_decimals + shift, 1)
-        self.angle = control.angle_decimals
+        digits = Digits.of(job)
+        self.length = digits.length_decimals
+        self.angle = digits.angle_decimals
         self.feed = control.feed_decimals
-        self.scale = 1.0 / MM_PER_INCH if self.inch else 1.0
+        self.scale = 1.0 / digits.unit_mm
         self.inverse = control.feed_mode == "inverse"
         self.path_mode = control.path_mode
         self.program_end = control.program_end
