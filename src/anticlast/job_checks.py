@@ -196,6 +196,11 @@ def pattern_of(operation: Checked[OperationTable]) -> str | None:
 
 def _check_pattern(operation: Checked[OperationTable], cutter: Checked[CutterTable] | None) -> None:
     does, pattern = operation.get("does"), operation.get("pattern")
+    resolved = pattern_of(operation)
+    if resolved is not None and resolved != "matched" and "lead_margin" in operation.given:
+        operation.fault(
+            "lead_margin", f'has no place in the pattern "{resolved}"; only "matched" sets the lead itself'
+        )
     if does is None or pattern is None:
         return
     allowed = {"rough": ROUGH_PATTERNS, "outline": OUTLINE_PATTERNS}.get(does, FINISH_PATTERNS)
@@ -205,10 +210,6 @@ def _check_pattern(operation: Checked[OperationTable], cutter: Checked[CutterTab
     elif pattern == "matched" and cutter is not None and cutter.get("shape") == "ball":
         operation.fault(
             "pattern", 'found "matched" with a ball cutter; needs a bull or flat cutter, or another pattern'
-        )
-    if pattern != "matched" and "lead_margin" in operation.given:
-        operation.fault(
-            "lead_margin", f'has no place in the pattern "{pattern}"; only "matched" sets the lead itself'
         )
 
 

@@ -96,23 +96,6 @@ def _lowered(line, pose, tool, below, at, tilt):
 
 
 @numba.njit(cache=True, nogil=True)
-def _best_row(line, table, low, high, tool, pose, below, tilt):
-    """Return (height, row) of the lowest entry over whole rows low to high, from the middle outwards; inf if none is below."""
-    best, row = below, -1
-    middle = (low + high) // 2
-    for n in range(2 * (high - low) + 2):
-        i = middle + (n // 2 + 1 if n % 2 == 0 else -(n // 2))
-        if i < low or i > high:
-            continue
-        for k in range(6):
-            pose[k] = table[i, k]
-        h = _lowered(line, pose, tool, best, float(i), tilt)
-        if h < best:
-            best, row = h, i
-    return (best if row >= 0 else np.inf), row
-
-
-@numba.njit(cache=True, nogil=True)
 def _refined(line, table, best, row, low, high, tool, pose, tilt):
     """Return (height, row) of the lowest entry within a row of the one given, by golden section.
 
@@ -147,9 +130,9 @@ def _refined(line, table, best, row, low, high, tool, pose, tilt):
 def _left(line, table, abreast, step, reach, tool, pose, tilt):
     """Return (height, row) that a pass leaves on a line: the lowest entry over poses within reach of it.
 
-    Front, rear and middle of the bottom may come near, each with a lowest place of its own: rows whose contact lies no further
-    than a bottom's radius from the line, and those before and behind, are searched apart. Between rows an entry dips by no more
-    than ``tool[3]``.
+    Front, rear and sides of the bottom may come near, each with a lowest place of its own. All whole rows are asked; every row
+    that is no higher than both its neighbours, and within ``tool[3]`` of the lowest, is refined: that is how far an entry may dip
+    between rows.
 
     Parameters
     ----------
@@ -159,15 +142,22 @@ def _left(line, table, abreast, step, reach, tool, pose, tilt):
     last = table.shape[0] - 1
     low = min(max(math.floor(abreast - reach / step), 0), last - 3)
     high = max(min(math.ceil(abreast + reach / step), last), low + 3)
-    split = tool[0] / step + 0.5
-    first = min(max(math.ceil(abreast - split), low), high)
-    second = min(max(math.floor(abreast + split), first), high)
+    heights = np.empty(high - low + 3)
+    heights[0] = heights[-1] = np.inf
+    first = min(max(math.floor(abreast), low), high)
+    for k in range(6):
+        pose[k] = table[first, k]
+    lowest = _lowered(line, pose, tool, np.inf, float(first), tilt)
+    for i in range(low, high + 1):
+        for k in range(6):
+            pose[k] = table[i, k]
+        h = _lowered(line, pose, tool, lowest + tool[3], float(i), tilt)
+        heights[i - low + 1] = h
+        lowest = min(lowest, h)
     best, at = np.inf, float(low)
-    for part in range(3):
-        i, j = (first, second) if part == 0 else ((second, high) if part == 1 else (low, first))
-        h, row = _best_row(line, table, i, j, tool, pose, best + tool[3], tilt)
-        if row >= 0:
-            h, place = _refined(line, table, h, row, i, j, tool, pose, tilt)
+    for n in range(1, high - low + 2):
+        if heights[n] <= heights[n - 1] and heights[n] < heights[n + 1] and heights[n] <= lowest + tool[3]:
+            h, place = _refined(line, table, heights[n], low + n - 1, low, high, tool, pose, tilt)
             if h < best:
                 best, at = h, place
     return best, at

@@ -14,8 +14,9 @@ import numpy as np
 
 from anticlast.passes.cusp import plan_of
 from anticlast.passes.profile import Sweep, osculating_lead_rad
+from anticlast.passes.strip import Demand, Strips, sides, strips_of
 from anticlast.records import Bools, Floats, Ints
-from anticlast.tolerances import SAME_POINT_MM
+from anticlast.tolerances import REACH_RAD, SAME_POINT_MM
 
 # Below this lead the rear of a flat bottom stands so low that it rubs on chips: its height over a 6 mm bottom is 26 micrometres.
 LEAST_LEAD_RAD = math.radians(0.25)
@@ -23,24 +24,11 @@ LEAST_LEAD_RAD = math.radians(0.25)
 TOLD_ERROR_RAD = math.radians(0.05)
 # Nor is a wide strip to be had beyond: the profile is nearly a half circle of the corner there.
 _MOST_LEAD_RAD = math.radians(50.0)
-# Share of the limit that the middle of a strip may stand at between its two lowest lines. At 1 the strip is 1.3 % wider
-# than at 0.9, but every error of the lead would show twice.
-_MIDDLE_SHARE = 0.9
 # Leads asked first where the machine reaches every axis, as shares of the one that osculates; then between the best two.
 _SHARES = np.array([0.3, 0.45, 0.65, 0.95, 1.4, 2.2, 4.0, 8.0, 16.0])
 _LEADS_ASKED = 11
-_SECTIONS = 15
-# Where the machine's lean swings from front to side, the contact must not travel round the rim faster than this share of the
-# feed: else it would run backwards, and a strip looked at here and there would not tell what is left between.
-_MOST_SWING = 0.5
+_SECTIONS, _SECTIONS_OF_LINES = 15, 9
 _GOLDEN = 0.6180339887498949
-# Profile samples to either side of the line, dense beside it: a contact near the rim of the bottom leaves narrow strips.
-_SIDE = 18
-_CROWDING = 1.6
-_FURTHEST = 0.995
-_FAR_MM = 1e3
-# Where the sample past the limit stands higher than this many limits, a parabola through it says nothing.
-_STEEP = 50.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,147 +47,6 @@ class Family:
 
 
 @dataclass(frozen=True, slots=True)
-class Demand:
-    """What a strip has to keep: scallop limit, tilt error to survive and what it may gouge then, least lead, most lift.
-
-    Between stations lead and lift run smoothly only if the machine follows; where it does not, hardly any lift is safe.
-    """
-
-    height_mm: float
-    margin_rad: float
-    gouge_mm: float
-    least_rad: float
-    lift_mm: float
-
-
-@dataclass(frozen=True, slots=True)
-class Strips:
-    """Strips at stations, arrays of one shape; lengths mm.
-
-    Attributes
-    ----------
-    lift_mm
-        How far the contact stands off the surface so that nothing gouges.
-    left_mm, right_mm
-        Plan distance from the line to where the limit is reached, to +v and to -v; 0 where there is no strip.
-    middle_mm
-        Highest place between the two lowest lines.
-    ahead_mm, behind_mm
-        How far along +u, and against it, contacts lie that cut the strip.
-    arm_mm
-        Largest distance of a place of the strip from the contact: what a tilt error about it moves, per radian.
-    margin_gouge_mm, told_gouge_mm
-        Gouge under the tilt error that must be survived, and under the one that is always told.
-    worth
-        Width, or below 0 how far the demand is missed.
-    """
-
-    lift_mm: Floats
-    left_mm: Floats
-    right_mm: Floats
-    middle_mm: Floats
-    ahead_mm: Floats
-    behind_mm: Floats
-    arm_mm: Floats
-    margin_gouge_mm: Floats
-    told_gouge_mm: Floats
-    worth: Floats
-
-
-def strips_of(
-    height: Floats,
-    shift: Floats,
-    lowered: Floats,
-    aside_mm: Floats,
-    across: Floats,
-    swing: Floats,
-    demand: Demand,
-) -> Strips:
-    """Return the strips of profiles (n, m), sampled at the distances (m,) of `sides`.
-
-    Parameters
-    ----------
-    height, shift, lowered : (n, m)
-        As `Sweep.profiles` has them.
-    across : (n,)
-        Surface distance per plan distance across the feed.
-    swing : (n,)
-        How far the contact travels round the rim of the bottom, per feed.
-    """
-    height = np.where(np.isfinite(height), height, _FAR_MM)
-    middle = aside_mm.size // 2
-    lowest = _parabolic_lowest(height)
-    lift = np.maximum(-lowest, 0.0)
-    risen = height + lift[:, None]
-    left, last = _crossing(risen[:, middle:], aside_mm[-1], demand.height_mm)
-    right, first = _crossing(risen[:, middle::-1], aside_mm[-1], demand.height_mm)
-    places = np.arange(aside_mm.size)
-    inside = (places >= middle - first[:, None]) & (places <= middle + last[:, None])
-    low_left = middle + np.argmin(risen[:, middle:], axis=1)
-    low_right = np.argmin(risen[:, : middle + 1], axis=1)
-    between = (places >= low_right[:, None]) & (places <= low_left[:, None])
-    bump = np.max(np.where(between, risen, 0.0), axis=1)
-    arm = np.hypot(shift, aside_mm)
-    gouge = np.max(-lowered - lift[:, None], axis=1, initial=0.0)
-    # Below 0: what is not kept, as a share; above: the width of the strip.
-    over = np.maximum(bump / (_MIDDLE_SHARE * demand.height_mm), gouge / demand.gouge_mm)
-    over = np.maximum(over, np.maximum(lift / demand.lift_mm, swing / _MOST_SWING))
-    worth = np.where(over <= 1.0, left + right, -np.minimum(over, _FAR_MM))
-    kept = worth > 0.0
-    inside &= kept[:, None]
-    shift = np.where(inside, shift, 0.0)
-    arm = np.max(np.where(inside, arm, 0.0), axis=1)
-    left, right = (np.where(kept, reach / across, 0.0) for reach in (left, right))
-    return Strips(lift, left, right, bump, shift.max(axis=1), -shift.min(axis=1), arm, gouge, gouge, worth)
-
-
-def _parabolic_lowest(height: Floats) -> Floats:
-    """Return the lowest value (n,) of each row, by a parabola through the lowest sample and its neighbours."""
-    at = np.clip(np.argmin(height, axis=1), 1, height.shape[1] - 2)
-    rows = np.arange(len(height))
-    a, b, c = height[rows, at - 1], height[rows, at], height[rows, at + 1]
-    bend = a - 2.0 * b + c
-    dip = np.where(bend > 0.0, (a - c) ** 2 / (8.0 * np.where(bend > 0.0, bend, 1.0)), 0.0)
-    return np.minimum(height.min(axis=1), b - np.minimum(dip, 0.25 * np.abs(bend)))
-
-
-def sides(sweep: Sweep) -> Floats:
-    """Return distances on the surface (2 _SIDE + 1,) from the line at which profiles are sampled, to the rim or beyond.
-
-    One of them is the bottom's radius: where the surface twists, the bottom comes nearest with its edge.
-    """
-    share = np.linspace(-1.0, 1.0, 2 * _SIDE + 1)
-    furthest = _FURTHEST * sweep.cutter.radius_mm
-    edge = math.floor(_SIDE * (sweep.disc_mm / furthest) ** (1.0 / _CROWDING))
-    if edge > 0:
-        furthest = sweep.disc_mm * (_SIDE / min(edge, _SIDE - 1)) ** _CROWDING
-    return furthest * np.sign(share) * np.abs(share) ** _CROWDING
-
-
-def _crossing(height: Floats, furthest_mm: float, limit_mm: float) -> tuple[Floats, Ints]:
-    """Return where rows (n, _SIDE + 1), from the line outwards, first pass the limit, and the last sample before.
-
-    Between samples by a parabola through the two before and the one after, which is exact enough where the profile turns up.
-    """
-    over = height > limit_mm
-    over[:, -1] = True
-    after = np.argmax(over, axis=1)
-    rows = np.arange(len(height))
-    last = np.maximum(after - 1, 0)
-    h0, h1, h2 = (
-        height[rows, np.maximum(last - 1, 0)],
-        height[rows, last],
-        np.minimum(height[rows, after], _FAR_MM),
-    )
-    straight = np.clip((limit_mm - h1) / np.where(h2 > h1, h2 - h1, np.inf), 0.0, 1.0)
-    bend, slope = 0.5 * (h0 + h2) - h1, 0.5 * (h2 - h0)
-    root = slope + np.sqrt(np.maximum(slope * slope - 4.0 * bend * (h1 - limit_mm), 0.0))
-    curved = (last > 0) & (root > 0.0) & (h2 < _STEEP * limit_mm)
-    share = np.where(curved, np.clip(2.0 * (limit_mm - h1) / np.where(curved, root, 1.0), 0.0, 1.0), straight)
-    return np.where(after == 0, 0.0, furthest_mm * ((last + share) / _SIDE) ** _CROWDING), last
-
-
-@dataclass(frozen=True, slots=True)
 class Fit:
     """Chosen leads and their strips on a grid of stations over the outline and some way round it.
 
@@ -214,6 +61,8 @@ class Fit:
         Of the same shape.
     reached_rad : (2, ways, nv, nu)
         Lead and lean that the machine gives at the stations.
+    smooth : bool
+        What was chosen changes smoothly across the feed too, not from line to line by itself.
     """
 
     u_mm: Floats
@@ -222,6 +71,7 @@ class Fit:
     angle_rad: Floats
     strips: Strips
     reached_rad: Floats
+    smooth: bool
 
     def wish(self, way: int, u_mm: Floats, v_mm: Floats) -> tuple[Floats, Floats, Floats]:
         """Return wished lead and lean [rad] and the lift [mm] (n,) at contacts (u, v)."""
@@ -235,9 +85,9 @@ class Fit:
         return np.maximum(np.min(left, axis=0), 0.0), np.maximum(np.min(right, axis=0), 0.0)
 
     def at(self, field: Floats, u_mm: Floats, v_mm: Floats) -> Floats:
-        """Return a field (nv, nu) between stations, cubic in either direction."""
-        i, wu = _weights(self.u_mm, u_mm)
-        j, wv = _weights(self.v_mm, v_mm)
+        """Return a field (nv, nu) between stations: cubic, straight across the feed where it is not smooth."""
+        i, wu = _weights(self.u_mm, u_mm, True)
+        j, wv = _weights(self.v_mm, v_mm, self.smooth)
         found = np.zeros(np.broadcast(u_mm, v_mm).shape)
         for b in range(4):
             for a in range(4):
@@ -245,11 +95,13 @@ class Fit:
         return found
 
 
-def _weights(nodes: Floats, at: Floats) -> tuple[Ints, Floats]:
-    """Return the first of four neighbouring nodes, and their Lagrange weights (4, n)."""
+def _weights(nodes: Floats, at: Floats, cubic: bool) -> tuple[Ints, Floats]:
+    """Return the first of four neighbouring nodes, and their weights (4, n): Lagrange's, or those of the nearest two."""
     t = (np.clip(at, nodes[0], nodes[-1]) - nodes[0]) / (nodes[1] - nodes[0])
     i = np.clip(np.floor(t).astype(np.int64) - 1, 0, nodes.size - 4)
     a = t - i
+    if not cubic:
+        return i, np.stack([np.maximum(1.0 - np.abs(a - k), 0.0) for k in range(4)])
     b, c, d = a - 1.0, a - 2.0, a - 3.0
     return i, np.stack((-b * c * d / 6.0, 0.5 * a * c * d, -0.5 * a * b * d, a * b * c / 6.0))
 
@@ -272,6 +124,83 @@ def reaches_all(sweep: Sweep, u_mm: Floats, v_mm: Floats) -> bool:
     return True
 
 
+@dataclass(frozen=True, slots=True)
+class _Search:
+    """Stations (n,) of one fit, and what is asked there: one angle for every ``members`` stations."""
+
+    sweep: Sweep
+    u_mm: Floats
+    v_mm: Floats
+    way: Floats
+    family: Family
+    demand: Demand
+    matter: Bools
+    relative: bool
+
+    @property
+    def members(self) -> int:
+        """How many stations share an angle."""
+        return int(self.matter.shape[1])
+
+    @property
+    def least_rad(self) -> float:
+        """The least lead."""
+        return max(self.demand.least_rad, LEAST_LEAD_RAD)
+
+    def around(self) -> Floats:
+        """Return the leads (n, p) to start from at the poses that may cut abreast of the stations."""
+        u = self.u_mm[:, None] + self.sweep.offsets()
+        return _start(self.sweep, u, self.v_mm[:, None], self.least_rad)
+
+    def strips(self, angle: Floats, error_rad: float) -> Strips:
+        """Return the strips of angles (n / members,)."""
+        sweep, u, v, way = self.sweep, self.u_mm, self.v_mm, self.way
+        swing = np.zeros(u.size)
+        if self.relative:
+            # Within the cutter's reach a lead changes as the one that osculates: where it falls, the rear of poses ahead is low.
+            around = self.around()
+            varies = angle[:, None] * around / around[:, around.shape[1] // 2, None]
+            lead, lean = self.family.wish(np.maximum(varies, self.least_rad))
+        else:
+            lead, lean = self.family.wish(np.repeat(angle, self.members))
+            swing = _swing(sweep, u, v, way, lead, lean)
+        tangent = sweep.saddle.tangent(plan_of(u, v, sweep.direction_rad), sweep.direction_rad)
+        stretch = sweep.saddle.stretch(plan_of(u, v, sweep.direction_rad))
+        aside = sides(sweep)
+        profiles = sweep.profiles(u, v, way, lead, lean, aside, error_rad)
+        return strips_of(
+            *profiles, aside, stretch * np.linalg.norm(tangent[:, :2], axis=1), swing, self.demand
+        )
+
+    def worth(self, angle: Floats, error_rad: float) -> Floats:
+        """Return what angles are worth at the worst of their stations."""
+        found = self.strips(angle, error_rad).worth.reshape(-1, self.members)
+        return np.where(self.matter, found, np.inf).min(axis=1)
+
+    def best(self) -> Floats:
+        """Return the angles of most worth (n / members,)."""
+        least, margin = self.least_rad, self.demand.margin_rad
+        if self.relative:
+            around = self.around()
+            angles = np.clip(
+                around[:, around.shape[1] // 2, None] * _SHARES, least, max(_MOST_LEAD_RAD, least)
+            )
+        else:
+            # Whether the first of many survives an error is asked of the better ones only.
+            asked = np.geomspace(least, max(_MOST_LEAD_RAD, least), _LEADS_ASKED)
+            angles, margin = np.broadcast_to(asked, (len(self.matter), _LEADS_ASKED)), 0.0
+        found = np.stack([self.worth(np.ascontiguousarray(column), margin) for column in angles.T], axis=1)
+        rows, best = np.arange(len(angles)), np.argmax(found, axis=1)
+        last = angles.shape[1] - 1
+        low, high = angles[rows, np.maximum(best - 1, 0)], angles[rows, np.minimum(best + 1, last)]
+        start = angles[rows, best]
+        worth = found[rows, best] if self.relative else self.worth(start, self.demand.margin_rad)
+        sections = _SECTIONS if self.relative else _SECTIONS_OF_LINES
+        return _sectioned(
+            lambda angle: self.worth(angle, self.demand.margin_rad), low, high, start, worth, sections
+        )
+
+
 def fit(
     sweep: Sweep, u_nodes: Floats, v_nodes: Floats, ways: tuple[int, ...], family: Family, demand: Demand,
     counts: Bools, relative: bool,
@@ -288,61 +217,29 @@ def fit(
         True: each station has its own angle, looked for about the lead that osculates. False: one angle for every line of
         stations along the feed, of all small and large ones the best at the line's worst station.
     """
-    if relative and len(ways) == 2 and _symmetric(u_nodes) and _symmetric(v_nodes):
-        return _turned_over(
-            fit(sweep, u_nodes, v_nodes, ways[:1], family, demand, counts | counts[::-1, ::-1], relative)
-        )
-    way = np.repeat(np.array(ways, dtype=np.float64), u_nodes.size * v_nodes.size)
-    v, u = (np.tile(grid.ravel(), len(ways)) for grid in np.meshgrid(v_nodes, u_nodes, indexing="ij"))
-    xy = plan_of(u, v, sweep.direction_rad)
-    tangent = sweep.saddle.tangent(xy, sweep.direction_rad)
-    across = sweep.saddle.stretch(xy) * np.linalg.norm(tangent[:, :2], axis=1)
-    aside = sides(sweep)
+    if (
+        len(ways) == 2
+        and _symmetric(u_nodes)
+        and _symmetric(v_nodes)
+        and _turns_over(sweep, u_nodes, v_nodes)
+    ):
+        one = fit(sweep, u_nodes, v_nodes, ways[:1], family, demand, counts | counts[::-1, ::-1], relative)
+        return _turned_over(one)
     shape = (len(ways), v_nodes.size, u_nodes.size)
-    members = 1 if relative else u_nodes.size
-    matter = np.tile(counts.ravel(), len(ways)).reshape(-1, members)
+    v, u = (np.tile(grid.ravel(), len(ways)) for grid in np.meshgrid(v_nodes, u_nodes, indexing="ij"))
+    way = np.repeat(np.array(ways, dtype=np.float64), u_nodes.size * v_nodes.size)
+    matter = np.tile(counts.ravel(), len(ways)).reshape(-1, 1 if relative else u_nodes.size)
     matter |= ~matter.any(axis=1, keepdims=True)
-
-    none = np.zeros(u.size)
-    least = max(demand.least_rad, LEAST_LEAD_RAD)
-    start = _start(sweep, u[:, None] + sweep.offsets(), v[:, None], least)
-    here = start[:, start.shape[1] // 2]
-    # Within reach of the cutter a lead changes as the one that osculates: where it falls, the rear of poses ahead comes near.
-    varies = start / here[:, None]
-
-    def ask(angle: Floats, error_rad: float = demand.margin_rad) -> Strips:
-        if relative:
-            lead, lean = family.wish(np.maximum(angle[:, None] * varies, least))
-            return strips_of(
-                *sweep.profiles(u, v, way, lead, lean, aside, error_rad), aside, across, none, demand
-            )
-        lead, lean = family.wish(np.repeat(angle, members))
-        swing = _swing(sweep, u, v, way, lead, lean)
-        return strips_of(
-            *sweep.profiles(u, v, way, lead, lean, aside, error_rad), aside, across, swing, demand
-        )
-
-    def worth(angle: Floats) -> Floats:
-        return np.where(matter, ask(angle).worth.reshape(-1, members), np.inf).min(axis=1)
-
-    if relative:
-        angles = np.clip(here[:, None] * _SHARES, least, max(_MOST_LEAD_RAD, least))
-    else:
-        asked = np.geomspace(least, max(_MOST_LEAD_RAD, least), _LEADS_ASKED)
-        angles = np.broadcast_to(asked, (len(matter), _LEADS_ASKED))
-    found = np.stack([worth(np.ascontiguousarray(column)) for column in angles.T], axis=1)
-    best = np.argmax(found, axis=1)
-    rows = np.arange(len(matter))
-    low, high = angles[rows, np.maximum(best - 1, 0)], angles[rows, np.minimum(best + 1, angles.shape[1] - 1)]
-    chosen = _sectioned(worth, low, high, angles[rows, best], found[rows, best])
-    strips = ask(chosen)
+    search = _Search(sweep, u, v, way, family, demand, matter, relative)
+    chosen = search.best()
+    strips = search.strips(chosen, demand.margin_rad)
     if demand.margin_rad != TOLD_ERROR_RAD:
-        strips = replace(strips, told_gouge_mm=ask(chosen, TOLD_ERROR_RAD).margin_gouge_mm)
-    angle = np.repeat(chosen, members)
+        strips = replace(strips, told_gouge_mm=search.strips(chosen, TOLD_ERROR_RAD).margin_gouge_mm)
+    angle = np.repeat(chosen, search.members)
     _, axis = sweep.poses(u, v, way, *family.wish(angle), 0.0)
     reached = np.stack(sweep.reached(u, v, way, axis)).reshape(2, *shape)
     fields = {name: getattr(strips, name).reshape(shape) for name in Strips.__slots__}
-    return Fit(u_nodes, v_nodes, family, angle.reshape(shape), Strips(**fields), reached)
+    return Fit(u_nodes, v_nodes, family, angle.reshape(shape), Strips(**fields), reached, relative)
 
 
 def _start(sweep: Sweep, u_mm: Floats, v_mm: Floats, least_rad: float) -> Floats:
@@ -373,6 +270,15 @@ def _symmetric(nodes: Floats) -> bool:
     return bool(np.abs(nodes + nodes[::-1]).max() <= SAME_POINT_MM)
 
 
+def _turns_over(sweep: Sweep, u_nodes: Floats, v_nodes: Floats) -> bool:
+    """Tell whether the machine leans as well to one side as to the other: half a turn about Z takes what it reaches to itself."""
+    v, u = (grid.ravel() for grid in np.meshgrid(v_nodes, u_nodes, indexing="ij"))
+    normal = sweep.saddle.normal(plan_of(u, v, sweep.direction_rad))
+    half_turn = np.array([-1.0, -1.0, 1.0])
+    difference = sweep.nearest(np.ascontiguousarray(half_turn * normal)) - half_turn * sweep.nearest(normal)
+    return bool(np.abs(difference).max() < REACH_RAD)
+
+
 def _turned_over(one: Fit) -> Fit:
     """Return a fit for both ways from that for one, on symmetric grids: half a turn about Z swaps the ways.
 
@@ -387,16 +293,21 @@ def _turned_over(one: Fit) -> Fit:
     fields["left_mm"], fields["right_mm"] = both(s.left_mm, s.right_mm), both(s.right_mm, s.left_mm)
     fields["ahead_mm"], fields["behind_mm"] = both(s.ahead_mm, s.behind_mm), both(s.behind_mm, s.ahead_mm)
     angle, reached = both(one.angle_rad, one.angle_rad), both(one.reached_rad, one.reached_rad)
-    return Fit(one.u_mm, one.v_mm, one.family, angle, Strips(**fields), reached)
+    return Fit(one.u_mm, one.v_mm, one.family, angle, Strips(**fields), reached, one.smooth)
 
 
 def _sectioned(
-    worth_of: Callable[[Floats], Floats], low: Floats, high: Floats, best: Floats, worth: Floats
+    worth_of: Callable[[Floats], Floats],
+    low: Floats,
+    high: Floats,
+    best: Floats,
+    worth: Floats,
+    sections: int,
 ) -> Floats:
     """Return the angles (n,) of most worth between low and high, by golden section; the best asked is kept."""
     b, c = high - _GOLDEN * (high - low), low + _GOLDEN * (high - low)
     at_b, at_c = worth_of(b), worth_of(c)
-    for _ in range(_SECTIONS):
+    for _ in range(sections):
         for angle, value in ((b, at_b), (c, at_c)):
             better = value > worth
             best, worth = np.where(better, angle, best), np.where(better, value, worth)

@@ -16,7 +16,7 @@ from anticlast.passes.matched_lines import Laid, lay
 from anticlast.passes.matched_rows import Chords, stretches_of
 from anticlast.passes.matched_task import Task
 from anticlast.passes.profile import Nearest
-from anticlast.passes.strips import NoStrip
+from anticlast.passes.strip_lines import NoStrip
 from anticlast.records import Bools, CutterPath, Job, Operation, Purpose
 
 # Links take no longer than this at feed (seconds): a lift, a rapid and an entry take more.

@@ -16,7 +16,7 @@ from anticlast.passes.fit import Fit
 from anticlast.passes.matched_task import Task
 from anticlast.passes.order import Cut, cutting_order
 from anticlast.passes.profile import Track
-from anticlast.passes.strips import Lines, NoStrip, closed_up, lay_lines
+from anticlast.passes.strip_lines import Lines, NoStrip, closed_up, lay_lines
 from anticlast.records import Floats
 
 # Passes run this much further than contacts need (mm), so that the last pose is never the one that cuts.

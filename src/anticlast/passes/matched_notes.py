@@ -14,7 +14,7 @@ from anticlast.passes.fit import TOLD_ERROR_RAD, Fit
 from anticlast.passes.matched_lines import Laid
 from anticlast.passes.matched_task import Task
 from anticlast.passes.scallop import second_order_step
-from anticlast.passes.strips import NoStrip
+from anticlast.passes.strip_lines import NoStrip
 from anticlast.records import Bools, Floats
 
 # A matched operation that takes this many times the passes of a ball is refused.

@@ -14,13 +14,13 @@ from anticlast.outline import Outline
 from anticlast.passes.fit import Demand, Family, Fit, changes_axis, fit, reaches_all
 from anticlast.passes.frame import PassFrame
 from anticlast.passes.profile import Nearest, Sweep
-from anticlast.passes.strips import Layer, Lines, NoStrip, lay_lines
+from anticlast.passes.strip_lines import Layer, Lines, NoStrip, lay_lines
 from anticlast.records import Bools, Floats, Job, Operation
 from anticlast.saddle import Saddle
 from anticlast.tolerances import CHORD_SHARE_OF_STRIP
 
-# Stations lie no further apart than this share of the surface's tightest radius: curvature changes by 1 % of itself then.
-_STATION_SHARE = 0.15
+# Stations lie no further apart than this share of the surface's tightest radius: between them curvature changes by 2 % of itself.
+_STATION_SHARE = 0.22
 _LEAST_STATIONS = 9
 # Where not every axis is reached, lead and lean change along a line by themselves, and what is chosen changes from line to line.
 _CLOSE_ALONG_MM, _CLOSE_ACROSS_MM = 3.0, 4.0
@@ -74,12 +74,8 @@ class Task:
                 float(at.max()) + operation.cutter.radius_mm,
             )
             grids.append(np.linspace(low, high, max(_LEAST_STATIONS, math.ceil((high - low) / apart) + 1)))
-        v, u = (grid.ravel() for grid in np.meshgrid(grids[1], grids[0], indexing="ij"))
-        beside = outline.grown(max(grid[1] - grid[0] for grid in grids)).contains(frame.xy(u, v))
         along, across = grids
-        return cls(
-            frame, sweep, outline, operation, along, across, beside.reshape(across.size, along.size), full
-        )
+        return cls(frame, sweep, outline, operation, along, across, _beside(frame, outline, grids), full)
 
     @property
     def budget_mm(self) -> float:
@@ -148,12 +144,24 @@ class Task:
         return best or refused
 
     def with_part_turned(self) -> Task:
-        """Return the same task with the part turned a quarter turn on the table; part coordinates turn with it."""
+        """Return the same task with the part turned a quarter turn on the table, on half as many lines of stations.
+
+        Part coordinates turn with it.
+        """
         nearest = self.sweep.nearest
+        v = np.linspace(self.v_mm[0], self.v_mm[-1], max(_LEAST_STATIONS, self.v_mm.size // 2 + 1))
 
         def turned(axis: Floats) -> Floats:
             """Return the nearest axes (n, 3): turned into the machine, asked for, turned back."""
             got = nearest(np.column_stack((-axis[:, 1], axis[:, 0], axis[:, 2])))
             return np.column_stack((got[:, 1], -got[:, 0], got[:, 2]))
 
-        return replace(self, sweep=replace(self.sweep, nearest=turned))
+        counts = _beside(self.frame, self.outline, [self.u_mm, v])
+        return replace(self, sweep=replace(self.sweep, nearest=turned), v_mm=v, counts=counts)
+
+
+def _beside(frame: PassFrame, outline: Outline, grids: list[Floats]) -> Bools:
+    """Tell which stations of a grid lie inside the outline or next to it (nv, nu)."""
+    v, u = (grid.ravel() for grid in np.meshgrid(grids[1], grids[0], indexing="ij"))
+    beside = outline.grown(max(float(grid[1] - grid[0]) for grid in grids)).contains(frame.xy(u, v))
+    return np.asarray(beside).reshape(grids[1].size, grids[0].size)
